@@ -1,0 +1,3 @@
+//! The way of an export, one step a module: notice, settle, keep, read, place, file.
+
+pub mod read;

@@ -1,0 +1,168 @@
+//! Reading: from an export's bytes to rows of located text.
+//!
+//! Invariants: every physical line is counted exactly once, either in [`LineCounts`] or by a [`Row`] that is handed
+//! out ([`Row::lines`]); a cell's text is what was exported, never a guess; memory does not grow with the export.
+
+pub mod delimited;
+
+use std::io::Read;
+
+use revisant_schema::plan::{Format, Reader};
+use thiserror::Error;
+
+/// An export's bytes, which can be read from the start as often as needed.
+pub trait Bytes {
+    /// A fresh stream over all bytes.
+    fn open(&self) -> std::io::Result<Box<dyn Read + '_>>;
+}
+
+impl Bytes for Vec<u8> {
+    fn open(&self) -> std::io::Result<Box<dyn Read + '_>> {
+        Ok(Box::new(self.as_slice()))
+    }
+}
+
+/// Why nothing of an export can be read.
+#[derive(Debug, Error)]
+pub enum FileFault {
+    /// The bytes are not what the format says (`unreadable-file`).
+    #[error("{0}")]
+    Unreadable(String),
+    /// The layout is not the one of the plan (`unknown-layout`).
+    #[error("{0}")]
+    Layout(String),
+    /// It is larger, or expands further, than allowed (`too-large`).
+    #[error("{0}")]
+    TooLarge(String),
+    /// The kept bytes could not be read back; nothing is known about the export.
+    #[error("the kept bytes could not be read: {0}")]
+    Io(#[from] std::io::Error),
+}
+
+/// Physical lines that are no rows.
+#[derive(Debug, Clone, Copy, Default, PartialEq, Eq)]
+pub struct LineCounts {
+    /// Lines above the header.
+    pub preamble: u64,
+    /// Lines of the header.
+    pub header: u64,
+    /// Lines of units.
+    pub units: u64,
+    /// Lines that are empty or only delimiters.
+    pub blank: u64,
+    /// Lines equal to the header.
+    pub repeated_header: u64,
+    /// Lines that a rule of the plan ignores.
+    pub ignored: u64,
+    /// The line that ends the table, and all after it.
+    pub footer: u64,
+}
+
+/// What is wrong with a row as a whole.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub enum RowFault {
+    /// It cannot be read (`unreadable-row`): more non-empty cells than the header, an undecodable byte, no JSON.
+    Unreadable(String),
+    /// It is the last one and has no line end (`unfinished-row`). Its cells stand as read.
+    Unfinished,
+}
+
+/// One row: the texts of the wanted columns, and where they stood. Reused from row to row.
+#[derive(Debug, Clone, Default)]
+pub struct Row {
+    /// The physical line on which it begins, from 1 (text formats); the sheet's row (workbooks).
+    pub line: u64,
+    /// How many physical lines it takes.
+    pub lines: u64,
+    /// Its first byte and the one after its last, line end excluded; `None` where bytes say nothing (workbooks).
+    pub bytes: Option<(u64, u64)>,
+    /// The row as exported, decoded, without its line end.
+    pub raw: String,
+    /// What is wrong with it.
+    pub fault: Option<RowFault>,
+    text: String,
+    ends: Vec<usize>,
+}
+
+impl Row {
+    /// The text of the wanted column `slot` as exported, without surrounding quotes and blanks; empty when absent.
+    pub fn cell(&self, slot: usize) -> &str {
+        let Some(&end) = self.ends.get(slot) else { return "" };
+        let start = if slot == 0 { 0 } else { self.ends[slot - 1] };
+        &self.text[start..end]
+    }
+
+    /// Empties the row for the next one.
+    pub fn clear(&mut self) {
+        self.raw.clear();
+        self.text.clear();
+        self.ends.clear();
+        self.fault = None;
+        self.bytes = None;
+    }
+
+    /// Adds the next wanted column's text.
+    pub fn push(&mut self, cell: &str) {
+        self.text.push_str(cell);
+        self.ends.push(self.text.len());
+    }
+}
+
+/// A stream of rows. Rows that the plan ignores, blank lines, headers and footers are never handed out.
+pub trait Rows {
+    /// The value of a preamble's key, known once the first row or the end has been handed out.
+    fn preamble(&self, key: &str) -> Option<&str>;
+    /// The units row's text for the wanted column `slot`; `None` when the reader has no units row.
+    fn unit(&self, slot: usize) -> Option<&str>;
+    /// Fills `row` with the next one; `false` at the end.
+    fn next_row(&mut self, row: &mut Row) -> Result<bool, FileFault>;
+    /// The lines counted so far that were no rows.
+    fn counts(&self) -> LineCounts;
+}
+
+/// The columns that a reader's plan names, in a fixed order: a column's position here is its slot.
+pub fn wanted(reader: &Reader) -> Vec<String> {
+    use revisant_schema::plan::{Ignore, LevelRule, MeasureRule, UnitRule};
+    let mut names: Vec<String> = Vec::new();
+    let mut add = |name: &str| {
+        if !names.iter().any(|known| known == name) {
+            names.push(name.to_owned());
+        }
+    };
+    let places = [Some(&reader.subject), Some(&reader.taken_at), reader.visit.as_ref(), reader.replicate.as_ref()];
+    for place in places.into_iter().flatten().chain(reader.operator.as_ref()) {
+        place.source.columns().into_iter().for_each(&mut add);
+    }
+    for value in &reader.values {
+        add(&value.column);
+        if let MeasureRule::Found(place) = &value.measure {
+            place.source.columns().into_iter().for_each(&mut add);
+        }
+        if let UnitRule::Found { place, .. } = &value.unit {
+            place.source.columns().into_iter().for_each(&mut add);
+        }
+        for (_, level) in &value.condition {
+            if let LevelRule::Found(place) = level {
+                place.source.columns().into_iter().for_each(&mut add);
+            }
+        }
+    }
+    for rule in &reader.ignore {
+        match rule {
+            Ignore::Equals { column, .. } | Ignore::Matches { column, .. } => add(column),
+            Ignore::Line(_) => {}
+        }
+    }
+    names
+}
+
+/// Opens an export's bytes as rows.
+pub fn open<'a>(reader: &'a Reader, bytes: &'a dyn Bytes) -> Result<Box<dyn Rows + 'a>, FileFault> {
+    match &reader.format {
+        Format::Delimited { delimiter } => Ok(Box::new(delimited::Delimited::open(reader, *delimiter, bytes)?)),
+        other => Err(FileFault::Layout(format!(
+            "exports of the format \"{}\" cannot be read by this version; \"delimited\" can",
+            other.name()
+        ))),
+    }
+}

@@ -1,0 +1,3 @@
+//! The intake of instrument exports, and the service that watches export folders.
+
+pub mod intake;

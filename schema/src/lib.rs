@@ -1,0 +1,5 @@
+//! The plan, the records and completeness of a repeated-measurement study.
+//!
+//! This crate knows no other crate of the project, and it alone names the database or a table.
+
+pub mod plan;

@@ -1,0 +1,4 @@
+//! The plan `study.toml`: as written, checked, used.
+
+pub mod model;
+pub use model::*;
