@@ -2,4 +2,7 @@
 //!
 //! This crate knows no other crate of the project, and it alone names the database or a table.
 
+pub mod hold;
 pub mod plan;
+pub mod records;
+pub mod world;
