@@ -229,7 +229,7 @@ fn check_positions(positions: &[f64], levels: usize) -> Result<(), DesignError> 
         return Err(DesignError::PositionCount { positions: positions.len(), levels });
     }
     for (level, &position) in positions.iter().enumerate() {
-        if !(position.abs() <= LARGEST) {
+        if !position.is_finite() || position.abs() > LARGEST {
             return Err(DesignError::PositionUnusable { level });
         }
         if let Some(other) = positions.iter().take(level).position(|&earlier| earlier == position) {

@@ -4,7 +4,6 @@
 //! uncorrected one in their degrees of freedom alone.
 
 use super::decomposition::{Decomposition, Line, Split};
-use super::share;
 use super::sphericity::{Epsilon, Mauchly, Sphericity};
 use crate::Note;
 use crate::distributions::FisherF;
@@ -103,7 +102,7 @@ impl Ratio {
 
 /// The effect of the factor, and the notes that it owes.
 pub(super) fn effect(split: &Split, notes: &mut Vec<Note>) -> Effect {
-    let Decomposition { effect, residual, total, .. } = split.decomposition;
+    let Decomposition { effect, subject, residual, .. } = split.decomposition;
     let f = Ratio::of(effect, residual, split.rounding);
     note_degenerate(split, f, notes);
     let sphericity = Sphericity::of(split, notes);
@@ -119,15 +118,20 @@ pub(super) fn effect(split: &Split, notes: &mut Vec<Note>) -> Effect {
         mauchly: Some(sphericity.mauchly),
         epsilon: sphericity.epsilon,
         corrected: sphericity.epsilon.map(|epsilon| corrected(f, epsilon, effect.df, residual.df)),
-        partial_eta_sq: testable(split).and_then(|()| share(effect.ss, effect.ss + residual.ss)),
-        generalized_eta_sq: testable(split).and_then(|()| share(effect.ss, total.ss)),
-        partial_omega_sq: testable(split).and_then(|()| partial_omega_sq(&split.decomposition)),
+        partial_eta_sq: share(split, effect.ss, residual.ss),
+        generalized_eta_sq: share(split, effect.ss, subject.ss + residual.ss),
+        partial_omega_sq: partial_omega_sq(split),
     }
 }
 
 /// Whether there is an effect and an error at all.
-fn testable(split: &Split) -> Option<()> {
-    (split.subjects > 1 && split.levels > 1).then_some(())
+fn testable(split: &Split) -> bool {
+    split.subjects > 1 && split.levels > 1
+}
+
+/// The share of a part in itself and the rest, where they are more than rounding.
+fn share(split: &Split, part: f64, rest: f64) -> Option<f64> {
+    (testable(split) && part + rest > split.rounding).then(|| part / (part + rest))
 }
 
 fn note_degenerate(split: &Split, f: Ratio, notes: &mut Vec<Note>) {
@@ -140,7 +144,7 @@ fn note_degenerate(split: &Split, f: Ratio, notes: &mut Vec<Note>) {
     match f {
         Ratio::Finite(_) => {}
         Ratio::Infinite => notes.push(Note::ZeroResidual),
-        Ratio::Undefined if testable(split).is_none() => {}
+        Ratio::Undefined if !testable(split) => {}
         Ratio::Undefined if split.decomposition.total.ss <= split.rounding => notes.push(Note::NoVariation),
         Ratio::Undefined => notes.push(Note::NoEffectNoResidual),
     }
@@ -160,9 +164,10 @@ fn corrected(f: Ratio, epsilon: Epsilon, df: f64, error_df: f64) -> Corrected {
     }
 }
 
-fn partial_omega_sq(parts: &Decomposition) -> Option<f64> {
+fn partial_omega_sq(split: &Split) -> Option<f64> {
+    let parts = split.decomposition;
     let (effect, error) = (parts.effect.ms?, parts.residual.ms?);
     let gain = parts.effect.df * (effect - error);
     let whole = parts.total.df + 1.0;
-    share(gain, gain + whole * error)
+    share(split, gain, whole * error)
 }

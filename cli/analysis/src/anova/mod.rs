@@ -82,8 +82,3 @@ fn analysed(split: &Split, notes: &mut Vec<Note>) -> Analysed {
     let effect = effect::effect(split, notes);
     (Some(split.decomposition), Some(effect), unlinked::if_unlinked(&split.decomposition, split.rounding))
 }
-
-/// The share of a whole, where there is a whole.
-fn share(part: f64, whole: f64) -> Option<f64> {
-    (whole > 0.0).then(|| part / whole)
-}

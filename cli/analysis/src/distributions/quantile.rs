@@ -7,6 +7,8 @@ use super::Tails;
 
 /// The logarithms of the smallest and the largest argument searched.
 const RANGE: (f64, f64) = (-745.0, 709.7);
+/// How close to an end of the range the search stops where the quantile lies beyond it.
+const EDGE: f64 = 1e-6;
 const MOST_STEPS: u32 = 400;
 
 /// The x > 0 at which `at(x)` has the tails `lower` and `upper`, two numbers that sum to 1 and of which the smaller is
@@ -20,7 +22,10 @@ pub(super) fn positive(lower: f64, upper: f64, start: f64, at: impl Fn(f64) -> O
     }
     let matched = Matched { rising: lower <= upper, target: lower.min(upper).ln() };
     let log = search(start.ln(), |log| Some(matched.step(at(log.exp())?)))?;
-    if log <= RANGE.0 { Some(0.0) } else { (log < RANGE.1).then(|| log.exp()) }
+    if log <= RANGE.0 + EDGE {
+        return Some(0.0);
+    }
+    (log < RANGE.1 - EDGE).then(|| log.exp())
 }
 
 /// Which tail is to have which logarithm.

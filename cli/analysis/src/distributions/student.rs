@@ -77,7 +77,7 @@ impl StudentT {
         }
         let ratio = t.abs() / self.df.sqrt();
         if ratio > FAR {
-            return Some(self.far_out(ratio));
+            return Some(self.far_out(t.abs()));
         }
         let (x, y) = if ratio <= 1.0 {
             let odds = ratio * ratio;
@@ -90,11 +90,11 @@ impl StudentT {
         Some(Tails { slope: 2.0 * mass.slope, ..mass })
     }
 
-    /// The masses where y = 1 / ratio² might be too small for a double and its power not: y^(ν/2) / (ν/2 B(ν/2, ½)).
-    fn far_out(self, ratio: f64) -> Tails {
+    /// The masses where y = ν / t² might be too small for a double and its power not: y^(ν/2) / (ν/2 B(ν/2, ½)).
+    fn far_out(self, t: f64) -> Tails {
         let half = self.df / 2.0;
         let log_beta = ln_gamma(half) + ln_gamma(0.5) - ln_gamma(half + 0.5);
-        let upper = (-self.df * ratio.ln() - log_beta - half.ln()).exp();
+        let upper = (-self.df * (t.ln() - 0.5 * self.df.ln()) - log_beta - half.ln()).exp();
         Tails { lower: 1.0 - upper, upper, slope: self.df * upper }
     }
 }
