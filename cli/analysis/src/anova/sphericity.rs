@@ -24,7 +24,7 @@ pub struct Mauchly {
     pub df: Option<f64>,
     /// The second-order p value P(χ²_f > z) + ω (P(χ²_(f+4) > z) − P(χ²_f > z)), with
     /// ω = (p + 2)(p − 1)(p − 2)(2p³ + 6p² + 3p + 2) / (288 p² v² ρ²) (Box 1949, *Biometrika* 36:317; Anderson 2003, *An
-    /// Introduction to Multivariate Statistical Analysis*, 10.7.4).
+    /// Introduction to Multivariate Statistical Analysis*, section 10.7).
     pub p: Option<f64>,
 }
 
