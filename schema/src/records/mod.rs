@@ -5,14 +5,17 @@
 
 pub mod codec;
 pub mod error;
+pub mod intake;
 pub mod open;
 pub mod raw;
 pub mod texts;
 pub mod trail;
+pub mod view;
 pub mod writer;
 
 pub use error::{RecordsError, Result};
 pub use open::Records;
 pub use raw::{KeepError, Kept};
 pub use trail::{ActKind, ActNumber, Doer, TrailRow};
+pub use view::{AsOf, View};
 pub use writer::{Act, Cell, Filing, NewHold, NewReading};

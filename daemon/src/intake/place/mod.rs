@@ -1,0 +1,5 @@
+//! Placing: finding a row's subject, session, measure, condition and replicate.
+
+pub mod clock;
+pub mod number;
+pub mod resolve;
