@@ -9,10 +9,12 @@ pub mod open;
 pub mod raw;
 pub mod texts;
 pub mod trail;
+pub mod verify;
 pub mod writer;
 
 pub use error::{RecordsError, Result};
 pub use open::Records;
 pub use raw::{KeepError, Kept};
 pub use trail::{ActKind, ActNumber, Doer, TrailRow};
+pub use verify::{RawWrong, Verified, VerifyFault, VerifyNote};
 pub use writer::{Act, Cell, Filing, NewHold, NewReading};

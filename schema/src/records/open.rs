@@ -16,7 +16,7 @@ use super::texts::Texts;
 use crate::world::World;
 
 /// Marks the file as records (`application_id`).
-const APPLICATION: i64 = 0x5256_5354;
+pub(crate) const APPLICATION: i64 = 0x5256_5354;
 
 /// The numbered steps from an empty file to the newest layout.
 const MIGRATIONS: &[&str] = &[include_str!("../../migrations/0001_records.sql")];
@@ -84,7 +84,7 @@ impl Records {
         let pragma = |conn: &Connection, name: &str| conn.pragma_query_value(None, name, |row| row.get::<_, i64>(0));
         let application = pragma(&self.conn, "application_id").map_err(&failed)?;
         let version = pragma(&self.conn, "user_version").map_err(&failed)?;
-        let known = MIGRATIONS.len() as i64;
+        let known = Self::newest_layout();
         let tables: i64 =
             self.conn.query_row("SELECT count(*) FROM sqlite_master", [], |row| row.get(0)).map_err(&failed)?;
         match (application, version, tables) {
@@ -124,6 +124,11 @@ impl Records {
         let mut target = Connection::open(&copy).map_err(&failed)?;
         let backup = rusqlite::backup::Backup::new(&self.conn, &mut target).map_err(&failed)?;
         backup.run_to_completion(1000, Duration::ZERO, None).map_err(&failed)
+    }
+
+    /// The number of the newest layout that this program knows.
+    pub(crate) fn newest_layout() -> i64 {
+        MIGRATIONS.len() as i64
     }
 
     /// The statements that made the layout, as this program knows it: what `verify` compares the file with.
