@@ -41,7 +41,7 @@ use written::{FileText, Node, SyntaxFault};
 pub const MAIN: &str = "study.toml";
 
 /// The texts of a plan.
-#[derive(Debug, Clone, PartialEq, Eq)]
+#[derive(Debug, Clone, PartialEq, Eq, serde::Serialize, serde::Deserialize)]
 pub struct PlanFiles {
     /// `study.toml`.
     pub main: String,
