@@ -2,3 +2,4 @@
 
 pub mod place;
 pub mod read;
+pub mod rules;

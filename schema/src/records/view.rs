@@ -782,3 +782,29 @@ fn read_hold(row: &Row<'_>, ends: &HashMap<i64, (HoldState, Option<Answer>, ActN
         about: detail["about"].as_i64(),
     })
 }
+
+impl View<'_> {
+    /// Every session that holds a current reading, with the measures it holds.
+    pub fn session_facts(&self) -> Result<Vec<crate::session::SessionFacts>> {
+        self.facts_of(&self.cells()?)
+    }
+
+    /// The same, from counts already at hand.
+    pub fn facts_of(&self, cells: &[CellCount]) -> Result<Vec<crate::session::SessionFacts>> {
+        let mut measures: HashMap<i64, Vec<String>> = HashMap::new();
+        for cell in cells {
+            let held = measures.entry(cell.session).or_default();
+            if !held.contains(&cell.measure) {
+                held.push(cell.measure.clone());
+            }
+        }
+        let sessions = self.all_sessions()?.into_iter();
+        Ok(sessions
+            .filter_map(|row| {
+                let measures = measures.remove(&row.session)?;
+                let SessionRow { session, subject, day, label } = row;
+                Some(crate::session::SessionFacts { session, subject, day, label, measures })
+            })
+            .collect())
+    }
+}
