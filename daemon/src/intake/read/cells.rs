@@ -50,7 +50,7 @@ impl Cells {
     }
 
     /// How many cells there are.
-    pub fn len(&self) -> usize {
+    pub fn count(&self) -> usize {
         self.spans.len()
     }
 
@@ -225,7 +225,7 @@ mod tests {
     fn split(text: &str, delimiter: u8) -> (Split, Vec<String>) {
         let mut cells = Cells::new(delimiter);
         let outcome = cells.split(text, 0);
-        (outcome, (0..cells.len()).map(|index| cells.get(text, index).to_owned()).collect())
+        (outcome, (0..cells.count()).map(|index| cells.get(text, index).to_owned()).collect())
     }
 
     fn whole(text: &str, delimiter: u8) -> Vec<String> {
@@ -275,7 +275,7 @@ mod tests {
     fn empty_cells_at_the_end_do_not_count() {
         let mut cells = Cells::new(b',');
         cells.split("a,,b,, ", 0);
-        assert_eq!((cells.len(), cells.filled()), (5, 3));
+        assert_eq!((cells.count(), cells.filled()), (5, 3));
         assert!(cells.are("a,,b,, ", &["a".into(), String::new(), "b".into()]));
     }
 }
