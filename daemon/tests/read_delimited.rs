@@ -461,6 +461,23 @@ mod whatever_the_bytes {
             let _ = read_all(&reader, &bytes);
         }
 
+        /// Without quotes nothing rests on a likelihood.
+        #[test]
+        fn random_tables_may_be_cut_anywhere(
+            body in "([Sa1,; \t\n\r\u{c}\u{1a}µ]|id;at;kg;note\r\n|;;N;\n|Total|QC;|S1;a;12;\r\n){0,80}",
+            cut in any::<prop::sample::Index>(),
+        ) {
+            let bytes = format!("id;at;kg;note\n;;N;\n{body}").into_bytes();
+            let cut = bytes[..cut.index(bytes.len())].to_vec();
+            for (reader, _) in samples().into_iter().skip(1) {
+                if let (Ok(all), Ok(seen)) = (read_all(&reader, &bytes), read_all(&reader, &cut)) {
+                    for row in good_rows(&seen) {
+                        prop_assert!(all.rows.contains(row), "{:?}", row);
+                    }
+                }
+            }
+        }
+
         #[test]
         fn rows_stand_where_they_say(body in "([Sa1,;\"\n\r\u{c}µ]|S1;a;1\n){0,80}") {
             let bytes = format!("id;at;kg;note\n;;N;\n{body}").into_bytes();
