@@ -113,6 +113,24 @@ fn encodings_are_named_or_refused() {
 }
 
 #[test]
+fn a_preamble_in_another_encoding_does_no_harm_to_a_table_of_ascii() {
+    let mut reader = plain();
+    reader.header = starts_with("id");
+    let text = b"Place: Ward 1\nTester: B\xE4\nid,at,kg\nS1,a,1\n".to_vec();
+    let seen = whole(&reader, &text);
+    assert_eq!((seen.good(), seen.counts.preamble), (vec![vec!["S1", "a", "1"]], 2));
+    let rows = read::open(&reader, &text).unwrap();
+    assert_eq!((rows.preamble("Place"), rows.preamble("Tester")), (Some("Ward 1"), None));
+    // But not to any other table, even if it happens to be valid UTF-8.
+    let what = unreadable(&reader, b"Tester: B\xE4\nid,at,kg\nS1,\xC3\xA4,1\n");
+    assert!(what.contains("line 1") && what.contains("offset 9"), "{what}");
+    // A header that cannot be decoded is no header.
+    let mut named = reader.clone();
+    named.encoding = label("utf-8");
+    assert!(unreadable(&named, b"Tester\nid,at,kg,\xB5\nS1,a,1,2\n").contains("line 2"));
+}
+
+#[test]
 fn multi_byte_encodings_hide_delimiters_inside_characters() {
     let mut reader = reader(Some(b'|'), &COLUMNS);
     reader.encoding = label("shift_jis");
@@ -193,6 +211,20 @@ fn lines_that_may_belong_to_a_cell_that_was_cut_are_held() {
     // The quote's own line lacks cells, as the beginning of a row of several lines does.
     let seen = whole(&plain(), "id,at,kg\nS1,\"begins\nS2,b,2\nS3,c,3\n");
     assert_eq!((seen.unreadable(), seen.good().len()), (vec![2, 3, 4], 0));
+}
+
+#[test]
+fn rows_that_two_stray_quotes_may_have_joined_are_held() {
+    let seen = whole(&plain(), "id,at,kg\nS1,\"a,1\nS2,b\",2\nS3,c,3\n");
+    assert_eq!((seen.unreadable(), seen.good().len(), seen.rows[0].lines), (vec![2], 1, 2));
+}
+
+#[test]
+fn a_file_of_stray_quotes_is_read_in_linear_time() {
+    let text = format!("id,at,kg\n{}", "S1,\"a\"\"\nx\"\"y\n".repeat(100_000));
+    let begun = std::time::Instant::now();
+    assert_eq!(whole(&plain(), &text).lines, 200_001);
+    assert!(begun.elapsed().as_secs() < 30, "{:?}", begun.elapsed());
 }
 
 #[test]
@@ -345,7 +377,10 @@ mod whatever_the_bytes {
         let mut headless = reader(Some(b'\t'), &["1", "2", "3"]);
         headless.header = Header::None;
         let middle = "id,note,at,kg\nS1,\"a\nb\n\nc\",x,1\nS2,\"d\",y,2\nS3,e\"e,z,3\n";
+        let mut spoiled = plain();
+        spoiled.header = starts_with("id");
         vec![
+            (spoiled, b"Tester: B\xE4\r\nid,at,kg\r\nS1,a,1\r\nS2,b,22\r\n".to_vec()),
             (rich.clone(), crlf.into()),
             (auto.clone(), format!("\u{feff}{crlf}").into_bytes()),
             (auto, utf16(crlf, true, true)),
@@ -411,7 +446,7 @@ mod whatever_the_bytes {
 
         #[test]
         fn mutated_exports_are_accounted_for(
-            which in 0..7_usize,
+            which in 0..8_usize,
             edits in prop::collection::vec((any::<prop::sample::Index>(), any::<u8>(), 0..3_u8), 1..6),
         ) {
             let (reader, mut bytes) = samples().swap_remove(which);
@@ -426,10 +461,27 @@ mod whatever_the_bytes {
             let _ = read_all(&reader, &bytes);
         }
 
+        /// Without quotes nothing rests on a likelihood.
+        #[test]
+        fn random_tables_may_be_cut_anywhere(
+            body in "([Sa1,; \t\n\r\u{c}\u{1a}µ]|id;at;kg;note\r\n|;;N;\n|Total|QC;|S1;a;12;\r\n){0,80}",
+            cut in any::<prop::sample::Index>(),
+        ) {
+            let bytes = format!("id;at;kg;note\n;;N;\n{body}").into_bytes();
+            let cut = bytes[..cut.index(bytes.len())].to_vec();
+            for (reader, _) in samples().into_iter().skip(1) {
+                if let (Ok(all), Ok(seen)) = (read_all(&reader, &bytes), read_all(&reader, &cut)) {
+                    for row in good_rows(&seen) {
+                        prop_assert!(all.rows.contains(row), "{:?}", row);
+                    }
+                }
+            }
+        }
+
         #[test]
         fn rows_stand_where_they_say(body in "([Sa1,;\"\n\r\u{c}µ]|S1;a;1\n){0,80}") {
             let bytes = format!("id;at;kg;note\n;;N;\n{body}").into_bytes();
-            let (reader, _) = samples().swap_remove(0);
+            let (reader, _) = samples().swap_remove(1);
             if let Ok(seen) = read_all(&reader, &bytes) {
                 for row in &seen.rows {
                     let (start, end) = row.bytes.unwrap();

@@ -50,7 +50,7 @@ impl Cells {
     }
 
     /// How many cells there are.
-    pub fn len(&self) -> usize {
+    pub fn count(&self) -> usize {
         self.spans.len()
     }
 
@@ -60,6 +60,7 @@ impl Cells {
     }
 
     /// The text of a cell of `text`; empty when absent.
+    #[inline]
     pub fn get<'a>(&'a self, text: &'a str, index: usize) -> &'a str {
         match self.spans.get(index) {
             Some(span) if span.resolved => &self.resolved[span.start..span.end],
@@ -174,11 +175,13 @@ impl Cells {
         self.add_span(Span { start, end, resolved: true });
     }
 
+    #[inline]
     fn add(&mut self, bytes: &[u8], start: usize, end: usize) {
         let (start, end) = trim(bytes, start, end, self.delimiter);
         self.add_span(Span { start, end, resolved: false });
     }
 
+    #[inline]
     fn add_span(&mut self, span: Span) {
         self.spans.push(span);
         if span.end > span.start {
@@ -188,6 +191,7 @@ impl Cells {
 }
 
 /// The first position from `from` on at which no blank stands: no space, tab or no-break space.
+#[inline]
 fn skip_blanks(bytes: &[u8], mut from: usize, end: usize, delimiter: u8) -> usize {
     while from < end {
         match bytes[from] {
@@ -200,6 +204,7 @@ fn skip_blanks(bytes: &[u8], mut from: usize, end: usize, delimiter: u8) -> usiz
 }
 
 /// Takes blanks away at both ends. The bytes are UTF-8, where 0xC2 always begins a character of two bytes.
+#[inline]
 fn trim(bytes: &[u8], start: usize, mut end: usize, delimiter: u8) -> (usize, usize) {
     let start = skip_blanks(bytes, start, end, delimiter);
     while end > start {
@@ -225,7 +230,7 @@ mod tests {
     fn split(text: &str, delimiter: u8) -> (Split, Vec<String>) {
         let mut cells = Cells::new(delimiter);
         let outcome = cells.split(text, 0);
-        (outcome, (0..cells.len()).map(|index| cells.get(text, index).to_owned()).collect())
+        (outcome, (0..cells.count()).map(|index| cells.get(text, index).to_owned()).collect())
     }
 
     fn whole(text: &str, delimiter: u8) -> Vec<String> {
@@ -275,7 +280,7 @@ mod tests {
     fn empty_cells_at_the_end_do_not_count() {
         let mut cells = Cells::new(b',');
         cells.split("a,,b,, ", 0);
-        assert_eq!((cells.len(), cells.filled()), (5, 3));
+        assert_eq!((cells.count(), cells.filled()), (5, 3));
         assert!(cells.are("a,,b,, ", &["a".into(), String::new(), "b".into()]));
     }
 }

@@ -99,7 +99,7 @@ impl<'a> Delimited<'a> {
         // Stands behind the header again, by reading it once more under the delimiter that was chosen.
         lines.rewind(&first);
         read_header(reader, &mut lines, &first, delimiter)?;
-        let mut opened = Self::new(reader, lines, delimiter, table)?;
+        let mut opened = Self::new(reader, lines, delimiter, table);
         opened.preamble = Preamble::new(&above, delimiter);
         opened.counts.preamble = above.count();
         opened.counts.header = opened.lines.count() - above.count();
@@ -120,18 +120,20 @@ impl<'a> Delimited<'a> {
             seen.truncate(1);
         }
         let (delimiter, table) = choose(seen)?;
-        Self::new(reader, Lines::open(reader.encoding, bytes)?, delimiter, table)
+        Ok(Self::new(reader, Lines::open(reader.encoding, bytes)?, delimiter, table))
     }
 
     fn try_headless(reader: &'a Reader, delimiter: u8, bytes: &'a dyn Bytes) -> Result<Table, FileFault> {
         let table = Table { columns: numbered_columns(&wanted(reader))?, ..Table::default() };
-        let mut trial = Self::new(reader, Lines::open(reader.encoding, bytes)?, delimiter, table)?;
+        let lines = Lines::open(reader.encoding, bytes)?;
+        lines.settled_from(0)?;
+        let mut trial = Self::new(reader, lines, delimiter, table);
         let mut row = Row::default();
         while trial.table.width.is_none() && trial.next_row(&mut row)? {}
         Ok(trial.table)
     }
 
-    fn new(reader: &'a Reader, lines: Lines<'a>, delimiter: u8, table: Table) -> Result<Self, FileFault> {
+    fn new(reader: &'a Reader, lines: Lines<'a>, delimiter: u8, table: Table) -> Self {
         let names = wanted(reader);
         let mut rules = Vec::new();
         for rule in &reader.ignore {
@@ -145,7 +147,7 @@ impl<'a> Delimited<'a> {
                 rules.push(ColumnRule { column, holds });
             }
         }
-        Ok(Self {
+        Self {
             reader,
             lines,
             splitter: Splitter::new(delimiter),
@@ -155,7 +157,7 @@ impl<'a> Delimited<'a> {
             counts: LineCounts::default(),
             doubt: None,
             after_header: false,
-        })
+        }
     }
 
     fn read_units(&mut self) -> Result<(), FileFault> {
@@ -200,7 +202,7 @@ impl<'a> Delimited<'a> {
             None => {
                 self.settle_width(first)?;
                 self.fill(row);
-                self.fault(&last)
+                self.fault(&row.raw, first, &last)
             }
         };
         Ok(true)
@@ -245,7 +247,7 @@ impl<'a> Delimited<'a> {
         if self.table.width.is_some() {
             return Ok(());
         }
-        let width = self.splitter.cells.len();
+        let width = self.splitter.cells.count();
         self.table.width = Some(width);
         match self.table.columns.iter().find(|column| **column >= width) {
             None => Ok(()),
@@ -267,7 +269,7 @@ impl<'a> Delimited<'a> {
     }
 
     /// What is wrong with a row whose cells have been split.
-    fn fault(&self, last: &Line) -> Option<RowFault> {
+    fn fault(&self, raw: &str, first: &Line, last: &Line) -> Option<RowFault> {
         let cells = &self.splitter.cells;
         let width = self.table.width.unwrap_or_default();
         if cells.filled() > width {
@@ -275,10 +277,14 @@ impl<'a> Delimited<'a> {
             return Some(RowFault::Unreadable(what));
         }
         if let Some(doubt) = &self.doubt
-            && (doubt.all || cells.len() < width)
+            && (doubt.all || cells.count() < width)
         {
             let what = format!("it may belong to the cell whose quote opens on line {} and does not close", doubt.line);
             return Some(RowFault::Unreadable(what));
+        }
+        if last.number > first.number && looks_like_rows(raw, cells.delimiter(), width) {
+            let what = "each of its lines looks like a row of its own, so the quote that joins them may be a stray one";
+            return Some(RowFault::Unreadable(what.to_owned()));
         }
         let unfinished = last.ending == LineEnd::Missing && self.reader.last_line == LastLine::Finished;
         unfinished.then_some(RowFault::Unfinished)
@@ -427,6 +433,12 @@ impl Splitter {
         self.failures = self.failures.saturating_add(1);
         stray
     }
+}
+
+/// Whether each line of a row of several lines has as many cells as the table when quotes mean nothing. Then two stray
+/// quotes may have made one row of several, with one row's values under another one's subject.
+fn looks_like_rows(raw: &str, delimiter: u8, width: usize) -> bool {
+    raw.split(['\r', '\n']).filter(|line| !line.is_empty()).all(|line| literal_cells(line, delimiter) == width)
 }
 
 /// Adds a line's text to `raw`; says what is wrong with it if it cannot be a row's.

@@ -10,7 +10,7 @@ use unicode_normalization::UnicodeNormalization;
 
 use super::FileFault;
 use super::cells::{Cells, Split};
-use super::text::{Line, Lines, nul_in, readable};
+use super::text::{Line, Lines, holds_nul, nul_in, readable};
 
 /// How much text above the header is remembered: more is no preamble.
 const LONGEST_PREAMBLE: usize = 256 * 1024;
@@ -43,6 +43,11 @@ impl Above {
         }
     }
 
+    /// Counts a line that cannot be read.
+    fn pass(&mut self) {
+        self.count += 1;
+    }
+
     /// How many there were.
     pub fn count(&self) -> u64 {
         self.count
@@ -51,7 +56,7 @@ impl Above {
     /// The first few, for a message.
     fn first_few(&self) -> String {
         if self.lines.is_empty() {
-            return "there is no line".to_owned();
+            return if self.count == 0 { "nothing stands in it" } else { "no line can be read" }.to_owned();
         }
         let shown: Vec<String> = self.lines.iter().take(3).map(|line| format!("\"{}\"", excerpt(line))).collect();
         format!("it begins {}", shown.join(", "))
@@ -68,23 +73,42 @@ pub fn excerpt(line: &str) -> String {
 }
 
 /// Goes to the header's first line; the lines above it go into `above`.
+///
+/// A line above the header that cannot be decoded gives no keys and does no harm otherwise.
 pub fn seek(lines: &mut Lines, header: &Header, above: &mut Above) -> Result<Line, FileFault> {
     let mut text = String::new();
+    let mut spoiled = None;
     while let Some(line) = lines.advance()? {
         text.clear();
-        decode(lines, &line, &mut text)?;
+        let decoded = decode(lines, &line, &mut text);
         let (start, end) = readable(&text, line.ending);
         if begins_table(header, &line, &text[start..end]) {
+            decoded?;
+            lines.settled_from(line.start)?;
             return Ok(line);
         }
-        above.add(&text[start..end]);
+        match decoded {
+            Ok(()) => above.add(&text[start..end]),
+            Err(fault) if line.too_long || holds_nul(&text) => return Err(fault),
+            Err(fault) => {
+                above.pass();
+                spoiled.get_or_insert(fault);
+            }
+        }
     }
+    // The header may well be on the line that could not be decoded.
+    Err(spoiled.unwrap_or_else(|| not_found(header, above)))
+}
+
+fn not_found(header: &Header, above: &Above) -> FileFault {
     let sought = match header {
         Header::StartsWith(text) => format!("no line begins with \"{text}\", as the header should"),
-        Header::Row { row, .. } => format!("the header should be on line {row}, but there are {} lines", above.count),
+        Header::Row { row, .. } => {
+            format!("the header should be on line {row}, but there are only {} lines", above.count)
+        }
         Header::None => "there is no line".to_owned(),
     };
-    Err(FileFault::Layout(format!("{sought}; {}", above.first_few())))
+    FileFault::Layout(format!("{sought}; {}", above.first_few()))
 }
 
 fn begins_table(header: &Header, line: &Line, text: &str) -> bool {
@@ -222,7 +246,7 @@ fn split_by_delimiter(line: &str, cells: &mut Cells) -> Option<(String, String)>
     if cells.split(line, 0) != Split::Whole {
         return split_at(line, char::from(cells.delimiter()), cells.delimiter());
     }
-    if cells.len() < 2 {
+    if cells.count() < 2 {
         return None;
     }
     let mut texts = cells.texts(line).into_iter();

@@ -72,6 +72,8 @@ pub struct Undecodable {
 #[derive(Debug, Clone, Copy)]
 enum Coding {
     Utf8,
+    /// Nobody said what it is, and it is not UTF-8: only ASCII is the same in all that it may be.
+    Ascii,
     Utf16(&'static encoding_rs::Encoding),
     /// An encoding in which the bytes 0x0A and 0x0D are always line ends: true of all others of the WHATWG list.
     Other(&'static encoding_rs::Encoding),
@@ -119,12 +121,36 @@ pub struct Lines<'a> {
     number: u64,
     /// The stream has ended.
     drained: bool,
+    /// Up to where nobody knows the encoding, and what to say of it.
+    unsettled: Option<Unsettled>,
+}
+
+/// Bytes that are not UTF-8 where nobody said what they are.
+struct Unsettled {
+    /// The last byte that is not ASCII.
+    last: u64,
+    /// What to say.
+    what: String,
+}
+
+/// How an export is to be decoded.
+struct Settled {
+    coding: Coding,
+    /// Bytes of the byte-order mark.
+    mark: usize,
+    unsettled: Option<Unsettled>,
+}
+
+impl Settled {
+    fn new(encoding: &'static encoding_rs::Encoding, mark: usize) -> Self {
+        Self { coding: Coding::of(encoding), mark, unsettled: None }
+    }
 }
 
 impl<'a> Lines<'a> {
     /// Settles the encoding and stands before the first line.
     pub fn open(encoding: Encoding, bytes: &'a dyn Bytes) -> Result<Self, FileFault> {
-        let (coding, mark) = settle(encoding, bytes)?;
+        let Settled { coding, mark, unsettled } = settle(encoding, bytes)?;
         let mut lines = Self {
             stream: bytes.open()?,
             coding,
@@ -135,6 +161,7 @@ impl<'a> Lines<'a> {
             kept: u64::MAX,
             number: 0,
             drained: false,
+            unsettled,
         };
         while lines.filled < mark && lines.fill()? {}
         lines.at = mark.min(lines.filled);
@@ -144,6 +171,17 @@ impl<'a> Lines<'a> {
     /// Lines handed out so far.
     pub fn count(&self) -> u64 {
         self.number
+    }
+
+    /// A fault unless it is known how the text from this byte on is to be decoded.
+    ///
+    /// Under the encoding `auto` a preamble in an unknown encoding does no harm to a table of ASCII; anything else of
+    /// that kind does.
+    pub fn settled_from(&self, offset: u64) -> Result<(), FileFault> {
+        match &self.unsettled {
+            Some(unsettled) if unsettled.last >= offset => Err(FileFault::Unreadable(unsettled.what.clone())),
+            _ => Ok(()),
+        }
     }
 
     /// The next line; `None` at the end.
@@ -190,8 +228,9 @@ impl<'a> Lines<'a> {
     /// Adds the line's text to `text`. When it has none, what can be shown of it is added, and the fault returned.
     pub fn decode(&self, line: &Line, text: &mut String) -> Result<(), Undecodable> {
         let bytes = self.bytes(line);
-        let fault = match self.coding {
-            Coding::Utf8 => match std::str::from_utf8(bytes) {
+        let valid = match self.coding {
+            Coding::Ascii if !bytes.is_ascii() => bytes.iter().take_while(|byte| byte.is_ascii()).count(),
+            Coding::Utf8 | Coding::Ascii => match std::str::from_utf8(bytes) {
                 Ok(decoded) => {
                     text.push_str(decoded);
                     return Ok(());
@@ -200,23 +239,24 @@ impl<'a> Lines<'a> {
             },
             Coding::Utf16(encoding) | Coding::Other(encoding) => match decode(encoding, bytes, text) {
                 Ok(()) => return Ok(()),
-                Err(fault) => fault,
+                Err(valid) => valid,
             },
         };
-        Err(self.undecodable(line, fault, text))
+        Err(self.undecodable(line, valid, text))
     }
 
     /// Shows what can be shown of a line, and says what is wrong with its byte at `fault`.
     fn undecodable(&self, line: &Line, fault: usize, text: &mut String) -> Undecodable {
         let bytes = self.bytes(line);
-        let encoding = match self.coding {
-            Coding::Utf8 => UTF_8,
-            Coding::Utf16(encoding) | Coding::Other(encoding) => encoding,
+        let (encoding, name) = match self.coding {
+            Coding::Ascii => (UTF_8, "ASCII"),
+            Coding::Utf8 => (UTF_8, UTF_8.name()),
+            Coding::Utf16(encoding) | Coding::Other(encoding) => (encoding, encoding.name()),
         };
         text.push_str(&encoding.decode_without_bom_handling(bytes).0);
         let byte = bytes.get(fault).copied().unwrap_or_default();
         let offset = line.start + fault as u64;
-        Undecodable { offset, what: format!("the byte 0x{byte:02X} at offset {offset} is not {}", encoding.name()) }
+        Undecodable { offset, what: format!("the byte 0x{byte:02X} at offset {offset} is not {name}") }
     }
 
     /// The line's bytes, line end excluded.
@@ -280,20 +320,10 @@ impl<'a> Lines<'a> {
         if self.filled == self.buffer.len() {
             self.make_room();
         }
-        loop {
-            match self.stream.read(&mut self.buffer[self.filled..]) {
-                Ok(0) => {
-                    self.drained = true;
-                    return Ok(false);
-                }
-                Ok(count) => {
-                    self.filled += count;
-                    return Ok(true);
-                }
-                Err(fault) if fault.kind() == io::ErrorKind::Interrupted => {}
-                Err(fault) => return Err(fault),
-            }
-        }
+        let count = read_some(&mut self.stream, &mut self.buffer[self.filled..])?;
+        self.filled += count;
+        self.drained = count == 0;
+        Ok(count > 0)
     }
 
     /// Moves what is still needed to the front; grows the buffer only when all of it is needed.
@@ -320,11 +350,15 @@ pub fn readable(text: &str, ending: LineEnd) -> (usize, usize) {
     (start.min(end), end)
 }
 
-/// What cannot stand in a line of text, if the line holds it.
+/// Whether a NUL character stands in a text.
+pub fn holds_nul(text: &str) -> bool {
+    memchr(0, text.as_bytes()).is_some()
+}
+
+/// What to say of a line in which a NUL character stands, if one does.
 pub fn nul_in(line: &Line, text: &str) -> Option<String> {
-    memchr(0, text.as_bytes()).map(|_| {
-        format!("line {}: a NUL character stands in it, so this is no text in the plan's encoding", line.number)
-    })
+    let what = || format!("line {}: a NUL character stands in it; it is no text in the encoding taken", line.number);
+    holds_nul(text).then(what)
 }
 
 /// Looks for a line end where each byte is a code unit.
@@ -381,18 +415,16 @@ fn decode(encoding: &'static encoding_rs::Encoding, bytes: &[u8], text: &mut Str
     }
 }
 
-/// The encoding by mark, by plan or by looking at all bytes; and how many bytes the mark takes.
-fn settle(encoding: Encoding, bytes: &dyn Bytes) -> Result<(Coding, usize), FileFault> {
-    let mark = byte_order_mark(bytes)?;
-    match (encoding, mark) {
-        (Encoding::Auto, Some((found, length))) => Ok((Coding::of(found), length)),
-        (Encoding::Auto, None) => check_utf8(bytes).map(|()| (Coding::Utf8, 0)),
+/// The encoding by mark, by plan or by looking at all bytes.
+fn settle(encoding: Encoding, bytes: &dyn Bytes) -> Result<Settled, FileFault> {
+    match (encoding, byte_order_mark(bytes)?) {
+        (Encoding::Auto, Some((found, mark))) => Ok(Settled::new(found, mark)),
+        (Encoding::Auto, None) => look(bytes),
         (Encoding::Label(label), _) if label == encoding_rs::REPLACEMENT => {
             Err(FileFault::Unreadable("the encoding that the plan names is one that nobody decodes any more".into()))
         }
-        (Encoding::Label(label), None) => Ok((Coding::of(label), 0)),
-        // This encoding's own mark decodes to U+FEFF, which is stripped as text.
-        (Encoding::Label(label), Some((found, length))) if label == found => Ok((Coding::of(label), length)),
+        (Encoding::Label(label), None) => Ok(Settled::new(label, 0)),
+        (Encoding::Label(label), Some((found, mark))) if label == found => Ok(Settled::new(label, mark)),
         (Encoding::Label(label), Some((found, _))) => Err(FileFault::Unreadable(format!(
             "the byte-order mark says {}, the plan says {}",
             found.name(),
@@ -408,46 +440,80 @@ fn byte_order_mark(bytes: &dyn Bytes) -> Result<Option<(&'static encoding_rs::En
     Ok(encoding_rs::Encoding::for_bom(&head))
 }
 
-/// Reads all bytes and refuses what is not UTF-8.
+/// Looks through all bytes whether they are UTF-8.
+fn look(bytes: &dyn Bytes) -> Result<Settled, FileFault> {
+    let Some(first) = first_not_utf8(bytes)? else { return Ok(Settled::new(UTF_8, 0)) };
+    let what = format!(
+        "line {}: the byte at offset {first} is not UTF-8, and there is no byte-order mark; \
+         the plan must name the encoding (windows-1252, for example)",
+        line_of(bytes, first)?
+    );
+    let last = last_not_ascii(bytes)?;
+    Ok(Settled { coding: Coding::Ascii, mark: 0, unsettled: Some(Unsettled { last, what }) })
+}
+
+/// The offset of the first byte that is not UTF-8.
 ///
 /// A character that the end of the bytes cuts off is no evidence against UTF-8: all before it was valid, and the
 /// line it stands on becomes a fault of its own when it is read.
-fn check_utf8(bytes: &dyn Bytes) -> Result<(), FileFault> {
+fn first_not_utf8(bytes: &dyn Bytes) -> io::Result<Option<u64>> {
     let mut stream = bytes.open()?;
     let mut buffer = vec![0; CHUNK];
     let (mut held, mut passed) = (0, 0_u64);
     loop {
-        let count = match stream.read(&mut buffer[held..]) {
-            Ok(0) => return Ok(()),
-            Ok(count) => held + count,
-            Err(fault) if fault.kind() == io::ErrorKind::Interrupted => continue,
-            Err(fault) => return Err(fault.into()),
-        };
-        let valid = match std::str::from_utf8(&buffer[..count]) {
-            Ok(_) => count,
+        let count = read_some(&mut stream, &mut buffer[held..])?;
+        if count == 0 {
+            return Ok(None);
+        }
+        let seen = &buffer[..held + count];
+        let valid = match std::str::from_utf8(seen) {
+            Ok(_) => seen.len(),
             Err(fault) if fault.error_len().is_none() => fault.valid_up_to(),
-            Err(fault) => return Err(not_utf8(bytes, passed + fault.valid_up_to() as u64)?),
+            Err(fault) => return Ok(Some(passed + fault.valid_up_to() as u64)),
         };
         passed += valid as u64;
-        buffer.copy_within(valid..count, 0);
-        held = count - valid;
+        let seen = seen.len();
+        buffer.copy_within(valid..seen, 0);
+        held = seen - valid;
     }
 }
 
-/// What to say of the first byte that is not UTF-8.
-fn not_utf8(bytes: &dyn Bytes, offset: u64) -> Result<FileFault, FileFault> {
+/// The offset of the last byte that is not ASCII.
+fn last_not_ascii(bytes: &dyn Bytes) -> io::Result<u64> {
+    let mut stream = bytes.open()?;
+    let mut buffer = vec![0; CHUNK];
+    let (mut last, mut passed) = (0, 0_u64);
+    loop {
+        let count = read_some(&mut stream, &mut buffer)?;
+        if count == 0 {
+            return Ok(last);
+        }
+        if let Some(at) = buffer[..count].iter().rposition(|byte| !byte.is_ascii()) {
+            last = passed + at as u64;
+        }
+        passed += count as u64;
+    }
+}
+
+/// The physical line on which a byte stands.
+fn line_of(bytes: &dyn Bytes, offset: u64) -> Result<u64, FileFault> {
     let mut lines = Lines::open(Encoding::Label(UTF_8), bytes)?;
-    let mut line = 1;
-    while let Some(next) = lines.advance()? {
-        line = next.number;
-        if offset < next.after {
-            break;
+    while let Some(line) = lines.advance()? {
+        if offset < line.after {
+            return Ok(line.number);
         }
     }
-    Ok(FileFault::Unreadable(format!(
-        "line {line}: the byte at offset {offset} is not UTF-8, and there is no byte-order mark; \
-         the plan must name the encoding (windows-1252, for example)"
-    )))
+    Ok(lines.count())
+}
+
+/// Reads what there is; 0 at the end.
+fn read_some(stream: &mut dyn Read, into: &mut [u8]) -> io::Result<usize> {
+    loop {
+        match stream.read(into) {
+            Err(fault) if fault.kind() == io::ErrorKind::Interrupted => {}
+            outcome => return outcome,
+        }
+    }
 }
 
 #[cfg(test)]
@@ -542,7 +608,9 @@ mod tests {
     #[test]
     fn what_is_not_utf8_is_named_by_line_and_byte() {
         let bytes = b"one\r\ntwo\rm\xB5\n".to_vec();
-        let fault = Lines::open(Encoding::Auto, &bytes).err().unwrap().to_string();
+        let lines = Lines::open(Encoding::Auto, &bytes).unwrap();
+        assert!(lines.settled_from(11).is_ok());
+        let fault = lines.settled_from(10).unwrap_err().to_string();
         assert!(fault.contains("line 3") && fault.contains("offset 10") && fault.contains("encoding"), "{fault}");
     }
 
