@@ -24,7 +24,7 @@ use super::keep::{Keeping, keep};
 use super::notice::{Found, Walk, walk};
 use super::place::resolve::{Decided, Held, Resolver, RowOutcome, ValueOutcome, Whereabouts, path_facts};
 use super::read::{self, FileFault, Row};
-use super::replace;
+use super::{plan, replace};
 use super::rules::{Gathered, Rules};
 
 /// How often an export is placed anew because the rules changed meanwhile, before it is left to the next collect.
@@ -136,18 +136,13 @@ pub fn collect(
     let start = Instant::now();
     records.clear_unpublished()?;
     let mut report = Report::default();
-    let rules = load_rules(records)?;
+    let rules = plan::in_force(records)?;
     replace::after_changes(records, &rules, doer, &mut report)?;
     let walked = walk_until_rested(records, study, &rules.plan, wait)?;
     note_walk(records, &rules.plan, &walked, &mut report)?;
     file_all(records, rules, walked.ready, doer, &mut report, progress)?;
     report.seconds = start.elapsed().as_secs_f64();
     Ok(report)
-}
-
-fn load_rules(records: &Records) -> Result<Rules> {
-    let none = || RecordsError::Refused("there is no plan in force yet".to_owned());
-    Ok(Rules::load(records)?.ok_or_else(none)?)
 }
 
 /// Walks, and with `wait` walks again until everything has rested that will within its time.
@@ -268,7 +263,7 @@ fn file_all(
             Ok(()) => {}
             Err(RecordsError::Moved) if tries < TRIES => {
                 tries += 1;
-                rules = load_rules(records)?;
+                rules = plan::in_force(records)?;
             }
             Err(error) => return Err(error.into()),
         }
