@@ -360,7 +360,7 @@ pub(crate) fn stamp(text: &str) -> Result<Stamp, Misfit> {
     match CompiledStamp::new(&stamp) {
         Ok(_) => Ok(stamp),
         Err(reason) => Err(Misfit {
-            wrong: format!("This pattern cannot be read by: {reason}."),
+            wrong: format!("No stamp can be read by this pattern: {reason}."),
             right: Form::Stamp.called().into(),
             nearest: nearest(text, ["iso", "serial"]).map(str::to_owned),
         }),

@@ -7,6 +7,9 @@
 //! `keys` holds the tree against the definitions of the tables, and one module a table turns it into the types of
 //! [`model`], checking what one key says against another.
 
+// In tests a panic is how a failure is said.
+#![cfg_attr(test, allow(clippy::unwrap_used, clippy::expect_used, clippy::panic))]
+
 mod analysis;
 mod assume;
 mod diagnostics;
@@ -14,10 +17,12 @@ mod forms;
 mod instrument;
 mod interim;
 mod keys;
+pub mod meaning;
 mod measure;
 pub mod model;
 mod place;
 mod reader;
+mod schema;
 pub mod stamp;
 mod study;
 pub mod units;
@@ -33,6 +38,7 @@ use sha2::{Digest, Sha256};
 
 pub use diagnostics::{Fault, Faults, Severity};
 pub use model::*;
+pub use schema::{reader_schema, schema};
 
 use keys::{Check, Kind, Tab, Table, key, needed};
 use written::{FileText, Node, SyntaxFault};
@@ -147,7 +153,14 @@ pub fn parse(files: &PlanFiles) -> Result<(Plan, Vec<Fault>), Faults> {
 
 /// Faults of TOML's own syntax.
 fn syntax(check: &mut Check<'_>, faults: &[SyntaxFault]) {
+    let mut last = None;
     for fault in faults {
+        // What follows on the same line follows from the first.
+        let line =
+            check.sources.get(fault.spot.file).map(|file| (fault.spot.file, file.place(fault.spot.span.start).0));
+        if line == std::mem::replace(&mut last, line) {
+            continue;
+        }
         let wrong = format!("This is not TOML: {}.", fault.message.trim_end_matches('.'));
         check.error(&fault.spot, "", wrong, "TOML 1.0 (toml.io)");
         check.torn = true;
@@ -253,14 +266,17 @@ fn whole(check: &mut Check<'_>, root: &Node, readers: &[(String, Node)]) -> Opti
     })
 }
 
-/// How many visits `[assume]` may speak of: all of the plan, or those of the analysis that is looked at.
+/// How many visits `[assume]` may speak of: all of the plan, or those of the analysis that is looked at; without
+/// looks, those of any analysis.
 fn assumed_lengths(interim: Option<&Interim>, analyses: &[Analysis], visits: usize) -> Vec<usize> {
+    let looked_at = interim.and_then(|interim| analyses.get(interim.analysis));
     let mut lengths = vec![visits];
-    if let Some(analysis) = interim.and_then(|interim| analyses.get(interim.analysis)) {
+    for analysis in looked_at.map_or(analyses, std::slice::from_ref) {
         let baseline = analysis.mixed.as_ref().is_some_and(|mixed| mixed.baseline.is_some());
         lengths.push(analysis.visits.len() + usize::from(baseline));
-        lengths.dedup();
     }
+    lengths.sort_unstable();
+    lengths.dedup();
     lengths
 }
 

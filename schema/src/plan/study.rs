@@ -128,6 +128,9 @@ pub(crate) fn nothing() -> Regex {
 
 fn anchor(check: &mut Check<'_>, tab: &Tab<'_>, visits: &[Visit]) -> Anchor {
     let Some(code) = tab.text("anchor").filter(|code| *code != "enrolment") else { return Anchor::Enrolment };
+    if visits.is_empty() {
+        return Anchor::Enrolment;
+    }
     let mut known: Vec<&str> = visits.iter().map(|visit| visit.code.as_str()).collect();
     known.push("enrolment");
     let (spot, path) = (tab.spot_of("anchor"), tab.path_of("anchor"));

@@ -182,11 +182,11 @@ fn conditions(
         let levels = levels(may, &entry.key);
         let rule = match (&entry.node.value, Tab::new(&PLACE, &entry.node, path.clone())) {
             (_, Some(found)) => {
-                place::targets(check, &found, "level of this condition", &levels);
+                place::targets(check, &found, "level of the condition", &levels);
                 LevelRule::Found(place::place(&found, named))
             }
             (Value::Text(level), None) => {
-                check.refer(&entry.node.spot, &path, level, "level of this condition", &levels);
+                check.refer(&entry.node.spot, &path, level, "level of the condition", &levels);
                 LevelRule::Fixed(level.clone())
             }
             _ => continue,
