@@ -306,6 +306,37 @@ fn mutate(text: &str, kind: u8, at: usize, length: usize, with: &str) -> String 
     }
 }
 
+/// A few characters, or a value that fits some key and none of the others.
+fn scrap() -> impl Strategy<Value = String> {
+    const VALUES: &[&str] = &[
+        "[]",
+        "{}",
+        "\"\"",
+        "0",
+        "-1",
+        "1e308",
+        "inf",
+        "nan",
+        "true",
+        "2026-02-28",
+        "07:30:00",
+        "[[visit]]",
+        "[interim]",
+        "[[instrument.reader.value]]",
+        "\"arm\"",
+        "\"visit\"",
+        "after = \"baseline\"",
+        "9223372036854775807",
+        "[1, 2]",
+        "{ column = \"a\" }",
+        "[{}]",
+        "[[1, 2], [2, 1]]",
+        "\n",
+        "#",
+    ];
+    prop_oneof!["[\"'\\[\\]{}=,.#\\n a-z0-9é\\-]{0,6}", prop::sample::select(VALUES).prop_map(str::to_owned)]
+}
+
 proptest! {
     #![proptest_config(ProptestConfig { cases: 600, failure_persistence: None, ..ProptestConfig::default() })]
 
@@ -313,12 +344,15 @@ proptest! {
     #[test]
     fn mutated_plans_never_panic(
         which in 0_usize..1000,
-        changes in prop::collection::vec((0_u8..4, 0_usize..10_000, 0_usize..40, "[\"'\\[\\]{}=,.#\\n a-z0-9é\\-]{0,6}"), 1..5),
+        changes in prop::collection::vec((0_u8..4, 0_usize..10_000, 0_usize..40, scrap()), 1..5),
     ) {
         let texts = all_texts();
         let mut files = texts[which % texts.len()].clone();
         for (kind, at, length, with) in &changes {
-            files.main = mutate(&files.main, *kind, *at, *length, with);
+            match files.readers.first_mut().filter(|_| at % 3 == 0) {
+                Some((_, reader)) => *reader = mutate(reader, *kind, *at, *length, with),
+                None => files.main = mutate(&files.main, *kind, *at, *length, with),
+            }
         }
         match parse(&files) {
             Ok(_) => prop_assert_eq!(held(&files).err(), None, "{}", files.main),

@@ -6,6 +6,11 @@
 //! The way of a plan: [`load`] reads the files, `written` makes a tree in which everything knows where it stands,
 //! `keys` holds the tree against the definitions of the tables, and one module a table turns it into the types of
 //! [`model`], checking what one key says against another.
+//!
+//! Older plans keep working. Spellings of earlier grammars are taken with a warning: in `[[analysis]]` the key
+//! `adjust` for `multiplicity`, and the method `rm-anova` for `repeated-measures`. Where the grammar leaves a default
+//! open, it is: `header = { row = 1 }` (with `columns` given: no header), `multiplicity = "holm"`, `sides = 2`,
+//! `dropout = 0`, and an analysis without `visits` uses those at which its measure is due.
 
 // In tests a panic is how a failure is said.
 #![cfg_attr(test, allow(clippy::unwrap_used, clippy::expect_used, clippy::panic))]
@@ -174,7 +179,25 @@ fn finish(mut faults: Vec<Fault>, plan: Option<Plan>) -> Result<(Plan, Vec<Fault
         (a.file != MAIN, &a.file, a.span, a.severity).cmp(&(b.file != MAIN, &b.file, b.span, b.severity))
     });
     faults.dedup_by(|a, b| (&a.file, a.span, &a.wrong) == (&b.file, b.span, &b.wrong));
-    let faults = Faults(faults);
+    let mut faults = Faults(faults);
+    if plan.is_none() && !faults.any_error() {
+        // No part may be absent without a word; were one, the plan must still not be taken for faultless.
+        let (file, wrong) = (MAIN.to_owned(), "The plan is not whole.".to_owned());
+        let (key, right, text) = (String::new(), String::new(), String::new());
+        let severity = Severity::Error;
+        faults.0.push(Fault {
+            file,
+            line: 1,
+            column: 1,
+            span: (0, 0),
+            key,
+            wrong,
+            right,
+            nearest: None,
+            severity,
+            text,
+        });
+    }
     match plan {
         Some(plan) if !faults.any_error() => Ok((plan, faults.0)),
         _ => Err(faults),

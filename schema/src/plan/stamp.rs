@@ -135,6 +135,9 @@ fn compile(pattern: &str) -> Result<Vec<Step>, String> {
     if has(&Step::Second) && !has(&Step::Minute) {
         return Err("it has seconds, but no minutes".into());
     }
+    if (has(&Step::Fraction) || has(&Step::PointFraction)) && !has(&Step::Second) && !has(&Step::UnixSeconds) {
+        return Err("it has a fraction, but no seconds".into());
+    }
     let timed = has(&Step::Hour) || has(&Step::Hour12) || has(&Step::UnixSeconds);
     if has(&Step::Offset) && !timed {
         return Err("it has an offset, but no time".into());
@@ -556,6 +559,7 @@ mod tests {
             "%d/%m/%Y %H:%M %Z",
             "%+",
             "%d/%m/%Y %z",
+            "%d/%m/%Y %H:%M%.f",
             "DD/MM/YYYY",
         ] {
             assert!(CompiledStamp::new(&Stamp::Pattern(bad.into())).is_err(), "{bad}");

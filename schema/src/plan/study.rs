@@ -49,7 +49,7 @@ pub(crate) static SUBJECT: Table = Table {
     name: "[subject]",
     doc: "How subjects are told apart, and where their days are counted from.",
     keys: &[
-        needed("pattern", Kind::Text(Form::Regex), "What a whole subject code must match after it has been tidied"),
+        needed("pattern", Kind::Text(Form::Whole), "What a whole subject code must match after it has been tidied"),
         key(
             "normalise",
             Kind::List(&Kind::Word(&TIDY.words), 0),
