@@ -117,6 +117,10 @@ fn loading_reads_the_reader_files_it_names() {
     let error = load(Path::new("/nowhere"), &|_| Err(std::io::Error::other("gone"))).unwrap_err();
     assert!(matches!(error, LoadError::Unreadable { .. }));
     assert_eq!(error.to_string(), "/nowhere/study.toml cannot be read: gone");
+    let no_reader =
+        |path: &Path| if path.ends_with("study.toml") { read(path) } else { Err(std::io::Error::other("gone")) };
+    let error = load(&dir, &no_reader).unwrap_err().to_string();
+    assert!(error.contains("The reader file \"readers/balance.toml\" cannot be read: gone."), "{error}");
 }
 
 #[test]

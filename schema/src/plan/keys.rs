@@ -257,6 +257,8 @@ impl<'a> Tab<'a> {
     }
 
     pub fn node(&self, name: &str) -> Option<&'a Node> {
+        #[cfg(test)]
+        tests::ASKED.with_borrow_mut(|asked| asked.insert((self.def.name, name.to_owned())));
         self.entry(name).map(|entry| &entry.node)
     }
 
@@ -652,4 +654,38 @@ fn upper_first(text: &str) -> String {
 fn lower_first(text: &str) -> String {
     let mut chars = text.chars();
     chars.next().map_or_else(String::new, |first| first.to_lowercase().chain(chars).collect())
+}
+
+#[cfg(test)]
+mod tests {
+    use std::cell::RefCell;
+    use std::collections::BTreeSet;
+
+    use super::super::{PlanFiles, ROOT, each_table, parse, reader_files};
+
+    thread_local! {
+        /// The keys whose values have been asked for: the table's name, and the key's.
+        pub(super) static ASKED: RefCell<BTreeSet<(&'static str, String)>> = const { RefCell::new(BTreeSet::new()) };
+    }
+
+    /// A key that is defined, and so is in the JSON Schema, but that no reader asks for, would be taken and do nothing.
+    #[test]
+    fn every_key_that_is_defined_is_read() {
+        let folder = std::path::Path::new(env!("CARGO_MANIFEST_DIR")).join("tests/plans/sound");
+        for name in
+            ["every-key.toml", "every-place.toml", "one-group-with-constant-boundary.toml", "equal-correlation.toml"]
+        {
+            let main = std::fs::read_to_string(folder.join(name)).unwrap();
+            let text = |path: String| (path.clone(), std::fs::read_to_string(folder.join(path)).unwrap());
+            let readers = reader_files(&main).into_iter().map(text).collect();
+            parse(&PlanFiles { main, readers }).unwrap();
+        }
+        let asked = ASKED.take();
+        let mut unread = vec![];
+        each_table(&ROOT, &mut |table| {
+            let keys = table.keys.iter().filter(|key| !asked.contains(&(table.name, key.name.to_owned())));
+            unread.extend(keys.map(|key| format!("{}.{}", table.name, key.name)));
+        });
+        assert!(unread.is_empty(), "nobody reads {unread:?}");
+    }
 }

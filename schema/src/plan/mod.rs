@@ -116,14 +116,15 @@ pub enum LoadError {
 pub fn load(dir: &Path, read: &dyn Fn(&Path) -> io::Result<String>) -> Result<Loaded, LoadError> {
     let path = dir.join(MAIN);
     let main = read(&path).map_err(|source| LoadError::Unreadable { path, source })?;
-    let mut readers = vec![];
+    let (mut readers, mut absent) = (vec![], vec![]);
     for named in reader_files(&main) {
-        if let Ok(text) = read(&dir.join(&named)) {
-            readers.push((named, text));
+        match read(&dir.join(&named)) {
+            Ok(text) => readers.push((named, text)),
+            Err(error) => absent.push((named, error.to_string())),
         }
     }
     let files = PlanFiles { main, readers };
-    let (plan, warnings) = parse(&files).map_err(LoadError::Unsound)?;
+    let (plan, warnings) = judge(&files, &absent).map_err(LoadError::Unsound)?;
     Ok(Loaded { plan, files, warnings })
 }
 
@@ -142,6 +143,11 @@ pub fn reader_files(main: &str) -> Vec<String> {
 
 /// Checks a plan from its texts alone: the plan and what a person should know of it, or all its faults.
 pub fn parse(files: &PlanFiles) -> Result<(Plan, Vec<Fault>), Faults> {
+    judge(files, &[])
+}
+
+/// As [`parse`]; `absent` are the reader files that could not be read, and why.
+fn judge(files: &PlanFiles, absent: &[(String, String)]) -> Result<(Plan, Vec<Fault>), Faults> {
     let mut sources = vec![FileText { name: MAIN.to_owned(), text: files.main.clone() }];
     sources.extend(files.readers.iter().map(|(name, text)| FileText { name: name.clone(), text: text.clone() }));
     let mut check = Check::new(&sources);
@@ -152,7 +158,7 @@ pub fn parse(files: &PlanFiles) -> Result<(Plan, Vec<Fault>), Faults> {
         trees.push((source.name.clone(), tree));
     }
     let (_, root) = trees.remove(0);
-    let plan = whole(&mut check, &root, &trees);
+    let plan = whole(&mut check, &root, &trees, absent);
     finish(check.faults, plan)
 }
 
@@ -247,11 +253,11 @@ fn each_table(table: &'static Table, visit: &mut dyn FnMut(&'static Table)) {
 }
 
 /// The whole plan; `None` where a part without a stand-in is at fault, which has been said.
-fn whole(check: &mut Check<'_>, root: &Node, readers: &[(String, Node)]) -> Option<Plan> {
+fn whole(check: &mut Check<'_>, root: &Node, readers: &[(String, Node)], absent: &[(String, String)]) -> Option<Plan> {
     check.table(&ROOT, root, "");
     let tab = Tab::new(&ROOT, root, String::new())?;
     let instruments = tab.tables("instrument", &instrument::INSTRUMENT);
-    reader_tables(check, &instruments, readers);
+    reader_tables(check, &instruments, readers, absent);
     if check.torn {
         // Half a file would only give faults that are none.
         return None;
@@ -304,13 +310,20 @@ fn assumed_lengths(interim: Option<&Interim>, analyses: &[Analysis], visits: usi
 }
 
 /// Holds each reader file against the reader's definition; one that is not there is a fault where it is named.
-fn reader_tables(check: &mut Check<'_>, instruments: &[Tab<'_>], readers: &[(String, Node)]) {
+fn reader_tables(
+    check: &mut Check<'_>,
+    instruments: &[Tab<'_>],
+    readers: &[(String, Node)],
+    absent: &[(String, String)],
+) {
     for tab in instruments {
         let Some(path) = tab.text("reader") else { continue };
         match readers.iter().find(|(name, _)| name == path) {
             Some((_, node)) => check.table(&reader::READER, node, &keys::join(&tab.path, "reader")),
             None => {
-                let wrong = format!("The reader file \"{}\" cannot be read.", forms::clip(path));
+                let why =
+                    absent.iter().find(|(name, _)| name == path).map_or(String::new(), |(_, why)| format!(": {why}"));
+                let wrong = format!("The reader file \"{}\" cannot be read{why}.", forms::clip(path));
                 check.at(tab, "reader", wrong, "the path of a file, relative to the plan, or the table itself");
             }
         }

@@ -23,13 +23,14 @@ fn document(root: &'static Table, title: &str) -> Value {
     super::each_table(root, &mut |it| {
         tables.entry(name(it)).or_insert_with(|| table(it));
     });
-    let mut schema = table(root);
-    if let Some(top) = schema.as_object_mut() {
-        top.insert("$schema".into(), json!("https://json-schema.org/draft/2020-12/schema"));
-        top.insert("title".into(), json!(title));
-        top.insert("$defs".into(), Value::Object(tables));
+    let mut top = Map::new();
+    top.insert("$schema".into(), json!("https://json-schema.org/draft/2020-12/schema"));
+    top.insert("title".into(), json!(title));
+    if let Value::Object(table) = table(root) {
+        top.extend(table);
     }
-    schema
+    top.insert("$defs".into(), Value::Object(tables));
+    Value::Object(top)
 }
 
 /// A table's name as a word.
