@@ -195,6 +195,7 @@ CREATE TABLE sighting (
 ) STRICT;
 CREATE INDEX sighting_capture ON sighting (capture);
 CREATE INDEX sighting_filing ON sighting (filing);
+CREATE INDEX sighting_hold ON sighting (hold);
 
 -- A reading that a later export no longer holds.
 CREATE TABLE gone (

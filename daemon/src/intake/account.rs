@@ -66,6 +66,22 @@ impl Account {
         }
     }
 
+    /// Shares out the rows that have a value as an older account did, as far as they go; the rest are filed.
+    pub fn rest_as(&mut self, before: &Account) {
+        let others = self.preamble
+            + self.header
+            + self.units
+            + self.blank
+            + self.repeated_header
+            + self.ignored
+            + self.footer
+            + self.no_value;
+        let rest = self.lines.saturating_sub(others);
+        self.held = before.held.min(rest);
+        self.already = before.already.min(rest - self.held);
+        self.filed = rest - self.held - self.already;
+    }
+
     /// Whether the parts add up.
     pub fn balanced(&self) -> bool {
         let parts = [

@@ -24,8 +24,8 @@ use super::keep::{Keeping, keep};
 use super::notice::{Found, Walk, walk};
 use super::place::resolve::{Decided, Held, Resolver, RowOutcome, ValueOutcome, Whereabouts, path_facts};
 use super::read::{self, FileFault, Row};
-use super::{plan, replace};
 use super::rules::{Gathered, Rules};
+use super::{plan, replace};
 
 /// How often an export is placed anew because the rules changed meanwhile, before it is left to the next collect.
 const TRIES: u32 = 20;
@@ -93,7 +93,10 @@ impl IntakeLock {
         match file.try_lock() {
             Ok(()) => {
                 let note = format!("{program}, process {}", std::process::id());
-                file.set_len(0).and_then(|()| file.rewind()).and_then(|()| file.write_all(note.as_bytes())).map_err(failed)?;
+                file.set_len(0)
+                    .and_then(|()| file.rewind())
+                    .and_then(|()| file.write_all(note.as_bytes()))
+                    .map_err(failed)?;
                 Ok(Self { _file: file })
             }
             Err(std::fs::TryLockError::WouldBlock) => {
@@ -467,7 +470,10 @@ fn continued(
 }
 
 /// Whether the bytes of `newer` begin with all of `older`.
-fn begins_with(mut newer: Box<dyn std::io::Read + '_>, mut older: Box<dyn std::io::Read + '_>) -> std::io::Result<bool> {
+fn begins_with(
+    mut newer: Box<dyn std::io::Read + '_>,
+    mut older: Box<dyn std::io::Read + '_>,
+) -> std::io::Result<bool> {
     use std::io::Read;
     let (mut one, mut other) = (vec![0; 64 * 1024], Vec::with_capacity(64 * 1024));
     loop {

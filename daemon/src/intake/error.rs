@@ -50,7 +50,8 @@ fn refusal(touched: &[String]) -> String {
 
 fn differently(changes: &[WouldChange]) -> String {
     let lines: u64 = changes.iter().map(|change| change.lines).sum();
-    let first = changes.first().map(|change| format!(" (in {}: {})", change.export, change.example)).unwrap_or_default();
+    let first =
+        changes.first().map(|change| format!(" (in {}: {})", change.export, change.example)).unwrap_or_default();
     format!(
         "the changed plan would read or place {lines} filed lines of {} exports differently{first}. The last sound plan \
          stays in force. `revisant check` lists what would change; if the old reader was wrong, \

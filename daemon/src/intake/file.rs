@@ -815,7 +815,8 @@ pub fn settle_folds(
     Ok(folds.settle())
 }
 
-fn new_reading<'n>(
+/// A reading as it is to be filed.
+pub fn new_reading<'n>(
     rules: &'n Rules,
     instrument: &'n Instrument,
     row: &'n Row,

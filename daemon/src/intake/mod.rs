@@ -6,6 +6,7 @@ pub mod error;
 pub mod file;
 pub mod keep;
 pub mod notice;
+pub mod over;
 pub mod place;
 pub mod plan;
 pub mod read;

@@ -20,11 +20,11 @@ use serde_json::json;
 
 use super::collect::file_name;
 use super::error::{IntakeError, Result, WouldChange};
+use super::file;
 use super::place::clock::Local;
 use super::place::resolve::{Decided, Resolver, RowOutcome, ValueOutcome, Whereabouts};
 use super::read::{self, FileFault, Row, Rows};
 use super::rules::Rules;
-use super::file;
 
 /// Reads the study's plan through the world's doors.
 pub fn load_plan(world: &dyn World, study: &Path) -> Result<Loaded> {
@@ -103,8 +103,12 @@ impl Data {
     /// What a change touches, in words; `None`: nothing.
     fn touched(&self, new: &Plan, change: &Change) -> Option<String> {
         let readings = |which: &dyn Fn(&str, &Condition) -> bool| {
-            let count: u32 =
-                self.cells.iter().filter(|(code, condition, _)| which(code, condition)).map(|(_, _, count)| count).sum();
+            let count: u32 = self
+                .cells
+                .iter()
+                .filter(|(code, condition, _)| which(code, condition))
+                .map(|(_, _, count)| count)
+                .sum();
             (count > 0).then(|| format!("it has {count} readings"))
         };
         let subjects = |count: usize| (count > 0).then(|| format!("it stands in the roster of {count} subjects"));
@@ -149,8 +153,8 @@ pub fn would_change(records: &Records, rules: &Rules, new: &Plan) -> Result<Vec<
     let captures = records.view()?.captures()?;
     for (old_at, old_instrument) in rules.plan.instruments.iter().enumerate() {
         let Some((new_at, new_instrument)) = new.instrument(&old_instrument.code) else { continue };
-        let same = meaning::placing_sections(&rules.plan, old_instrument)
-            == meaning::placing_sections(new, new_instrument);
+        let same =
+            meaning::placing_sections(&rules.plan, old_instrument) == meaning::placing_sections(new, new_instrument);
         if same {
             continue;
         }

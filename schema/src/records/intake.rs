@@ -369,3 +369,21 @@ impl Records {
             .map_err(self.failed("looking at what a path held"))
     }
 }
+
+impl Records {
+    /// The newest account of a capture's lines, as JSON.
+    pub fn account_of(&self, capture: i64) -> Result<Option<String>> {
+        self.conn
+            .prepare_cached("SELECT lines FROM account WHERE capture = ?1 ORDER BY id DESC LIMIT 1")
+            .and_then(|mut statement| statement.query_row([capture], |row| row.get(0)).optional())
+            .map_err(self.failed("reading an account"))
+    }
+
+    /// The later captures that hold a held row again.
+    pub fn sightings_of(&self, hold: i64) -> Result<Vec<i64>> {
+        self.conn
+            .prepare_cached("SELECT capture FROM sighting WHERE hold = ?1 ORDER BY id")
+            .and_then(|mut statement| statement.query_map([hold], |row| row.get(0))?.collect())
+            .map_err(self.failed("reading where a hold was seen"))
+    }
+}

@@ -12,7 +12,8 @@ use regex::Regex;
 use revisant_schema::hold::{Answer, Reason};
 use revisant_schema::plan::stamp::{CompiledStamp, Written};
 use revisant_schema::plan::{
-    Affine, Instrument, LevelRule, LimitRule, MeasureIx, MeasureRule, Place, Plan, Reader, Source, UnitRule, ValueRule, units,
+    Affine, Instrument, LevelRule, LimitRule, MeasureIx, MeasureRule, Place, Plan, Reader, Source, UnitRule, ValueRule,
+    units,
 };
 use revisant_schema::reading::Condition;
 use revisant_schema::roster::{Roster, tidy};
