@@ -15,7 +15,6 @@ use revisant_schema::records::intake::Noticed;
 use revisant_schema::records::raw::RawSource;
 use revisant_schema::records::view::HoldRow;
 use revisant_schema::records::{ActKind, Cell, Doer, Filing, Kept, Records, RecordsError};
-use revisant_schema::world::World;
 use serde_json::json;
 
 use super::error::{IntakeError, Result};
@@ -210,7 +209,7 @@ fn note_walk(records: &mut Records, plan: &Plan, walked: &Walk, report: &mut Rep
 
 fn write_notes(records: &mut Records, changes: &[(String, Option<Noticed>)], lost: &str) -> Result<()> {
     records.begin()?;
-    let mut write = || -> revisant_schema::records::Result<()> {
+    let write = || -> revisant_schema::records::Result<()> {
         for (path, seen) in changes {
             match seen {
                 Some(seen) => records.set_noticed(path, seen)?,
