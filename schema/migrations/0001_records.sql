@@ -296,7 +296,7 @@ BEGIN SELECT RAISE(ABORT, 'append-only: a row of roster_event cannot be replaced
 CREATE TRIGGER roster_event_stays BEFORE DELETE ON roster_event
 BEGIN SELECT RAISE(ABORT, 'append-only: a row of roster_event cannot be deleted'); END;
 CREATE TRIGGER roster_event_same BEFORE UPDATE ON roster_event
-WHEN NOT (OLD.removed IS NULL AND NEW.removed IN (SELECT act FROM removal) AND NEW.digest IS NOT NULL
+WHEN NOT (OLD.removed IS NULL AND NEW.removed IS NOT NULL AND NEW.removed IN (SELECT act FROM removal) AND NEW.digest IS NOT NULL
     AND NEW.value IS NULL AND NEW.salt IS NULL
     AND NEW.id IS OLD.id AND NEW.act IS OLD.act AND NEW.subject IS OLD.subject AND NEW.field IS OLD.field)
 BEGIN SELECT RAISE(ABORT, 'append-only: a row of roster_event cannot be changed'); END;
@@ -328,7 +328,7 @@ CREATE TRIGGER reading_stays BEFORE DELETE ON reading
 WHEN EXISTS (SELECT 1 FROM filing WHERE id = OLD.filing)
 BEGIN SELECT RAISE(ABORT, 'append-only: a row of reading cannot be deleted'); END;
 CREATE TRIGGER reading_same BEFORE UPDATE ON reading
-WHEN NOT (OLD.removed IS NULL AND NEW.removed IN (SELECT act FROM removal) AND NEW.digest IS NOT NULL
+WHEN NOT (OLD.removed IS NULL AND NEW.removed IS NOT NULL AND NEW.removed IN (SELECT act FROM removal) AND NEW.digest IS NOT NULL
     AND NEW.text IS NULL AND NEW.exported IS NULL AND NEW.number IS NULL AND NEW.mark IS NULL AND NEW.byte_from IS NULL AND NEW.byte_to IS NULL AND NEW.salt IS NULL
     AND NEW.id IS OLD.id AND NEW.filing IS OLD.filing AND NEW.capture IS OLD.capture AND NEW.line IS OLD.line AND NEW.cell IS OLD.cell AND NEW.instrument IS OLD.instrument AND NEW.measure IS OLD.measure AND NEW.condition IS OLD.condition AND NEW.replicate IS OLD.replicate AND NEW.labelled IS OLD.labelled AND NEW.session IS OLD.session AND NEW.unit IS OLD.unit AND NEW.written IS OLD.written AND NEW.moment IS OLD.moment AND NEW.operator IS OLD.operator AND NEW.plan IS OLD.plan AND NEW.identity IS OLD.identity AND NEW.ordinal IS OLD.ordinal AND NEW.supersedes IS OLD.supersedes AND NEW.source IS OLD.source)
 BEGIN SELECT RAISE(ABORT, 'append-only: a row of reading cannot be changed'); END;
@@ -346,7 +346,7 @@ CREATE TRIGGER hold_stays BEFORE DELETE ON hold
 WHEN EXISTS (SELECT 1 FROM filing WHERE id = OLD.filing)
 BEGIN SELECT RAISE(ABORT, 'append-only: a row of hold cannot be deleted'); END;
 CREATE TRIGGER hold_same BEFORE UPDATE ON hold
-WHEN NOT (OLD.removed IS NULL AND NEW.removed IN (SELECT act FROM removal) AND NEW.digest IS NOT NULL
+WHEN NOT (OLD.removed IS NULL AND NEW.removed IS NOT NULL AND NEW.removed IN (SELECT act FROM removal) AND NEW.digest IS NOT NULL
     AND NEW.row IS NULL AND NEW.detail IS NULL AND NEW.byte_from IS NULL AND NEW.byte_to IS NULL AND NEW.salt IS NULL
     AND NEW.id IS OLD.id AND NEW.filing IS OLD.filing AND NEW.capture IS OLD.capture AND NEW.reason IS OLD.reason AND NEW.line IS OLD.line AND NEW.cell IS OLD.cell AND NEW.column IS OLD.column AND NEW.row_key IS OLD.row_key)
 BEGIN SELECT RAISE(ABORT, 'append-only: a row of hold cannot be changed'); END;
@@ -356,7 +356,7 @@ BEGIN SELECT RAISE(ABORT, 'append-only: a row of hold_event cannot be replaced')
 CREATE TRIGGER hold_event_stays BEFORE DELETE ON hold_event
 BEGIN SELECT RAISE(ABORT, 'append-only: a row of hold_event cannot be deleted'); END;
 CREATE TRIGGER hold_event_same BEFORE UPDATE ON hold_event
-WHEN NOT (OLD.removed IS NULL AND NEW.removed IN (SELECT act FROM removal) AND NEW.digest IS NOT NULL
+WHEN NOT (OLD.removed IS NULL AND NEW.removed IS NOT NULL AND NEW.removed IN (SELECT act FROM removal) AND NEW.digest IS NOT NULL
     AND NEW.answer IS NULL AND NEW.salt IS NULL
     AND NEW.id IS OLD.id AND NEW.act IS OLD.act AND NEW.hold IS OLD.hold AND NEW.state IS OLD.state)
 BEGIN SELECT RAISE(ABORT, 'append-only: a row of hold_event cannot be changed'); END;
@@ -394,7 +394,8 @@ CREATE TRIGGER raw_once BEFORE INSERT ON raw
 WHEN EXISTS (SELECT 1 FROM raw WHERE sha256 = NEW.sha256)
 BEGIN SELECT RAISE(ABORT, 'append-only: a row of raw cannot be replaced'); END;
 CREATE TRIGGER raw_stays BEFORE DELETE ON raw
-WHEN EXISTS (SELECT 1 FROM capture WHERE sha256 = OLD.sha256)
+WHEN (EXISTS (SELECT 1 FROM capture WHERE sha256 = OLD.sha256)
+        OR EXISTS (SELECT 1 FROM raw_removal WHERE instead = OLD.sha256))
     AND NOT EXISTS (SELECT 1 FROM raw_removal WHERE sha256 = OLD.sha256)
 BEGIN SELECT RAISE(ABORT, 'append-only: a row of raw cannot be deleted'); END;
 CREATE TRIGGER raw_same BEFORE UPDATE ON raw

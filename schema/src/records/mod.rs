@@ -10,6 +10,7 @@ pub mod open;
 pub mod raw;
 pub mod texts;
 pub mod trail;
+pub mod verify;
 pub mod view;
 pub mod writer;
 
@@ -17,5 +18,6 @@ pub use error::{RecordsError, Result};
 pub use open::Records;
 pub use raw::{KeepError, Kept};
 pub use trail::{ActKind, ActNumber, Doer, TrailRow};
+pub use verify::{RawWrong, Verified, VerifyFault, VerifyNote};
 pub use view::{AsOf, View};
 pub use writer::{Act, Cell, Filing, NewHold, NewReading};

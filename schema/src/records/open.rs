@@ -4,6 +4,7 @@
 //! written; a migration is one transaction and runs after a backup of the file.
 
 use std::fs;
+use std::io;
 use std::os::unix::fs::{DirBuilderExt, OpenOptionsExt, PermissionsExt};
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
@@ -16,7 +17,7 @@ use super::texts::Texts;
 use crate::world::World;
 
 /// Marks the file as records (`application_id`).
-const APPLICATION: i64 = 0x5256_5354;
+pub(crate) const APPLICATION: i64 = 0x5256_5354;
 
 /// The numbered steps from an empty file to the newest layout.
 const MIGRATIONS: &[&str] = &[include_str!("../../migrations/0001_records.sql")];
@@ -28,6 +29,7 @@ pub struct Records {
     pub(crate) file: PathBuf,
     pub(crate) world: Arc<dyn World>,
     pub(crate) texts: Texts,
+    patience: Duration,
 }
 
 impl Records {
@@ -50,13 +52,23 @@ impl Records {
         let folder = Self::folder_of(study);
         refuse_network(&folder)?;
         make_private_folder(&folder)?;
-        make_private_folder(&folder.join("raw"))?;
         let file = folder.join("records.sqlite");
-        make_private_file(&file)?;
+        make_file(&file)?;
         let conn = connect(&file)?;
-        let mut records = Self { conn, folder, file, world, texts: Texts::default() };
-        records.migrate()?;
+        let version = examine(&conn, &file)?;
+        make_private_file(&file)?;
+        make_private_folder(&folder.join("raw"))?;
+        configure(&conn, &file)?;
+        let patience = Duration::from_secs(PATIENCE_SECONDS);
+        let mut records = Self { conn, folder, file, world, texts: Texts::default(), patience };
+        records.migrate(version)?;
         Ok(records)
+    }
+
+    /// Sets how long to wait for another writer; [`PATIENCE_SECONDS`] unless set.
+    pub fn set_patience(&mut self, patience: Duration) -> Result<()> {
+        self.patience = patience;
+        self.conn.busy_timeout(patience).map_err(self.failed("setting the patience"))
     }
 
     /// The moment, by the world's clock.
@@ -75,25 +87,15 @@ impl Records {
     }
 
     pub(crate) fn failed(&self, doing: &'static str) -> impl Fn(rusqlite::Error) -> RecordsError + use<> {
-        let file = self.file.clone();
-        move |source| RecordsError::database(&file, doing, source)
+        let (file, patience) = (self.file.clone(), self.patience);
+        move |source| match RecordsError::database(&file, doing, source) {
+            RecordsError::Busy { file, .. } => RecordsError::Busy { file, seconds: patience.as_secs() },
+            other => other,
+        }
     }
 
-    fn migrate(&mut self) -> Result<()> {
-        let failed = self.failed("opening the records");
-        let pragma = |conn: &Connection, name: &str| conn.pragma_query_value(None, name, |row| row.get::<_, i64>(0));
-        let application = pragma(&self.conn, "application_id").map_err(&failed)?;
-        let version = pragma(&self.conn, "user_version").map_err(&failed)?;
-        let known = MIGRATIONS.len() as i64;
-        let tables: i64 =
-            self.conn.query_row("SELECT count(*) FROM sqlite_master", [], |row| row.get(0)).map_err(&failed)?;
-        match (application, version, tables) {
-            (0, 0, 0) | (APPLICATION, 1.., _) => {}
-            _ => return Err(RecordsError::Foreign(self.file.clone())),
-        }
-        if version > known {
-            return Err(RecordsError::Newer { file: self.file.clone(), found: version, known });
-        }
+    fn migrate(&mut self, version: i64) -> Result<()> {
+        let known = Self::newest_layout();
         if version == known {
             return Ok(());
         }
@@ -126,6 +128,11 @@ impl Records {
         backup.run_to_completion(1000, Duration::ZERO, None).map_err(&failed)
     }
 
+    /// The number of the newest layout that this program knows.
+    pub(crate) fn newest_layout() -> i64 {
+        MIGRATIONS.len() as i64
+    }
+
     /// The statements that made the layout, as this program knows it: what `verify` compares the file with.
     pub(crate) fn expected_layout() -> rusqlite::Result<Vec<(String, String)>> {
         let conn = Connection::open_in_memory()?;
@@ -136,10 +143,12 @@ impl Records {
     }
 }
 
-/// Name and statement of everything in the schema, sorted.
+/// Name and statement of everything in the schema, sorted; SQLite's own indexes have no statement, and its statistics
+/// are none of the layout.
 pub(crate) fn layout(conn: &Connection) -> rusqlite::Result<Vec<(String, String)>> {
     let mut statement = conn.prepare(
-        "SELECT name, sql FROM sqlite_master WHERE sql IS NOT NULL AND name NOT LIKE 'sqlite_%' ORDER BY name",
+        "SELECT name, sql FROM sqlite_master
+         WHERE sql IS NOT NULL AND name NOT IN ('sqlite_stat1', 'sqlite_stat4') ORDER BY name",
     )?;
     let rows = statement.query_map([], |row| Ok((row.get(0)?, row.get(1)?)))?;
     rows.collect()
@@ -150,6 +159,32 @@ fn connect(file: &Path) -> Result<Connection> {
     let flags = OpenFlags::SQLITE_OPEN_READ_WRITE | OpenFlags::SQLITE_OPEN_NO_MUTEX;
     let conn = Connection::open_with_flags(file, flags).map_err(failed)?;
     conn.busy_timeout(Duration::from_secs(PATIENCE_SECONDS)).map_err(failed)?;
+    Ok(conn)
+}
+
+/// Gives the layout's number, or refuses what is not records of a known layout, before anything is written: even the
+/// journal's mode is written into the file.
+fn examine(conn: &Connection, file: &Path) -> Result<i64> {
+    let failed = |source| RecordsError::database(file, "opening the records", source);
+    // One transaction, since another program may be making the records at this moment.
+    let transaction = conn.unchecked_transaction().map_err(failed)?;
+    let number = |sql: &str| transaction.query_row(sql, [], |row| row.get::<_, i64>(0));
+    let tables = number("SELECT count(*) FROM sqlite_master").map_err(failed)?;
+    let application = number("PRAGMA application_id").map_err(failed)?;
+    let version = number("PRAGMA user_version").map_err(failed)?;
+    let known = Records::newest_layout();
+    match (application, version, tables) {
+        (0, 0, 0) | (APPLICATION, 1.., _) => {}
+        _ => return Err(RecordsError::Foreign(file.to_path_buf())),
+    }
+    if version > known {
+        return Err(RecordsError::Newer { file: file.to_path_buf(), found: version, known });
+    }
+    Ok(version)
+}
+
+fn configure(conn: &Connection, file: &Path) -> Result<()> {
+    let failed = |source| RecordsError::database(file, "opening the records", source);
     // recursive_triggers: without it INSERT OR REPLACE deletes without firing the DELETE triggers of this connection.
     conn.execute_batch(
         "PRAGMA journal_mode = WAL; PRAGMA synchronous = FULL; PRAGMA foreign_keys = ON;
@@ -159,7 +194,7 @@ fn connect(file: &Path) -> Result<Connection> {
     )
     .map_err(failed)?;
     conn.set_prepared_statement_cache_capacity(64);
-    Ok(conn)
+    Ok(())
 }
 
 fn make_private_folder(folder: &Path) -> Result<()> {
@@ -173,11 +208,22 @@ fn make_private_folder(folder: &Path) -> Result<()> {
         .map_err(|error| RecordsError::file(folder, "making the folder", error))
 }
 
+/// Makes the file when there is none, for its owner alone.
+fn make_file(file: &Path) -> Result<()> {
+    let made = fs::OpenOptions::new().write(true).create_new(true).mode(0o600).open(file);
+    match made {
+        Err(error) if error.kind() != io::ErrorKind::AlreadyExists => {
+            Err(RecordsError::file(file, "making the file", error))
+        }
+        _ => Ok(()),
+    }
+}
+
+/// Makes the file when there is none, and takes rights away that others have.
 fn make_private_file(file: &Path) -> Result<()> {
-    let failed = |error| RecordsError::file(file, "making the file", error);
-    let made = fs::OpenOptions::new().write(true).create(true).truncate(false).mode(0o600).open(file);
-    let handle = made.map_err(failed)?;
-    let mut rights = handle.metadata().map_err(failed)?.permissions();
+    let failed = |error| RecordsError::file(file, "making the file private", error);
+    make_file(file)?;
+    let mut rights = fs::metadata(file).map_err(failed)?.permissions();
     if rights.mode() & 0o077 != 0 {
         rights.set_mode(0o600);
         fs::set_permissions(file, rights).map_err(failed)?;

@@ -8,7 +8,7 @@ use rusqlite::{OptionalExtension, params, params_from_iter, types::Value};
 use serde_json::Value as Json;
 use sha2::{Digest, Sha256};
 
-use super::codec::{Canon, Hash, Kind, OF_ACT, Table, table};
+use super::codec::{Canon, Hash, Table, table};
 use super::error::{RecordsError, Result};
 use super::open::Records;
 use super::texts::{SessionFact, next_id};
@@ -104,6 +104,11 @@ impl Records {
         work: impl FnOnce(&mut Act<'_>) -> Result<T>,
     ) -> Result<T> {
         let failed = self.failed("writing an act");
+        if self.conn.is_autocommit() {
+            // SQLite gives up the whole transaction itself on a full or failing disk. A savepoint would open a new one
+            // and commit this act alone, while the caller believes that it stands or falls with the batch.
+            return Err(RecordsError::Refused("the transaction of this act was given up after a failure".to_owned()));
+        }
         self.conn.execute_batch("SAVEPOINT act").map_err(&failed)?;
         let number = self.next_act().map_err(&failed)?;
         let mut act =
@@ -497,7 +502,11 @@ impl Records {
     /// Adds a reading to a filing.
     pub fn add_reading(&mut self, filing: &mut Filing, new: &NewReading<'_>) -> Result<i64> {
         let failed = self.failed("filing a reading");
-        self.write_reading(filing, new).map_err(failed)
+        let stored = NewReading { exported: new.exported.map(stored_real), number: stored_real(new.number), ..*new };
+        if stored.number.is_nan() || stored.exported.is_some_and(f64::is_nan) {
+            return Err(RecordsError::Refused(format!("\"{}\" is no number and cannot be filed as one", new.text)));
+        }
+        self.write_reading(filing, &stored).map_err(failed)
     }
 
     fn write_reading(&mut self, filing: &mut Filing, new: &NewReading<'_>) -> rusqlite::Result<i64> {
@@ -599,7 +608,12 @@ impl Records {
     }
 }
 
-/// The digest of a reading in the canonical form; the columns stand in the order of [`OF_ACT`]'s sister list.
+/// A real as SQLite gives it back: it loses the sign of a negative zero, and a digest over it would never fit again.
+fn stored_real(value: f64) -> f64 {
+    if value == 0.0 { 0.0 } else { value }
+}
+
+/// The digest of a reading in the canonical form; the columns stand in the order of [`super::codec::OF_FILING`].
 fn reading_digest(salt: &[u8; 16], id: i64, filing: i64, capture: Option<i64>, new: &NewReading<'_>) -> Hash {
     let mut canon = Canon::default();
     canon.start(salt);
@@ -638,14 +652,4 @@ fn reading_digest(salt: &[u8; 16], id: i64, filing: i64, capture: Option<i64>, n
 /// The columns that a table's canonical rows need, for reading them back.
 pub(crate) fn column_list(table: &Table) -> String {
     table.columns.iter().map(|(name, _)| format!("\"{name}\"")).collect::<Vec<_>>().join(", ")
-}
-
-/// The place of a table among those of an act.
-pub(crate) fn rank_of(name: &str) -> usize {
-    OF_ACT.iter().position(|table| table.name == name).unwrap_or(usize::MAX)
-}
-
-/// Whether a column refers to a text kept elsewhere.
-pub(crate) fn refers(kind: Kind) -> bool {
-    kind != Kind::Plain
 }
