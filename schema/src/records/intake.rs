@@ -29,8 +29,8 @@ pub struct Candidate {
     pub ordinal: i64,
     /// The number as exported.
     pub exported: Option<f64>,
-    /// Its unit as exported.
-    pub unit: i64,
+    /// Its unit as exported; empty: the measure's.
+    pub unit: String,
     /// `<` or `>`.
     pub mark: Option<String>,
 }
@@ -132,7 +132,7 @@ impl Records {
                     labelled: row.get(3)?,
                     ordinal: row.get(4)?,
                     exported: row.get(5)?,
-                    unit: row.get(6)?,
+                    unit: texts.term_text(conn, row.get(6)?)?.to_owned(),
                     mark: row.get(7)?,
                 });
             }

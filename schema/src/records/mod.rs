@@ -5,6 +5,7 @@
 
 pub mod codec;
 pub mod error;
+pub mod exports;
 pub mod intake;
 pub mod open;
 pub mod raw;

@@ -185,9 +185,10 @@ fn examine(conn: &Connection, file: &Path) -> Result<i64> {
 
 fn configure(conn: &Connection, file: &Path) -> Result<()> {
     let failed = |source| RecordsError::database(file, "opening the records", source);
+    write_ahead(conn).map_err(failed)?;
     // recursive_triggers: without it INSERT OR REPLACE deletes without firing the DELETE triggers of this connection.
     conn.execute_batch(
-        "PRAGMA journal_mode = WAL; PRAGMA synchronous = FULL; PRAGMA foreign_keys = ON;
+        "PRAGMA synchronous = FULL; PRAGMA foreign_keys = ON;
          PRAGMA recursive_triggers = ON; PRAGMA trusted_schema = OFF;
          PRAGMA cache_size = -49152; PRAGMA wal_autocheckpoint = 8000; PRAGMA temp_store = MEMORY;
          PRAGMA secure_delete = ON;",
@@ -195,6 +196,23 @@ fn configure(conn: &Connection, file: &Path) -> Result<()> {
     .map_err(failed)?;
     conn.set_prepared_statement_cache_capacity(64);
     Ok(())
+}
+
+/// Turns the write-ahead log on. SQLite does not wait for its turn here, so two who open a new file at once would fail.
+fn write_ahead(conn: &Connection) -> rusqlite::Result<()> {
+    const PAUSE: Duration = Duration::from_millis(10);
+    let mut waited = Duration::ZERO;
+    loop {
+        let busy = match conn.execute_batch("PRAGMA journal_mode = WAL") {
+            Err(error) if error.sqlite_error_code() == Some(rusqlite::ErrorCode::DatabaseBusy) => error,
+            done => return done,
+        };
+        if waited >= Duration::from_secs(PATIENCE_SECONDS) {
+            return Err(busy);
+        }
+        std::thread::sleep(PAUSE);
+        waited += PAUSE;
+    }
 }
 
 fn make_private_folder(folder: &Path) -> Result<()> {
