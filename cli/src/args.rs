@@ -1,0 +1,724 @@
+//! The options of every command.
+//!
+//! Invariant: options are long, plain and few; every command has one line that says what it does, and an example.
+
+use std::path::PathBuf;
+
+use chrono::NaiveDate;
+use clap::{Args as Group, Parser, Subcommand, ValueEnum};
+
+use crate::moment::Moment;
+
+/// Keeps, judges and analyses what was measured on the same subjects again and again.
+#[derive(Debug, Parser)]
+#[command(name = "revisant", version, disable_help_subcommand = true, max_term_width = 100)]
+#[command(after_help = "\
+Example:
+  revisant new --study grip-study       write a plan
+  revisant check --study grip-study     say what is wrong with it
+  revisant roster import roster.csv --study grip-study --why \"first enrolments\"
+  revisant collect --study grip-study   file what the instruments exported
+
+A MOMENT is a date (2026-03-31) or a moment of RFC 3339 (2026-03-31T14:00:00+01:00).
+Exit status: 0 done, 1 failed, 2 usage error or unsound plan, 3 a check found something.
+With --json a failure is {\"error\": {\"kind\", \"message\", \"where\"}} on standard error.")]
+pub struct Args {
+    /// The study's folder, which holds study.toml
+    #[arg(long, value_name = "DIR", global = true, default_value = ".")]
+    pub study: PathBuf,
+    /// Print the result as JSON
+    #[arg(long, global = true)]
+    pub json: bool,
+    /// Print nothing but what was asked for
+    #[arg(long, global = true)]
+    pub quiet: bool,
+    /// What to do.
+    #[command(subcommand)]
+    pub command: Command,
+}
+
+/// The commands.
+#[derive(Debug, Subcommand)]
+pub enum Command {
+    /// Write a plan, study.toml, to begin with
+    #[command(after_help = "\
+Example:
+  revisant new --study grip --code GR-1 --title \"Grip over 12 weeks\" --zone Europe/London \\
+    --measure grip:kg --visit baseline:0 --visit week-4:28 --instrument dyn-1:exports/dyn-1
+
+On a terminal, what is not given is asked for. The plan is never overwritten.
+JSON: {\"plan\": path, \"folders\": [path]}")]
+    New(New),
+    /// Say what is wrong with the plan, and what a changed plan would change
+    #[command(after_help = "\
+Example:
+  revisant check --study grip
+
+Exit status 2 when the plan is unsound, 3 when it is sound and would change what is filed.
+JSON: {\"sound\", \"sha256\", \"warnings\": [fault], \"would_change\": [text]}")]
+    Check(Check),
+    /// Who is enrolled
+    #[command(subcommand, after_help = "\
+Example:
+  revisant roster import roster.csv --why \"enrolments of March\"")]
+    Roster(Roster),
+    /// Read once all exports that wait, file what is sound, hold what is not
+    #[command(after_help = "\
+Example:
+  revisant collect --study grip
+
+JSON: {\"exports\": {state: count}, \"readings\": {\"filed\", \"already\", \"held\"}, \"seconds\"}")]
+    Collect(Collect),
+    /// What became of every export, and which instrument is quiet
+    #[command(after_help = "\
+Example:
+  revisant status --strict
+
+With --strict the exit status is 3 when no service is running or an instrument is quiet or unreachable.
+JSON: {\"service\", \"exports\", \"readings\", \"files\", \"holds\", \"instruments\"}")]
+    Status(Status),
+    /// What was expected of every subject against what is there
+    #[command(after_help = "\
+Example:
+  revisant completeness --on 2026-06-30 --strict
+
+With --strict the exit status is 3 while somebody is incomplete and not accounted for.
+JSON: {\"subjects\": [{\"subject\", \"status\", \"visits\"}], \"totals\", \"enrolment\"}")]
+    Completeness(Completeness),
+    /// Who is due now or soon
+    #[command(after_help = "\
+Example:
+  revisant due --days 14
+
+JSON: {\"on\", \"days\", \"due\": [{\"subject\", \"visit\", \"state\", \"from\", \"target\", \"until\", \"missing\"}]}")]
+    Due(Due),
+    /// Say why planned readings will not come
+    #[command(after_help = "\
+Example:
+  revisant account QM-014 week-8 --why \"in hospital\"
+
+JSON: {\"trail\", \"subject\", \"visit\", \"measure\"}")]
+    Account(Account),
+    /// What waits for a person, and deciding it
+    #[command(args_conflicts_with_subcommands = true, after_help = "\
+Example:
+  revisant holds
+  revisant holds show 12
+  revisant holds decide 12 --subject QM-014 --why \"code misread; see visit log\"
+
+JSON: [{\"hold\", \"reason\", \"state\", \"export\", \"where\", \"row\", \"likely\", \"since\"}]")]
+    Holds(Holds),
+    /// The readings that are filed
+    #[command(after_help = "\
+Example:
+  revisant readings --subject QM-014 --measure grip
+
+JSON: [{\"reading\", \"subject\", \"visit\", \"session\", \"measure\", \"value\", \"unit\", \"state\", …}]")]
+    Readings(Readings),
+    /// Enter a reading by hand, when an instrument cannot export it
+    #[command(after_help = "\
+Example:
+  revisant enter --subject QM-014 --measure grip --condition hand=left --replicate 1 \\
+    --value 31.5 --taken-at 2026-03-31T09:40:00+01:00 --why \"printer tape; export failed\"
+
+JSON: {\"trail\", \"reading\"}")]
+    Enter(Enter),
+    /// Correct whose a reading or a session is, its visit or its value; the original stays linked
+    #[command(subcommand, after_help = "\
+Example:
+  revisant amend reading 812 --value 31.5 --why \"misread scale; see sheet of 31 March\"")]
+    Amend(Amend),
+    /// Take readings out of use; they stay legible
+    #[command(after_help = "\
+Example:
+  revisant strike 812 813 --why \"wrong grip position\"
+
+JSON: {\"trail\", \"readings\": [number]}")]
+    Strike(Strike),
+    /// Undo a strike
+    #[command(after_help = "\
+Example:
+  revisant restore 812 --why \"the position was right after all\"
+
+JSON: {\"trail\", \"readings\": [number]}")]
+    Restore(Strike),
+    /// The way back from a reading to its bytes
+    #[command(after_help = "\
+Example:
+  revisant provenance 812
+
+JSON: the reading, with \"sha256\", \"bytes\": [from, to], \"line\", \"text\", \"history\": [{\"trail\", \"at\", \"who\", \"act\", \"why\"}]")]
+    Provenance(Provenance),
+    /// Named cut-offs of the data
+    #[command(subcommand, after_help = "\
+Example:
+  revisant cut make interim-1 --why \"half of the subjects have week 12\"")]
+    Cut(Cut),
+    /// The audit trail
+    #[command(args_conflicts_with_subcommands = true, after_help = "\
+Example:
+  revisant trail
+  revisant trail verify
+
+JSON: [{\"trail\", \"at\", \"who\", \"program\", \"act\", \"objects\", \"before\", \"after\", \"why\", \"hash\"}]")]
+    Trail(Trail),
+    /// Run an analysis of the plan on what has come in
+    #[command(after_help = "\
+Example:
+  revisant analyse grip-over-visits --plot profiles.svg
+
+JSON: see the README; \"subjects\", \"cells\", \"decomposition\", \"effects\", \"contrasts\", \"data_state\", …")]
+    Analyse(Analyse),
+    /// Run an invented study on a fresh copy, to see all of this at work
+    #[command(after_help = "\
+Example:
+  revisant demo --into demo-study
+
+JSON: {\"folder\", …}")]
+    Demo(Demo),
+}
+
+/// The records as they once stood.
+#[derive(Debug, Clone, Default, Group)]
+pub struct Then {
+    /// The records as they stood at this cut
+    #[arg(long, value_name = "NAME", conflicts_with = "as_of")]
+    pub cut: Option<String>,
+    /// The records as they then stood; a date means its end
+    #[arg(long, value_name = "MOMENT")]
+    pub as_of: Option<Moment>,
+}
+
+/// `new`
+#[derive(Debug, Group)]
+pub struct New {
+    /// The study's code
+    #[arg(long)]
+    pub code: Option<String>,
+    /// Its title
+    #[arg(long)]
+    pub title: Option<String>,
+    /// The zone of the study centre, such as Europe/London
+    #[arg(long, value_name = "ZONE")]
+    pub zone: Option<String>,
+    /// A measure and its unit; may be given again
+    #[arg(long, value_name = "CODE:UNIT")]
+    pub measure: Vec<String>,
+    /// A visit and its day after the first; may be given again
+    #[arg(long, value_name = "CODE:DAY")]
+    pub visit: Vec<String>,
+    /// An instrument and the folder of its exports; may be given again
+    #[arg(long, value_name = "CODE:FOLDER")]
+    pub instrument: Vec<String>,
+}
+
+/// `check`
+#[derive(Debug, Group)]
+pub struct Check {
+    /// Print a JSON Schema of the plan, for editors
+    #[arg(long)]
+    pub schema: bool,
+    /// Show what the plan would do with a sample export
+    #[arg(long, value_name = "FILE")]
+    pub sample: Option<PathBuf>,
+}
+
+/// `roster`
+#[derive(Debug, Subcommand)]
+pub enum Roster {
+    /// Import a CSV with the columns subject, enrolled, withdrawn and the plan's attributes
+    #[command(after_help = "\
+Example:
+  revisant roster import roster.csv --why \"enrolments of March\"
+
+A subject who is absent from the file stays as it is. A cell that changes or is blanked needs --why.
+JSON: {\"trail\", \"subjects\", \"new\", \"changes\": [{\"subject\", \"field\", \"before\", \"after\"}]}")]
+    Import {
+        /// The file
+        file: PathBuf,
+        /// Why
+        #[arg(long, value_name = "TEXT")]
+        why: Option<String>,
+    },
+    /// Add one subject
+    #[command(after_help = "\
+Example:
+  revisant roster add QM-049 --enrolled 2026-03-31 --set sex=F --set age=71 --why \"enrolled today\"
+
+JSON: as `roster import`")]
+    Add {
+        /// The subject's code
+        subject: String,
+        /// Day of enrolment
+        #[arg(long, value_name = "DATE")]
+        enrolled: NaiveDate,
+        /// An attribute of the plan; may be given again
+        #[arg(long, value_name = "ATTRIBUTE=VALUE", value_parser = pair)]
+        set: Vec<(String, String)>,
+        /// Why
+        #[arg(long, value_name = "TEXT")]
+        why: String,
+    },
+    /// Note that a subject was withdrawn
+    #[command(after_help = "\
+Example:
+  revisant roster withdraw QM-014 --on 2026-05-02 --data keep --why \"moved away\"
+
+JSON: as `roster import`")]
+    Withdraw {
+        /// The subject's code
+        subject: String,
+        /// The day of withdrawal, which still belongs to the study
+        #[arg(long, value_name = "DATE")]
+        on: NaiveDate,
+        /// What becomes of the subject's data
+        #[arg(long)]
+        data: Data,
+        /// Why
+        #[arg(long, value_name = "TEXT")]
+        why: String,
+    },
+    /// List the subjects
+    #[command(after_help = "\
+Example:
+  revisant roster list --as-of 2026-03-31
+
+JSON: [{\"subject\", \"enrolled\", \"withdrawn\", \"arm\", \"attributes\", \"data\"}]")]
+    List {
+        #[command(flatten)]
+        #[expect(missing_docs, reason = "a doc comment here would become help text")]
+        then: Then,
+    },
+}
+
+/// What becomes of a withdrawn subject's data.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ValueEnum)]
+pub enum Data {
+    /// They stay
+    Keep,
+    /// They are removed
+    Remove,
+}
+
+/// `collect`
+#[derive(Debug, Group)]
+pub struct Collect {
+    /// Read exports again with a mended reader; what was filed otherwise is superseded
+    #[arg(long, requires = "why")]
+    pub adopt: bool,
+    /// Why
+    #[arg(long, value_name = "TEXT")]
+    pub why: Option<String>,
+}
+
+/// `status`
+#[derive(Debug, Group)]
+pub struct Status {
+    /// End with exit status 3 when the service has stopped or an instrument is quiet
+    #[arg(long)]
+    pub strict: bool,
+}
+
+/// `completeness`
+#[derive(Debug, Group)]
+pub struct Completeness {
+    /// End with exit status 3 while somebody is incomplete and not accounted for
+    #[arg(long)]
+    pub strict: bool,
+    /// Judge at this moment, on the records of now; default: now
+    #[arg(long, value_name = "MOMENT")]
+    pub on: Option<Moment>,
+    #[command(flatten)]
+    #[expect(missing_docs, reason = "a doc comment here would become help text")]
+    pub then: Then,
+}
+
+/// `due`
+#[derive(Debug, Group)]
+pub struct Due {
+    /// Judge at this moment; default: now
+    #[arg(long, value_name = "MOMENT")]
+    pub on: Option<Moment>,
+    /// Also those whose window opens within so many days
+    #[arg(long, value_name = "N", default_value_t = 7)]
+    pub days: u16,
+}
+
+/// `account`
+#[derive(Debug, Group)]
+pub struct Account {
+    /// The subject's code
+    pub subject: String,
+    /// The visit's code
+    pub visit: String,
+    /// Only this measure; default: all of the visit
+    #[arg(long, value_name = "CODE")]
+    pub measure: Option<String>,
+    /// Why the readings will not come
+    #[arg(long, value_name = "TEXT")]
+    pub why: String,
+}
+
+/// `holds`
+#[derive(Debug, Group)]
+pub struct Holds {
+    /// What to do with them.
+    #[command(subcommand)]
+    pub act: Option<HoldsAct>,
+    #[command(flatten)]
+    #[expect(missing_docs, reason = "a doc comment here would become help text")]
+    pub list: HoldsList,
+}
+
+/// `holds list`
+#[derive(Debug, Default, Group)]
+pub struct HoldsList {
+    /// Also those that are decided or dismissed
+    #[arg(long)]
+    pub all: bool,
+    #[command(flatten)]
+    #[expect(missing_docs, reason = "a doc comment here would become help text")]
+    pub then: Then,
+}
+
+/// What may be done with holds.
+#[derive(Debug, Subcommand)]
+pub enum HoldsAct {
+    /// List what is held
+    #[command(after_help = "\
+Example:
+  revisant holds list --all
+
+JSON: [{\"hold\", \"reason\", \"state\", \"export\", \"where\", \"row\", \"likely\", \"since\"}]")]
+    List(HoldsList),
+    /// Show one hold, with the commands that answer it
+    #[command(after_help = "\
+Example:
+  revisant holds show 12
+
+JSON: the hold, with \"instrument\", \"column\", \"wrong\", \"meaning\", \"answers\", \"commands\", \"like_it\", \"answer\"")]
+    Show {
+        /// The hold's number
+        hold: i64,
+    },
+    /// Answer one hold, or all like it in the same export
+    #[command(after_help = "\
+Example:
+  revisant holds decide 12 --subject QM-014 --why \"code misread; see visit log\"
+  revisant holds decide 12 --keep-old --all-like-it       say how many are like it
+  revisant holds decide 12 --keep-old --all-like-it 31 --why \"test export of the maker\"
+
+Which answers fit depends on the reason; `revisant holds show N` lists them.
+JSON: {\"trail\", \"holds\", \"filed\", \"held\"}")]
+    Decide(Box<Decide>),
+    /// Leave out what is held, for good
+    #[command(after_help = "\
+Example:
+  revisant holds dismiss 12 --why \"test squeeze, no reading\"
+
+JSON: {\"trail\", \"holds\", \"filed\", \"held\"}")]
+    Dismiss {
+        /// The hold's number
+        hold: i64,
+        /// All like it in the same export; COUNT must be how many they are
+        #[arg(long, value_name = "COUNT", num_args = 0..=1)]
+        all_like_it: Option<Option<u64>>,
+        /// Why
+        #[arg(long, value_name = "TEXT")]
+        why: Option<String>,
+    },
+}
+
+/// `holds decide`
+#[derive(Debug, Group)]
+pub struct Decide {
+    /// The hold's number
+    pub hold: i64,
+    #[command(flatten)]
+    #[expect(missing_docs, reason = "a doc comment here would become help text")]
+    pub answer: AnswerOptions,
+    /// All like it in the same export; COUNT must be how many they are
+    #[arg(long, value_name = "COUNT", num_args = 0..=1)]
+    pub all_like_it: Option<Option<u64>>,
+    /// Why
+    #[arg(long, value_name = "TEXT")]
+    pub why: Option<String>,
+}
+
+/// The answers to a hold, one of which is given.
+#[derive(Debug, Default, Group)]
+#[group(required = true, multiple = true)]
+pub struct AnswerOptions {
+    /// Whose row it is
+    #[arg(long, value_name = "CODE")]
+    pub subject: Option<String>,
+    /// When it was taken
+    #[arg(long, value_name = "MOMENT")]
+    pub moment: Option<String>,
+    /// On which day it was taken; the time is not known
+    #[arg(long, value_name = "DAY")]
+    pub date: Option<NaiveDate>,
+    /// Which visit, or "unscheduled"
+    #[arg(long, value_name = "CODE")]
+    pub visit: Option<String>,
+    /// Which measure
+    #[arg(long, value_name = "CODE")]
+    pub measure: Option<String>,
+    /// Which level of a condition; may be given again for another factor
+    #[arg(long, value_name = "FACTOR=LEVEL", value_parser = pair)]
+    pub condition: Vec<(String, String)>,
+    /// Which unit
+    #[arg(long, value_name = "CODE")]
+    pub unit: Option<String>,
+    /// The value, in the unit as exported
+    #[arg(long, value_name = "NUMBER", allow_hyphen_values = true)]
+    pub value: Option<String>,
+    /// It is right as it stands
+    #[arg(long)]
+    pub as_it_stands: bool,
+    /// The value filed before stays
+    #[arg(long)]
+    pub keep_old: bool,
+    /// The new value supersedes the one filed before
+    #[arg(long)]
+    pub take_new: bool,
+    /// It is the replicate with this number
+    #[arg(long, value_name = "NUMBER")]
+    pub replicate: Option<u32>,
+    /// It takes the place of the replicate with this number
+    #[arg(long, value_name = "NUMBER")]
+    pub instead_of: Option<u32>,
+}
+
+/// `readings`
+#[derive(Debug, Group)]
+pub struct Readings {
+    /// Only this subject's
+    #[arg(long, value_name = "CODE")]
+    pub subject: Option<String>,
+    /// Only of this measure
+    #[arg(long, value_name = "CODE")]
+    pub measure: Option<String>,
+    /// Only of this visit, or "unscheduled"
+    #[arg(long, value_name = "CODE")]
+    pub visit: Option<String>,
+    #[command(flatten)]
+    #[expect(missing_docs, reason = "a doc comment here would become help text")]
+    pub then: Then,
+}
+
+/// `enter`
+#[derive(Debug, Group)]
+pub struct Enter {
+    /// Whose it is
+    #[arg(long, value_name = "CODE")]
+    pub subject: String,
+    /// What was measured
+    #[arg(long, value_name = "CODE")]
+    pub measure: String,
+    /// The visit, or "unscheduled"; default: the date decides
+    #[arg(long, value_name = "CODE")]
+    pub visit: Option<String>,
+    /// The level of each of the measure's conditions
+    #[arg(long, value_name = "FACTOR=LEVEL", value_parser = pair)]
+    pub condition: Vec<(String, String)>,
+    /// The replicate's number; default: the next one
+    #[arg(long, value_name = "NUMBER")]
+    pub replicate: Option<u32>,
+    /// The value, in the plan's unit
+    #[arg(long, value_name = "NUMBER", allow_hyphen_values = true)]
+    pub value: String,
+    /// When it was taken; a date alone when the time is not known
+    #[arg(long, value_name = "MOMENT")]
+    pub taken_at: Moment,
+    /// The value is right although it lies outside the plan's plausible bounds
+    #[arg(long)]
+    pub as_it_stands: bool,
+    /// Why it is entered by hand
+    #[arg(long, value_name = "TEXT")]
+    pub why: String,
+}
+
+/// `amend`
+#[derive(Debug, Subcommand)]
+pub enum Amend {
+    /// Correct one reading
+    #[command(after_help = "\
+Example:
+  revisant amend reading 812 --subject QM-015 --why \"bands swapped; see visit log\"
+
+JSON: {\"trail\", \"readings\": [{\"reading\", \"supersedes\"}]}")]
+    Reading {
+        /// The reading's number
+        reading: i64,
+        /// Whose it is
+        #[arg(long, value_name = "CODE")]
+        subject: Option<String>,
+        /// Its visit, or "unscheduled"
+        #[arg(long, value_name = "CODE")]
+        visit: Option<String>,
+        /// Its value, in the plan's unit
+        #[arg(long, value_name = "NUMBER", allow_hyphen_values = true)]
+        value: Option<String>,
+        /// Its replicate's number
+        #[arg(long, value_name = "NUMBER")]
+        replicate: Option<u32>,
+        /// The value is right although it lies outside the plan's plausible bounds
+        #[arg(long)]
+        as_it_stands: bool,
+        /// Why
+        #[arg(long, value_name = "TEXT")]
+        why: String,
+    },
+    /// Correct all current readings of one session
+    #[command(after_help = "\
+Example:
+  revisant amend session 40 --swap-with 41 --why \"the two subjects' chairs were changed over\"
+
+JSON: {\"trail\", \"readings\": [{\"reading\", \"supersedes\"}]}")]
+    Session {
+        /// The session's number, as `revisant readings` shows it
+        session: i64,
+        /// Whose it is
+        #[arg(long, value_name = "CODE", conflicts_with = "swap_with")]
+        subject: Option<String>,
+        /// Its visit, or "unscheduled"
+        #[arg(long, value_name = "CODE", conflicts_with = "swap_with")]
+        visit: Option<String>,
+        /// The session with which it changes subjects
+        #[arg(long, value_name = "SESSION")]
+        swap_with: Option<i64>,
+        /// Why
+        #[arg(long, value_name = "TEXT")]
+        why: String,
+    },
+}
+
+/// `strike` and `restore`
+#[derive(Debug, Group)]
+pub struct Strike {
+    /// The readings' numbers
+    #[arg(required = true, value_name = "READING")]
+    pub readings: Vec<i64>,
+    /// Why
+    #[arg(long, value_name = "TEXT")]
+    pub why: String,
+}
+
+/// `provenance`
+#[derive(Debug, Group)]
+pub struct Provenance {
+    /// The reading's number
+    pub reading: i64,
+}
+
+/// `cut`
+#[derive(Debug, Subcommand)]
+pub enum Cut {
+    /// Give the records as they now stand a name
+    #[command(after_help = "\
+Example:
+  revisant cut make interim-1 --why \"half of the subjects have week 12\"
+
+JSON: {\"name\", \"trail\", \"hash\", \"at\", \"who\", \"why\"}")]
+    Make {
+        /// Its name: lower-case words with -
+        name: String,
+        /// Why
+        #[arg(long, value_name = "TEXT")]
+        why: String,
+    },
+    /// List the cuts
+    #[command(after_help = "\
+Example:
+  revisant cut list
+
+JSON: [{\"name\", \"trail\", \"hash\", \"at\", \"who\", \"why\"}]")]
+    List,
+    /// Say which readings are new, changed or gone between two cuts
+    #[command(after_help = "\
+Example:
+  revisant cut compare interim-1 interim-2
+
+JSON: {\"from\", \"to\", \"new\": [reading], \"changed\": [{\"before\", \"after\"}], \"gone\": [reading]}")]
+    Compare {
+        /// The earlier cut
+        from: String,
+        /// The later cut
+        to: String,
+    },
+}
+
+/// `trail`
+#[derive(Debug, Group)]
+pub struct Trail {
+    /// What to do with it.
+    #[command(subcommand)]
+    pub act: Option<TrailAct>,
+    #[command(flatten)]
+    #[expect(missing_docs, reason = "a doc comment here would become help text")]
+    pub list: TrailList,
+}
+
+/// `trail list`
+#[derive(Debug, Default, Group)]
+pub struct TrailList {
+    /// Only the last so many acts
+    #[arg(long, value_name = "N")]
+    pub last: Option<u32>,
+}
+
+/// What may be done with the trail.
+#[derive(Debug, Subcommand)]
+pub enum TrailAct {
+    /// List the acts
+    #[command(after_help = "\
+Example:
+  revisant trail list --last 20
+
+JSON: [{\"trail\", \"at\", \"who\", \"program\", \"act\", \"objects\", \"before\", \"after\", \"why\", \"hash\"}]")]
+    List(TrailList),
+    /// Compute everything again that the trail covers, and name the first act that fails
+    #[command(after_help = "\
+Example:
+  revisant trail verify --head 0123-4567-89ab-cdef-0123
+
+The exit status is 3 when something is wrong. The head hash that it prints is short enough to be
+written into a paper notebook; given back with --head it shows that the trail was not cut short or
+rebuilt since.
+JSON: {\"sound\", \"rows\", \"readings\", \"raw_copies\", \"head\": {\"trail\", \"hash\", \"short\"}, \"noted\", \"faults\", \"notes\"}")]
+    Verify {
+        /// A head hash noted elsewhere, in full or short
+        #[arg(long, value_name = "HASH")]
+        head: Option<String>,
+    },
+}
+
+/// `analyse`
+#[derive(Debug, Group)]
+pub struct Analyse {
+    /// The analysis's code in the plan
+    pub code: String,
+    #[command(flatten)]
+    #[expect(missing_docs, reason = "a doc comment here would become help text")]
+    pub then: Then,
+    /// Draw every subject's profile, and the mean, into this SVG file
+    #[arg(long, value_name = "FILE")]
+    pub plot: Option<PathBuf>,
+}
+
+/// `demo`
+#[derive(Debug, Group)]
+pub struct Demo {
+    /// The new folder; default: a new one under the current folder
+    #[arg(long, value_name = "DIR")]
+    pub into: Option<PathBuf>,
+}
+
+/// `name=value`
+fn pair(text: &str) -> Result<(String, String), String> {
+    match text.split_once('=') {
+        Some((name, value)) if !name.trim().is_empty() => Ok((name.trim().to_owned(), value.trim().to_owned())),
+        _ => Err("write NAME=VALUE".to_owned()),
+    }
+}

@@ -1,0 +1,62 @@
+//! `collect`: read once all exports that wait.
+
+use indicatif::{ProgressBar, ProgressDrawTarget, ProgressStyle};
+
+use super::Done;
+use crate::args::Collect;
+use crate::error::{Exit, Failure};
+use crate::intake::{self, Collected, HowToCollect};
+use crate::report::text::count;
+use crate::study::{Context, reason};
+
+/// Runs it.
+pub fn run(context: &mut Context<'_, '_>, args: &Collect) -> Done {
+    let why = args.why.as_deref().map(reason).transpose()?;
+    let mut records = context.records()?;
+    let bar = bar(context);
+    let mut progress = |done: u64, of: u64| {
+        bar.set_length(of);
+        bar.set_position(done);
+    };
+    let how = HowToCollect { adopt: args.adopt, progress: &mut progress };
+    let done = intake::collect(&mut records, &context.study, &context.doer(why), how);
+    bar.finish_and_clear();
+    let collected = done?;
+    match context.out.json {
+        true => context.out.json(&collected)?,
+        false => text(context, &collected)?,
+    }
+    Ok(Exit::Done)
+}
+
+/// A bar on a terminal, on standard error so that the result stays clean; elsewhere nothing.
+fn bar(context: &Context<'_, '_>) -> ProgressBar {
+    if !context.out.terminal || context.out.quiet || context.out.json {
+        return ProgressBar::hidden();
+    }
+    let bar = ProgressBar::with_draw_target(None, ProgressDrawTarget::stderr());
+    if let Ok(style) = ProgressStyle::with_template("{bar:30} {pos} of {len} exports, {elapsed}") {
+        bar.set_style(style);
+    }
+    bar
+}
+
+fn text(context: &mut Context<'_, '_>, collected: &Collected) -> Result<(), Failure> {
+    let states = collected.exports.iter().filter_map(|(state, number)| {
+        let number = number.as_u64().filter(|number| *number > 0)?;
+        Some(format!("{number} {state}"))
+    });
+    let states: Vec<String> = states.collect();
+    let exports = if states.is_empty() { "none".to_owned() } else { states.join(", ") };
+    let readings = collected.readings;
+    context.out.text(&format!(
+        "Exports: {exports}.\n{} filed, {} there already, {} held.",
+        count(readings.filed, "reading"),
+        readings.already,
+        readings.held
+    ))?;
+    if readings.held > 0 {
+        context.out.say("See `revisant holds`.")?;
+    }
+    Ok(())
+}

@@ -1,0 +1,34 @@
+//! The commands, one module each: options, to records, to (analysis), to report.
+
+mod account;
+mod check;
+mod collect;
+mod completeness;
+mod due;
+mod holds;
+mod readings;
+mod roster;
+mod status;
+
+use crate::args::Command;
+use crate::error::{Exit, Failure};
+use crate::study::Context;
+
+/// What a command gives.
+pub type Done = Result<Exit, Failure>;
+
+/// Runs one command.
+pub fn run(context: &mut Context<'_, '_>, command: &Command) -> Done {
+    match command {
+        Command::Check(args) => check::run(context, args),
+        Command::Roster(args) => roster::run(context, args),
+        Command::Collect(args) => collect::run(context, args),
+        Command::Status(args) => status::run(context, args),
+        Command::Completeness(args) => completeness::run(context, args),
+        Command::Due(args) => due::run(context, args),
+        Command::Account(args) => account::run(context, args),
+        Command::Holds(args) => holds::run(context, args),
+        Command::Readings(args) => readings::run(context, args),
+        _ => Err(Failure::not_yet("this command is not in this build")),
+    }
+}

@@ -1,0 +1,7 @@
+//! Results to tables, sentences, plots and JSON: the only place that formats numbers and dates.
+
+pub mod json;
+pub mod number;
+pub mod table;
+pub mod text;
+pub mod when;

@@ -1,0 +1,86 @@
+//! Tables for people.
+//!
+//! Invariants: a table fits the width given, however long its cells; what exports said is cleaned first.
+
+use comfy_table::{CellAlignment, ContentArrangement, ContentLineStyle, LineStyle, TableStyle};
+
+use super::text::clean;
+
+/// Where a column's cells stand.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Align {
+    /// Texts.
+    Left,
+    /// Numbers.
+    Right,
+}
+pub use Align::{Left, Right};
+
+const STYLE: TableStyle = TableStyle::new()
+    .header_lines(ContentLineStyle::new(' ', ' ', ' '))
+    .header_separator(LineStyle::new('─', '─', '─', '─'))
+    .content_lines(ContentLineStyle::new(' ', ' ', ' '));
+
+/// A table in the making.
+#[derive(Debug, Clone)]
+pub struct Table {
+    columns: Vec<(&'static str, Align)>,
+    rows: Vec<Vec<String>>,
+}
+
+impl Table {
+    /// A table with these columns and no rows.
+    pub fn new(columns: &[(&'static str, Align)]) -> Self {
+        Self { columns: columns.to_vec(), rows: vec![] }
+    }
+
+    /// Adds a row.
+    pub fn row(&mut self, cells: impl IntoIterator<Item = String>) {
+        self.rows.push(cells.into_iter().map(|cell| clean(&cell)).collect());
+    }
+
+    /// Whether it has no rows.
+    pub fn is_empty(&self) -> bool {
+        self.rows.is_empty()
+    }
+
+    /// The table as text, without a line end.
+    pub fn render(&self, width: usize) -> String {
+        let mut table = comfy_table::Table::new();
+        table.load_style(STYLE).set_content_arrangement(ContentArrangement::Dynamic);
+        table.set_width(u16::try_from(width).unwrap_or(u16::MAX));
+        table.set_header(self.columns.iter().map(|(name, _)| *name));
+        table.add_rows(self.rows.iter());
+        for ((_, align), column) in self.columns.iter().zip(table.column_iter_mut()) {
+            column.set_padding((0, 1));
+            column.set_cell_alignment(match align {
+                Left => CellAlignment::Left,
+                Right => CellAlignment::Right,
+            });
+        }
+        let lines: Vec<String> = table.lines().map(|line| line.trim_end().to_owned()).collect();
+        lines.join("\n")
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn a_table_fits_whatever_its_cells() {
+        let mut table = Table::new(&[("hold", Right), ("export", Left), ("row", Left)]);
+        table.row(["1".to_owned(), "exports/dyn-2/".repeat(9), "word ".repeat(50)]);
+        table.row(["22222".to_owned(), "é漢字".repeat(40), "\u{1b}[31m".to_owned()]);
+        for width in [40, 80, 120] {
+            let text = table.render(width);
+            let widest = text.lines().map(|line| line.chars().map(columns).sum::<usize>()).max();
+            assert!(widest.is_some_and(|widest| widest <= width), "{width}:\n{text}");
+            assert!(!text.contains('\u{1b}'));
+        }
+    }
+
+    fn columns(c: char) -> usize {
+        if ('\u{2e80}'..='\u{a4cf}').contains(&c) { 2 } else { 1 }
+    }
+}
