@@ -4,10 +4,14 @@
 
 use std::path::Path;
 
+use revisant_daemon::intake::collect::{IntakeLock, Progress, Report, collect as collect_once};
+use revisant_daemon::intake::error::IntakeError;
+use revisant_daemon::intake::{plan as plan_door, replace};
 use revisant_schema::hold::Answer;
 use revisant_schema::plan::{self, Loaded, Plan};
-use revisant_schema::records::codec::Hash;
-use revisant_schema::records::{ActKind, Cell, Doer, Records, RecordsError};
+use revisant_schema::records::exports::ExportState;
+use revisant_schema::records::view::HoldRow;
+use revisant_schema::records::{Doer, Records};
 use serde::Serialize;
 
 use crate::error::Failure;
@@ -20,6 +24,16 @@ pub struct PlanInForce {
     pub plan: Plan,
 }
 
+impl From<IntakeError> for Failure {
+    fn from(error: IntakeError) -> Self {
+        match error {
+            IntakeError::Plan(error) => error.into(),
+            IntakeError::Records(error) => error.into(),
+            other => Self::new(other.kind(), other.to_string()),
+        }
+    }
+}
+
 /// Reads the plan of a study's folder.
 pub fn load(study: &Path) -> Result<Loaded, Failure> {
     Ok(plan::load(study, &|path| std::fs::read_to_string(path))?)
@@ -27,30 +41,19 @@ pub fn load(study: &Path) -> Result<Loaded, Failure> {
 
 /// Brings the plan of the study's folder into force, if it is not.
 pub fn bring_plan_into_force(records: &mut Records, study: &Path, doer: &Doer) -> Result<PlanInForce, Failure> {
-    let loaded = load(study)?;
-    let known = records.view()?.plan()?;
-    if let Some(known) = known.filter(|known| known.files == loaded.files) {
-        return Ok(PlanInForce { version: known.version, plan: loaded.plan });
-    }
-    let files = serde_json::to_string(&loaded.files).map_err(|error| RecordsError::Damaged(error.to_string()))?;
-    let sha256 = bytes_of(&loaded.files.sha256());
-    let version = records.act(ActKind::Plan, doer, |act| {
-        act.add("plan_version", &[Cell::Bytes(&sha256), Cell::Text(&files)])
-    })?;
-    Ok(PlanInForce { version, plan: loaded.plan })
-}
-
-fn bytes_of(hex: &str) -> Hash {
-    let mut hash = [0; 32];
-    for (byte, at) in hash.iter_mut().zip((0..).step_by(2)) {
-        *byte = hex.get(at..at + 2).and_then(|digits| u8::from_str_radix(digits, 16).ok()).unwrap_or(0);
-    }
-    hash
+    let rules = plan_door::bring_into_force(records, study, doer, false)?;
+    Ok(PlanInForce { version: rules.version, plan: rules.plan })
 }
 
 /// What a changed plan would change in the records, in words; empty when nothing.
-pub fn would_change(_records: &Records, _study: &Path) -> Result<Vec<String>, Failure> {
-    Ok(vec![])
+pub fn would_change(records: &Records, study: &Path) -> Result<Vec<String>, Failure> {
+    let loaded = load(study)?;
+    let rules = plan_door::in_force(records)?;
+    let changes = plan_door::would_change(records, &rules, &loaded.plan)?;
+    Ok(changes
+        .into_iter()
+        .map(|change| format!("{}: {} lines, such as {}", change.export, change.lines, change.example))
+        .collect())
 }
 
 /// What one collect did.
@@ -84,13 +87,26 @@ pub struct HowToCollect<'a> {
 }
 
 /// Reads once all that waits.
-pub fn collect(
-    _records: &mut Records,
-    _study: &Path,
-    _doer: &Doer,
-    _how: HowToCollect<'_>,
-) -> Result<Collected, Failure> {
-    Err(Failure::not_yet("collecting is not in this build"))
+pub fn collect(records: &mut Records, study: &Path, doer: &Doer, how: HowToCollect<'_>) -> Result<Collected, Failure> {
+    let _lock = IntakeLock::take(records, &doer.program)?;
+    let mut adopted = Report::default();
+    if how.adopt {
+        adopted = replace::adopt(records, study, doer)?.1;
+    } else {
+        plan_door::bring_into_force(records, study, doer, false)?;
+    }
+    let HowToCollect { progress, .. } = how;
+    let report = collect_once(records, study, doer, true, &mut |Progress { done, of }| progress(done, of))?;
+    let counts = |state: ExportState| report.exports.get(state.code()).copied().unwrap_or(0).into();
+    Ok(Collected {
+        exports: ExportState::ALL.into_iter().map(|state| (state.code().to_owned(), counts(state))).collect(),
+        readings: CollectedReadings {
+            filed: report.filed + adopted.filed,
+            already: report.already,
+            held: report.held + adopted.held,
+        },
+        seconds: report.seconds,
+    })
 }
 
 /// What deciding came to.
@@ -104,18 +120,26 @@ pub struct Decided {
     pub held: u64,
 }
 
-/// Gives a person's answer to holds, or dismisses them (`None`).
+/// Gives a person's answer to holds of one export, or dismisses them (`None`).
 pub fn decide(
-    _records: &mut Records,
-    _study: &Path,
-    _holds: &[i64],
-    _answer: Option<&Answer>,
-    _doer: &Doer,
+    records: &mut Records,
+    holds: &[HoldRow],
+    answer: Option<&Answer>,
+    doer: &Doer,
 ) -> Result<Decided, Failure> {
-    Err(Failure::not_yet("deciding is not in this build"))
+    let decision = match answer {
+        Some(answer) => replace::decide(records, holds, answer, doer)?,
+        None => replace::dismiss(records, holds, doer)?,
+    };
+    Ok(Decided { holds: decision.ended.len() as u64, filed: decision.filed, held: decision.held })
+}
+
+/// Open holds that one answer may be given to at once: those like it in the same export.
+pub fn like(records: &Records, hold: &HoldRow) -> Result<Vec<HoldRow>, Failure> {
+    Ok(replace::like(records, hold)?)
 }
 
 /// Whether a service is running for the study.
-pub fn service_running(_study: &Path) -> bool {
-    false
+pub fn service_running(study: &Path) -> bool {
+    IntakeLock::holder(&Records::folder_of(study)).is_some_and(|note| note.starts_with("revisantd"))
 }

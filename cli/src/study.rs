@@ -58,7 +58,9 @@ impl<'c, 'w> Context<'c, 'w> {
             return Ok(&self.study);
         }
         let shown = self.study.display().to_string();
-        Err(Failure::usage(format!("there is no folder {shown}")).at(shown).then("name the study's folder with --study DIR"))
+        Err(Failure::usage(format!("there is no folder {shown}"))
+            .at(shown)
+            .then("name the study's folder with --study DIR"))
     }
 
     /// The account that runs this command, with its reason.
@@ -94,7 +96,8 @@ pub fn view<'r>(records: &'r Records, then: &Then) -> Result<View<'r>, Failure> 
     };
     let view = records.view_as_of(&as_of)?;
     if view.upto() == 0 && as_of != AsOf::Now {
-        return Err(Failure::refused("the records did not exist at that moment").then("`revisant trail` shows since when they do"));
+        return Err(Failure::refused("the records did not exist at that moment")
+            .then("`revisant trail` shows since when they do"));
     }
     Ok(view)
 }
@@ -132,7 +135,8 @@ impl Basis {
             return Err(Failure::refused("no plan is in force").then("bring one in with `revisant roster import FILE`"));
         };
         let (plan, _) = plan::parse(&found.files).map_err(|faults| {
-            let wrong = format!("plan version {} was sound when filed and is not now: {}", found.version, unsound(&faults));
+            let wrong =
+                format!("plan version {} was sound when filed and is not now: {}", found.version, unsound(&faults));
             RecordsError::Damaged(wrong)
         })?;
         Ok((plan, found))
@@ -149,7 +153,11 @@ impl Basis {
             return Place { visit: placed.visit, off_window: placed.off_window, session: placed.session };
         }
         let found = self.place_bare(session);
-        Place { visit: found.map(|(visit, _)| visit), off_window: found.is_some_and(|found| found.1), session: session.session }
+        Place {
+            visit: found.map(|(visit, _)| visit),
+            off_window: found.is_some_and(|found| found.1),
+            session: session.session,
+        }
     }
 
     fn place_bare(&self, session: &SessionRow) -> Option<(VisitIx, bool)> {
@@ -174,15 +182,17 @@ impl Basis {
         let code = revisant_schema::roster::tidy(code, &self.plan.subject.normalise);
         match self.roster.subjects.contains_key(&code) {
             true => Ok(code),
-            false => Err(Failure::refused(format!("subject {code} is not on the roster")).then("`revisant roster list` shows who is")),
+            false => Err(Failure::refused(format!("subject {code} is not on the roster"))
+                .then("`revisant roster list` shows who is")),
         }
     }
 
     /// A measure of the plan.
     pub fn measure(&self, code: &str) -> Result<&plan::Measure, Failure> {
-        self.plan.measure(code).map(|(_, measure)| measure).ok_or_else(|| {
-            unknown("measure", code, self.plan.measures.iter().map(|measure| measure.code.as_str()))
-        })
+        self.plan
+            .measure(code)
+            .map(|(_, measure)| measure)
+            .ok_or_else(|| unknown("measure", code, self.plan.measures.iter().map(|measure| measure.code.as_str())))
     }
 
     /// A visit of the plan.
@@ -223,7 +233,13 @@ fn session_facts(view: &View<'_>) -> Result<Vec<SessionFacts>, Failure> {
     }
     let facts = view.all_sessions()?.into_iter().filter_map(|session| {
         let measures = measures.remove(&session.session)?;
-        Some(SessionFacts { session: session.session, subject: session.subject, day: session.day, label: session.label, measures })
+        Some(SessionFacts {
+            session: session.session,
+            subject: session.subject,
+            day: session.day,
+            label: session.label,
+            measures,
+        })
     });
     Ok(facts.collect())
 }
