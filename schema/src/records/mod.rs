@@ -7,6 +7,7 @@ pub mod codec;
 pub mod error;
 pub mod open;
 pub mod raw;
+pub mod removal;
 pub mod texts;
 pub mod trail;
 pub mod verify;

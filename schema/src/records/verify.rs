@@ -18,9 +18,10 @@ use rusqlite::types::ValueRef;
 use rusqlite::{Connection, OptionalExtension, Row};
 use sha2::{Digest, Sha256};
 
-use super::codec::{Canon, Hash, Kind, OF_ACT, OF_FILING, Table, hex};
+use super::codec::{Canon, Hash, Kind, OF_ACT, OF_FILING, Table, hex, table};
 use super::error::{RecordsError, Result};
 use super::open::{APPLICATION, Records, layout};
+use super::removal::{REMOVABLE, blanked};
 use super::texts::SessionFact;
 use super::trail::{ActNumber, TrailRow};
 use super::writer::column_list;
@@ -205,6 +206,15 @@ pub enum VerifyFault {
         /// What is wrong.
         wrong: &'static str,
     },
+    /// A removed row was changed, or a row was passed off as removed.
+    Removal {
+        /// The act that removed.
+        act: ActNumber,
+        /// How many rows it says it removed.
+        says: i64,
+        /// How many are marked as removed by it.
+        found: i64,
+    },
     /// A capture's bytes are not kept.
     RawMissing {
         /// The capture's act.
@@ -315,6 +325,7 @@ impl VerifyFault {
             | Self::FilingCount { act, .. }
             | Self::FilingDigest { act, .. }
             | Self::Shape { act, .. }
+            | Self::Removal { act, .. }
             | Self::RawMissing { act, .. }
             | Self::RawSize { act, .. } => Some(*act),
             Self::Dangling { act, .. } | Self::Raw { act, .. } => *act,
@@ -382,6 +393,12 @@ impl fmt::Display for VerifyFault {
                 write!(f, "row {row} of {table} refers to a row of {parent} that is not there.")
             }
             Self::Shape { act, table, row, wrong } => write!(f, "act {act}: row {row} of {table} {wrong}."),
+            Self::Removal { act, says, found } if says == found => {
+                write!(f, "act {act}: a row that it removed was changed.")
+            }
+            Self::Removal { act, says, found } => {
+                write!(f, "act {act}: it removed {says} rows, and {found} are marked as removed by it.")
+            }
             Self::RawMissing { act, capture, sha256 } => {
                 write!(f, "act {act}: the bytes of capture {capture} ({sha256}) are not kept.")
             }
@@ -565,6 +582,9 @@ struct Known {
     instead: HashMap<Vec<u8>, Vec<Vec<u8>>>,
 }
 
+/// A part of the check.
+type Step<C> = fn(&mut C) -> rusqlite::Result<()>;
+
 /// A check in the making.
 struct Check<'c> {
     records: &'c Records,
@@ -577,7 +597,6 @@ struct Check<'c> {
     canon: Canon,
     faults: Faults,
     closed: HashSet<i64>,
-    removed: BTreeMap<ActNumber, u64>,
     verified: Verified,
 }
 
@@ -688,13 +707,12 @@ impl<'c> Check<'c> {
             canon: Canon::default(),
             faults: Faults::default(),
             closed: HashSet::new(),
-            removed: BTreeMap::new(),
             verified: Verified::default(),
         }
     }
 
     fn all(&mut self) -> Result<()> {
-        let steps: &[(&str, fn(&mut Self) -> rusqlite::Result<()>)] = &[
+        let steps: &[(&str, Step<Self>)] = &[
             ("the file", Self::measure),
             ("the file's marks", Self::marks),
             ("the file's layout", Self::layout),
@@ -708,6 +726,7 @@ impl<'c> Check<'c> {
             ("the readings", Self::readings),
             ("the filings", Self::other_filings),
             ("rows without a filing", Self::without_filing),
+            ("the removed rows", Self::removed_rows),
             ("the references", Self::references),
             ("the captures", Self::captures),
             ("the raw copies", Self::raw_copies),
@@ -724,8 +743,6 @@ impl<'c> Check<'c> {
             self.faults.add(VerifyFault::NotedHead { noted: noted.given.clone() });
         }
         self.verified.faults = self.faults.end();
-        let removed = self.removed.into_iter().map(|(act, rows)| VerifyNote::Removed { act, rows });
-        self.verified.notes.extend(removed);
         (self.progress)(self.of, self.of);
         self.verified
     }
@@ -905,7 +922,6 @@ impl Check<'_> {
                 self.shape(table, row, act, "is marked as removed and still holds values")?;
             }
         }
-        *self.removed.entry(by).or_default() += 1;
         match digest.try_into() {
             Ok(digest) => Ok(digest),
             Err(_) => {
@@ -947,14 +963,47 @@ impl Check<'_> {
     }
 }
 
-/// The columns that a removal blanks.
-fn blanked(table: &str) -> &'static [&'static str] {
-    match table {
-        "roster_event" => &["value"],
-        "reading" => &["text", "exported", "number", "mark", "byte_from", "byte_to"],
-        "hold" => &["row", "detail", "byte_from", "byte_to"],
-        "hold_event" => &["answer"],
-        _ => &[],
+// Removals.
+impl Check<'_> {
+    /// Compares what removals left with what they say that they left.
+    fn removed_rows(&mut self) -> rusqlite::Result<()> {
+        if self.known.removals.is_empty() {
+            return Ok(());
+        }
+        let conn = self.conn;
+        let mut left: BTreeMap<ActNumber, (i64, Sha256)> = BTreeMap::new();
+        for table in REMOVABLE.iter().filter_map(|(name, _)| table(name)).map(|(_, table)| table) {
+            let sql = format!(
+                "SELECT {}, digest, removed FROM {} WHERE removed IS NOT NULL ORDER BY id",
+                column_list(table),
+                table.name
+            );
+            let mut statement = conn.prepare(&sql)?;
+            let mut rows = statement.query([])?;
+            while let Some(row) = rows.next()? {
+                let (digest, by) = (row.get_ref("digest")?, row.get("removed")?);
+                let rest = self.fresh_digest(table, row, by, digest.as_blob().unwrap_or_default())?;
+                let (count, hasher) = left.entry(by).or_default();
+                *count += 1;
+                hasher.update(rest);
+            }
+        }
+        self.compare_removals(left)
+    }
+
+    fn compare_removals(&mut self, mut left: BTreeMap<ActNumber, (i64, Sha256)>) -> rusqlite::Result<()> {
+        let conn = self.conn;
+        let mut statement = conn.prepare("SELECT act, rows, digest FROM removal ORDER BY act")?;
+        let mut rows = statement.query([])?;
+        while let Some(row) = rows.next()? {
+            let (act, says): (ActNumber, i64) = (row.get(0)?, row.get(1)?);
+            let (found, hasher) = left.remove(&act).unwrap_or_default();
+            if found != says || row.get_ref(2)? != ValueRef::Blob(&hasher.finalize()) {
+                self.faults.add(VerifyFault::Removal { act, says, found });
+            }
+            self.verified.notes.push(VerifyNote::Removed { act, rows: found.unsigned_abs() });
+        }
+        Ok(())
     }
 }
 
@@ -994,6 +1043,7 @@ impl Check<'_> {
         let mut head = (0, [0; 32]);
         while let Some(row) = rows.next()? {
             let number = row.get(0)?;
+            self.number_follows(number, head.0);
             self.strays_before(&mut lists, number);
             let digest = self.act_digest(&mut lists, number)?;
             head = self.link(row, number, head, digest);
@@ -1059,6 +1109,14 @@ impl Check<'_> {
         Ok((hasher.finalize().into(), span))
     }
 
+    fn number_follows(&mut self, number: ActNumber, before: ActNumber) {
+        if number < 1 {
+            self.faults.add(VerifyFault::TrailNumber { act: number });
+        } else if number > before.saturating_add(1) {
+            self.faults.add(VerifyFault::TrailGap { from: before + 1, upto: number - 1 });
+        }
+    }
+
     /// Checks one row of the trail against the one before it and the digest of its rows; gives what the next one must
     /// follow on.
     fn link(
@@ -1068,17 +1126,12 @@ impl Check<'_> {
         before: (ActNumber, Hash),
         (digest, span): (Hash, Span),
     ) -> (ActNumber, Hash) {
-        let gap = number > before.0.saturating_add(1);
-        if number < 1 {
-            self.faults.add(VerifyFault::TrailNumber { act: number });
-        } else if gap {
-            self.faults.add(VerifyFault::TrailGap { from: before.0 + 1, upto: number - 1 });
-        }
         let Ok(row) = trail_row(row) else {
             self.faults.add(VerifyFault::TrailUnreadable { act: number });
             return (number, [0; 32]);
         };
-        if row.previous != before.1 && !gap {
+        // Behind a gap it must differ, and the gap is reported.
+        if row.previous != before.1 && number == before.0.saturating_add(1) {
             self.faults.add(VerifyFault::TrailPrevious { act: number });
         }
         if row.hash != row.expected_hash() {
