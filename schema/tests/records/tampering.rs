@@ -458,3 +458,22 @@ fn too_many_faults_are_counted() {
     assert!(matches!(verified.faults[0], VerifyFault::NoAct { act: 1000, .. }));
     assert!(matches!(verified.faults[1000], VerifyFault::Further { count } if count > 2000));
 }
+
+#[test]
+fn what_is_written_meanwhile_does_not_disturb() {
+    let study = populated();
+    let (records, mut writer) = (study.records(), study.records());
+    let head = records.head().unwrap();
+    let mut acts = 0;
+    let verified = records.verify(&mut |_, _| {
+        acts += 1;
+        super::study::file(&mut writer, format!("export {acts}").as_bytes(), "c.csv", |records, filing| {
+            records.add_reading(filing, &super::study::reading("S-03", 1, 4.0)).map(|_| ())
+        });
+    });
+    let verified = verified.unwrap();
+    assert!(acts >= 2);
+    assert_eq!((verified.faults, verified.head), (vec![], head));
+    assert_eq!(records.verify(&mut |_, _| {}).unwrap().faults, []);
+    assert_eq!(records.head().unwrap().unwrap().0, head.unwrap().0 + acts);
+}
