@@ -107,6 +107,7 @@ CREATE TABLE filing (
     digest        BLOB NOT NULL          -- over the salted digests of its readings, holds, sightings and goings
 ) STRICT;
 CREATE INDEX filing_act ON filing (act);
+CREATE INDEX filing_capture ON filing (capture);
 
 CREATE TABLE reading (
     id         INTEGER PRIMARY KEY,

@@ -979,3 +979,35 @@ impl Plan {
         self.analyses.iter().find(|analysis| analysis.code == code)
     }
 }
+
+#[cfg(test)]
+pub(crate) mod tests {
+    use super::*;
+
+    /// A plan with these visits and nothing else.
+    pub(crate) fn empty(visits: Vec<Visit>) -> Plan {
+        Plan {
+            study: Study {
+                code: "T".into(),
+                title: String::new(),
+                time_zone: Tz::UTC,
+                enrol: None,
+                allocation: Allocation::Sealed,
+            },
+            subject: SubjectRule {
+                pattern: Regex::new("").unwrap(),
+                pattern_text: String::new(),
+                normalise: vec![],
+                anchor: Anchor::Enrolment,
+                attributes: vec![],
+            },
+            arms: vec![],
+            measures: vec![],
+            visits,
+            instruments: vec![],
+            analyses: vec![],
+            interim: None,
+            assume: None,
+        }
+    }
+}

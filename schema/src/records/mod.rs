@@ -5,12 +5,15 @@
 
 pub mod codec;
 pub mod error;
+pub mod exports;
+pub mod intake;
 pub mod open;
 pub mod raw;
 pub mod removal;
 pub mod texts;
 pub mod trail;
 pub mod verify;
+pub mod view;
 pub mod writer;
 
 pub use error::{RecordsError, Result};
@@ -18,4 +21,5 @@ pub use open::Records;
 pub use raw::{KeepError, Kept};
 pub use trail::{ActKind, ActNumber, Doer, TrailRow};
 pub use verify::{RawWrong, Verified, VerifyFault, VerifyNote};
+pub use view::{AsOf, View};
 pub use writer::{Act, Cell, Filing, NewHold, NewReading};

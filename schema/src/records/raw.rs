@@ -129,6 +129,55 @@ impl Records {
     }
 }
 
+/// An export's kept bytes, which can be read as often as needed while the records are written to.
+pub enum RawSource {
+    /// As they are.
+    Plain(Vec<u8>),
+    /// Compressed, from the database.
+    Stored(Vec<u8>),
+    /// Compressed, in `raw/`.
+    File {
+        /// The doors.
+        world: std::sync::Arc<dyn crate::world::World>,
+        /// The copy.
+        file: PathBuf,
+    },
+}
+
+impl RawSource {
+    /// A fresh stream over all bytes.
+    pub fn open(&self) -> io::Result<Box<dyn Read + '_>> {
+        Ok(match self {
+            Self::Plain(bytes) => Box::new(bytes.as_slice()),
+            Self::Stored(bytes) => Box::new(zstd::Decoder::new(bytes.as_slice())?),
+            Self::File { world, file } => Box::new(zstd::Decoder::new(world.open(file)?)?),
+        })
+    }
+}
+
+impl Records {
+    /// An export's kept bytes.
+    pub fn raw_source(&self, sha256: &Hash) -> Result<RawSource> {
+        let stored: Option<Option<Vec<u8>>> = self
+            .conn
+            .prepare_cached("SELECT stored FROM raw WHERE sha256 = ?1")
+            .and_then(|mut statement| statement.query_row([sha256.as_slice()], |row| row.get(0)).optional())
+            .map_err(self.failed("reading a raw copy"))?;
+        Ok(match stored.flatten() {
+            Some(bytes) => RawSource::Stored(bytes),
+            None => RawSource::File { world: self.world.clone(), file: self.raw_file(sha256) },
+        })
+    }
+
+    /// The kept bytes of an export that is about to be filed.
+    pub fn kept_source(&self, kept: &mut Kept) -> RawSource {
+        match kept.bytes.take() {
+            Some(bytes) => RawSource::Plain(bytes),
+            None => RawSource::File { world: self.world.clone(), file: self.raw_file(&kept.sha256) },
+        }
+    }
+}
+
 /// Why an export's bytes could not be kept.
 #[derive(Debug, thiserror::Error)]
 pub enum KeepError {

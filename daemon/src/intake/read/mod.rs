@@ -3,7 +3,10 @@
 //! Invariants: every physical line is counted exactly once, either in [`LineCounts`] or by a [`Row`] that is handed
 //! out ([`Row::lines`]); a cell's text is what was exported, never a guess; memory does not grow with the export.
 
+pub mod cells;
 pub mod delimited;
+pub mod heading;
+pub mod text;
 
 use std::io::Read;
 
@@ -56,6 +59,14 @@ pub struct LineCounts {
     pub ignored: u64,
     /// The line that ends the table, and all after it.
     pub footer: u64,
+}
+
+impl LineCounts {
+    /// All of them.
+    pub fn total(&self) -> u64 {
+        let Self { preamble, header, units, blank, repeated_header, ignored, footer } = self;
+        preamble + header + units + blank + repeated_header + ignored + footer
+    }
 }
 
 /// What is wrong with a row as a whole.
@@ -118,6 +129,9 @@ pub trait Rows {
     fn next_row(&mut self, row: &mut Row) -> Result<bool, FileFault>;
     /// The lines counted so far that were no rows.
     fn counts(&self) -> LineCounts;
+    /// The physical lines read so far; after the end, all that the export has. At any time it is the sum of
+    /// [`Self::counts`] and of the [`Row::lines`] handed out.
+    fn lines(&self) -> u64;
 }
 
 /// The columns that a reader's plan names, in a fixed order: a column's position here is its slot.

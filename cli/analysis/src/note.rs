@@ -1,0 +1,86 @@
+//! Notes: why a value of a result is absent, or what it must not be taken for.
+//!
+//! Invariant: a note carries only indices and counts; names and numbers in a person's language are put in by the caller.
+
+use std::fmt;
+
+use crate::contrasts::ContrastKind;
+
+/// Why something in a result is `None`, or needs a word of caution.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash)]
+pub enum Note {
+    /// No subject has a reading at every level: there is no analysis of variance, though pairs may have one.
+    NoCompleteSubject,
+    /// One complete subject: nothing tells a visit from chance.
+    OneSubject,
+    /// One level: there is no change to test.
+    OneLevel,
+    /// Every reading used is the same, as far as doubles can tell: *F* is 0/0.
+    NoVariation,
+    /// The residual is zero, as far as doubles can tell, and so is the effect: *F* is 0/0.
+    NoEffectNoResidual,
+    /// The residual is zero, as far as doubles can tell: *F* is infinite and its p 0.
+    ZeroResidual,
+    /// Mauchly's test needs at least as many error degrees of freedom as contrasts.
+    TooFewSubjectsForMauchly {
+        /// Complete subjects.
+        subjects: usize,
+        /// Levels.
+        levels: usize,
+    },
+    /// The covariance of the contrasts is singular, as far as doubles can tell: Mauchly's test is not defined.
+    SingularCovariance,
+    /// The Huynh-Feldt epsilons have a denominator of zero or below: too few subjects for so strong a correlation.
+    HuynhFeldtUndefined,
+    /// Trends were asked for, and the levels have no positions.
+    TrendsNeedPositions,
+    /// The positions lie so unevenly that the trend of this degree and those above cannot be told from lower ones.
+    TrendsIndistinct {
+        /// The first degree left out.
+        degree: usize,
+    },
+    /// Fewer than two subjects have what this contrast needs: it has no standard error.
+    TooFewForContrast {
+        /// Which contrast.
+        contrast: ContrastKind,
+        /// How many subjects have it.
+        subjects: usize,
+    },
+    /// All subjects have the same value of this contrast, as far as doubles can tell: *t* is infinite, or 0/0.
+    NoSpreadInContrast {
+        /// Which contrast.
+        contrast: ContrastKind,
+    },
+}
+
+impl fmt::Display for Note {
+    fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
+        match self {
+            Self::NoCompleteSubject => {
+                write!(f, "no subject has a reading at every level, so there is no analysis of variance")
+            }
+            Self::OneSubject => write!(f, "only one subject is complete, so there is no residual to test against"),
+            Self::OneLevel => write!(f, "there is only one level, so there is no change to test"),
+            Self::NoVariation => write!(f, "all readings are equal, so F is not defined"),
+            Self::NoEffectNoResidual => write!(f, "neither the effect nor the residual varies, so F is not defined"),
+            Self::ZeroResidual => write!(f, "the residual is zero, so F is infinite"),
+            Self::TooFewSubjectsForMauchly { subjects, levels } => {
+                write!(f, "Mauchly's test is not defined for {subjects} complete subjects and {levels} levels")
+            }
+            Self::SingularCovariance => {
+                write!(f, "the covariance of the contrasts is singular, so Mauchly's test is not defined")
+            }
+            Self::HuynhFeldtUndefined => write!(f, "the Huynh-Feldt corrections are not defined for so few subjects"),
+            Self::TrendsNeedPositions => write!(f, "trends need the positions of the levels"),
+            Self::TrendsIndistinct { degree } => {
+                write!(f, "trends of degree {degree} and above cannot be told from lower ones at these positions")
+            }
+            Self::TooFewForContrast { contrast, subjects } => {
+                write!(f, "{contrast}: {subjects} subjects have it, so it has no standard error")
+            }
+            Self::NoSpreadInContrast { contrast } => {
+                write!(f, "{contrast}: it is the same for all subjects, so t is not defined")
+            }
+        }
+    }
+}

@@ -1,0 +1,240 @@
+//! The second half of placing: whether a value has been filed before, and which replicate it is.
+//!
+//! Invariants: the same reading is never filed twice; what only looks the same is held, never swallowed; a replicate's
+//! number is taken once in a session by one instrument.
+
+use std::collections::{HashMap, HashSet};
+
+use revisant_schema::hold::{Answer, Reason};
+use revisant_schema::plan::{Changed, Instrument, Measure, ReExport};
+use revisant_schema::records::intake::{Candidate, Identity, Slot};
+use revisant_schema::records::view::day_number;
+use revisant_schema::records::{Records, Result};
+
+use super::resolve::{Held, PlacedValue, Resolved};
+
+/// What is to be done with a value.
+#[derive(Debug, Clone, PartialEq)]
+pub enum Verdict {
+    /// File it.
+    File(Slotted),
+    /// This reading is it.
+    Already(i64),
+    /// A person has said that the old value stays.
+    Left,
+    /// Hold it.
+    Held(Held),
+}
+
+/// Where a value goes.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub struct Slotted {
+    /// The replicate's number.
+    pub replicate: u32,
+    /// Whether that came from the export.
+    pub labelled: bool,
+    /// Hash of what identifies it.
+    pub identity: i64,
+    /// Its order among equals in the export.
+    pub ordinal: i64,
+    /// The reading whose place it takes.
+    pub supersedes: Option<i64>,
+}
+
+/// What one export has shown so far.
+pub struct Judge<'p> {
+    instrument: &'p Instrument,
+    capture: i64,
+    seen: HashMap<i64, i64>,
+    /// Readings filed before that this export holds too.
+    pub matched: HashSet<i64>,
+    /// Placing a row again later: its order among equals follows those that its export has filed.
+    pub again: bool,
+}
+
+/// A value with its row, and the label of the other session that is the same occasion, if any.
+pub struct Case<'c> {
+    /// The row.
+    pub row: &'c Resolved,
+    /// The value.
+    pub value: &'c PlacedValue,
+    /// Its measure.
+    pub measure: &'c Measure,
+    /// A session of the same subject and day with this label lies at the same visit.
+    pub twin: Option<&'c str>,
+}
+
+impl<'c> Case<'c> {
+    fn label(&self) -> &'c str {
+        self.row.label.as_deref().unwrap_or_default()
+    }
+}
+
+impl<'p> Judge<'p> {
+    /// Starts an export.
+    pub fn new(instrument: &'p Instrument, capture: i64) -> Self {
+        Self { instrument, capture, seen: HashMap::new(), matched: HashSet::new(), again: false }
+    }
+
+    /// Judges one value.
+    pub fn judge(&mut self, records: &mut Records, case: &Case<'_>) -> Result<Verdict> {
+        let identity = Identity {
+            instrument: &self.instrument.code,
+            measure: &case.measure.code,
+            condition: &case.value.condition,
+            subject: &case.row.subject,
+            written: &case.row.written,
+        };
+        let candidates = records.candidates(&identity)?;
+        let hash = identity.hash();
+        let label = case.value.replicate.or(case.row.replicate);
+        let label = match case.value.decided {
+            Some(Answer::Replicate(number) | Answer::InsteadOf(number)) => Some(number),
+            _ => label,
+        };
+        match label {
+            Some(number) => self.labelled(records, case, &candidates, hash, number),
+            None => self.unlabelled(records, case, &candidates, hash),
+        }
+    }
+
+    fn labelled(
+        &mut self,
+        records: &mut Records,
+        case: &Case<'_>,
+        candidates: &[Candidate],
+        identity: i64,
+        number: u32,
+    ) -> Result<Verdict> {
+        let same = candidates.iter().rev().find(|known| known.labelled && known.replicate == number);
+        if let Some(known) = same {
+            return self.same_or_changed(records, case, known, identity);
+        }
+        let slots = self.slots(records, case)?;
+        let taken = slots.iter().find(|slot| slot.replicate == number);
+        let slotted = |supersedes| Slotted { replicate: number, labelled: true, identity, ordinal: 1, supersedes };
+        match (&case.value.decided, taken) {
+            (Some(Answer::InsteadOf(_)), taken) => Ok(Verdict::File(slotted(taken.map(|slot| slot.reading)))),
+            (_, Some(taken)) => Ok(Verdict::Held(taken_already(case, number, taken))),
+            (Some(Answer::Replicate(_)), None) => Ok(Verdict::File(slotted(None))),
+            _ if number == 0 || number > case.measure.replicates => Ok(Verdict::Held(beyond_plan(case, number))),
+            _ => Ok(Verdict::File(slotted(None))),
+        }
+    }
+
+    fn unlabelled(
+        &mut self,
+        records: &mut Records,
+        case: &Case<'_>,
+        candidates: &[Candidate],
+        identity: i64,
+    ) -> Result<Verdict> {
+        let ordinal = self.ordinal(candidates, identity);
+        let earlier = |known: &&Candidate| !known.labelled && known.capture != Some(self.capture);
+        let proof = self.instrument.re_export != ReExport::New || case.row.finer;
+        if proof {
+            let free = |known: &&Candidate| earlier(known) && !self.matched.contains(&known.reading);
+            let newest = candidates.iter().rev();
+            let found = newest
+                .clone()
+                .find(|known| free(known) && known.ordinal == ordinal && equal(case.value, known))
+                .or_else(|| newest.clone().find(|known| free(known) && equal(case.value, known)))
+                .or_else(|| newest.clone().find(|known| free(known) && known.ordinal == ordinal));
+            if let Some(known) = found {
+                return self.same_or_changed(records, case, known, identity);
+            }
+        } else if let Some(known) = candidates.iter().find(|known| earlier(known) && equal(case.value, known)) {
+            return Ok(Verdict::Held(looks_the_same(case, known)));
+        }
+        let slots = self.slots(records, case)?;
+        let number = 1 + slots.iter().map(|slot| slot.replicate).max().unwrap_or(0);
+        if number > case.measure.replicates {
+            return Ok(Verdict::Held(beyond_plan(case, number)));
+        }
+        Ok(Verdict::File(Slotted { replicate: number, labelled: false, identity, ordinal, supersedes: None }))
+    }
+
+    /// The value's order among equals in its export.
+    fn ordinal(&mut self, candidates: &[Candidate], identity: i64) -> i64 {
+        if self.again {
+            let own = candidates.iter().filter(|known| known.capture == Some(self.capture));
+            return 1 + own.map(|known| known.ordinal).max().unwrap_or(0);
+        }
+        let seen = self.seen.entry(identity).or_insert(0);
+        *seen += 1;
+        *seen
+    }
+
+    fn same_or_changed(
+        &mut self,
+        records: &mut Records,
+        case: &Case<'_>,
+        known: &Candidate,
+        identity: i64,
+    ) -> Result<Verdict> {
+        self.matched.insert(known.reading);
+        if equal(case.value, known) || known.exported.is_none() {
+            return Ok(Verdict::Already(known.reading));
+        }
+        let slotted = Slotted {
+            replicate: known.replicate,
+            labelled: known.labelled,
+            identity,
+            ordinal: known.ordinal,
+            supersedes: Some(known.reading),
+        };
+        match case.value.decided {
+            Some(Answer::KeepOld) => return Ok(Verdict::Left),
+            Some(Answer::TakeNew) => return Ok(Verdict::File(slotted)),
+            _ => {}
+        }
+        let touched = records.touched_by_hand(known.reading)?;
+        if self.instrument.changed == Changed::Supersede && !touched {
+            return Ok(Verdict::File(slotted));
+        }
+        let was = known.exported.map(|number| number.to_string()).unwrap_or_default();
+        let by_hand = if touched { ", which a person has struck or amended" } else { "" };
+        let wrong = format!("it was {was} when first exported (reading {}){by_hand}", known.reading);
+        Ok(Verdict::Held(Held::row(Reason::ChangedValue, wrong).on(&case.value.column).about(known.reading)))
+    }
+
+    /// The replicates of this instrument that stand in the cell already, over both sessions of the same occasion.
+    fn slots(&self, records: &mut Records, case: &Case<'_>) -> Result<Vec<Slot>> {
+        let day = day_number(case.row.day);
+        let mut slots = Vec::new();
+        for label in [Some(case.label()), case.twin].into_iter().flatten() {
+            if let Some(session) = records.find_session(&case.row.subject, day, label)? {
+                let (measure, condition) = (&case.measure.code, &case.value.condition);
+                slots.extend(records.slots(session, measure, condition, &self.instrument.code)?);
+            }
+        }
+        Ok(slots)
+    }
+}
+
+fn equal(value: &PlacedValue, known: &Candidate) -> bool {
+    known.exported == value.exported && known.unit == value.unit && known.mark.as_deref() == value.mark
+}
+
+fn beyond_plan(case: &Case<'_>, number: u32) -> Held {
+    let planned = case.measure.replicates;
+    let wrong = match planned {
+        1 => format!("replicate {number}, where the plan expects one"),
+        _ => format!("replicate {number}, where the plan expects {planned}"),
+    };
+    Held::row(Reason::ExtraReplicate, wrong).on(&case.value.column)
+}
+
+fn taken_already(case: &Case<'_>, number: u32, taken: &Slot) -> Held {
+    let wrong = format!("replicate {number} of this session was filed with another time (reading {})", taken.reading);
+    Held::row(Reason::ExtraReplicate, wrong).on(&case.value.column).about(taken.reading)
+}
+
+fn looks_the_same(case: &Case<'_>, known: &Candidate) -> Held {
+    let wrong = format!(
+        "the same value at the same time was filed from another export (reading {}), and the time is too coarse to tell \
+         whether it is the same reading",
+        known.reading
+    );
+    Held::row(Reason::ExtraReplicate, wrong).on(&case.value.column).about(known.reading)
+}

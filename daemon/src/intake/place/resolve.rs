@@ -1,0 +1,863 @@
+//! The first half of placing: what a row says by itself, by the plan and the roster.
+//!
+//! Invariants: nothing is guessed: every text is either what the plan says it may be, or held with the reason; a row
+//! whose values are all missing asks nothing; the outcome depends on the row, the plan, the roster and the clock of
+//! collection alone, never on other rows (but for doubled local times, which the export's order may settle).
+
+use std::borrow::Cow;
+use std::collections::{BTreeMap, HashMap};
+
+use chrono::{DateTime, NaiveDate, Utc};
+use regex::Regex;
+use revisant_schema::hold::{Answer, Reason};
+use revisant_schema::plan::stamp::{CompiledStamp, Written};
+use revisant_schema::plan::{
+    Affine, Instrument, LevelRule, LimitRule, MeasureIx, MeasureRule, Place, Plan, Source, UnitRule, ValueRule, units,
+};
+use revisant_schema::reading::Condition;
+use revisant_schema::roster::{Roster, tidy};
+use revisant_schema::session::UNSCHEDULED;
+
+use super::clock::{self, Local};
+use super::number;
+use crate::intake::read::{Row, RowFault, Rows};
+
+/// Something that a person must look at.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Held {
+    /// Why.
+    pub reason: Reason,
+    /// The value's column; empty: the whole row.
+    pub column: String,
+    /// What is wrong, in words.
+    pub wrong: String,
+    /// The likeliest answers, best first.
+    pub likely: Vec<String>,
+    /// The reading it is about.
+    pub about: Option<i64>,
+}
+
+impl Held {
+    /// A row's fault.
+    pub fn row(reason: Reason, wrong: impl Into<String>) -> Self {
+        Self { reason, column: String::new(), wrong: wrong.into(), likely: vec![], about: None }
+    }
+
+    /// With the likeliest answers.
+    pub fn likely(mut self, likely: Vec<String>) -> Self {
+        self.likely = likely;
+        self
+    }
+
+    /// On one value.
+    pub fn on(mut self, column: &str) -> Self {
+        self.column = column.to_owned();
+        self
+    }
+
+    /// About a filed reading.
+    pub fn about(mut self, reading: i64) -> Self {
+        self.about = Some(reading);
+        self
+    }
+}
+
+/// What became of a row.
+#[derive(Debug, Clone, PartialEq)]
+pub enum RowOutcome {
+    /// Every value is missing.
+    NoValue,
+    /// The whole row is held.
+    Held(Held),
+    /// It is whose and when it says; its values follow.
+    Ready(Box<Resolved>),
+}
+
+/// A row whose subject, time and visit are known.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Resolved {
+    /// The subject's code.
+    pub subject: String,
+    /// Local day of the study centre.
+    pub day: NaiveDate,
+    /// The moment; `None`: only the day is known.
+    pub moment: Option<DateTime<Utc>>,
+    /// The time as written.
+    pub written: String,
+    /// Whether that is finer than the minute.
+    pub finer: bool,
+    /// The visit's code, or `unscheduled`; `None` = no label.
+    pub label: Option<String>,
+    /// A person has said which visit it is, whatever the date says.
+    pub label_decided: bool,
+    /// The replicate's number, where the export says one.
+    pub replicate: Option<u32>,
+    /// Empty when not said.
+    pub operator: String,
+    /// One for each value of the row.
+    pub values: Vec<ValueOutcome>,
+}
+
+/// What became of one value.
+#[derive(Debug, Clone, PartialEq)]
+pub enum ValueOutcome {
+    /// Missing by the plan.
+    Missing,
+    /// Held.
+    Held(Held),
+    /// A number in the measure's unit.
+    Number(Box<PlacedValue>),
+}
+
+/// A value that may be filed.
+#[derive(Debug, Clone, PartialEq)]
+pub struct PlacedValue {
+    /// Its column.
+    pub column: String,
+    /// Its measure.
+    pub measure: MeasureIx,
+    /// Its condition's text.
+    pub condition: String,
+    /// As exported.
+    pub text: String,
+    /// The number as exported.
+    pub exported: Option<f64>,
+    /// Its unit as exported; empty: the measure's.
+    pub unit: String,
+    /// In the measure's unit.
+    pub number: f64,
+    /// `<` or `>`.
+    pub mark: Option<&'static str>,
+    /// The replicate's number, where the column says one.
+    pub replicate: Option<u32>,
+    /// What a person said about its replicate or its change.
+    pub decided: Option<Answer>,
+}
+
+/// Answers that bind to one row: by column, the empty one for the row.
+#[derive(Debug, Clone, Default, PartialEq)]
+pub struct Decided {
+    answers: HashMap<String, Vec<(Reason, Answer)>>,
+}
+
+impl Decided {
+    /// Adds an answer.
+    pub fn add(&mut self, column: &str, reason: Reason, answer: Answer) {
+        self.answers.entry(column.to_owned()).or_default().push((reason, answer));
+    }
+
+    /// Whether there is none.
+    pub fn is_empty(&self) -> bool {
+        self.answers.is_empty()
+    }
+
+    fn find<T>(&self, column: &str, pick: impl Fn(Reason, &Answer) -> Option<T>) -> Option<T> {
+        // The newest answer wins.
+        self.answers.get(column)?.iter().rev().find_map(|(reason, answer)| pick(*reason, answer))
+    }
+
+    fn stands(&self, column: &str, wanted: Reason) -> bool {
+        self.find(column, |reason, answer| (reason == wanted && *answer == Answer::AsItStands).then_some(())).is_some()
+    }
+}
+
+/// A place with its columns found.
+#[derive(Debug)]
+enum Finder<'p> {
+    Column(usize, &'p BTreeMap<String, String>),
+    Columns(Vec<usize>, &'p BTreeMap<String, String>),
+    Preamble(&'p str, &'p BTreeMap<String, String>),
+    Settled(String),
+    Parts(Vec<Finder<'p>>, &'p BTreeMap<String, String>),
+}
+
+/// Where an export lies.
+#[derive(Debug, Clone, Copy)]
+pub struct Whereabouts<'a> {
+    /// Its file's name.
+    pub file_name: &'a str,
+    /// Its folder below the instrument's, with `/`; empty for none.
+    pub folder: &'a str,
+}
+
+impl<'p> Finder<'p> {
+    fn new(place: &'p Place, wanted: &[String], whereabouts: Whereabouts<'_>) -> Self {
+        let slot = |name: &str| wanted.iter().position(|known| known == name).unwrap_or(usize::MAX);
+        match &place.source {
+            Source::Column(name) => Self::Column(slot(name), &place.map),
+            Source::Columns(names) => Self::Columns(names.iter().map(|name| slot(name)).collect(), &place.map),
+            Source::Preamble(key) => Self::Preamble(key, &place.map),
+            Source::FileName(regex) => Self::Settled(mapped(&place.map, &group(regex, whereabouts.file_name))),
+            Source::Folder(regex) => Self::Settled(mapped(&place.map, &group(regex, whereabouts.folder))),
+            Source::Fixed(text) => Self::Settled(mapped(&place.map, text)),
+            Source::Parts(parts) => {
+                Self::Parts(parts.iter().map(|part| Self::new(part, wanted, whereabouts)).collect(), &place.map)
+            }
+        }
+    }
+
+    fn find<'r>(&'r self, row: &'r Row, rows: &'r dyn Rows) -> Cow<'r, str> {
+        match self {
+            Self::Column(slot, map) => mapped_cow(map, row.cell(*slot).trim()),
+            Self::Columns(slots, map) => {
+                let texts: Vec<&str> = slots.iter().map(|slot| row.cell(*slot).trim()).collect();
+                Cow::Owned(mapped(map, texts.join(" ").trim()))
+            }
+            Self::Preamble(key, map) => mapped_cow(map, rows.preamble(key).unwrap_or_default().trim()),
+            Self::Settled(text) => Cow::Borrowed(text),
+            Self::Parts(parts, map) => {
+                let texts: Vec<Cow<'_, str>> = parts.iter().map(|part| part.find(row, rows)).collect();
+                Cow::Owned(mapped(map, texts.join(" ").trim()))
+            }
+        }
+    }
+}
+
+fn group(regex: &Regex, text: &str) -> String {
+    let found = regex.captures(text).and_then(|groups| groups.get(1));
+    found.map_or_else(String::new, |group| group.as_str().trim().to_owned())
+}
+
+fn mapped(map: &BTreeMap<String, String>, text: &str) -> String {
+    map.get(text).map_or(text, String::as_str).to_owned()
+}
+
+fn mapped_cow<'r>(map: &'r BTreeMap<String, String>, text: &'r str) -> Cow<'r, str> {
+    Cow::Borrowed(map.get(text).map_or(text, String::as_str))
+}
+
+/// Resolves the rows of one export.
+pub struct Resolver<'p> {
+    plan: &'p Plan,
+    instrument: &'p Instrument,
+    roster: &'p Roster,
+    now: DateTime<Utc>,
+    stamp: CompiledStamp,
+    subject: Finder<'p>,
+    taken_at: Finder<'p>,
+    visit: Option<Finder<'p>>,
+    replicate: Option<Finder<'p>>,
+    operator: Option<Finder<'p>>,
+    values: Vec<ValueFinder<'p>>,
+    /// Settled moments of doubled local times, by line.
+    pub settled: HashMap<u64, DateTime<Utc>>,
+}
+
+struct ValueFinder<'p> {
+    rule: &'p ValueRule,
+    slot: usize,
+    measure: Option<Finder<'p>>,
+    unit: Option<Finder<'p>>,
+    levels: Vec<(&'p str, Result<&'p str, Finder<'p>>)>,
+    conversions: std::cell::RefCell<HashMap<(String, MeasureIx), Option<Affine>>>,
+}
+
+/// What the stamp of a row comes to.
+enum Taken {
+    Moment(DateTime<Utc>, bool, NaiveDate),
+    Day(NaiveDate),
+}
+
+impl<'p> Resolver<'p> {
+    /// Prepares for one export. `wanted` are the columns in the order of their slots.
+    pub fn new(
+        plan: &'p Plan,
+        instrument: &'p Instrument,
+        roster: &'p Roster,
+        now: DateTime<Utc>,
+        wanted: &[String],
+        whereabouts: Whereabouts<'_>,
+    ) -> Result<Self, String> {
+        let reader = &instrument.reader;
+        let finder = |place: &'p Place| Finder::new(place, wanted, whereabouts);
+        Ok(Self {
+            plan,
+            instrument,
+            roster,
+            now,
+            stamp: CompiledStamp::new(&reader.stamp)?,
+            subject: finder(&reader.subject),
+            taken_at: finder(&reader.taken_at),
+            visit: reader.visit.as_ref().map(finder),
+            replicate: reader.replicate.as_ref().map(finder),
+            operator: reader.operator.as_ref().map(finder),
+            values: reader.values.iter().map(|rule| ValueFinder::new(rule, wanted, whereabouts)).collect(),
+            settled: HashMap::new(),
+        })
+    }
+
+    /// Whether every value of the row is missing by the plan.
+    pub fn nothing_there(&self, row: &Row, rows: &dyn Rows) -> bool {
+        row.fault.is_none() && self.values.iter().all(|value| self.is_missing(value, row, rows))
+    }
+
+    fn is_missing(&self, value: &ValueFinder<'_>, row: &Row, rows: &dyn Rows) -> bool {
+        let text = row.cell(value.slot).trim();
+        if self.instrument.reader.missing.iter().any(|word| word == text) {
+            return true;
+        }
+        text.starts_with('<')
+            && value
+                .measure_ix(self.plan, row, rows)
+                .is_ok_and(|measure| self.plan.measures[measure].below_limit == LimitRule::Missing)
+    }
+
+    /// The local time of a row, for settling doubled hours: nothing when it has no value or no readable stamp.
+    pub fn local(&self, row: &Row, rows: &dyn Rows) -> Option<Local> {
+        if row.fault.is_some() || self.nothing_there(row, rows) {
+            return None;
+        }
+        match self.stamp.read(&self.taken_at.find(row, rows))?.written {
+            Written::Local(local) => Some(clock::in_zone(self.instrument.time_zone, local)),
+            Written::Moment(moment) => Some(Local::Once(moment.to_utc())),
+            Written::Date(_) => None,
+        }
+    }
+
+    /// Resolves one row, with what people have decided about it.
+    pub fn resolve(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> RowOutcome {
+        if self.nothing_there(row, rows) {
+            return RowOutcome::NoValue;
+        }
+        match self.resolve_row(row, rows, decided) {
+            Ok(resolved) => RowOutcome::Ready(Box::new(resolved)),
+            Err(held) => RowOutcome::Held(*held),
+        }
+    }
+
+    fn resolve_row(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<Resolved, Box<Held>> {
+        row_fault(row, decided)?;
+        let subject = self.subject_of(row, rows, decided)?;
+        let (taken, written) = self.taken(row, rows, decided)?;
+        let (moment, finer, day) = match taken {
+            Taken::Moment(moment, finer, day) => (Some(moment), finer, day),
+            Taken::Day(day) => (None, false, day),
+        };
+        self.check_enrolment(&subject, day, decided)?;
+        let (label, label_decided) = self.label(row, rows, decided)?;
+        let replicate = self.replicate_of(row, rows)?;
+        let values = self.values.iter().map(|value| self.value(value, row, rows, day, decided)).collect();
+        let operator = self.operator.as_ref().map(|finder| finder.find(row, rows).into_owned()).unwrap_or_default();
+        Ok(Resolved { subject, day, moment, written, finer, label, label_decided, replicate, operator, values })
+    }
+
+    fn subject_of(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<String, Box<Held>> {
+        let said = decided.find("", |_, answer| match answer {
+            Answer::Subject(code) => Some(code.clone()),
+            _ => None,
+        });
+        let found = said.map_or_else(|| self.subject.find(row, rows), Cow::Owned);
+        let code = tidy(&found, &self.plan.subject.normalise);
+        if code.trim().is_empty() {
+            return Err(Box::new(Held::row(Reason::NoSubject, "the row names no subject")));
+        }
+        if self.plan.subject.pattern.is_match(&code) && self.roster.subjects.contains_key(&code) {
+            return Ok(code);
+        }
+        let fits = self.plan.subject.pattern.is_match(&code);
+        let why = if fits { "is not on the roster" } else { "does not fit the plan's pattern" };
+        let held = Held::row(Reason::UnknownSubject, format!("\"{code}\" {why}"));
+        Err(Box::new(held.likely(nearest(&code, self.roster.subjects.keys().map(String::as_str)))))
+    }
+
+    fn taken(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<(Taken, String), Box<Held>> {
+        let written = self.taken_at.find(row, rows).trim().to_owned();
+        let said = decided.find("", |_, answer| match answer {
+            Answer::Moment(text) => Some(Ok(text.clone())),
+            Answer::Date(day) => Some(Err(*day)),
+            _ => None,
+        });
+        let taken = match said {
+            Some(Err(day)) => Taken::Day(day),
+            Some(Ok(text)) => self.decided_moment(&text)?,
+            None => self.stamped(row, &written)?,
+        };
+        let (future, what) = match taken {
+            Taken::Moment(moment, ..) => (moment > self.now, written.clone()),
+            Taken::Day(day) => (day > self.today(), day.to_string()),
+        };
+        if future {
+            return Err(Box::new(Held::row(Reason::FutureStamp, format!("\"{what}\" lies in the future"))));
+        }
+        Ok((taken, written))
+    }
+
+    fn today(&self) -> NaiveDate {
+        self.now.with_timezone(&self.plan.study.time_zone).date_naive()
+    }
+
+    fn stamped(&self, row: &Row, written: &str) -> Result<Taken, Box<Held>> {
+        if written.is_empty() {
+            return Err(Box::new(Held::row(Reason::NoStamp, "the row says no time")));
+        }
+        let Some(read) = self.stamp.read(written) else {
+            let wrong = format!("\"{written}\" cannot be read as the plan says a time is written");
+            return Err(Box::new(Held::row(Reason::UnreadableStamp, wrong)));
+        };
+        match read.written {
+            Written::Date(day) => Ok(Taken::Day(day)),
+            Written::Moment(moment) => Ok(self.at(moment.to_utc(), moment.date_naive(), read.finer)),
+            Written::Local(local) => {
+                let moment = match clock::in_zone(self.instrument.time_zone, local) {
+                    Local::Once(moment) => moment,
+                    Local::Twice(early, late) => match self.settled.get(&row.line) {
+                        Some(moment) => *moment,
+                        None => return Err(Box::new(doubled(written, early, late))),
+                    },
+                    Local::Never => {
+                        let zone = self.instrument.time_zone.name();
+                        let wrong = format!("\"{written}\" does not exist in {zone}: clocks went forward over it");
+                        return Err(Box::new(Held::row(Reason::ClockGap, wrong)));
+                    }
+                };
+                Ok(self.at(moment, local.date(), read.finer))
+            }
+        }
+    }
+
+    /// A moment with the clock's error added, and its local day at the study centre.
+    fn at(&self, moment: DateTime<Utc>, clock_day: NaiveDate, finer: bool) -> Taken {
+        let moment = moment.checked_add_signed(clock::error_on(self.instrument, clock_day)).unwrap_or(moment);
+        Taken::Moment(moment, finer, moment.with_timezone(&self.plan.study.time_zone).date_naive())
+    }
+
+    /// A moment that a person gave: with an offset as it is; else local time of the study centre. It is the true
+    /// moment, so that no error of the instrument's clock is added.
+    fn decided_moment(&self, text: &str) -> Result<Taken, Box<Held>> {
+        let zone = self.plan.study.time_zone;
+        let read = revisant_schema::plan::stamp::read(&revisant_schema::plan::Stamp::Iso, text);
+        let moment = match read.map(|read| read.written) {
+            Some(Written::Moment(moment)) => moment.to_utc(),
+            Some(Written::Local(local)) => match clock::in_zone(zone, local) {
+                Local::Once(moment) => moment,
+                Local::Twice(early, late) => return Err(Box::new(doubled(text, early, late))),
+                Local::Never => {
+                    let wrong = format!("\"{text}\" does not exist in {}", zone.name());
+                    return Err(Box::new(Held::row(Reason::ClockGap, wrong)));
+                }
+            },
+            Some(Written::Date(day)) => return Ok(Taken::Day(day)),
+            None => {
+                let wrong = format!("\"{text}\" is no moment; write it as 2026-02-28T14:05");
+                return Err(Box::new(Held::row(Reason::UnreadableStamp, wrong)));
+            }
+        };
+        Ok(Taken::Moment(moment, true, moment.with_timezone(&zone).date_naive()))
+    }
+
+    fn check_enrolment(&self, subject: &str, day: NaiveDate, decided: &Decided) -> Result<(), Box<Held>> {
+        let Some(entry) = self.roster.subjects.get(subject) else { return Ok(()) };
+        // A person who names the subject has seen the dates; the answer to these two reasons is the subject.
+        let confirmed = |wanted: Reason| {
+            decided
+                .find("", |reason, answer| {
+                    (reason == wanted && matches!(answer, Answer::Subject(code) if code == subject)).then_some(())
+                })
+                .is_some()
+        };
+        if let Some(enrolled) = entry.enrolled.filter(|enrolled| day < *enrolled)
+            && !confirmed(Reason::BeforeEnrolment)
+        {
+            let wrong = format!("{day} lies before {subject}'s enrolment on {enrolled}");
+            return Err(Box::new(Held::row(Reason::BeforeEnrolment, wrong)));
+        }
+        if let Some(withdrawn) = entry.withdrawn.filter(|withdrawn| day > *withdrawn)
+            && !confirmed(Reason::AfterWithdrawal)
+        {
+            let wrong = format!("{day} lies after {subject}'s withdrawal on {withdrawn}");
+            return Err(Box::new(Held::row(Reason::AfterWithdrawal, wrong)));
+        }
+        Ok(())
+    }
+
+    fn label(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<(Option<String>, bool), Box<Held>> {
+        let said = decided.find("", |_, answer| match answer {
+            Answer::Visit(code) => Some(code.clone()),
+            _ => None,
+        });
+        if let Some(code) = said {
+            return Ok((Some(code), true));
+        }
+        let Some(finder) = &self.visit else { return Ok((None, false)) };
+        let found = finder.find(row, rows);
+        let text = found.trim();
+        if text.is_empty() {
+            Ok((None, false))
+        } else if text == UNSCHEDULED || self.plan.visit(text).is_some() {
+            Ok((Some(text.to_owned()), false))
+        } else {
+            let codes = self.plan.visits.iter().map(|visit| visit.code.as_str());
+            let held = Held::row(Reason::UnknownVisit, format!("\"{text}\" is no visit of the plan"));
+            Err(Box::new(held.likely(nearest(text, codes))))
+        }
+    }
+
+    fn replicate_of(&self, row: &Row, rows: &dyn Rows) -> Result<Option<u32>, Box<Held>> {
+        let Some(finder) = &self.replicate else { return Ok(None) };
+        let found = finder.find(row, rows);
+        let text = found.trim();
+        if text.is_empty() {
+            return Ok(None);
+        }
+        match text.parse::<u32>() {
+            Ok(number) => Ok(Some(number)),
+            Err(_) => {
+                let wrong = format!("\"{text}\" is no replicate's number");
+                Err(Box::new(Held::row(Reason::UnknownReplicate, wrong)))
+            }
+        }
+    }
+
+    fn value(
+        &self,
+        value: &ValueFinder<'_>,
+        row: &Row,
+        rows: &dyn Rows,
+        day: NaiveDate,
+        decided: &Decided,
+    ) -> ValueOutcome {
+        if self.is_missing(value, row, rows) {
+            return ValueOutcome::Missing;
+        }
+        match self.place_value(value, row, rows, day, decided) {
+            Ok(Some(placed)) => ValueOutcome::Number(Box::new(placed)),
+            Ok(None) => ValueOutcome::Missing,
+            Err(held) => ValueOutcome::Held(held.on(&value.rule.column)),
+        }
+    }
+
+    fn place_value(
+        &self,
+        value: &ValueFinder<'_>,
+        row: &Row,
+        rows: &dyn Rows,
+        day: NaiveDate,
+        decided: &Decided,
+    ) -> Result<Option<PlacedValue>, Held> {
+        let column = value.rule.column.as_str();
+        let measure_ix = self.measure_of(value, row, rows, decided)?;
+        let measure = &self.plan.measures[measure_ix];
+        let condition = self.condition_of(value, measure_ix, row, rows, decided)?;
+        let (unit, conversion) = self.unit_of(value, measure_ix, row, rows, decided)?;
+        let Some(number) = self.number_of(value, measure_ix, row, decided)? else { return Ok(None) };
+        let in_unit = number.used * conversion.times + conversion.plus;
+        let corrected = self.corrected(measure_ix, in_unit, day);
+        if let Some((low, high)) = measure.plausible
+            && !(low..=high).contains(&corrected)
+            && !decided.stands(column, Reason::ImplausibleValue)
+        {
+            let wrong = format!("{corrected} {} lies outside {low} to {high}", measure.unit);
+            return Err(Held::row(Reason::ImplausibleValue, wrong));
+        }
+        let about_replicate = decided.find(column, |_, answer| {
+            matches!(answer, Answer::KeepOld | Answer::TakeNew | Answer::Replicate(_) | Answer::InsteadOf(_))
+                .then(|| answer.clone())
+        });
+        let row_replicate = decided.find("", |_, answer| {
+            matches!(answer, Answer::Replicate(_) | Answer::InsteadOf(_)).then(|| answer.clone())
+        });
+        Ok(Some(PlacedValue {
+            column: column.to_owned(),
+            measure: measure_ix,
+            condition,
+            text: row.cell(value.slot).trim().to_owned(),
+            exported: Some(number.exported),
+            unit,
+            number: corrected,
+            mark: number.mark,
+            replicate: value.rule.replicate,
+            decided: about_replicate.or(row_replicate),
+        }))
+    }
+
+    fn corrected(&self, measure: MeasureIx, number: f64, day: NaiveDate) -> f64 {
+        let entry = self
+            .instrument
+            .correct
+            .iter()
+            .filter(|entry| entry.from <= day && entry.measure.is_none_or(|only| only == measure))
+            .max_by_key(|entry| entry.from);
+        entry.map_or(number, |entry| number * entry.times + entry.plus)
+    }
+
+    fn measure_of(
+        &self,
+        value: &ValueFinder<'_>,
+        row: &Row,
+        rows: &dyn Rows,
+        decided: &Decided,
+    ) -> Result<MeasureIx, Held> {
+        let said = decided.find(&value.rule.column, |_, answer| match answer {
+            Answer::Measure(code) => Some(code.clone()),
+            _ => None,
+        });
+        if let Some((measure, _)) = said.and_then(|code| self.plan.measure(&code)) {
+            return Ok(measure);
+        }
+        value.measure_ix(self.plan, row, rows).map_err(|text| {
+            let codes = self.plan.measures.iter().map(|measure| measure.code.as_str());
+            let wrong = match text.is_empty() {
+                true => "the row names no measure".to_owned(),
+                false => format!("\"{text}\" is no measure of the plan"),
+            };
+            Held::row(Reason::UnknownMeasure, wrong).likely(nearest(&text, codes))
+        })
+    }
+
+    fn condition_of(
+        &self,
+        value: &ValueFinder<'_>,
+        measure: MeasureIx,
+        row: &Row,
+        rows: &dyn Rows,
+        decided: &Decided,
+    ) -> Result<String, Held> {
+        let said = decided.find(&value.rule.column, |_, answer| match answer {
+            Answer::Condition(levels) => Some(levels.clone()),
+            _ => None,
+        });
+        let mut condition = Condition::default();
+        for factor in &self.plan.measures[measure].conditions {
+            let decided_level = said.as_ref().and_then(|levels| levels.get(&factor.code));
+            let found = match decided_level {
+                Some(level) => Cow::Borrowed(level.as_str()),
+                None => value.level(&factor.code, row, rows),
+            };
+            if !factor.levels.iter().any(|level| *level == found) {
+                let wrong = match found.is_empty() {
+                    true => format!("the row does not say which {}", factor.code),
+                    false => format!("\"{found}\" is no level of {}", factor.code),
+                };
+                let likely = nearest(&found, factor.levels.iter().map(String::as_str));
+                return Err(Held::row(Reason::UnknownCondition, wrong).likely(likely));
+            }
+            condition.0.insert(factor.code.clone(), found.into_owned());
+        }
+        Ok(condition.to_string())
+    }
+
+    /// The unit as exported, and how it becomes the measure's.
+    fn unit_of(
+        &self,
+        value: &ValueFinder<'_>,
+        measure: MeasureIx,
+        row: &Row,
+        rows: &dyn Rows,
+        decided: &Decided,
+    ) -> Result<(String, Affine), Held> {
+        const SAME: Affine = Affine { times: 1.0, plus: 0.0 };
+        let said = decided.find(&value.rule.column, |_, answer| match answer {
+            Answer::Unit(code) => Some(code.clone()),
+            _ => None,
+        });
+        let (code, stated) = match (&value.rule.unit, said) {
+            (_, Some(code)) => (code, None),
+            (UnitRule::Fixed { code, convert }, None) => (code.clone(), *convert),
+            (UnitRule::Found { convert, .. }, None) => {
+                let code = value.unit.as_ref().map(|finder| finder.find(row, rows).into_owned()).unwrap_or_default();
+                if code.is_empty() {
+                    return Err(Held::row(Reason::UnknownUnit, "the row names no unit"));
+                }
+                (code, *convert)
+            }
+            (UnitRule::Unsaid, None) => match rows.unit(value.slot).map(str::trim) {
+                None | Some("") => return Ok((String::new(), SAME)),
+                Some(code) => (code.to_owned(), None),
+            },
+        };
+        if let Some(conversion) = stated {
+            return Ok((code, conversion));
+        }
+        let target = &self.plan.measures[measure].unit;
+        if code == *target {
+            return Ok((String::new(), SAME));
+        }
+        let mut conversions = value.conversions.borrow_mut();
+        let known = conversions.entry((code.clone(), measure)).or_insert_with(|| units::convert(&code, target));
+        match known {
+            Some(conversion) => Ok((code, *conversion)),
+            None => {
+                let meant = units::meant(&code).map(str::to_owned).into_iter().collect();
+                let wrong = format!("\"{code}\" does not convert to {target}");
+                Err(Held::row(Reason::UnknownUnit, wrong).likely(meant))
+            }
+        }
+    }
+
+    fn number_of(
+        &self,
+        value: &ValueFinder<'_>,
+        measure: MeasureIx,
+        row: &Row,
+        decided: &Decided,
+    ) -> Result<Option<Number>, Held> {
+        let reader = &self.instrument.reader;
+        let column = value.rule.column.as_str();
+        let said = decided.find(column, |_, answer| match answer {
+            Answer::Value(text) => Some(text.clone()),
+            _ => None,
+        });
+        let parse = |text: &str| number::parse(text, reader.decimal_mark, reader.group_mark);
+        if let Some(text) = &said {
+            // A person may write the number with the plan's marks or with a point.
+            let number = parse(text).or_else(|| number::parse(text, '.', None));
+            if let Some(number) = number {
+                return Ok(Some(Number { exported: number, used: number, mark: None }));
+            }
+        }
+        let text = row.cell(value.slot).trim();
+        if let Some(number) = parse(text) {
+            return Ok(Some(Number { exported: number, used: number, mark: None }));
+        }
+        let unreadable = || Held::row(Reason::UnreadableValue, format!("\"{text}\" is no number"));
+        let (mark, limit) = number::limit(text).ok_or_else(unreadable)?;
+        let limit = parse(limit).ok_or_else(unreadable)?;
+        self.beyond_limit(measure, column, text, mark, limit, decided)
+    }
+
+    fn beyond_limit(
+        &self,
+        measure: MeasureIx,
+        column: &str,
+        text: &str,
+        mark: &'static str,
+        limit: f64,
+        decided: &Decided,
+    ) -> Result<Option<Number>, Held> {
+        let measure = &self.plan.measures[measure];
+        let (rule, reason) = match mark {
+            "<" => (measure.below_limit, Reason::BelowLimit),
+            _ => (measure.above_limit, Reason::AboveLimit),
+        };
+        let used = match rule {
+            _ if decided.stands(column, reason) => limit,
+            LimitRule::Limit => limit,
+            LimitRule::Half => limit / 2.0,
+            LimitRule::Missing => return Ok(None),
+            LimitRule::Hold => return Err(Held::row(reason, format!("\"{text}\" lies beyond a limit of detection"))),
+        };
+        Ok(Some(Number { exported: limit, used, mark: Some(mark) }))
+    }
+}
+
+/// A number as exported, and as used before conversion.
+struct Number {
+    exported: f64,
+    used: f64,
+    mark: Option<&'static str>,
+}
+
+impl<'p> ValueFinder<'p> {
+    fn new(rule: &'p ValueRule, wanted: &[String], whereabouts: Whereabouts<'_>) -> Self {
+        let finder = |place: &'p Place| Finder::new(place, wanted, whereabouts);
+        Self {
+            rule,
+            slot: wanted.iter().position(|name| *name == rule.column).unwrap_or(usize::MAX),
+            measure: match &rule.measure {
+                MeasureRule::Fixed(_) => None,
+                MeasureRule::Found(place) => Some(finder(place)),
+            },
+            unit: match &rule.unit {
+                UnitRule::Found { place, .. } => Some(finder(place)),
+                UnitRule::Unsaid | UnitRule::Fixed { .. } => None,
+            },
+            levels: rule
+                .condition
+                .iter()
+                .map(|(factor, level)| match level {
+                    LevelRule::Fixed(level) => (factor.as_str(), Ok(level.as_str())),
+                    LevelRule::Found(place) => (factor.as_str(), Err(finder(place))),
+                })
+                .collect(),
+            conversions: Default::default(),
+        }
+    }
+
+    /// The measure, or the text that names none.
+    fn measure_ix(&self, plan: &Plan, row: &Row, rows: &dyn Rows) -> Result<MeasureIx, String> {
+        match (&self.rule.measure, &self.measure) {
+            (MeasureRule::Fixed(measure), _) => Ok(*measure),
+            (MeasureRule::Found(_), Some(finder)) => {
+                let text = finder.find(row, rows);
+                plan.measure(text.trim()).map(|(measure, _)| measure).ok_or_else(|| text.trim().to_owned())
+            }
+            (MeasureRule::Found(_), None) => Err(String::new()),
+        }
+    }
+
+    fn level<'r>(&'r self, factor: &str, row: &'r Row, rows: &'r dyn Rows) -> Cow<'r, str> {
+        match self.levels.iter().find(|(code, _)| *code == factor) {
+            Some((_, Ok(level))) => Cow::Borrowed(level),
+            Some((_, Err(finder))) => finder.find(row, rows),
+            None => Cow::Borrowed(""),
+        }
+    }
+}
+
+fn row_fault(row: &Row, decided: &Decided) -> Result<(), Box<Held>> {
+    let held = match &row.fault {
+        None => return Ok(()),
+        Some(RowFault::Unreadable(_)) if decided.stands("", Reason::UnreadableRow) => return Ok(()),
+        Some(RowFault::Unfinished) if decided.stands("", Reason::UnfinishedRow) => return Ok(()),
+        Some(RowFault::Unreadable(wrong)) => Held::row(Reason::UnreadableRow, wrong.clone()),
+        Some(RowFault::Unfinished) => {
+            Held::row(Reason::UnfinishedRow, "the last row has no line end and may have been cut inside a number")
+        }
+    };
+    Err(Box::new(held))
+}
+
+fn doubled(written: &str, early: DateTime<Utc>, late: DateTime<Utc>) -> Held {
+    let text = |moment: DateTime<Utc>| moment.to_rfc3339_opts(chrono::SecondsFormat::AutoSi, true);
+    let wrong = format!("\"{written}\" exists twice: clocks went back over it");
+    Held::row(Reason::ClockFold, wrong).likely(vec![text(early), text(late)])
+}
+
+/// The codes nearest to `text`, best first: at most three, none of them farther than half the text.
+pub fn nearest<'a>(text: &str, codes: impl Iterator<Item = &'a str>) -> Vec<String> {
+    let text = text.to_lowercase();
+    let most = (text.chars().count() / 2).clamp(1, 3);
+    let mut near: Vec<(usize, &str)> = codes
+        .map(|code| (edits(&text, &code.to_lowercase()), code))
+        .filter(|(distance, _)| *distance <= most)
+        .collect();
+    near.sort_unstable();
+    near.into_iter().take(3).map(|(_, code)| code.to_owned()).collect()
+}
+
+/// Edits of one character (insert, delete, replace, swap neighbours) that turn one text into the other: the optimal
+/// string alignment distance (Damerau 1964).
+fn edits(one: &str, other: &str) -> usize {
+    let (one, other): (Vec<char>, Vec<char>) = (one.chars().collect(), other.chars().collect());
+    let mut before: Vec<usize> = vec![];
+    let mut last: Vec<usize> = (0..=other.len()).collect();
+    for row in 1..=one.len() {
+        let mut now = vec![row];
+        for column in 1..=other.len() {
+            let change = usize::from(one[row - 1] != other[column - 1]);
+            let mut best = (last[column] + 1).min(now[column - 1] + 1).min(last[column - 1] + change);
+            let swapped =
+                row > 1 && column > 1 && one[row - 1] == other[column - 2] && one[row - 2] == other[column - 1];
+            if swapped {
+                best = best.min(before[column - 2] + 1);
+            }
+            now.push(best);
+        }
+        before = std::mem::replace(&mut last, now);
+    }
+    last.last().copied().unwrap_or(0)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn near_codes_come_best_first() {
+        let codes = ["DV-011", "DV-012", "DV-110"];
+        assert_eq!(nearest("DV-O11", codes.into_iter()), ["DV-011", "DV-012"]);
+        assert_eq!(nearest("DV-101", codes.into_iter()), ["DV-011", "DV-110", "DV-012"]);
+        assert!(nearest("ZZ", codes.into_iter()).is_empty());
+        assert_eq!(edits("abcd", "acbd"), 1);
+    }
+}

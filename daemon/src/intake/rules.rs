@@ -1,0 +1,128 @@
+//! What placing goes by: the plan in force, the roster, and every subject's course.
+//!
+//! Invariant: all of it comes from the records as they stood at one trail number, and from what the exports in hand say
+//! about day 0.
+
+use std::collections::{BTreeMap, HashMap};
+
+use chrono::NaiveDate;
+use revisant_schema::plan::{Measure, Plan, VisitIx, parse};
+use revisant_schema::records::view::PlanVersion;
+use revisant_schema::records::{ActNumber, Records, RecordsError, Result};
+use revisant_schema::roster::Roster;
+use revisant_schema::session::{Course, SessionFacts, UNSCHEDULED};
+
+/// The plan, its version, and the roster.
+#[derive(Debug, Clone)]
+pub struct Rules {
+    /// The plan in force.
+    pub plan: Plan,
+    /// Its version.
+    pub version: i64,
+    /// The roster.
+    pub roster: Roster,
+    /// The newest act that bears on placing.
+    pub head: ActNumber,
+}
+
+impl Rules {
+    /// The rules in force; `None` before the first plan.
+    pub fn load(records: &Records) -> Result<Option<Self>> {
+        let head = records.placing_head()?;
+        let view = records.view()?;
+        let Some(PlanVersion { version, files, .. }) = view.plan()? else { return Ok(None) };
+        let (plan, _) = parse(&files).map_err(|faults| {
+            RecordsError::Damaged(format!("plan version {version} was sound when filed and is not now: {faults}"))
+        })?;
+        Ok(Some(Self { plan, version, roster: view.roster()?, head }))
+    }
+}
+
+/// A session's label, small: a visit, none, or unscheduled.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, PartialOrd, Ord)]
+enum Label {
+    None,
+    Unscheduled,
+    Visit(VisitIx),
+}
+
+/// The sessions that the exports in hand would add, by subject: which measures they hold, as bits.
+#[derive(Debug, Default)]
+pub struct Gathered {
+    sessions: HashMap<String, BTreeMap<(NaiveDate, Label), u128>>,
+}
+
+impl Gathered {
+    /// Notes that a row has a value of a measure.
+    pub fn see(&mut self, plan: &Plan, subject: &str, day: NaiveDate, label: Option<&str>, measure: usize) {
+        let label = match label {
+            None => Label::None,
+            Some(UNSCHEDULED) => Label::Unscheduled,
+            Some(code) => plan.visit(code).map_or(Label::Unscheduled, |(visit, _)| Label::Visit(visit)),
+        };
+        if !self.sessions.contains_key(subject) {
+            self.sessions.insert(subject.to_owned(), BTreeMap::new());
+        }
+        if let Some(sessions) = self.sessions.get_mut(subject) {
+            *sessions.entry((day, label)).or_default() |= 1 << (measure.min(127));
+        }
+    }
+
+    fn facts(&self, plan: &Plan, subject: &str) -> Vec<SessionFacts> {
+        let sessions = self.sessions.get(subject).into_iter().flatten();
+        sessions
+            .map(|((day, label), measures)| SessionFacts {
+                session: i64::MAX,
+                subject: subject.to_owned(),
+                day: *day,
+                label: match label {
+                    Label::None => None,
+                    Label::Unscheduled => Some(UNSCHEDULED.to_owned()),
+                    Label::Visit(visit) => Some(plan.visits[*visit].code.clone()),
+                },
+                measures: held_measures(plan, *measures),
+            })
+            .collect()
+    }
+}
+
+fn held_measures(plan: &Plan, bits: u128) -> Vec<String> {
+    let held = |(at, _): &(usize, &Measure)| bits >> (*at).min(127) & 1 == 1;
+    plan.measures.iter().enumerate().filter(held).map(|(_, measure)| measure.code.clone()).collect()
+}
+
+/// Every subject's course, from the records and the exports in hand, each worked out when first asked for.
+pub struct CourseBook<'p> {
+    plan: &'p Plan,
+    roster: &'p Roster,
+    filed: HashMap<String, Vec<SessionFacts>>,
+    gathered: Gathered,
+    known: HashMap<String, Course>,
+}
+
+impl<'p> CourseBook<'p> {
+    /// Opens the book.
+    pub fn new(records: &Records, rules: &'p Rules, gathered: Gathered) -> Result<Self> {
+        let mut filed: HashMap<String, Vec<SessionFacts>> = HashMap::new();
+        for session in session_facts(records)? {
+            filed.entry(session.subject.clone()).or_default().push(session);
+        }
+        Ok(Self { plan: &rules.plan, roster: &rules.roster, filed, gathered, known: HashMap::new() })
+    }
+
+    /// A subject's course.
+    pub fn course(&mut self, subject: &str) -> &Course {
+        if !self.known.contains_key(subject) {
+            let mut facts = self.filed.remove(subject).unwrap_or_default();
+            facts.extend(self.gathered.facts(self.plan, subject));
+            let enrolled = self.roster.subjects.get(subject).and_then(|entry| entry.enrolled);
+            self.known.insert(subject.to_owned(), Course::derive(self.plan, enrolled, facts));
+        }
+        &self.known[subject]
+    }
+}
+
+/// Every session of the records that holds a current reading, with the measures it holds.
+pub fn session_facts(records: &Records) -> Result<Vec<SessionFacts>> {
+    records.view()?.session_facts()
+}
