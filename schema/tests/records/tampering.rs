@@ -375,6 +375,25 @@ fn a_raw_copy_exchanged_with_its_hash_is_found() {
 }
 
 #[test]
+fn a_raw_file_of_another_compression_stays() {
+    let study = populated();
+    let file = large(&study);
+    let bytes = zstd::decode_all(fs::read(&file).unwrap().as_slice()).unwrap();
+    let other = zstd::bulk::compress(&bytes, 9).unwrap();
+    fs::write(&file, &other).unwrap();
+    let hash = revisant_schema::records::codec::sha256(&other);
+    study.without_triggers().execute("UPDATE raw SET stored_sha256 = ?1 WHERE stored IS NULL", [hash]).unwrap();
+    assert_eq!(faults(&study), []);
+    study.records().keep_large(&mut bytes.as_slice()).unwrap();
+    assert_eq!(faults(&study), []);
+    assert!(fs::read(&file).unwrap() == other);
+    // One that is lost is written anew.
+    fs::remove_file(&file).unwrap();
+    study.records().keep_large(&mut bytes.as_slice()).unwrap();
+    assert!(file.exists());
+}
+
+#[test]
 fn a_loose_file_is_a_note() {
     let study = populated();
     let file = study.file().with_file_name("raw").join(".new-abc");
