@@ -118,7 +118,9 @@ impl Canon {
 
     fn put(&mut self, kind: u8, bytes: &[u8]) {
         self.scratch.push(kind);
-        push_decimal(&mut self.scratch, bytes.len() as i64);
+        let mut digits = [0u8; 20];
+        let from = decimal(&mut digits, bytes.len() as i64);
+        self.scratch.extend_from_slice(&digits[from..]);
         self.scratch.push(b':');
         self.scratch.extend_from_slice(bytes);
     }
@@ -130,9 +132,9 @@ impl Canon {
 
     /// An integer.
     pub fn integer(&mut self, value: i64) {
-        let mut digits = Vec::with_capacity(20);
-        push_decimal(&mut digits, value);
-        self.put(b'i', &digits);
+        let mut digits = [0u8; 20];
+        let from = decimal(&mut digits, value);
+        self.put(b'i', &digits[from..]);
     }
 
     /// A real.
@@ -197,8 +199,8 @@ impl Canon {
     }
 }
 
-fn push_decimal(out: &mut Vec<u8>, value: i64) {
-    let mut digits = [0u8; 20];
+/// Writes a number's digits at the end of `digits`, which the longest fits; gives where they begin.
+fn decimal(digits: &mut [u8; 20], value: i64) -> usize {
     let mut at = digits.len();
     let mut rest = value.unsigned_abs();
     loop {
@@ -210,9 +212,10 @@ fn push_decimal(out: &mut Vec<u8>, value: i64) {
         }
     }
     if value < 0 {
-        out.push(b'-');
+        at -= 1;
+        digits[at] = b'-';
     }
-    out.extend_from_slice(&digits[at..]);
+    at
 }
 
 /// SHA-256 of bytes.
@@ -228,6 +231,15 @@ pub fn hex(bytes: &[u8]) -> String {
 #[cfg(test)]
 mod tests {
     use super::*;
+
+    #[test]
+    fn the_longest_numbers_fit() {
+        for value in [i64::MIN, i64::MAX, 0, -1, 10, -10] {
+            let mut digits = [0u8; 20];
+            let from = decimal(&mut digits, value);
+            assert_eq!(digits[from..], *value.to_string().as_bytes());
+        }
+    }
 
     #[test]
     fn the_form_is_the_documented_one() {
