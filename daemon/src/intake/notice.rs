@@ -61,9 +61,9 @@ pub fn walk(world: &dyn World, study: &Path, plan: &Plan, known: &HashMap<String
         (one.instrument, one.stat.modified, &one.export).cmp(&(other.instrument, other.stat.modified, &other.export))
     });
     let lost: Vec<&str> = walk.lost_folders.keys().map(|at| plan.instruments[*at].code.as_str()).collect();
-    let missing = known.iter().filter(|(path, seen_before)| {
-        !seen.contains_key(*path) && !lost.contains(&seen_before.instrument.as_str())
-    });
+    let missing = known
+        .iter()
+        .filter(|(path, seen_before)| !seen.contains_key(*path) && !lost.contains(&seen_before.instrument.as_str()));
     walk.gone = missing.map(|(path, _)| path.clone()).collect();
     walk
 }

@@ -19,6 +19,8 @@ pub struct Rules {
     pub plan: Plan,
     /// Its version.
     pub version: i64,
+    /// Of its files, in hexadecimal digits.
+    pub hash: String,
     /// The roster.
     pub roster: Roster,
     /// The newest act that bears on placing.
@@ -34,7 +36,7 @@ impl Rules {
         let (plan, _) = parse(&files).map_err(|faults| {
             RecordsError::Damaged(format!("plan version {version} was sound when filed and is not now: {faults}"))
         })?;
-        Ok(Some(Self { plan, version, roster: view.roster()?, head }))
+        Ok(Some(Self { plan, version, hash: files.sha256(), roster: view.roster()?, head }))
     }
 }
 

@@ -197,7 +197,7 @@ fn analysis(check: &mut Check<'_>, tab: &Tab<'_>, known: &Known<'_>) -> Analysis
     let (within, average) = factors(check, tab, measure);
     let between = between(check, tab, known);
     let mixed = (method == Some(Method::MixedModel)).then(|| mixed(check, tab, known, &between));
-    let visits = visits(check, tab, known, mixed.as_ref().and_then(|mixed| mixed.baseline));
+    let visits = visits(check, tab, known, index, mixed.as_ref().and_then(|mixed| mixed.baseline));
     if let Some(method) = method {
         shape(check, tab, method, &within, &visits);
     }
@@ -301,16 +301,33 @@ fn between(check: &mut Check<'_>, tab: &Tab<'_>, known: &Known<'_>) -> Vec<Strin
     factors
 }
 
-/// The visits of the response, in the order of the plan; the baseline is none of them.
-fn visits(check: &mut Check<'_>, tab: &Tab<'_>, known: &Known<'_>, baseline: Option<VisitIx>) -> Vec<VisitIx> {
+/// The visits of the response, in the order of the plan; the baseline is none of them. Without a list, those at which
+/// the measure is due.
+fn visits(
+    check: &mut Check<'_>,
+    tab: &Tab<'_>,
+    known: &Known<'_>,
+    measure: Option<usize>,
+    baseline: Option<VisitIx>,
+) -> Vec<VisitIx> {
     let codes = known.visits();
+    let due = |visit: &VisitIx| measure.is_none_or(|measure| known.visits[*visit].measures.contains(&measure));
     let path = tab.path_of("visits");
     check.once(tab, "visits");
     let mut visits: Vec<VisitIx> = if tab.has("visits") {
         let texts = tab.texts("visits");
-        texts.iter().filter_map(|(code, spot)| check.refer(spot, &path, code, "visit", &codes)).collect()
+        let mut listed = vec![];
+        for (code, spot) in texts {
+            let Some(visit) = check.refer(spot, &path, code, "visit", &codes) else { continue };
+            if !due(&visit) {
+                let wrong = format!("The measure is not due at \"{code}\".");
+                check.warn(spot, &path, wrong, "visits whose \"measures\" hold it");
+            }
+            listed.push(visit);
+        }
+        listed
     } else {
-        (0..codes.len()).collect()
+        (0..codes.len()).filter(due).collect()
     };
     visits.sort_unstable();
     visits.dedup();

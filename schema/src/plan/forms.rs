@@ -27,6 +27,8 @@ pub(crate) enum Form {
     Zone,
     /// A regular expression.
     Regex,
+    /// A regular expression that must match a text from end to end.
+    Whole,
     /// A regular expression with exactly one group.
     OneGroup,
     /// A glob.
@@ -70,7 +72,7 @@ impl Form {
             Self::Any | Self::Filled => "a text in quotes",
             Self::Code => "a code in quotes, such as \"week-4\"",
             Self::Zone => "a zone in quotes, such as \"Europe/London\"",
-            Self::Regex => "a regular expression in single quotes",
+            Self::Regex | Self::Whole => "a regular expression in single quotes",
             Self::OneGroup => "a regular expression with one group, in single quotes",
             Self::Glob => "a glob in quotes, such as \"*.csv\"",
             Self::Duration => "a duration in quotes, such as \"2s\", \"7d\" or \"1h30m\"",
@@ -94,6 +96,7 @@ impl Form {
             Self::Code => code(text),
             Self::Zone => zone(text).map(drop),
             Self::Regex => regex(text).map(drop),
+            Self::Whole => whole(text).map(drop),
             Self::OneGroup => one_group(text).map(drop),
             Self::Glob => glob(text).map(drop),
             Self::Duration => duration(text).map(drop),
@@ -104,7 +107,7 @@ impl Form {
             Self::Mark => mark(text).map(drop),
             Self::Delimiter => delimiter(text).map(drop),
             Self::Stamp => stamp(text).map(drop),
-            Self::Rows if text.starts_with('/') && text.len() > 1 => Ok(()),
+            Self::Rows if text.starts_with('/') => Ok(()),
             Self::Rows => misfit("A path to rows begins with a stroke.", self.called()),
         }
     }
@@ -117,7 +120,7 @@ impl Form {
             Self::Duration => Some(r"^([0-9]+w)?([0-9]+d)?([0-9]+h)?([0-9]+m)?([0-9]+s)?$"),
             Self::Size => Some(r"^[0-9]+ ?([kMGT]?B|[KMGT]iB)$"),
             Self::ClockShift => Some(r"^[+-]?[0-9]+:[0-5][0-9]:[0-5][0-9]$"),
-            Self::Rows => Some("^/."),
+            Self::Rows => Some("^/"),
             _ => None,
         }
     }
@@ -360,7 +363,7 @@ pub(crate) fn stamp(text: &str) -> Result<Stamp, Misfit> {
     match CompiledStamp::new(&stamp) {
         Ok(_) => Ok(stamp),
         Err(reason) => Err(Misfit {
-            wrong: format!("This pattern cannot be read by: {reason}."),
+            wrong: format!("No stamp can be read by this pattern: {reason}."),
             right: Form::Stamp.called().into(),
             nearest: nearest(text, ["iso", "serial"]).map(str::to_owned),
         }),
@@ -415,6 +418,7 @@ mod tests {
         assert_eq!(zone("Europe/Londn").unwrap_err().nearest.as_deref(), Some("Europe/London"));
         assert_eq!(zone("berlin").unwrap_err().nearest.as_deref(), Some("Europe/Berlin"));
         assert!(whole("A)(B").is_err());
+        assert!(whole("(?x) A # its rest would hide the closing bracket").is_err());
         assert!(whole(r"QM-\d{3}").unwrap().is_match("QM-001"));
         assert!(!whole("a|b").unwrap().is_match("ab"));
         assert!(one_group("^(a)").is_ok() && one_group("a").is_err() && one_group("(a)(b)").is_err());

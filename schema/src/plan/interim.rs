@@ -28,7 +28,11 @@ pub(crate) static INTERIM: Table = Table {
     doc: "The planned looks at one effect.",
     keys: &[
         needed("analysis", Kind::Text(Form::Filled), "The analysis that is looked at"),
-        needed("effect", Kind::Table(&EFFECT), "The planned effect, of one degree of freedom"),
+        needed(
+            "effect",
+            Kind::Table(&EFFECT),
+            "The planned effect: only one of one degree of freedom can be tested again and again by these boundaries",
+        ),
         needed(
             "alpha",
             Kind::Number(Bounds { low: 0.0, low_in: false, high: 0.5, high_in: true }),

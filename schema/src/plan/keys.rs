@@ -104,15 +104,13 @@ impl Bounds {
     }
 
     fn called(self) -> String {
-        let end = |x: f64, is_in: bool| if is_in { format!("{x} (in)") } else { format!("{x} (out)") };
+        let low = format!("{} {}", if self.low_in { "at least" } else { "above" }, self.low);
+        let high = format!("{} {}", if self.high_in { "at most" } else { "below" }, self.high);
         match (self.low.is_finite(), self.high.is_finite()) {
             (false, false) => "a number".into(),
-            (true, false) if self.low_in => format!("a number of at least {}", self.low),
-            (true, false) => format!("a number above {}", self.low),
-            (false, true) => format!("a number of at most {}", self.high),
-            (true, true) => {
-                format!("a number from {} to {}", end(self.low, self.low_in), end(self.high, self.high_in))
-            }
+            (true, false) => format!("a number, {low}"),
+            (false, true) => format!("a number, {high}"),
+            (true, true) => format!("a number, {low} and {high}"),
         }
     }
 }
@@ -137,6 +135,14 @@ impl WordNames {
 pub(crate) struct Words<T: 'static> {
     pub words: WordNames,
     pub values: &'static [T],
+}
+
+impl<T: PartialEq> Words<T> {
+    /// The word for a meaning.
+    pub fn name(&self, value: &T) -> &'static str {
+        let position = self.values.iter().position(|it| it == value);
+        position.and_then(|position| self.words.names.get(position)).copied().unwrap_or_default()
+    }
 }
 
 /// `words!(SUMMARY: Summary { "mean" = Summary::Mean, … })`: words and meanings side by side.
@@ -197,7 +203,13 @@ impl Kind {
 
 /// `"a", "b" or "c"`.
 pub(crate) fn one_of<'a>(names: impl IntoIterator<Item = &'a &'a str>) -> String {
-    let quoted: Vec<String> = names.into_iter().map(|name| format!("\"{name}\"")).collect();
+    let mut quoted: Vec<String> = vec![];
+    for name in names {
+        let name = format!("\"{name}\"");
+        if !quoted.contains(&name) {
+            quoted.push(name);
+        }
+    }
     match quoted.split_last() {
         Some((last, [])) => last.clone(),
         Some((last, rest)) => format!("{} or {last}", rest.join(", ")),
@@ -245,6 +257,8 @@ impl<'a> Tab<'a> {
     }
 
     pub fn node(&self, name: &str) -> Option<&'a Node> {
+        #[cfg(test)]
+        tests::ASKED.with_borrow_mut(|asked| asked.insert((self.def.name, name.to_owned())));
         self.entry(name).map(|entry| &entry.node)
     }
 
@@ -306,8 +320,11 @@ impl<'a> Tab<'a> {
 
     /// The items of a list; none when it is not there.
     pub fn list(&self, name: &str) -> &'a [Node] {
-        match self.node(name).map(|node| &node.value) {
-            Some(Value::List(items)) => items,
+        let Some(node) = self.node(name) else { return &[] };
+        match (&node.value, self.def.key(name).map(|key| key.kind)) {
+            (Value::List(items), _) => items,
+            // `[visit]` for `[[visit]]` is a fault, but no reason to take the visit for absent.
+            (Value::Table(_), Some(Kind::Tables(_))) => std::slice::from_ref(node),
             _ => &[],
         }
     }
@@ -445,7 +462,8 @@ impl<'a> Check<'a> {
         // Without any, the fault is that there are none; it has been said.
         if found.is_none() && !known.is_empty() {
             let near = nearest(code, known.iter().copied()).map(str::to_owned);
-            self.error_near(spot, key, format!("\"{}\" is no {what} of the plan.", clip(code)), one_of(known), near);
+            let of = if what.contains(' ') { "" } else { " of the plan" };
+            self.error_near(spot, key, format!("\"{}\" is no {what}{of}.", clip(code)), one_of(known), near);
         }
         found
     }
@@ -494,7 +512,13 @@ impl<'a> Check<'a> {
                 self.error(&entry.spot, &join(&tab.path, &entry.key), wrong, "one of the two");
             }
         }
-        self.value(&key.kind, &entry.node, &join(&tab.path, key.name));
+        let path = join(&tab.path, key.name);
+        if let (Kind::Tables(_), Value::List(items), true) = (&key.kind, &entry.node.value, key.needed)
+            && items.is_empty()
+        {
+            self.error(&entry.node.spot, &path, "The list is empty; at least one is needed.", key.kind.called());
+        }
+        self.value(&key.kind, &entry.node, &path);
     }
 
     fn unknown(&mut self, tab: &Tab<'_>, entry: &Entry) {
@@ -507,7 +531,7 @@ impl<'a> Check<'a> {
             (Some(near), _) => format!("{near} = …"),
             (None, _) => format!("one of {}", names.join(", ")),
         };
-        let wrong = format!("{} has no key \"{}\".", tab.def.name, clip(&entry.key));
+        let wrong = format!("{} has no key \"{}\".", upper_first(tab.def.name), clip(&entry.key));
         self.error_near(&entry.spot, &path, wrong, right, near.map(str::to_owned));
         // What is misspelt may be wrong besides.
         if let Some(key) = near.and_then(|name| tab.def.key(name)).filter(|key| tab.entries.get(key.name).is_none()) {
@@ -517,7 +541,8 @@ impl<'a> Check<'a> {
 
     fn missing(&mut self, tab: &Tab<'_>) {
         for key in tab.def.keys.iter().filter(|key| key.needed && !tab.has(key.name)) {
-            let wrong = format!("{} lacks the key \"{}\": {}.", tab.def.name, key.name, lower_first(key.doc));
+            let name = upper_first(tab.def.name);
+            let wrong = format!("{name} lacks the key \"{}\": {}.", key.name, lower_first(key.doc));
             self.error(&tab.spot, &tab.path_of(key.name), wrong, format!("{} = {}", key.name, key.kind.called()));
         }
         if tab.def.one_of.is_empty() {
@@ -527,11 +552,11 @@ impl<'a> Check<'a> {
         match there.as_slice() {
             [_] => {}
             [] => {
-                let wrong = format!("{} says nothing: one of its ways is needed.", tab.def.name);
+                let wrong = format!("{} has none of the keys of which it needs one.", upper_first(tab.def.name));
                 self.error(&tab.spot, &tab.path, wrong, Kind::Table(tab.def).called());
             }
             [_, second, ..] => {
-                let wrong = format!("{} says it in more than one way.", tab.def.name);
+                let wrong = format!("{} has keys that exclude each other.", upper_first(tab.def.name));
                 let right = format!("one of {} alone", there.iter().map(|it| **it).collect::<Vec<_>>().join(", "));
                 self.error(&tab.spot_of(second), &tab.path_of(second), wrong, right);
             }
@@ -541,7 +566,11 @@ impl<'a> Check<'a> {
     fn value(&mut self, kind: &Kind, node: &Node, path: &str) {
         if !kind.takes(&node.value) {
             let wrong = format!("Here stands {}.", node.value.called());
-            return self.error(&node.spot, path, wrong, kind.called());
+            self.error(&node.spot, path, wrong, kind.called());
+            if let Kind::Tables(table) = kind {
+                self.table(table, node, path);
+            }
+            return;
         }
         match (kind, &node.value) {
             (Kind::Text(form), Value::Text(text)) => {
@@ -553,8 +582,7 @@ impl<'a> Check<'a> {
             (Kind::Whole(low, high), Value::Whole(whole)) if !(low..=high).contains(&whole) => {
                 self.error(&node.spot, path, format!("{whole} is out of range."), kind.called());
             }
-            (Kind::Number(bounds), value) => {
-                let _ = value;
+            (Kind::Number(bounds), _) => {
                 if let Some(number) = node.number().filter(|number| !bounds.hold(*number)) {
                     self.error(&node.spot, path, format!("{number} is out of range."), kind.called());
                 }
@@ -563,7 +591,11 @@ impl<'a> Check<'a> {
                 if items.len() < *least {
                     self.error(&node.spot, path, "The list is too short.", kind.called());
                 }
-                items.iter().for_each(|it| self.value(item, it, path));
+                for (index, it) in items.iter().enumerate() {
+                    let is_table = matches!(it.value, Value::Table(_));
+                    let path = if is_table { item_path(path, index, it) } else { path.to_owned() };
+                    self.value(item, it, &path);
+                }
             }
             (Kind::Pair(item), Value::List(items)) => {
                 if items.len() != 2 {
@@ -614,7 +646,46 @@ impl<'a> Check<'a> {
     }
 }
 
+fn upper_first(text: &str) -> String {
+    let mut chars = text.chars();
+    chars.next().map_or_else(String::new, |first| first.to_uppercase().chain(chars).collect())
+}
+
 fn lower_first(text: &str) -> String {
     let mut chars = text.chars();
     chars.next().map_or_else(String::new, |first| first.to_lowercase().chain(chars).collect())
+}
+
+#[cfg(test)]
+mod tests {
+    use std::cell::RefCell;
+    use std::collections::BTreeSet;
+
+    use super::super::{PlanFiles, ROOT, each_table, parse, reader_files};
+
+    thread_local! {
+        /// The keys whose values have been asked for: the table's name, and the key's.
+        pub(super) static ASKED: RefCell<BTreeSet<(&'static str, String)>> = const { RefCell::new(BTreeSet::new()) };
+    }
+
+    /// A key that is defined, and so is in the JSON Schema, but that no reader asks for, would be taken and do nothing.
+    #[test]
+    fn every_key_that_is_defined_is_read() {
+        let folder = std::path::Path::new(env!("CARGO_MANIFEST_DIR")).join("tests/plans/sound");
+        for name in
+            ["every-key.toml", "every-place.toml", "one-group-with-constant-boundary.toml", "equal-correlation.toml"]
+        {
+            let main = std::fs::read_to_string(folder.join(name)).unwrap();
+            let text = |path: String| (path.clone(), std::fs::read_to_string(folder.join(path)).unwrap());
+            let readers = reader_files(&main).into_iter().map(text).collect();
+            parse(&PlanFiles { main, readers }).unwrap();
+        }
+        let asked = ASKED.take();
+        let mut unread = vec![];
+        each_table(&ROOT, &mut |table| {
+            let keys = table.keys.iter().filter(|key| !asked.contains(&(table.name, key.name.to_owned())));
+            unread.extend(keys.map(|key| format!("{}.{}", table.name, key.name)));
+        });
+        assert!(unread.is_empty(), "nobody reads {unread:?}");
+    }
 }

@@ -6,6 +6,14 @@
 //! The way of a plan: [`load`] reads the files, `written` makes a tree in which everything knows where it stands,
 //! `keys` holds the tree against the definitions of the tables, and one module a table turns it into the types of
 //! [`model`], checking what one key says against another.
+//!
+//! Older plans keep working. Spellings of earlier grammars are taken with a warning: in `[[analysis]]` the key
+//! `adjust` for `multiplicity`, and the method `rm-anova` for `repeated-measures`. Where the grammar leaves a default
+//! open, it is: `header = { row = 1 }` (with `columns` given: no header), `multiplicity = "holm"`, `sides = 2`,
+//! `dropout = 0`, and an analysis without `visits` uses those at which its measure is due.
+
+// In tests a panic is how a failure is said.
+#![cfg_attr(test, allow(clippy::unwrap_used, clippy::expect_used, clippy::panic))]
 
 mod analysis;
 mod assume;
@@ -14,10 +22,12 @@ mod forms;
 mod instrument;
 mod interim;
 mod keys;
+pub mod meaning;
 mod measure;
 pub mod model;
 mod place;
 mod reader;
+mod schema;
 pub mod stamp;
 mod study;
 pub mod units;
@@ -33,6 +43,7 @@ use sha2::{Digest, Sha256};
 
 pub use diagnostics::{Fault, Faults, Severity};
 pub use model::*;
+pub use schema::{reader_schema, schema};
 
 use keys::{Check, Kind, Tab, Table, key, needed};
 use written::{FileText, Node, SyntaxFault};
@@ -105,14 +116,15 @@ pub enum LoadError {
 pub fn load(dir: &Path, read: &dyn Fn(&Path) -> io::Result<String>) -> Result<Loaded, LoadError> {
     let path = dir.join(MAIN);
     let main = read(&path).map_err(|source| LoadError::Unreadable { path, source })?;
-    let mut readers = vec![];
+    let (mut readers, mut absent) = (vec![], vec![]);
     for named in reader_files(&main) {
-        if let Ok(text) = read(&dir.join(&named)) {
-            readers.push((named, text));
+        match read(&dir.join(&named)) {
+            Ok(text) => readers.push((named, text)),
+            Err(error) => absent.push((named, error.to_string())),
         }
     }
     let files = PlanFiles { main, readers };
-    let (plan, warnings) = parse(&files).map_err(LoadError::Unsound)?;
+    let (plan, warnings) = judge(&files, &absent).map_err(LoadError::Unsound)?;
     Ok(Loaded { plan, files, warnings })
 }
 
@@ -131,6 +143,11 @@ pub fn reader_files(main: &str) -> Vec<String> {
 
 /// Checks a plan from its texts alone: the plan and what a person should know of it, or all its faults.
 pub fn parse(files: &PlanFiles) -> Result<(Plan, Vec<Fault>), Faults> {
+    judge(files, &[])
+}
+
+/// As [`parse`]; `absent` are the reader files that could not be read, and why.
+fn judge(files: &PlanFiles, absent: &[(String, String)]) -> Result<(Plan, Vec<Fault>), Faults> {
     let mut sources = vec![FileText { name: MAIN.to_owned(), text: files.main.clone() }];
     sources.extend(files.readers.iter().map(|(name, text)| FileText { name: name.clone(), text: text.clone() }));
     let mut check = Check::new(&sources);
@@ -141,13 +158,20 @@ pub fn parse(files: &PlanFiles) -> Result<(Plan, Vec<Fault>), Faults> {
         trees.push((source.name.clone(), tree));
     }
     let (_, root) = trees.remove(0);
-    let plan = whole(&mut check, &root, &trees);
+    let plan = whole(&mut check, &root, &trees, absent);
     finish(check.faults, plan)
 }
 
 /// Faults of TOML's own syntax.
 fn syntax(check: &mut Check<'_>, faults: &[SyntaxFault]) {
+    let mut last = None;
     for fault in faults {
+        // What follows on the same line follows from the first.
+        let line =
+            check.sources.get(fault.spot.file).map(|file| (fault.spot.file, file.place(fault.spot.span.start).0));
+        if line == std::mem::replace(&mut last, line) {
+            continue;
+        }
         let wrong = format!("This is not TOML: {}.", fault.message.trim_end_matches('.'));
         check.error(&fault.spot, "", wrong, "TOML 1.0 (toml.io)");
         check.torn = true;
@@ -161,7 +185,25 @@ fn finish(mut faults: Vec<Fault>, plan: Option<Plan>) -> Result<(Plan, Vec<Fault
         (a.file != MAIN, &a.file, a.span, a.severity).cmp(&(b.file != MAIN, &b.file, b.span, b.severity))
     });
     faults.dedup_by(|a, b| (&a.file, a.span, &a.wrong) == (&b.file, b.span, &b.wrong));
-    let faults = Faults(faults);
+    let mut faults = Faults(faults);
+    if plan.is_none() && !faults.any_error() {
+        // No part may be absent without a word; were one, the plan must still not be taken for faultless.
+        let (file, wrong) = (MAIN.to_owned(), "The plan is not whole.".to_owned());
+        let (key, right, text) = (String::new(), String::new(), String::new());
+        let severity = Severity::Error;
+        faults.0.push(Fault {
+            file,
+            line: 1,
+            column: 1,
+            span: (0, 0),
+            key,
+            wrong,
+            right,
+            nearest: None,
+            severity,
+            text,
+        });
+    }
     match plan {
         Some(plan) if !faults.any_error() => Ok((plan, faults.0)),
         _ => Err(faults),
@@ -211,11 +253,11 @@ fn each_table(table: &'static Table, visit: &mut dyn FnMut(&'static Table)) {
 }
 
 /// The whole plan; `None` where a part without a stand-in is at fault, which has been said.
-fn whole(check: &mut Check<'_>, root: &Node, readers: &[(String, Node)]) -> Option<Plan> {
+fn whole(check: &mut Check<'_>, root: &Node, readers: &[(String, Node)], absent: &[(String, String)]) -> Option<Plan> {
     check.table(&ROOT, root, "");
     let tab = Tab::new(&ROOT, root, String::new())?;
     let instruments = tab.tables("instrument", &instrument::INSTRUMENT);
-    reader_tables(check, &instruments, readers);
+    reader_tables(check, &instruments, readers, absent);
     if check.torn {
         // Half a file would only give faults that are none.
         return None;
@@ -253,25 +295,35 @@ fn whole(check: &mut Check<'_>, root: &Node, readers: &[(String, Node)]) -> Opti
     })
 }
 
-/// How many visits `[assume]` may speak of: all of the plan, or those of the analysis that is looked at.
+/// How many visits `[assume]` may speak of: all of the plan, or those of the analysis that is looked at; without
+/// looks, those of any analysis.
 fn assumed_lengths(interim: Option<&Interim>, analyses: &[Analysis], visits: usize) -> Vec<usize> {
+    let looked_at = interim.and_then(|interim| analyses.get(interim.analysis));
     let mut lengths = vec![visits];
-    if let Some(analysis) = interim.and_then(|interim| analyses.get(interim.analysis)) {
+    for analysis in looked_at.map_or(analyses, std::slice::from_ref) {
         let baseline = analysis.mixed.as_ref().is_some_and(|mixed| mixed.baseline.is_some());
         lengths.push(analysis.visits.len() + usize::from(baseline));
-        lengths.dedup();
     }
+    lengths.sort_unstable();
+    lengths.dedup();
     lengths
 }
 
 /// Holds each reader file against the reader's definition; one that is not there is a fault where it is named.
-fn reader_tables(check: &mut Check<'_>, instruments: &[Tab<'_>], readers: &[(String, Node)]) {
+fn reader_tables(
+    check: &mut Check<'_>,
+    instruments: &[Tab<'_>],
+    readers: &[(String, Node)],
+    absent: &[(String, String)],
+) {
     for tab in instruments {
         let Some(path) = tab.text("reader") else { continue };
         match readers.iter().find(|(name, _)| name == path) {
             Some((_, node)) => check.table(&reader::READER, node, &keys::join(&tab.path, "reader")),
             None => {
-                let wrong = format!("The reader file \"{}\" cannot be read.", forms::clip(path));
+                let why =
+                    absent.iter().find(|(name, _)| name == path).map_or(String::new(), |(_, why)| format!(": {why}"));
+                let wrong = format!("The reader file \"{}\" cannot be read{why}.", forms::clip(path));
                 check.at(tab, "reader", wrong, "the path of a file, relative to the plan, or the table itself");
             }
         }

@@ -1,6 +1,6 @@
 //! The plan as used: checked, with every code resolved.
 //!
-//! Invariants: a value of these types is only made by [`super::check`] from a plan without faults, so whoever holds
+//! Invariants: a value of these types is only made by [`super::parse`] from a plan without faults, so whoever holds
 //! one may rely on it: codes are unique, every index points into the list it names, no two visits' windows overlap.
 
 use std::collections::BTreeMap;

@@ -96,7 +96,10 @@ pub(crate) fn place(tab: &Tab<'_>, named: &mut Vec<Named>) -> Place {
 }
 
 fn source(tab: &Tab<'_>, named: &mut Vec<Named>) -> Source {
-    let way = tab.def.one_of.iter().find(|way| tab.has(way)).copied().unwrap_or_default();
+    // A place that says nothing has been found at fault.
+    let Some(way) = tab.def.one_of.iter().find(|way| tab.has(way)).copied() else {
+        return Source::Fixed(String::new());
+    };
     let text = || tab.text(way).unwrap_or_default().to_owned();
     let mut name = |column: &str, spot: &Spot| {
         named.push(Named { column: column.to_owned(), spot: spot.clone(), path: tab.path_of(way) });

@@ -149,9 +149,6 @@ pub(crate) fn reader(check: &mut Check<'_>, tab: &Tab<'_>, known: &Known<'_>) ->
     replicate_targets(check, tab);
     let operator = optional("operator", &mut named);
     let values = value::values(check, &tab.tables("value", &VALUE), known, &mut named);
-    if tab.has("value") && tab.list("value").is_empty() {
-        check.at(tab, "value", "No value is read.", "at least one [[instrument.reader.value]]");
-    }
     absent_columns(check, &named, &columns, &header, name);
     let (decimal_mark, group_mark) = marks(check, tab);
     Reader {
@@ -204,7 +201,7 @@ fn misplaced(check: &mut Check<'_>, tab: &Tab<'_>, name: FormatName) {
         }
     }
     if matches!(name, Json | Xml) && !tab.has("rows") && !check.torn {
-        let wrong = format!("[instrument.reader] lacks the key \"rows\": where the rows of a {written} export are.");
+        let wrong = format!("[instrument.reader] lacks the key \"rows\", which the format \"{written}\" needs.");
         check.error(&tab.spot, &tab.path_of("rows"), wrong, "rows = a path in quotes, such as \"/results/*\"");
     }
     if !TABLES.contains(&name) {
@@ -253,6 +250,7 @@ fn columns(check: &mut Check<'_>, tab: &Tab<'_>) -> Vec<FixedColumn> {
 }
 
 fn header(check: &mut Check<'_>, tab: &Tab<'_>, name: Option<FormatName>, given: bool) -> Header {
+    let unit_row = tab.truth("units_row") == Some(true);
     let Some(tab) = tab.table("header", &HEADER) else {
         let is_table = name.is_none_or(|name| TABLES.contains(&name));
         return if is_table && !given { Header::Row { row: 1, lines: 1 } } else { Header::None };
@@ -263,6 +261,9 @@ fn header(check: &mut Check<'_>, tab: &Tab<'_>, name: Option<FormatName>, given:
     }
     if tab.truth("none") == Some(false) {
         check.at(&tab, "none", "This does not say where the header is.", "none = true, or row, or starts_with");
+    }
+    if tab.has("none") && unit_row {
+        check.at(&tab, "none", "A row of units stands under the header, but there is none.", "units_row = false");
     }
     if let Some(start) = tab.text("starts_with") {
         return Header::StartsWith(start.to_owned());
@@ -283,6 +284,11 @@ fn marks(check: &mut Check<'_>, tab: &Tab<'_>) -> (char, Option<char>) {
     if group == Some(decimal) {
         let wrong = format!("\"{decimal}\" is the decimal mark already.");
         check.at(tab, "group_mark", wrong, "another mark for thousands than for decimals");
+    }
+    if tab.formed("delimiter", forms::delimiter).flatten().map(char::from) == Some(decimal) {
+        let (spot, path) = (tab.spot_of("delimiter"), tab.path_of("delimiter"));
+        let wrong = format!("\"{decimal}\" is the decimal mark too: numbers with decimals must then stand in quotes.");
+        check.warn(&spot, &path, wrong, "another delimiter or decimal mark, unless the export quotes its numbers");
     }
     (decimal, group)
 }
@@ -329,6 +335,9 @@ fn subject_targets(check: &mut Check<'_>, tab: &Tab<'_>) {
 
 fn visit_targets(check: &mut Check<'_>, tab: &Tab<'_>, known: &Known<'_>) {
     let Some(tab) = tab.table("visit", &PLACE) else { return };
+    if known.visits.is_empty() {
+        return;
+    }
     let mut codes: Vec<&str> = known.visits.iter().map(|visit| visit.code.as_str()).collect();
     codes.push("unscheduled");
     place::targets(check, &tab, "visit", &codes);
@@ -358,7 +367,7 @@ fn absent_columns(
     let names: Vec<&str> = columns.iter().map(|column| column.name.as_str()).collect();
     for it in named.iter().filter(|it| !it.column.is_empty()) {
         if format == Some(FixedWidth) && !names.is_empty() {
-            check.refer(&it.spot, &it.path, &it.column, "column", &names);
+            check.refer(&it.spot, &it.path, &it.column, "column given in \"columns\"", &names);
         } else if by_number && it.column.parse::<u32>().map_or(true, |number| number == 0) {
             let wrong = format!("Without a header there is no column \"{}\".", forms::clip(&it.column));
             check.error(&it.spot, &it.path, wrong, "a column's number in quotes, from \"1\"");

@@ -135,6 +135,9 @@ fn compile(pattern: &str) -> Result<Vec<Step>, String> {
     if has(&Step::Second) && !has(&Step::Minute) {
         return Err("it has seconds, but no minutes".into());
     }
+    if (has(&Step::Fraction) || has(&Step::PointFraction)) && !has(&Step::Second) && !has(&Step::UnixSeconds) {
+        return Err("it has a fraction, but no seconds".into());
+    }
     let timed = has(&Step::Hour) || has(&Step::Hour12) || has(&Step::UnixSeconds);
     if has(&Step::Offset) && !timed {
         return Err("it has an offset, but no time".into());
@@ -556,6 +559,7 @@ mod tests {
             "%d/%m/%Y %H:%M %Z",
             "%+",
             "%d/%m/%Y %z",
+            "%d/%m/%Y %H:%M%.f",
             "DD/MM/YYYY",
         ] {
             assert!(CompiledStamp::new(&Stamp::Pattern(bad.into())).is_err(), "{bad}");
@@ -625,6 +629,38 @@ mod tests {
         }
         assert_eq!(shown(serial(45292.0, true)), "2028-01-02");
         assert_eq!(shown(serial(0.0, true)), "1904-01-01");
+    }
+
+    proptest::proptest! {
+        /// What the pattern's own notation writes is read back.
+        #[test]
+        fn written_and_read_back(seconds in 0_i64..4_000_000_000, which in 0_usize..8) {
+            let local = DateTime::from_timestamp(seconds, 0).unwrap().naive_utc();
+            let (pattern, unit) = [
+                ("%d/%m/%Y %H:%M", 60),
+                ("%m/%d/%Y %I:%M:%S %p", 1),
+                ("%Y%m%d%H%M%S", 1),
+                ("%a, %e %B %Y %k:%M", 60),
+                ("%-d.%-m.%Y %-H:%M", 60),
+                ("%A %d-%b-%Y %l:%M %P", 60),
+                ("%F %T%.3f", 1),
+                ("%Y/%j %R", 60),
+            ][which];
+            let read = read(&Stamp::Pattern(pattern.into()), &local.format(pattern).to_string());
+            let expected = local - TimeDelta::seconds(seconds % unit);
+            proptest::prop_assert_eq!(read, Some(Read { written: Written::Local(expected), finer: unit == 1 }));
+        }
+
+        #[test]
+        fn no_text_does_harm(text in ".{0,24}", digits in "[0-9TZ:.+ -]{0,30}") {
+            for text in [&text, &digits] {
+                for pattern in ["%s", "%d %b %Y %I:%M %p", "%Y-%m-%d %H:%M:%S.%f %z"] {
+                    let _ = read(&Stamp::Pattern(pattern.into()), text);
+                }
+                let _ = read(&Stamp::Iso, text);
+                let _ = read(&Stamp::Serial, text);
+            }
+        }
     }
 
     #[test]

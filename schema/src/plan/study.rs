@@ -49,7 +49,7 @@ pub(crate) static SUBJECT: Table = Table {
     name: "[subject]",
     doc: "How subjects are told apart, and where their days are counted from.",
     keys: &[
-        needed("pattern", Kind::Text(Form::Regex), "What a whole subject code must match after it has been tidied"),
+        needed("pattern", Kind::Text(Form::Whole), "What a whole subject code must match after it has been tidied"),
         key(
             "normalise",
             Kind::List(&Kind::Word(&TIDY.words), 0),
@@ -128,6 +128,9 @@ pub(crate) fn nothing() -> Regex {
 
 fn anchor(check: &mut Check<'_>, tab: &Tab<'_>, visits: &[Visit]) -> Anchor {
     let Some(code) = tab.text("anchor").filter(|code| *code != "enrolment") else { return Anchor::Enrolment };
+    if visits.is_empty() {
+        return Anchor::Enrolment;
+    }
     let mut known: Vec<&str> = visits.iter().map(|visit| visit.code.as_str()).collect();
     known.push("enrolment");
     let (spot, path) = (tab.spot_of("anchor"), tab.path_of("anchor"));

@@ -7,10 +7,12 @@
 //! Codes, prefixes and definitions follow "The Unified Code for Units of Measure" (Schadow & McDonald, version 2.1);
 //! each customary unit is written here in the terms in which that table defines it, so that it can be compared line by
 //! line. The factors that follow from them are tested against NIST Special Publication 811 (2008), Appendix B.
-//! One deviation: the mole is a dimension of its own here, as in the SI, and not the number 6.02e23, so that an
-//! amount of substance never turns into a count.
+//! Two deviations: the mole is a dimension of its own here, as in the SI, and not the number 6.02e23, so that an
+//! amount of substance never turns into a count; and constants of nature are those of the SI, exact since 2019, and of
+//! CODATA 2022.
 
-use std::collections::BTreeMap;
+use std::collections::{BTreeMap, HashMap};
+use std::sync::LazyLock;
 
 use super::model::Affine;
 
@@ -32,14 +34,39 @@ pub fn convert(from: &str, to: &str) -> Option<Affine> {
     match (source.scale(), target.scale()) {
         (None, None) => {
             let ratio = (source.dimension == target.dimension).then(|| source.factor.divide(target.factor))??;
-            Some(Affine { times: ratio.nearest(), plus: 0.0 })
+            held(Affine { times: ratio.nearest(), plus: 0.0 })
         }
         (from_zero, to_zero) if source.is_temperature() && target.is_temperature() => {
             let ratio = source.factor.divide(target.factor)?;
             let shift = ratio.times(from_zero.unwrap_or(Fraction::ZERO))?.minus(to_zero.unwrap_or(Fraction::ZERO))?;
-            Some(Affine { times: ratio.nearest(), plus: shift.nearest() })
+            held(Affine { times: ratio.nearest(), plus: shift.nearest() })
         }
         _ => None,
+    }
+}
+
+/// A factor too large or too small for a double is no conversion.
+fn held(affine: Affine) -> Option<Affine> {
+    (affine.times.is_normal() && affine.plus.is_finite()).then_some(affine)
+}
+
+/// Conversions that have been asked for once: for columns of units, where few pairs come again and again.
+#[derive(Debug, Clone, Default)]
+pub struct Conversions(HashMap<String, HashMap<String, Option<Affine>>>);
+
+impl Conversions {
+    /// As [`convert`].
+    pub fn convert(&mut self, from: &str, to: &str) -> Option<Affine> {
+        // A column full of different texts must not fill the memory.
+        const MOST: usize = 500;
+        if let Some(known) = self.0.get(to).and_then(|pairs| pairs.get(from)) {
+            return *known;
+        }
+        let found = convert(from, to);
+        if self.0.values().map(HashMap::len).sum::<usize>() < MOST {
+            self.0.entry(to.to_owned()).or_default().insert(from.to_owned(), found);
+        }
+        found
     }
 }
 
@@ -211,11 +238,15 @@ impl Fraction {
 
     /// The nearest double: the quotient is written out in decimals, further than a double reaches, and read back.
     fn nearest(self) -> f64 {
+        if self.den > u128::MAX / 10 {
+            let rough = self.num as f64 / self.den as f64 * 10_f64.powi(self.ten);
+            return if self.negative { -rough } else { rough } * std::f64::consts::PI.powi(self.pi);
+        }
         let mut digits = (self.num / self.den).to_string();
         let mut rest = self.num % self.den;
         let mut ten = self.ten;
         while rest != 0 && digits.trim_start_matches('0').len() < 40 {
-            let Some(lifted) = rest.checked_mul(10) else { break };
+            let lifted = rest * 10;
             digits.push_str(&(lifted / self.den).to_string());
             rest = lifted % self.den;
             ten -= 1;
@@ -396,11 +427,11 @@ fn exponent(rest: &mut &str) -> Option<i32> {
 
 /// An atom, or a prefix and a metric atom. `depth` bounds definitions by definitions.
 fn atom(name: &str, depth: usize) -> Option<Unit> {
-    if let Some(row) = ATOMS.iter().find(|row| row.code == name) {
+    if let Some(row) = BY_CODE.get(name) {
         return row.unit(depth);
     }
     PREFIXES.iter().find_map(|(prefix, ten)| {
-        let row = ATOMS.iter().find(|row| row.metric && name.strip_prefix(prefix) == Some(row.code))?;
+        let row = BY_CODE.get(name.strip_prefix(prefix)?).filter(|row| row.metric)?;
         let mut unit = row.unit(depth)?;
         let scale = Fraction { ten: *ten, ..Fraction::ONE };
         unit.factor = unit.factor.times(scale)?;
@@ -411,6 +442,8 @@ fn atom(name: &str, depth: usize) -> Option<Unit> {
         Some(unit)
     })
 }
+
+static BY_CODE: LazyLock<HashMap<&str, &Atom>> = LazyLock::new(|| ATOMS.iter().map(|row| (row.code, row)).collect());
 
 /// One row of the table of atoms.
 struct Atom {
@@ -556,7 +589,7 @@ const ATOMS: &[Atom] = &[
     of("mo", false, "1", "mo_j"),
     of("t", true, "1e3", "kg"),
     of("bar", true, "1e5", "Pa"),
-    of("u", true, "1.6605390666e-24", "g"),
+    of("u", true, "1.66053906892e-24", "g"),
     of("eV", true, "1.602176634e-19", "J"),
     of("AU", false, "149597.870691", "Mm"),
     of("pc", true, "3.085678e16", "m"),
@@ -623,7 +656,7 @@ const ATOMS: &[Atom] = &[
     of("[pt_br]", false, "1", "[gal_br]/8"),
     of("[foz_br]", false, "1", "[pt_br]/20"),
     of("[ft_us]", false, "1200", "m/3937"),
-    of("[acr_us]", false, "43560", "[ft_us]2"),
+    of("[acr_us]", false, "160", "[rd_us]2"),
     of("[acr_br]", false, "4840", "[yd_br]2"),
     of("[in_br]", false, "2.539998", "cm"),
     of("[ft_br]", false, "12", "[in_br]"),
@@ -669,11 +702,54 @@ const ATOMS: &[Atom] = &[
     of("Lmb", true, "1", "cd/cm2/[pi]"),
     of("ph", true, "1e-4", "lx"),
     of("Bi", true, "10", "A"),
-    of("Gb", true, "1", "Bi"),
+    of("Gb", true, "1", "Oe.cm"),
     of("Oe", true, "250", "/[pi].A/m"),
     of("Mx", true, "1e-8", "Wb"),
     of("tex", true, "1", "g/km"),
     of("[den]", false, "1", "g/9/km"),
+    // further customary units
+    of("[bf_i]", false, "144", "[in_i]3"),
+    of("[cr_i]", false, "128", "[ft_i]3"),
+    of("[yd_us]", false, "3", "[ft_us]"),
+    of("[in_us]", false, "1", "[ft_us]/12"),
+    of("[rd_us]", false, "16.5", "[ft_us]"),
+    of("[ch_us]", false, "4", "[rd_us]"),
+    of("[fth_us]", false, "6", "[ft_us]"),
+    of("[fur_us]", false, "40", "[rd_us]"),
+    of("[mi_us]", false, "8", "[fur_us]"),
+    of("[smi_us]", false, "1", "[mi_us]2"),
+    of("[sct]", false, "1", "[mi_us]2"),
+    of("[rd_br]", false, "16.5", "[ft_br]"),
+    of("[mi_br]", false, "5280", "[ft_br]"),
+    of("[bbl_us]", false, "42", "[gal_us]"),
+    of("[gil_us]", false, "1", "[pt_us]/4"),
+    of("[fdr_us]", false, "1", "[foz_us]/8"),
+    of("[min_us]", false, "1", "[fdr_us]/60"),
+    of("[pk_us]", false, "1", "[bu_us]/4"),
+    of("[dqt_us]", false, "1", "[pk_us]/8"),
+    of("[dpt_us]", false, "1", "[dqt_us]/2"),
+    of("[gal_wi]", false, "1", "[bu_us]/8"),
+    of("[pk_br]", false, "2", "[gal_br]"),
+    of("[bu_br]", false, "4", "[pk_br]"),
+    of("[qt_br]", false, "1", "[gal_br]/4"),
+    of("[gil_br]", false, "1", "[pt_br]/4"),
+    of("[fdr_br]", false, "1", "[foz_br]/8"),
+    of("[pwt_tr]", false, "24", "[gr]"),
+    of("[sc_ap]", false, "20", "[gr]"),
+    of("[dr_ap]", false, "3", "[sc_ap]"),
+    of("[oz_ap]", false, "8", "[dr_ap]"),
+    of("[lb_ap]", false, "12", "[oz_ap]"),
+    of("[lne]", false, "1", "[in_i]/12"),
+    of("[pnt]", false, "1", "[lne]/6"),
+    of("[pca]", false, "12", "[pnt]"),
+    of("[smoot]", false, "67", "[in_i]"),
+    of("[car_Au]", false, "1", "{1}/24"),
+    of("[PRU]", false, "1", "mm[Hg].s/ml"),
+    of("[wood'U]", false, "1", "mm[Hg].min/L"),
+    of("[Btu_39]", false, "1.05967", "kJ"),
+    of("[Btu_59]", false, "1.05480", "kJ"),
+    of("[Btu_60]", false, "1.05468", "kJ"),
+    of("[Btu_m]", false, "1.05587", "kJ"),
     // chemistry and the laboratory
     of("eq", true, "1", "mol"),
     of("osm", true, "1", "mol"),
@@ -717,11 +793,11 @@ const ATOMS: &[Atom] = &[
     own("[EU]", false),
     own("[HPF]", false),
     own("[LPF]", false),
-    own("[diop]", false),
+    of("[diop]", false, "1", "/m"),
     own("[p'diop]", false),
     own("%[slope]", false),
-    own("[mesh_i]", false),
-    own("[Ch]", false),
+    of("[mesh_i]", false, "1", "/[in_i]"),
+    of("[Ch]", false, "1", "mm/3"),
     own("[hnsf'U]", false),
     own("[hp_X]", false),
     own("[hp_C]", false),
@@ -826,6 +902,11 @@ mod tests {
             ("[acr_us]", "m2", 4046.873),
             ("N", "kgf", 0.101_971_6),
             ("[in_i'Hg]", "kPa", 3.386_389),
+            ("Oe", "A/m", 79.577_47),
+            ("Gb", "A", 0.795_774_7),
+            ("[oz_ap]", "g", 31.103_48),
+            ("[mi_us]", "km", 1.609_347),
+            ("[bu_us]", "L", 35.239_07),
         ] {
             let times = convert(from, to).unwrap().times;
             assert!((times / factor - 1.0).abs() < 5e-6, "{from} -> {to}: {times}");
@@ -978,6 +1059,34 @@ mod tests {
         for (from, to, _) in PUBLISHED {
             let (there, back) = (convert(from, to).unwrap().times, convert(to, from).unwrap().times);
             assert!((there * back - 1.0).abs() < 4.0 * f64::EPSILON, "{from} {to}");
+        }
+    }
+
+    #[test]
+    fn conversions_asked_for_again() {
+        let mut known = Conversions::default();
+        for _ in 0..2 {
+            assert_eq!(known.convert("km/h", "m/s"), convert("km/h", "m/s"));
+            assert_eq!(known.convert("mg/dL", "mmol/L"), None);
+        }
+        (0..2000).for_each(|number| assert_eq!(known.convert(&format!("{number}x"), "kg"), None));
+        assert!(known.0.values().map(HashMap::len).sum::<usize>() <= 500);
+    }
+
+    #[test]
+    fn factors_beyond_a_double() {
+        assert_eq!(convert("[e]20", "C20"), None);
+        assert_eq!(convert("Qm60", "qm60"), None);
+        assert!((convert("eV2", "J2").unwrap().times / 2.566_969_966_5e-38 - 1.0).abs() < 1e-9);
+    }
+
+    proptest::proptest! {
+        #[test]
+        fn no_text_does_harm(text in "[a-zA-Z0-9\\[\\]{}()./*^%'+-]{0,12}", other in "(kg|m/s|Cel|1)") {
+            if let Some(affine) = convert(&text, &other) {
+                proptest::prop_assert!(affine.times.is_normal() && affine.plus.is_finite());
+            }
+            proptest::prop_assert_eq!(convert(&text, &text).is_some(), is_ucum(&text));
         }
     }
 

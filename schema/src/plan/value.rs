@@ -6,7 +6,7 @@ use super::keys::{Check, Kind, Tab, Table, join, key, needed};
 use super::model::{Affine, ConditionFactor, LevelRule, Measure, MeasureRule, UnitRule, ValueRule};
 use super::place::{self, Named, PLACE, UNIT};
 use super::units;
-use super::written::Value;
+use super::written::{Spot, Value};
 
 pub(crate) static VALUE: Table = Table {
     name: "[[instrument.reader.value]]",
@@ -26,7 +26,7 @@ pub(crate) static VALUE: Table = Table {
         ),
         key(
             "condition",
-            Kind::Map(Form::Code, &Kind::Either(&[Kind::Text(Form::Filled), Kind::Table(&PLACE)])),
+            Kind::Map(Form::Filled, &Kind::Either(&[Kind::Text(Form::Filled), Kind::Table(&PLACE)])),
             "none",
             "The level of each of the measure's conditions, or where it is found",
         ),
@@ -121,8 +121,10 @@ fn unit(
     if tab.number("times") == Some(0.0) {
         check.at(&tab, "times", "Times 0 would make every value the same.", "a factor other than 0");
     }
+    // Without a factor of its own the unit must be one that converts.
+    let measures = if convert.is_none() { possible } else { &[] };
     let Some(code) = tab.text("code") else {
-        unit_targets(check, &tab);
+        unit_targets(check, &tab, measures, is_fixed);
         return UnitRule::Found { place: place::place(&tab, named), convert };
     };
     if tab.has("map") {
@@ -133,21 +135,23 @@ fn unit(
             "code alone, or a place with a map",
         );
     }
-    if convert.is_none() && units::is_ucum(code) && !possible.is_empty() {
-        let reaches =
-            |measure: &&Measure| !units::is_ucum(&measure.unit) || units::convert(code, &measure.unit).is_some();
-        if let Some(measure) =
-            possible.iter().find(|it| !reaches(it)).filter(|_| is_fixed || !possible.iter().any(reaches))
-        {
-            let wrong =
-                format!("\"{code}\" does not convert to \"{}\", the unit of \"{}\".", measure.unit, measure.code);
-            check.at(&tab, "code", wrong, "a unit of the same kind, or times = … (the factor)");
-        }
-    }
+    reaches(check, &tab.spot_of("code"), &tab.path_of("code"), code, measures, is_fixed);
     UnitRule::Fixed { code: code.to_owned(), convert }
 }
 
-fn unit_targets(check: &mut Check<'_>, tab: &Tab<'_>) {
+/// Says so when a unit converts to none of the measures' units; of a value that is always of one measure, to its unit.
+fn reaches(check: &mut Check<'_>, spot: &Spot, path: &str, code: &str, measures: &[&Measure], is_fixed: bool) {
+    // Of a code that is none, that has been said.
+    let converts = |it: &&Measure| !units::is_ucum(&it.unit) || units::convert(code, &it.unit).is_some();
+    let Some(measure) = measures.iter().find(|it| !converts(it)).filter(|_| units::is_ucum(code)) else { return };
+    if is_fixed || !measures.iter().any(converts) {
+        let wrong = format!("\"{code}\" does not convert to \"{}\", the unit of \"{}\".", measure.unit, measure.code);
+        check.error(spot, path, wrong, "a unit of the same kind, or times = … (the factor)");
+    }
+}
+
+/// The units that a map leads to, and a fixed text.
+fn unit_targets(check: &mut Check<'_>, tab: &Tab<'_>, measures: &[&Measure], is_fixed: bool) {
     let fixed = tab.text("fixed").map(|text| (text, tab.spot_of("fixed"), tab.path_of("fixed")));
     let mapped = |text: &str| tab.map("map").iter().any(|entry| entry.key == text);
     let targets = tab.map("map").iter().filter_map(|entry| {
@@ -157,6 +161,7 @@ fn unit_targets(check: &mut Check<'_>, tab: &Tab<'_>) {
         if let Err(misfit) = forms::unit(text) {
             check.error_near(&spot, &path, misfit.wrong, misfit.right, misfit.nearest);
         }
+        reaches(check, &spot, &path, text, measures, is_fixed);
     }
 }
 
@@ -182,11 +187,11 @@ fn conditions(
         let levels = levels(may, &entry.key);
         let rule = match (&entry.node.value, Tab::new(&PLACE, &entry.node, path.clone())) {
             (_, Some(found)) => {
-                place::targets(check, &found, "level of this condition", &levels);
+                place::targets(check, &found, "level of the condition", &levels);
                 LevelRule::Found(place::place(&found, named))
             }
             (Value::Text(level), None) => {
-                check.refer(&entry.node.spot, &path, level, "level of this condition", &levels);
+                check.refer(&entry.node.spot, &path, level, "level of the condition", &levels);
                 LevelRule::Fixed(level.clone())
             }
             _ => continue,

@@ -128,15 +128,19 @@ fn after(check: &mut Check<'_>, tab: &Tab<'_>, index: VisitIx, codes: &[&str], f
 fn overlaps(check: &mut Check<'_>, tabs: &[Tab<'_>], visits: &[Visit], anchor: Option<&str>) {
     // A visit after the anchor visit is counted from day 0 like all others.
     let from = |visit: &Visit| visit.after.filter(|after| Some(visits[*after].code.as_str()) != anchor);
+    let dated = |tab: &Tab<'_>| {
+        let readable = |name: &str| !tab.has(name) || tab.pair(name).is_some();
+        tab.whole("day").is_some() && readable("window") && readable("counts")
+    };
     let days = |visit: &Visit| (visit.day + visit.counts.0, visit.day + visit.counts.1);
     for (index, visit) in visits.iter().enumerate() {
         // A visit whose code or day is at fault would only repeat it.
-        if !tabs[index].has("day") {
+        if !dated(&tabs[index]) {
             continue;
         }
         for (earlier, tab) in visits[..index].iter().zip(tabs) {
             let ((from_a, until_a), (from_b, until_b)) = (days(earlier), days(visit));
-            if !tab.has("day") || from(earlier) != from(visit) || from_a > until_b || from_b > until_a {
+            if !dated(tab) || from(earlier) != from(visit) || from_a > until_b || from_b > until_a {
                 continue;
             }
             let shared = match (from_a.max(from_b), until_a.min(until_b)) {

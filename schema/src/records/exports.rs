@@ -34,15 +34,8 @@ pub enum ExportState {
 
 impl ExportState {
     /// All of them.
-    pub const ALL: [Self; 7] = [
-        Self::Settling,
-        Self::Filed,
-        Self::PartFiled,
-        Self::Held,
-        Self::Repeat,
-        Self::Ignored,
-        Self::Unreachable,
-    ];
+    pub const ALL: [Self; 7] =
+        [Self::Settling, Self::Filed, Self::PartFiled, Self::Held, Self::Repeat, Self::Ignored, Self::Unreachable];
 
     /// The code that people and files use.
     pub fn code(self) -> &'static str {

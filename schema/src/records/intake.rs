@@ -356,3 +356,16 @@ impl Records {
             .map_err(self.failed("writing what was noticed"))
     }
 }
+
+impl Records {
+    /// A capture and those before it whose bytes it continues, newest first.
+    pub fn chain_of(&self, capture: i64) -> Result<Vec<i64>> {
+        self.conn
+            .prepare_cached(
+                "WITH RECURSIVE chain (id) AS (VALUES (?1) UNION SELECT c.continues FROM capture c JOIN chain ON c.id = chain.id
+                 WHERE c.continues IS NOT NULL) SELECT id FROM chain ORDER BY id DESC",
+            )
+            .and_then(|mut statement| statement.query_map([capture], |row| row.get(0))?.collect())
+            .map_err(self.failed("looking at what a path held"))
+    }
+}

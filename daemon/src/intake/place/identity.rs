@@ -76,6 +76,11 @@ impl<'p> Judge<'p> {
         Self { instrument, capture, seen: HashMap::new(), matched: HashSet::new(), again: false }
     }
 
+    /// The capture judged.
+    pub fn capture(&self) -> i64 {
+        self.capture
+    }
+
     /// Judges one value.
     pub fn judge(&mut self, records: &mut Records, case: &Case<'_>) -> Result<Verdict> {
         let identity = Identity {

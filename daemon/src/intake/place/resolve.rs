@@ -12,11 +12,12 @@ use regex::Regex;
 use revisant_schema::hold::{Answer, Reason};
 use revisant_schema::plan::stamp::{CompiledStamp, Written};
 use revisant_schema::plan::{
-    Affine, Instrument, LevelRule, LimitRule, MeasureIx, MeasureRule, Place, Plan, Source, UnitRule, ValueRule, units,
+    Affine, Instrument, LevelRule, LimitRule, MeasureIx, MeasureRule, Place, Plan, Reader, Source, UnitRule, ValueRule, units,
 };
 use revisant_schema::reading::Condition;
 use revisant_schema::roster::{Roster, tidy};
 use revisant_schema::session::UNSCHEDULED;
+use sha2::{Digest, Sha256};
 
 use super::clock::{self, Local};
 use super::number;
@@ -213,6 +214,43 @@ impl<'p> Finder<'p> {
     }
 }
 
+impl Finder<'_> {
+    /// What it finds outside the row.
+    fn outside(&self, rows: &dyn Rows, put: &mut impl FnMut(&str)) {
+        match self {
+            Self::Column(..) | Self::Columns(..) => {}
+            Self::Preamble(key, _) => put(rows.preamble(key).unwrap_or_default()),
+            Self::Settled(text) => put(text),
+            Self::Parts(parts, _) => parts.iter().for_each(|part| part.outside(rows, put)),
+        }
+    }
+}
+
+/// What a reader finds in an export's path: two files with the same bytes and the same facts are one export.
+pub fn path_facts(reader: &Reader, file_name: &str, folder: &str) -> Vec<String> {
+    let places = [Some(&reader.subject), Some(&reader.taken_at), reader.visit.as_ref(), reader.replicate.as_ref()];
+    let levels = reader.values.iter().flat_map(|value| {
+        value.condition.iter().filter_map(|(_, level)| match level {
+            LevelRule::Found(place) => Some(place),
+            LevelRule::Fixed(_) => None,
+        })
+    });
+    let mut facts = Vec::new();
+    for place in places.into_iter().flatten().chain(levels) {
+        collect_path_facts(place, file_name, folder, &mut facts);
+    }
+    facts
+}
+
+fn collect_path_facts(place: &Place, file_name: &str, folder: &str, facts: &mut Vec<String>) {
+    match &place.source {
+        Source::FileName(regex) => facts.push(group(regex, file_name)),
+        Source::Folder(regex) => facts.push(group(regex, folder)),
+        Source::Parts(parts) => parts.iter().for_each(|part| collect_path_facts(part, file_name, folder, facts)),
+        Source::Column(_) | Source::Columns(_) | Source::Preamble(_) | Source::Fixed(_) => {}
+    }
+}
+
 fn group(regex: &Regex, text: &str) -> String {
     let found = regex.captures(text).and_then(|groups| groups.get(1));
     found.map_or_else(String::new, |group| group.as_str().trim().to_owned())
@@ -312,6 +350,24 @@ impl<'p> Resolver<'p> {
             Written::Moment(moment) => Some(Local::Once(moment.to_utc())),
             Written::Date(_) => None,
         }
+    }
+
+    /// Sixteen bytes that stand for the row as written: the instrument, the row's text, and what was found about it
+    /// outside the row (in the file's name, its folder or its preamble).
+    pub fn row_hash(&self, row: &Row, rows: &dyn Rows) -> [u8; 16] {
+        let mut hasher = Sha256::new();
+        let mut put = |text: &str| {
+            hasher.update(text.as_bytes());
+            hasher.update([0xff]);
+        };
+        put(&self.instrument.code);
+        put(&row.raw);
+        let places = [Some(&self.subject), Some(&self.taken_at), self.visit.as_ref(), self.replicate.as_ref()];
+        for finder in places.into_iter().flatten() {
+            finder.outside(rows, &mut put);
+        }
+        let digest = hasher.finalize();
+        digest.first_chunk().copied().unwrap_or_default()
     }
 
     /// Resolves one row, with what people have decided about it.

@@ -37,6 +37,9 @@ pub enum FileFault {
     /// It is larger, or expands further, than allowed (`too-large`).
     #[error("{0}")]
     TooLarge(String),
+    /// It bears another serial number (`other-instrument`).
+    #[error("{0}")]
+    OtherInstrument(String),
     /// The kept bytes could not be read back; nothing is known about the export.
     #[error("the kept bytes could not be read: {0}")]
     Io(#[from] std::io::Error),

@@ -1,0 +1,607 @@
+//! Collect: everything that waits in the export folders, once, from notice to file.
+//!
+//! Invariants: day 0 comes from all exports of the collect before the first of them is placed; exports are filed by
+//! instrument in the plan's order, then by file time, then by path; only one program files at a time.
+
+use std::collections::{BTreeMap, HashMap};
+use std::fs::File;
+use std::path::{Path, PathBuf};
+use std::time::{Duration, Instant};
+
+use chrono::{DateTime, Utc};
+use revisant_schema::plan::{Anchor, Plan};
+use revisant_schema::records::exports::ExportState;
+use revisant_schema::records::intake::Noticed;
+use revisant_schema::records::raw::RawSource;
+use revisant_schema::records::view::HoldRow;
+use revisant_schema::records::{ActKind, Cell, Doer, Filing, Kept, Records, RecordsError};
+use revisant_schema::world::World;
+use serde_json::json;
+
+use super::error::{IntakeError, Result};
+use super::file::{Continued, Export, Filer, Outcome, Placing, Scope, add_hold, reason_of, row_key, settle_holds};
+use super::keep::{Keeping, keep};
+use super::notice::{Found, Walk, walk};
+use super::place::resolve::{Decided, Held, Resolver, RowOutcome, ValueOutcome, Whereabouts, path_facts};
+use super::read::{self, FileFault, Row};
+use super::{plan, replace};
+use super::rules::{Gathered, Rules};
+
+/// How often an export is placed anew because the rules changed meanwhile, before it is left to the next collect.
+const TRIES: u32 = 20;
+
+/// What a collect came to.
+#[derive(Debug, Default, Clone, PartialEq)]
+pub struct Report {
+    /// How many exports came to which state.
+    pub exports: BTreeMap<&'static str, u64>,
+    /// Readings filed.
+    pub filed: u64,
+    /// Values that were filed before.
+    pub already: u64,
+    /// Holds opened.
+    pub held: u64,
+    /// Older holds that were settled.
+    pub settled: u64,
+    /// How long it took.
+    pub seconds: f64,
+    /// Export folders that could not be looked at: instrument and why.
+    pub lost_folders: BTreeMap<String, String>,
+}
+
+impl Report {
+    fn count(&mut self, state: ExportState) {
+        *self.exports.entry(state.code()).or_default() += 1;
+    }
+
+    fn add(&mut self, outcome: &Outcome) {
+        self.filed += outcome.filed;
+        self.already += outcome.already;
+        self.held += outcome.held;
+        self.settled += outcome.settled;
+    }
+
+    /// Whether nothing was filed, held or settled.
+    pub fn is_quiet(&self) -> bool {
+        self.filed + self.already + self.held + self.settled == 0
+    }
+}
+
+/// How far a collect has come.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub struct Progress {
+    /// Exports done.
+    pub done: u64,
+    /// Exports in all.
+    pub of: u64,
+}
+
+/// The lock that only the one program holds that files exports.
+#[derive(Debug)]
+pub struct IntakeLock {
+    _file: File,
+}
+
+impl IntakeLock {
+    /// Takes the lock of a study's records, or says who holds it.
+    pub fn take(records: &Records, program: &str) -> Result<Self> {
+        use std::io::{Read, Seek, Write};
+        let path = records.folder().join("intake.lock");
+        let failed = |error| RecordsError::file(&path, "taking the lock", error);
+        let options = File::options().read(true).write(true).create(true).truncate(false).open(&path);
+        let mut file = options.map_err(failed)?;
+        match file.try_lock() {
+            Ok(()) => {
+                let note = format!("{program}, process {}", std::process::id());
+                file.set_len(0).and_then(|()| file.rewind()).and_then(|()| file.write_all(note.as_bytes())).map_err(failed)?;
+                Ok(Self { _file: file })
+            }
+            Err(std::fs::TryLockError::WouldBlock) => {
+                let mut note = String::new();
+                // Who holds it is a courtesy: an unreadable note is no reason to fail otherwise.
+                let _ = file.read_to_string(&mut note);
+                Err(IntakeError::Locked(if note.is_empty() { "its name is not known".to_owned() } else { note }))
+            }
+            Err(std::fs::TryLockError::Error(error)) => Err(failed(error).into()),
+        }
+    }
+
+    /// Whether some program holds the lock of a study's records, and its note.
+    pub fn holder(folder: &Path) -> Option<String> {
+        let path = folder.join("intake.lock");
+        let file = File::open(&path).ok()?;
+        match file.try_lock_shared() {
+            Ok(()) => None,
+            Err(_) => Some(std::fs::read_to_string(&path).unwrap_or_default()),
+        }
+    }
+}
+
+/// An export at rest whose bytes are kept.
+struct Ready {
+    found: Found,
+    kept: Kept,
+    source: Option<RawSource>,
+    continues: Option<Continued>,
+}
+
+/// Files all that waits at this moment. `wait` also waits for files that are not yet at rest.
+pub fn collect(
+    records: &mut Records,
+    study: &Path,
+    doer: &Doer,
+    wait: bool,
+    progress: &mut dyn FnMut(Progress),
+) -> Result<Report> {
+    let start = Instant::now();
+    records.clear_unpublished()?;
+    let mut report = Report::default();
+    let rules = plan::in_force(records)?;
+    replace::after_changes(records, &rules, doer, &mut report)?;
+    let walked = walk_until_rested(records, study, &rules.plan, wait)?;
+    note_walk(records, &rules.plan, &walked, &mut report)?;
+    file_all(records, rules, walked.ready, doer, &mut report, progress)?;
+    report.seconds = start.elapsed().as_secs_f64();
+    Ok(report)
+}
+
+/// Walks, and with `wait` walks again until everything has rested that will within its time.
+fn walk_until_rested(records: &Records, study: &Path, plan: &Plan, wait: bool) -> Result<Walk> {
+    let world = records.world().clone();
+    let known = records.noticed()?;
+    let longest = plan.instruments.iter().map(|instrument| instrument.rest).max().unwrap_or_default();
+    let deadline = Instant::now() + longest * 2 + Duration::from_secs(10);
+    loop {
+        let walked = walk(world.as_ref(), study, plan, &known);
+        let next = walked.settling.iter().filter_map(|(_, until)| *until).min();
+        match next {
+            Some(until) if wait && Instant::now() < deadline => {
+                let left = (until - world.now()).to_std().unwrap_or_default();
+                std::thread::sleep(left.min(Duration::from_secs(5)) + Duration::from_millis(5));
+            }
+            _ => return Ok(walked),
+        }
+    }
+}
+
+/// Writes down what was seen of files that are not to be read now.
+fn note_walk(records: &mut Records, plan: &Plan, walked: &Walk, report: &mut Report) -> Result<()> {
+    let known = records.noticed()?;
+    let mut changes: Vec<(String, Option<Noticed>)> = Vec::new();
+    let mut note = |found: &Found, state: &str, detail: Option<String>| {
+        let instrument = plan.instruments[found.instrument].code.clone();
+        let capture = known.get(&found.export).and_then(|before| before.capture);
+        let seen = Noticed { instrument, state: state.to_owned(), stat: found.stat, capture, detail };
+        if known.get(&found.export) != Some(&seen) {
+            changes.push((found.export.clone(), Some(seen)));
+        }
+    };
+    for (found, until) in &walked.settling {
+        let detail = if until.is_none() { "it has no bytes yet" } else { "it has not rested yet" };
+        note(found, "settling", Some(detail.to_owned()));
+        report.count(ExportState::Settling);
+    }
+    for found in &walked.ignored {
+        note(found, "ignored", Some("its name does not fit the plan's `files`".to_owned()));
+        report.count(ExportState::Ignored);
+    }
+    for (export, index, why) in &walked.unreachable {
+        let capture = known.get(export).and_then(|before| before.capture);
+        let stat = revisant_schema::world::Stat { size: 0, modified: 0, changed: 0 };
+        let instrument = plan.instruments[*index].code.clone();
+        let seen = Noticed { instrument, state: "unreachable".into(), stat, capture, detail: Some(why.clone()) };
+        changes.push((export.clone(), Some(seen)));
+        report.count(ExportState::Unreachable);
+    }
+    let forgotten = walked.gone.iter().filter(|path| known.get(*path).is_some_and(|before| before.capture.is_none()));
+    changes.extend(forgotten.map(|path| (path.clone(), None)));
+    let lost: BTreeMap<String, String> =
+        walked.lost_folders.iter().map(|(at, why)| (plan.instruments[*at].code.clone(), why.clone())).collect();
+    report.lost_folders = lost.clone();
+    let lost = serde_json::to_string(&lost).unwrap_or_default();
+    if changes.is_empty() && records.working("lost_folders")?.as_deref() == Some(&lost) {
+        return Ok(());
+    }
+    write_notes(records, &changes, &lost)
+}
+
+fn write_notes(records: &mut Records, changes: &[(String, Option<Noticed>)], lost: &str) -> Result<()> {
+    records.begin()?;
+    let mut write = || -> revisant_schema::records::Result<()> {
+        for (path, seen) in changes {
+            match seen {
+                Some(seen) => records.set_noticed(path, seen)?,
+                None => records.forget_noticed(path)?,
+            }
+        }
+        records.set_working("lost_folders", lost)
+    };
+    let done = write();
+    match done {
+        Ok(()) => Ok(records.commit()?),
+        Err(error) => {
+            records.roll_back();
+            Err(error.into())
+        }
+    }
+}
+
+/// Files the exports that are ready, in portions whose bytes are kept first.
+fn file_all(
+    records: &mut Records,
+    mut rules: Rules,
+    found: Vec<Found>,
+    doer: &Doer,
+    report: &mut Report,
+    progress: &mut dyn FnMut(Progress),
+) -> Result<()> {
+    let of = found.len() as u64;
+    progress(Progress { done: 0, of });
+    let world = records.world().clone();
+    let mut ready = Vec::with_capacity(found.len());
+    for one in found {
+        match keep(world.as_ref(), records, &one)? {
+            Keeping::Kept(mut kept) => {
+                let source = kept.bytes.is_some().then(|| records.kept_source(&mut kept));
+                ready.push(Ready { found: one, kept, source, continues: None });
+            }
+            Keeping::Changed => report.count(ExportState::Settling),
+            Keeping::Unreachable(why) => {
+                unreachable(records, &rules.plan, &one, &why)?;
+                report.count(ExportState::Unreachable);
+            }
+        }
+    }
+    let mut tries = 0;
+    let mut next = 0;
+    while next < ready.len() {
+        let gathered = gather(records, &rules, &mut ready[next..])?;
+        let done = file_portion(records, &rules, gathered, &mut ready, &mut next, doer, report, &mut |done| {
+            progress(Progress { done, of });
+        });
+        match done {
+            Ok(()) => {}
+            Err(RecordsError::Moved) if tries < TRIES => {
+                tries += 1;
+                rules = plan::in_force(records)?;
+            }
+            Err(error) => return Err(error.into()),
+        }
+    }
+    progress(Progress { done: of, of });
+    Ok(())
+}
+
+fn unreachable(records: &Records, plan: &Plan, found: &Found, why: &str) -> Result<()> {
+    let seen = Noticed {
+        instrument: plan.instruments[found.instrument].code.clone(),
+        state: "unreachable".to_owned(),
+        stat: found.stat,
+        capture: None,
+        detail: Some(why.to_owned()),
+    };
+    Ok(records.set_noticed(&found.export, &seen)?)
+}
+
+/// What the exports in hand say about day 0: every session that they would add.
+fn gather(records: &Records, rules: &Rules, ready: &mut [Ready]) -> Result<Gathered> {
+    let mut gathered = Gathered::default();
+    let plan = &rules.plan;
+    let labelled = plan.instruments.iter().any(|instrument| instrument.reader.visit.is_some());
+    let counted_from_sessions =
+        matches!(plan.subject.anchor, Anchor::Visit(_)) || plan.visits.iter().any(|visit| visit.after.is_some());
+    // Only a label can disagree with a date, and only days counted from sessions depend on what is in hand.
+    if !labelled || !counted_from_sessions {
+        return Ok(gathered);
+    }
+    let now = records.now();
+    for one in ready {
+        let source = one.source.take().unwrap_or_else(|| records.kept_source(&mut one.kept));
+        // A file that cannot be read adds no session; it is held when its turn comes.
+        let _ = gather_one(rules, now, &one.found, &source, &mut gathered);
+        one.source = Some(source);
+    }
+    Ok(gathered)
+}
+
+fn gather_one(
+    rules: &Rules,
+    now: DateTime<Utc>,
+    found: &Found,
+    source: &RawSource,
+    gathered: &mut Gathered,
+) -> std::result::Result<(), FileFault> {
+    let instrument = &rules.plan.instruments[found.instrument];
+    let wanted = read::wanted(&instrument.reader);
+    let name = file_name(&found.export);
+    let whereabouts = Whereabouts { file_name: &name, folder: &found.below };
+    let resolver = Resolver::new(&rules.plan, instrument, &rules.roster, now, &wanted, whereabouts);
+    let resolver = resolver.map_err(FileFault::Layout)?;
+    let mut rows = read::open(&instrument.reader, source)?;
+    let mut row = Row::default();
+    let none = Decided::default();
+    while rows.next_row(&mut row)? {
+        let RowOutcome::Ready(resolved) = resolver.resolve(&row, rows.as_ref(), &none) else { continue };
+        for value in &resolved.values {
+            if let ValueOutcome::Number(value) = value {
+                let label = resolved.label.as_deref();
+                gathered.see(&rules.plan, &resolved.subject, resolved.day, label, value.measure);
+            }
+        }
+    }
+    Ok(())
+}
+
+#[expect(clippy::too_many_arguments, reason = "the loop of `file_all`, apart so that its failure can be looked at")]
+fn file_portion(
+    records: &mut Records,
+    rules: &Rules,
+    gathered: Gathered,
+    ready: &mut [Ready],
+    next: &mut usize,
+    doer: &Doer,
+    report: &mut Report,
+    progress: &mut dyn FnMut(u64),
+) -> revisant_schema::records::Result<()> {
+    let mut filer = Filer::new(records, rules, gathered, doer)?;
+    // What is not committed when something fails was not filed: the report counts only what was.
+    let mut uncommitted: Vec<(Option<Outcome>, ExportState)> = Vec::new();
+    let mut start = *next;
+    for at in *next..ready.len() {
+        let done = file_one(&mut filer, &mut ready[at]);
+        match done {
+            Ok(done) => uncommitted.extend(done),
+            Err(error) => {
+                filer.give_up();
+                *next = start;
+                return Err(error);
+            }
+        }
+        let last = at + 1 == ready.len();
+        if let Err(error) = filer.commit(last) {
+            *next = start;
+            return Err(error);
+        }
+        if !filer.is_open() {
+            start = at + 1;
+            for (outcome, state) in uncommitted.drain(..) {
+                report.count(state);
+                outcome.iter().for_each(|outcome| report.add(outcome));
+            }
+            progress(start as u64);
+        }
+    }
+    *next = ready.len();
+    Ok(())
+}
+
+/// Files one export; nothing when its bytes are those that its path held already.
+fn file_one(
+    filer: &mut Filer<'_>,
+    ready: &mut Ready,
+) -> revisant_schema::records::Result<Option<(Option<Outcome>, ExportState)>> {
+    filer.begin()?;
+    let path = ready.found.export.clone();
+    let last = filer.records.last_capture(&path)?;
+    if let Some(last) = &last
+        && last.sha256 == ready.kept.sha256
+    {
+        // Touched, not changed.
+        note_captured(filer, ready, last.capture)?;
+        return Ok(None);
+    }
+    if let Some(same) = known_bytes(filer, ready)? {
+        let capture = file_repeat(filer, ready, same)?;
+        note_captured(filer, ready, capture)?;
+        return Ok(Some((None, ExportState::Repeat)));
+    }
+    if let Some(last) = last {
+        ready.continues = continued(filer.records, &last, ready)?;
+    }
+    let (capture, outcome) = file_new(filer, ready)?;
+    note_captured(filer, ready, capture)?;
+    let state = outcome.state();
+    Ok(Some((Some(outcome), state)))
+}
+
+fn note_captured(filer: &Filer<'_>, ready: &Ready, capture: i64) -> revisant_schema::records::Result<()> {
+    let seen = Noticed {
+        instrument: filer.rules.plan.instruments[ready.found.instrument].code.clone(),
+        state: "captured".to_owned(),
+        stat: ready.found.stat,
+        capture: Some(capture),
+        detail: None,
+    };
+    filer.records.set_noticed(&ready.found.export, &seen)
+}
+
+/// A capture of the same bytes by the same instrument, whose path says the same: unless this path held them before and
+/// other bytes since, in which case they are news.
+fn known_bytes(filer: &Filer<'_>, ready: &Ready) -> revisant_schema::records::Result<Option<i64>> {
+    let instrument = &filer.rules.plan.instruments[ready.found.instrument];
+    let same = filer.records.captures_of_bytes(&instrument.code, &ready.kept.sha256)?;
+    if same.iter().any(|(_, path)| *path == ready.found.export) {
+        return Ok(None);
+    }
+    let below = |path: &str| {
+        let folder = PathBuf::from(path).parent().map(Path::to_path_buf).unwrap_or_default();
+        let folder = folder.strip_prefix(&instrument.folder).map(Path::to_path_buf).unwrap_or(folder);
+        folder.to_string_lossy().into_owned()
+    };
+    let facts = |path: &str, below: &str| path_facts(&instrument.reader, &file_name(path), below);
+    let own = facts(&ready.found.export, &ready.found.below);
+    Ok(same.into_iter().find(|(_, path)| facts(path, &below(path)) == own).map(|(capture, _)| capture))
+}
+
+/// The file's name in an export's path.
+pub fn file_name(export: &str) -> String {
+    export.rsplit('/').next().unwrap_or(export).to_owned()
+}
+
+/// What the path held before, when the new bytes begin with it.
+fn continued(
+    records: &Records,
+    last: &revisant_schema::records::intake::LastCapture,
+    ready: &Ready,
+) -> revisant_schema::records::Result<Option<Continued>> {
+    if last.size <= 0 || last.size.unsigned_abs() >= ready.kept.size {
+        return Ok(None);
+    }
+    let older = records.raw_source(&last.sha256)?;
+    let newer = match &ready.source {
+        Some(source) => source.open(),
+        None => return Ok(None),
+    };
+    let failed = |error: std::io::Error| RecordsError::Damaged(format!("a raw copy could not be read back: {error}"));
+    if !begins_with(newer.map_err(failed)?, older.open().map_err(failed)?).map_err(failed)? {
+        return Ok(None);
+    }
+    let chain = records.chain_of(last.capture)?;
+    let mut holds: HashMap<Option<i64>, Vec<HoldRow>> = HashMap::new();
+    for hold in records.view()?.holds(true)? {
+        if chain.contains(&hold.capture) {
+            holds.entry(hold.line).or_default().push(hold);
+        }
+    }
+    Ok(Some(Continued { capture: last.capture, size: last.size, read: last.read, holds }))
+}
+
+/// Whether the bytes of `newer` begin with all of `older`.
+fn begins_with(mut newer: Box<dyn std::io::Read + '_>, mut older: Box<dyn std::io::Read + '_>) -> std::io::Result<bool> {
+    use std::io::Read;
+    let (mut one, mut other) = (vec![0; 64 * 1024], Vec::with_capacity(64 * 1024));
+    loop {
+        other.clear();
+        let count = older.by_ref().take(64 * 1024).read_to_end(&mut other)?;
+        if count == 0 {
+            return Ok(true);
+        }
+        if newer.read_exact(&mut one[..count]).is_err() || one[..count] != other {
+            return Ok(false);
+        }
+    }
+}
+
+fn file_repeat(filer: &mut Filer<'_>, ready: &Ready, same: i64) -> revisant_schema::records::Result<i64> {
+    let (rules, doer) = (filer.rules, filer.doer);
+    filer.records.act_within(ActKind::File, doer, |act| {
+        let capture = add_capture(act, rules, ready, Some(same))?;
+        act.objects.insert("export".into(), json!(ready.found.export));
+        act.objects.insert("repeat_of".into(), json!(same));
+        Ok(capture)
+    })
+}
+
+fn add_capture(
+    act: &mut revisant_schema::records::Act<'_>,
+    rules: &Rules,
+    ready: &Ready,
+    repeat_of: Option<i64>,
+) -> revisant_schema::records::Result<i64> {
+    act.add_raw(&ready.kept)?;
+    let continues = ready.continues.as_ref().map(|before| before.capture);
+    act.add(
+        "capture",
+        &[
+            Cell::Term(&rules.plan.instruments[ready.found.instrument].code),
+            Cell::Text(&ready.found.export),
+            Cell::Int(ready.found.stat.modified),
+            Cell::Int(ready.kept.size as i64),
+            Cell::Bytes(&ready.kept.sha256),
+            Cell::Int(rules.version),
+            Cell::int_or_null(repeat_of),
+            Cell::int_or_null(continues),
+        ],
+    )
+}
+
+fn file_new(filer: &mut Filer<'_>, ready: &mut Ready) -> revisant_schema::records::Result<(i64, Outcome)> {
+    let capture = filer.records.next_capture()?;
+    let source = match ready.source.take() {
+        Some(source) => source,
+        None => filer.records.kept_source(&mut ready.kept),
+    };
+    let export = Export {
+        instrument: ready.found.instrument,
+        path: ready.found.export.clone(),
+        file_name: file_name(&ready.found.export),
+        below: ready.found.below.clone(),
+        capture,
+        source,
+        size: ready.kept.size,
+        continues: ready.continues.clone(),
+        accept_serial: false,
+    };
+    let largest = filer.rules.plan.instruments[export.instrument].largest;
+    let (mut filing, placed) = if export.size > largest {
+        let wrong = format!("it has {} bytes; the plan's `largest` allows {largest}", export.size);
+        (filer.records.new_filing(Some(capture))?, Err(FileFault::TooLarge(wrong)))
+    } else {
+        match filer.place(&export, &Scope::Whole) {
+            Ok(placed) => placed,
+            Err(error) => {
+                ready.source = Some(export.source);
+                return Err(error);
+            }
+        }
+    };
+    let done = match placed {
+        Ok(mut placing) => {
+            filer.note_gone(&export, &mut filing, &mut placing)?;
+            publish_rows(filer, ready, filing, placing)
+        }
+        Err(fault) => publish_fault(filer, ready, filing, &fault),
+    };
+    // Should the rules turn out to have changed, the export is placed again from the same bytes.
+    ready.source = Some(export.source);
+    done.map(|outcome| (capture, outcome))
+}
+
+fn publish_rows(
+    filer: &mut Filer<'_>,
+    ready: &Ready,
+    filing: Filing,
+    mut placing: Placing,
+) -> revisant_schema::records::Result<Outcome> {
+    let (rules, doer) = (filer.rules, filer.doer);
+    if let Some(before) = &ready.continues {
+        // The file as a whole, which older bytes of the path broke off in, reads well now.
+        placing.settle.extend(before.holds.get(&None).into_iter().flatten().map(|hold| hold.hold));
+    }
+    let account = serde_json::to_string(&placing.account).unwrap_or_default();
+    filer.records.act_within(ActKind::File, doer, |act| {
+        let capture = add_capture(act, rules, ready, None)?;
+        act.add("account", &[Cell::Int(capture), Cell::Text(&account)])?;
+        settle_holds(act, &placing.settle)?;
+        act.objects.insert("export".into(), json!(ready.found.export));
+        act.objects.insert("capture".into(), json!(capture));
+        act.objects.insert("readings".into(), json!(filing.readings()));
+        act.objects.insert("holds".into(), json!(filing.holds()));
+        act.publish(filing)?;
+        Ok(())
+    })?;
+    placing.outcome.settled = placing.settle.len() as u64;
+    placing.outcome.known_lines = placing.account.filed + placing.account.already;
+    Ok(placing.outcome)
+}
+
+fn publish_fault(
+    filer: &mut Filer<'_>,
+    ready: &Ready,
+    mut filing: Filing,
+    fault: &FileFault,
+) -> revisant_schema::records::Result<Outcome> {
+    let (rules, doer) = (filer.rules, filer.doer);
+    let held = Held::row(reason_of(fault), fault.to_string());
+    let key = row_key(ready.kept.sha256.first_chunk().copied().unwrap_or_default(), 0);
+    add_hold(filer.records, &mut filing, None, &held, &key)?;
+    filer.records.act_within(ActKind::File, doer, |act| {
+        let capture = add_capture(act, rules, ready, None)?;
+        act.objects.insert("export".into(), json!(ready.found.export));
+        act.objects.insert("capture".into(), json!(capture));
+        act.objects.insert("held".into(), json!(held.reason.code()));
+        act.publish(filing)?;
+        Ok(())
+    })?;
+    Ok(Outcome { held: 1, file_held: true, ..Outcome::default() })
+}
