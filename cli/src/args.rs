@@ -58,9 +58,12 @@ Exit status 2 when the plan is unsound, 3 when it is sound and would change what
 JSON: {\"sound\", \"sha256\", \"warnings\": [fault], \"would_change\": [text]}")]
     Check(Check),
     /// Who is enrolled
-    #[command(subcommand, after_help = "\
+    #[command(
+        subcommand,
+        after_help = "\
 Example:
-  revisant roster import roster.csv --why \"enrolments of March\"")]
+  revisant roster import roster.csv --why \"enrolments of March\""
+    )]
     Roster(Roster),
     /// Read once all exports that wait, file what is sound, hold what is not
     #[command(after_help = "\
@@ -100,13 +103,16 @@ Example:
 JSON: {\"trail\", \"subject\", \"visit\", \"measure\"}")]
     Account(Account),
     /// What waits for a person, and deciding it
-    #[command(args_conflicts_with_subcommands = true, after_help = "\
+    #[command(
+        args_conflicts_with_subcommands = true,
+        after_help = "\
 Example:
   revisant holds
   revisant holds show 12
   revisant holds decide 12 --subject QM-014 --why \"code misread; see visit log\"
 
-JSON: [{\"hold\", \"reason\", \"state\", \"export\", \"where\", \"row\", \"likely\", \"since\"}]")]
+JSON: [{\"hold\", \"reason\", \"state\", \"export\", \"where\", \"row\", \"likely\", \"since\"}]"
+    )]
     Holds(Holds),
     /// The readings that are filed
     #[command(after_help = "\
@@ -124,9 +130,12 @@ Example:
 JSON: {\"trail\", \"reading\"}")]
     Enter(Enter),
     /// Correct whose a reading or a session is, its visit or its value; the original stays linked
-    #[command(subcommand, after_help = "\
+    #[command(
+        subcommand,
+        after_help = "\
 Example:
-  revisant amend reading 812 --value 31.5 --why \"misread scale; see sheet of 31 March\"")]
+  revisant amend reading 812 --value 31.5 --why \"misread scale; see sheet of 31 March\""
+    )]
     Amend(Amend),
     /// Take readings out of use; they stay legible
     #[command(after_help = "\
@@ -150,17 +159,23 @@ Example:
 JSON: the reading, with \"sha256\", \"bytes\": [from, to], \"line\", \"text\", \"history\": [{\"trail\", \"at\", \"who\", \"act\", \"why\"}]")]
     Provenance(Provenance),
     /// Named cut-offs of the data
-    #[command(subcommand, after_help = "\
+    #[command(
+        subcommand,
+        after_help = "\
 Example:
-  revisant cut make interim-1 --why \"half of the subjects have week 12\"")]
+  revisant cut make interim-1 --why \"half of the subjects have week 12\""
+    )]
     Cut(Cut),
     /// The audit trail
-    #[command(args_conflicts_with_subcommands = true, after_help = "\
+    #[command(
+        args_conflicts_with_subcommands = true,
+        after_help = "\
 Example:
   revisant trail
   revisant trail verify
 
-JSON: [{\"trail\", \"at\", \"who\", \"program\", \"act\", \"objects\", \"before\", \"after\", \"why\", \"hash\"}]")]
+JSON: [{\"trail\", \"at\", \"who\", \"program\", \"act\", \"objects\", \"before\", \"after\", \"why\", \"hash\"}]"
+    )]
     Trail(Trail),
     /// Run an analysis of the plan on what has come in
     #[command(after_help = "\

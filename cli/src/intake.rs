@@ -4,13 +4,20 @@
 
 use std::path::Path;
 
+use revisant_daemon::intake::collect::{self, IntakeLock, Progress, Report};
+use revisant_daemon::intake::error::{IntakeError, WouldChange};
+use revisant_daemon::intake::rules::Rules;
+use revisant_daemon::intake::{plan as force, replace};
 use revisant_schema::hold::Answer;
-use revisant_schema::plan::{self, Loaded, Plan};
-use revisant_schema::records::codec::Hash;
-use revisant_schema::records::{ActKind, Cell, Doer, Records, RecordsError};
+use revisant_schema::plan::{Loaded, Plan};
+use revisant_schema::records::exports::ExportState;
+use revisant_schema::records::view::HoldRow;
+use revisant_schema::records::{Doer, Records};
 use serde::Serialize;
+use serde_json::{Map, Value as Json, json};
 
-use crate::error::Failure;
+use crate::error::{Exit, Failure};
+use crate::study::PROGRAM;
 
 /// The plan that is in force now.
 pub struct PlanInForce {
@@ -21,47 +28,58 @@ pub struct PlanInForce {
 }
 
 /// Reads the plan of a study's folder.
-pub fn load(study: &Path) -> Result<Loaded, Failure> {
-    Ok(plan::load(study, &|path| std::fs::read_to_string(path))?)
+pub fn load(world: &dyn revisant_schema::world::World, study: &Path) -> Result<Loaded, Failure> {
+    Ok(force::load_plan(world, study)?)
 }
 
 /// Brings the plan of the study's folder into force, if it is not.
 pub fn bring_plan_into_force(records: &mut Records, study: &Path, doer: &Doer) -> Result<PlanInForce, Failure> {
-    let loaded = load(study)?;
-    let known = records.view()?.plan()?;
-    if let Some(known) = known.filter(|known| known.files == loaded.files) {
-        return Ok(PlanInForce { version: known.version, plan: loaded.plan });
-    }
-    let files = serde_json::to_string(&loaded.files).map_err(|error| RecordsError::Damaged(error.to_string()))?;
-    let sha256 = bytes_of(&loaded.files.sha256());
-    let version = records.act(ActKind::Plan, doer, |act| {
-        act.add("plan_version", &[Cell::Bytes(&sha256), Cell::Text(&files)])
-    })?;
-    Ok(PlanInForce { version, plan: loaded.plan })
-}
-
-fn bytes_of(hex: &str) -> Hash {
-    let mut hash = [0; 32];
-    for (byte, at) in hash.iter_mut().zip((0..).step_by(2)) {
-        *byte = hex.get(at..at + 2).and_then(|digits| u8::from_str_radix(digits, 16).ok()).unwrap_or(0);
-    }
-    hash
+    let Rules { version, plan, .. } = force::bring_into_force(records, study, doer, false)?;
+    Ok(PlanInForce { version, plan })
 }
 
 /// What a changed plan would change in the records, in words; empty when nothing.
-pub fn would_change(_records: &Records, _study: &Path) -> Result<Vec<String>, Failure> {
-    Ok(vec![])
+pub fn would_change(records: &Records, plan: &Plan) -> Result<Vec<String>, Failure> {
+    let Some(rules) = Rules::load(records)? else { return Ok(vec![]) };
+    Ok(force::would_change(records, &rules, plan)?.iter().map(change_words).collect())
+}
+
+fn change_words(change: &WouldChange) -> String {
+    let lines = if change.lines == 1 { "1 line".to_owned() } else { format!("{} lines", change.lines) };
+    format!("{}: {lines}, such as {}", change.export, change.example)
+}
+
+impl From<IntakeError> for Failure {
+    fn from(error: IntakeError) -> Self {
+        let kind = error.kind();
+        match error {
+            IntakeError::Plan(error) => error.into(),
+            IntakeError::Records(error) => error.into(),
+            IntakeError::Differently(changes) => {
+                let list: Vec<String> = changes.iter().map(change_words).collect();
+                let text = list.join("\n");
+                let what = IntakeError::Differently(changes).to_string();
+                Self { exit: Exit::Usage, ..Self::new(kind, what) }.with_faults(text, json!(list))
+            }
+            IntakeError::Meaning(_) => Self { exit: Exit::Usage, ..Self::new(kind, error.to_string()) },
+            IntakeError::Locked(_) => Self::new(kind, error.to_string()),
+        }
+    }
 }
 
 /// What one collect did.
 #[derive(Debug, Clone, Default, Serialize)]
 pub struct Collected {
     /// How many exports are in each state, by the state's code.
-    pub exports: serde_json::Map<String, serde_json::Value>,
+    pub exports: Map<String, Json>,
     /// What became of readings.
     pub readings: CollectedReadings,
     /// How long it took.
     pub seconds: f64,
+    /// Older holds that were settled.
+    pub settled: u64,
+    /// Export folders that could not be looked at, and why, by instrument.
+    pub lost_folders: Map<String, Json>,
 }
 
 /// What became of readings.
@@ -75,47 +93,79 @@ pub struct CollectedReadings {
     pub held: u64,
 }
 
-/// How a collect is to be done.
-pub struct HowToCollect<'a> {
-    /// Read raw copies again with a mended reader.
-    pub adopt: bool,
-    /// Called with how many exports are done, and of how many.
-    pub progress: &'a mut dyn FnMut(u64, u64),
+impl Collected {
+    fn of(reports: [Report; 2]) -> Self {
+        let mut all = Self::default();
+        for state in ExportState::ALL {
+            let count: u64 = reports.iter().filter_map(|report| report.exports.get(state.code())).sum();
+            all.exports.insert(state.code().to_owned(), json!(count));
+        }
+        for report in reports {
+            all.readings.filed += report.filed;
+            all.readings.already += report.already;
+            all.readings.held += report.held;
+            all.settled += report.settled;
+            all.seconds += report.seconds;
+            all.lost_folders.extend(report.lost_folders.into_iter().map(|(code, why)| (code, json!(why))));
+        }
+        all
+    }
 }
 
-/// Reads once all that waits.
+/// Reads once all that waits; with `adopt` first what a mended reader would read differently. `progress` is called
+/// with how many exports are done, and of how many.
 pub fn collect(
-    _records: &mut Records,
-    _study: &Path,
-    _doer: &Doer,
-    _how: HowToCollect<'_>,
+    records: &mut Records,
+    study: &Path,
+    doer: &Doer,
+    adopt: bool,
+    progress: &mut dyn FnMut(u64, u64),
 ) -> Result<Collected, Failure> {
-    Err(Failure::not_yet("collecting is not in this build"))
+    let _lock = IntakeLock::take(records, PROGRAM)?;
+    let adopted = match adopt {
+        true => replace::adopt(records, study, doer)?.1,
+        false => {
+            force::bring_into_force(records, study, doer, false)?;
+            Report::default()
+        }
+    };
+    let collected = collect::collect(records, study, doer, true, &mut |Progress { done, of }| progress(done, of))?;
+    Ok(Collected::of([adopted, collected]))
 }
 
 /// What deciding came to.
-#[derive(Debug, Clone, Copy, Default, Serialize)]
+#[derive(Debug, Clone, Default, Serialize)]
 pub struct Decided {
     /// Holds that are decided or dismissed now.
-    pub holds: u64,
+    pub holds: Vec<i64>,
     /// Readings filed by it.
     pub filed: u64,
-    /// Holds that the answer opened: the row has another fault.
+    /// Values that turned out to be there already.
+    pub already: u64,
+    /// Holds that are open now on the same rows, for what else is wrong with them.
     pub held: u64,
 }
 
-/// Gives a person's answer to holds, or dismisses them (`None`).
+/// Open holds that the same answer may be given to, this one among them.
+pub fn like(records: &Records, hold: &HoldRow) -> Result<Vec<HoldRow>, Failure> {
+    Ok(replace::like(records, hold)?)
+}
+
+/// Gives a person's answer to holds of one export, or dismisses them (`None`).
 pub fn decide(
-    _records: &mut Records,
-    _study: &Path,
-    _holds: &[i64],
-    _answer: Option<&Answer>,
-    _doer: &Doer,
+    records: &mut Records,
+    holds: &[HoldRow],
+    answer: Option<&Answer>,
+    doer: &Doer,
 ) -> Result<Decided, Failure> {
-    Err(Failure::not_yet("deciding is not in this build"))
+    let done = match answer {
+        Some(answer) => replace::decide(records, holds, answer, doer)?,
+        None => replace::dismiss(records, holds, doer)?,
+    };
+    Ok(Decided { holds: done.ended, filed: done.filed, already: done.already, held: done.held })
 }
 
 /// Whether a service is running for the study.
-pub fn service_running(_study: &Path) -> bool {
-    false
+pub fn service_running(study: &Path) -> bool {
+    IntakeLock::holder(&Records::folder_of(study)).is_some_and(|note| note.starts_with("revisantd"))
 }

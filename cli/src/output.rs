@@ -72,7 +72,10 @@ impl<'w> Out<'w> {
     }
 
     fn line(&mut self, text: &str) -> Result<(), Failure> {
-        self.stdout.write_all(text.as_bytes()).and_then(|()| self.stdout.write_all(b"\n")).map_err(|e| write_failure(&e))
+        self.stdout
+            .write_all(text.as_bytes())
+            .and_then(|()| self.stdout.write_all(b"\n"))
+            .map_err(|e| write_failure(&e))
     }
 
     /// Hands over what is still kept back.

@@ -2,7 +2,6 @@
 //!
 //! Invariant: everything that one answer says comes from one [`View`], so that it stands at one trail number.
 
-use std::collections::HashMap;
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
 
@@ -13,7 +12,7 @@ use revisant_schema::records::codec::Hash;
 use revisant_schema::records::view::{PlanVersion, SessionRow};
 use revisant_schema::records::{AsOf, Doer, Records, RecordsError, View};
 use revisant_schema::roster::Roster;
-use revisant_schema::session::{Courses, SessionFacts, UNSCHEDULED};
+use revisant_schema::session::{Courses, UNSCHEDULED};
 use revisant_schema::world::World;
 
 use crate::args::Then;
@@ -58,7 +57,9 @@ impl<'c, 'w> Context<'c, 'w> {
             return Ok(&self.study);
         }
         let shown = self.study.display().to_string();
-        Err(Failure::usage(format!("there is no folder {shown}")).at(shown).then("name the study's folder with --study DIR"))
+        Err(Failure::usage(format!("there is no folder {shown}"))
+            .at(shown)
+            .then("name the study's folder with --study DIR"))
     }
 
     /// The account that runs this command, with its reason.
@@ -94,7 +95,8 @@ pub fn view<'r>(records: &'r Records, then: &Then) -> Result<View<'r>, Failure> 
     };
     let view = records.view_as_of(&as_of)?;
     if view.upto() == 0 && as_of != AsOf::Now {
-        return Err(Failure::refused("the records did not exist at that moment").then("`revisant trail` shows since when they do"));
+        return Err(Failure::refused("the records did not exist at that moment")
+            .then("`revisant trail` shows since when they do"));
     }
     Ok(view)
 }
@@ -122,7 +124,7 @@ impl Basis {
     pub fn of(view: &View<'_>) -> Result<Self, Failure> {
         let (plan, PlanVersion { version, sha256, .. }) = Self::plan(view)?;
         let roster = view.roster()?;
-        let courses = Courses::derive(&plan, &roster, session_facts(view)?);
+        let courses = Courses::derive(&plan, &roster, view.session_facts()?);
         Ok(Self { plan, version, sha256, roster, courses })
     }
 
@@ -132,7 +134,8 @@ impl Basis {
             return Err(Failure::refused("no plan is in force").then("bring one in with `revisant roster import FILE`"));
         };
         let (plan, _) = plan::parse(&found.files).map_err(|faults| {
-            let wrong = format!("plan version {} was sound when filed and is not now: {}", found.version, unsound(&faults));
+            let wrong =
+                format!("plan version {} was sound when filed and is not now: {}", found.version, unsound(&faults));
             RecordsError::Damaged(wrong)
         })?;
         Ok((plan, found))
@@ -149,7 +152,11 @@ impl Basis {
             return Place { visit: placed.visit, off_window: placed.off_window, session: placed.session };
         }
         let found = self.place_bare(session);
-        Place { visit: found.map(|(visit, _)| visit), off_window: found.is_some_and(|found| found.1), session: session.session }
+        Place {
+            visit: found.map(|(visit, _)| visit),
+            off_window: found.is_some_and(|found| found.1),
+            session: session.session,
+        }
     }
 
     fn place_bare(&self, session: &SessionRow) -> Option<(VisitIx, bool)> {
@@ -174,15 +181,17 @@ impl Basis {
         let code = revisant_schema::roster::tidy(code, &self.plan.subject.normalise);
         match self.roster.subjects.contains_key(&code) {
             true => Ok(code),
-            false => Err(Failure::refused(format!("subject {code} is not on the roster")).then("`revisant roster list` shows who is")),
+            false => Err(Failure::refused(format!("subject {code} is not on the roster"))
+                .then("`revisant roster list` shows who is")),
         }
     }
 
     /// A measure of the plan.
     pub fn measure(&self, code: &str) -> Result<&plan::Measure, Failure> {
-        self.plan.measure(code).map(|(_, measure)| measure).ok_or_else(|| {
-            unknown("measure", code, self.plan.measures.iter().map(|measure| measure.code.as_str()))
-        })
+        self.plan
+            .measure(code)
+            .map(|(_, measure)| measure)
+            .ok_or_else(|| unknown("measure", code, self.plan.measures.iter().map(|measure| measure.code.as_str())))
     }
 
     /// A visit of the plan.
@@ -210,20 +219,4 @@ pub struct Place {
     pub off_window: bool,
     /// The number that all sessions of the same subject, visit and day share.
     pub session: i64,
-}
-
-/// Every session that holds a current reading, with the measures it holds.
-fn session_facts(view: &View<'_>) -> Result<Vec<SessionFacts>, Failure> {
-    let mut measures: HashMap<i64, Vec<String>> = HashMap::new();
-    for cell in view.cells()? {
-        let held = measures.entry(cell.session).or_default();
-        if !held.contains(&cell.measure) {
-            held.push(cell.measure);
-        }
-    }
-    let facts = view.all_sessions()?.into_iter().filter_map(|session| {
-        let measures = measures.remove(&session.session)?;
-        Some(SessionFacts { session: session.session, subject: session.subject, day: session.day, label: session.label, measures })
-    });
-    Ok(facts.collect())
 }

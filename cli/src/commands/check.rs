@@ -18,12 +18,14 @@ pub fn run(context: &mut Context<'_, '_>, args: &Check) -> Done {
         return Err(Failure::not_yet(what).then("leave --sample out; `revisant collect` holds what does not fit"));
     }
     if args.schema {
-        return Err(Failure::not_yet("the JSON Schema of the plan comes with a later version").then("leave --schema out"));
+        return Err(
+            Failure::not_yet("the JSON Schema of the plan comes with a later version").then("leave --schema out")
+        );
     }
     let study = context.folder()?.to_path_buf();
-    let loaded = intake::load(&study)?;
+    let loaded = intake::load(context.world.as_ref(), &study)?;
     let would_change = match Records::folder_of(&study).join("records.sqlite").exists() {
-        true => intake::would_change(&context.records()?, &study)?,
+        true => intake::would_change(&context.records()?, &loaded.plan)?,
         false => vec![],
     };
     if context.out.json {
@@ -51,7 +53,8 @@ fn text(
         count(plan.instruments.len() as u64, "instrument"),
         format!("{} analys{}", plan.analyses.len(), if plan.analyses.len() == 1 { "is" } else { "es" }),
     ];
-    let warned = if warnings.is_empty() { String::new() } else { format!("; {}", count(warnings.len() as u64, "warning")) };
+    let warned =
+        if warnings.is_empty() { String::new() } else { format!("; {}", count(warnings.len() as u64, "warning")) };
     context.out.text(&format!("The plan of {} is sound: {}{warned}.", plan.study.code, parts.join(", ")))?;
     if would_change.is_empty() {
         return Ok(());

@@ -5,7 +5,7 @@ use indicatif::{ProgressBar, ProgressDrawTarget, ProgressStyle};
 use super::Done;
 use crate::args::Collect;
 use crate::error::{Exit, Failure};
-use crate::intake::{self, Collected, HowToCollect};
+use crate::intake::{self, Collected};
 use crate::report::text::count;
 use crate::study::{Context, reason};
 
@@ -18,8 +18,7 @@ pub fn run(context: &mut Context<'_, '_>, args: &Collect) -> Done {
         bar.set_length(of);
         bar.set_position(done);
     };
-    let how = HowToCollect { adopt: args.adopt, progress: &mut progress };
-    let done = intake::collect(&mut records, &context.study, &context.doer(why), how);
+    let done = intake::collect(&mut records, &context.study, &context.doer(why), args.adopt, &mut progress);
     bar.finish_and_clear();
     let collected = done?;
     match context.out.json {

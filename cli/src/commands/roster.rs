@@ -30,16 +30,17 @@ pub fn run(context: &mut Context<'_, '_>, args: &Args) -> Done {
 
 fn import(context: &mut Context<'_, '_>, file: &Path, why: Option<&str>) -> Done {
     let shown = file.display().to_string();
-    let bytes = std::fs::read(file).map_err(|error| {
-        Failure::new("file", format!("the roster {shown} cannot be read ({error})")).at(&*shown)
-    })?;
+    let bytes = std::fs::read(file)
+        .map_err(|error| Failure::new("file", format!("the roster {shown} cannot be read ({error})")).at(&*shown))?;
     let text = String::from_utf8(bytes).map_err(|_| {
-        Failure::new("roster", format!("the roster {shown} is not in UTF-8")).at(&*shown).then("save it as CSV in UTF-8")
+        Failure::new("roster", format!("the roster {shown} is not in UTF-8"))
+            .at(&*shown)
+            .then("save it as CSV in UTF-8")
     })?;
     let why = why.map(reason).transpose()?;
     // A roster with faults must leave no trace, so it is held against the plan before any records are made.
     let known = known_roster(context)?;
-    let plan = intake::load(&context.study)?.plan;
+    let plan = intake::load(context.world.as_ref(), &context.study)?.plan;
     known.changes(&plan, &text).map_err(|faults| faulty(&shown, &faults))?;
     let mut records = context.records_or_new()?;
     let plan = intake::bring_plan_into_force(&mut records, &context.study, &context.doer(why))?.plan;
@@ -141,13 +142,7 @@ fn report(context: &mut Context<'_, '_>, known: &Roster, changes: &[CellChange],
     Ok(Exit::Done)
 }
 
-fn add(
-    context: &mut Context<'_, '_>,
-    subject: &str,
-    enrolled: NaiveDate,
-    set: &[(String, String)],
-    why: &str,
-) -> Done {
+fn add(context: &mut Context<'_, '_>, subject: &str, enrolled: NaiveDate, set: &[(String, String)], why: &str) -> Done {
     let why = reason(why)?;
     let mut records = context.records_or_new()?;
     let plan = intake::bring_plan_into_force(&mut records, &context.study, &context.doer(Some(why)))?.plan;
@@ -194,7 +189,9 @@ fn withdraw(context: &mut Context<'_, '_>, subject: &str, on: NaiveDate, data: D
     let subject = basis.subject(subject)?;
     let entry = basis.roster.subjects.get(&subject).cloned().unwrap_or_default();
     if let Some(enrolled) = entry.enrolled.filter(|enrolled| on < *enrolled) {
-        return Err(Failure::refused(format!("{subject} cannot be withdrawn on {on}, before the enrolment on {enrolled}")));
+        return Err(Failure::refused(format!(
+            "{subject} cannot be withdrawn on {on}, before the enrolment on {enrolled}"
+        )));
     }
     let change = |field: &str, before: Option<String>, after: String| CellChange {
         subject: subject.clone(),

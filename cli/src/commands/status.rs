@@ -99,9 +99,8 @@ pub fn instruments(
     let line = |instrument: &Instrument| {
         let last = newest.get(&instrument.code).map(|nanos| when::of_nanos(*nanos));
         let lost = !context.study.join(&instrument.folder).is_dir();
-        let unreadable = |export: &ExportRow| {
-            export.instrument == instrument.code && export.state == ExportState::Unreachable
-        };
+        let unreadable =
+            |export: &ExportRow| export.instrument == instrument.code && export.state == ExportState::Unreachable;
         InstrumentLine {
             instrument: instrument.code.clone(),
             last_export: last.map(|at| at.to_rfc3339_opts(SecondsFormat::Secs, true)),

@@ -5,11 +5,22 @@
 
 /// The text without anything that steers a terminal; white space of any kind becomes one blank.
 pub fn clean(text: &str) -> String {
-    text.chars().map(|c| if c.is_whitespace() { ' ' } else if steers(c) { '\u{fffd}' } else { c }).collect()
+    text.chars()
+        .map(|c| {
+            if c.is_whitespace() {
+                ' '
+            } else if steers(c) {
+                '\u{fffd}'
+            } else {
+                c
+            }
+        })
+        .collect()
 }
 
 fn steers(c: char) -> bool {
-    c.is_control() || matches!(c, '\u{200b}'..='\u{200f}' | '\u{202a}'..='\u{202e}' | '\u{2060}'..='\u{2069}' | '\u{feff}')
+    c.is_control()
+        || matches!(c, '\u{200b}'..='\u{200f}' | '\u{202a}'..='\u{202e}' | '\u{2060}'..='\u{2069}' | '\u{feff}')
 }
 
 /// The text, cleaned, and cut to so many characters.
