@@ -6,8 +6,10 @@
 
 pub mod args;
 pub mod commands;
+pub mod dataset;
 pub mod error;
 pub mod intake;
+pub mod looked;
 pub mod moment;
 pub mod output;
 pub mod report;

@@ -1,6 +1,7 @@
 //! The commands, one module each: options, to records, to (analysis), to report.
 
 mod account;
+mod analyse;
 mod check;
 mod collect;
 mod completeness;
@@ -9,6 +10,8 @@ mod holds;
 mod readings;
 mod roster;
 mod status;
+
+pub use status::InstrumentLine;
 
 use crate::args::Command;
 use crate::error::{Exit, Failure};
@@ -29,6 +32,7 @@ pub fn run(context: &mut Context<'_, '_>, command: &Command) -> Done {
         Command::Account(args) => account::run(context, args),
         Command::Holds(args) => holds::run(context, args),
         Command::Readings(args) => readings::run(context, args),
+        Command::Analyse(args) => analyse::run(context, args),
         _ => Err(Failure::not_yet("this command is not in this build")),
     }
 }
