@@ -224,8 +224,10 @@ CREATE TABLE cut (
 -- A subject's data were removed by this act; only then may rows be blanked and raw copies be replaced.
 CREATE TABLE removal (
     id      INTEGER PRIMARY KEY,
-    act     INTEGER NOT NULL REFERENCES trail (number) DEFERRABLE INITIALLY DEFERRED,
-    subject INTEGER NOT NULL REFERENCES subject (id)
+    act     INTEGER NOT NULL UNIQUE REFERENCES trail (number) DEFERRABLE INITIALLY DEFERRED,
+    subject INTEGER NOT NULL REFERENCES subject (id),
+    rows    INTEGER NOT NULL,            -- how many it blanked
+    digest  BLOB NOT NULL                -- over what is left of them: no other row can be passed off as removed
 ) STRICT;
 CREATE TABLE raw_removal (
     id      INTEGER PRIMARY KEY,
@@ -402,7 +404,7 @@ BEGIN SELECT RAISE(ABORT, 'append-only: a row of raw cannot be deleted'); END;
 CREATE TRIGGER raw_same BEFORE UPDATE ON raw
 BEGIN SELECT RAISE(ABORT, 'append-only: a row of raw cannot be changed'); END;
 CREATE TRIGGER removal_once BEFORE INSERT ON removal
-WHEN EXISTS (SELECT 1 FROM removal WHERE id = NEW.id)
+WHEN EXISTS (SELECT 1 FROM removal WHERE id = NEW.id OR act = NEW.act)
 BEGIN SELECT RAISE(ABORT, 'append-only: a row of removal cannot be replaced'); END;
 CREATE TRIGGER removal_stays BEFORE DELETE ON removal
 BEGIN SELECT RAISE(ABORT, 'append-only: a row of removal cannot be deleted'); END;

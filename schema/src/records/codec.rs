@@ -2,18 +2,34 @@
 //!
 //! Invariant: the form depends on what a row says alone, so that anyone can compute it again with another tool.
 //!
-//! A value is written as one letter for its kind, the number of bytes that follow in decimal, a colon, and the bytes:
-//! `n0:` for NULL; `i` an integer in decimal; `r` a real as the 16 lower-case hexadecimal digits of its IEEE 754 bits;
-//! `t` a text in UTF-8; `b` bytes as they are. A row is its table's name as a `t`, then its values in the order of
-//! [`Table::columns`]; a column that refers to a term or a subject is written as that text, one that refers to a
-//! session as three values: the subject's code, the day's number, the label (empty for none).
+//! **Values.** A value is written as one letter for its kind, the number of bytes that follow in decimal, a colon, and
+//! the bytes: `n0:` for NULL; `i` an integer in decimal; `r` a real as the 16 lower-case hexadecimal digits of its
+//! IEEE 754 bits, highest first; `t` a text in UTF-8; `b` bytes as they are. The kind is the stored value's; a column
+//! that is declared REAL gives reals alone.
 //!
-//! An act's digest is SHA-256 over the digests of its rows, table by table in the order of [`OF_ACT`], by id within a
-//! table. A filing's digest is SHA-256 over four digests, one for each table of [`OF_FILING`] in that order, each of
-//! which is SHA-256 over the digests of the filing's rows in that table by id.
+//! **Rows.** A row is its table's name as a `t`, then its values in the order in which the table declares its columns,
+//! which is that of [`Table::columns`]. `salt`, `removed`, and the `digest` beside them are not among them; the `digest`
+//! of `filing` and of `removal` is. A number that stands for something else is written as what it stands for:
+//! - a term (`instrument`, `measure`, `condition`, `unit` and `operator` of `reading`, `instrument` of `capture`) as its
+//!   text, the term 0 as the empty text;
+//! - a subject (`subject` of `roster_event`, `accounted` and `removal`) as its code;
+//! - a session (`session` of `reading`) as three values: its subject's code, its day as an integer, its label as a term.
 //!
-//! A row's digest is SHA-256 over that form, preceded by the row's 16 random bytes of salt where the table has salt:
-//! the digest of a removed value then cannot be searched for. What a removal blanks keeps its digest in the row.
+//! **Digest of a row.** SHA-256 over that form, preceded by the row's 16 bytes of salt in the tables that have salt
+//! (`roster_event`, `reading`, `hold`, `hold_event`): the digest of a removed value then cannot be searched for. A row
+//! whose `removed` is not NULL has lost values and salt; its digest is the one in its column `digest`.
+//!
+//! **Digest of an act.** SHA-256 over the digests of the rows whose `act` is the act's number, table by table in the
+//! order of [`OF_ACT`] (plan_version, roster_event, capture, account, filing, reading_event, hold_event, accounted, cut,
+//! removal, raw_removal), by id within a table.
+//!
+//! **Digest of a filing.** SHA-256 over four digests, one for each table of [`OF_FILING`] in that order (reading, hold,
+//! sighting, gone), each of which is SHA-256 over the digests of the rows in that table whose `filing` is the filing's
+//! id, by id. Rows of a filing that has no row in `filing` are not covered yet.
+//!
+//! **Digest of a removal.** SHA-256 over one digest for each row whose `removed` is the removal's act, table by table in
+//! the order roster_event, reading, hold, hold_event, by id within a table: that of the row as it stands now, its column
+//! `digest` in the place of the salt.
 
 use rusqlite::types::ValueRef;
 use sha2::{Digest, Sha256};
@@ -64,7 +80,7 @@ pub const OF_ACT: &[Table] = &[
     table!("hold_event", true, "id" Plain, "act" Plain, "hold" Plain, "state" Plain, "answer" Plain),
     table!("accounted", false, "id" Plain, "act" Plain, "subject" Subject, "visit" Plain, "measure" Plain),
     table!("cut", false, "id" Plain, "act" Plain, "name" Plain, "trail" Plain),
-    table!("removal", false, "id" Plain, "act" Plain, "subject" Subject),
+    table!("removal", false, "id" Plain, "act" Plain, "subject" Subject, "rows" Plain, "digest" Plain),
     table!("raw_removal", false, "id" Plain, "act" Plain, "sha256" Plain, "instead" Plain),
 ];
 
@@ -102,7 +118,9 @@ impl Canon {
 
     fn put(&mut self, kind: u8, bytes: &[u8]) {
         self.scratch.push(kind);
-        push_decimal(&mut self.scratch, bytes.len() as i64);
+        let mut digits = [0u8; 20];
+        let from = decimal(&mut digits, bytes.len() as i64);
+        self.scratch.extend_from_slice(&digits[from..]);
         self.scratch.push(b':');
         self.scratch.extend_from_slice(bytes);
     }
@@ -114,9 +132,9 @@ impl Canon {
 
     /// An integer.
     pub fn integer(&mut self, value: i64) {
-        let mut digits = Vec::with_capacity(20);
-        push_decimal(&mut digits, value);
-        self.put(b'i', &digits);
+        let mut digits = [0u8; 20];
+        let from = decimal(&mut digits, value);
+        self.put(b'i', &digits[from..]);
     }
 
     /// A real.
@@ -181,8 +199,8 @@ impl Canon {
     }
 }
 
-fn push_decimal(out: &mut Vec<u8>, value: i64) {
-    let mut digits = [0u8; 20];
+/// Writes a number's digits at the end of `digits`, which the longest fits; gives where they begin.
+fn decimal(digits: &mut [u8; 20], value: i64) -> usize {
     let mut at = digits.len();
     let mut rest = value.unsigned_abs();
     loop {
@@ -194,9 +212,10 @@ fn push_decimal(out: &mut Vec<u8>, value: i64) {
         }
     }
     if value < 0 {
-        out.push(b'-');
+        at -= 1;
+        digits[at] = b'-';
     }
-    out.extend_from_slice(&digits[at..]);
+    at
 }
 
 /// SHA-256 of bytes.
@@ -212,6 +231,15 @@ pub fn hex(bytes: &[u8]) -> String {
 #[cfg(test)]
 mod tests {
     use super::*;
+
+    #[test]
+    fn the_longest_numbers_fit() {
+        for value in [i64::MIN, i64::MAX, 0, -1, 10, -10] {
+            let mut digits = [0u8; 20];
+            let from = decimal(&mut digits, value);
+            assert_eq!(digits[from..], *value.to_string().as_bytes());
+        }
+    }
 
     #[test]
     fn the_form_is_the_documented_one() {

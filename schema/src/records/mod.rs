@@ -9,6 +9,7 @@ pub mod exports;
 pub mod intake;
 pub mod open;
 pub mod raw;
+pub mod removal;
 pub mod texts;
 pub mod trail;
 pub mod verify;

@@ -71,9 +71,21 @@ impl Records {
         let sha256: Hash = hasher.finalize().into();
         let stored_sha256: Hash = inner.hasher.finalize().into();
         let name = self.raw_file(&sha256);
-        // The same bytes may be there from an earlier try; writing them again is harmless.
-        inner.file.finish(&name).map_err(target)?;
+        // A copy left by an earlier try may be written again; one that a row knows stays, since another version of the
+        // compression would write other bytes than those whose hash stands in the row.
+        if !self.has_raw_file(&sha256, &name)? {
+            inner.file.finish(&name).map_err(target)?;
+        }
         Ok(Kept { sha256, size, stored_sha256, stored: None, bytes: None })
+    }
+
+    fn has_raw_file(&self, sha256: &Hash, name: &Path) -> Result<bool> {
+        let known = self
+            .conn
+            .prepare_cached("SELECT 1 FROM raw WHERE sha256 = ?1 AND stored IS NULL")
+            .and_then(|mut statement| statement.exists([sha256.as_slice()]))
+            .map_err(self.failed("looking for a raw copy"))?;
+        Ok(known && self.world.stat(name).is_ok())
     }
 
     /// Where a large copy lies.

@@ -4,6 +4,7 @@
 //! must be followed by [`Texts::forget`].
 
 use std::collections::HashMap;
+use std::collections::hash_map::Entry;
 
 use rusqlite::{Connection, OptionalExtension, params};
 
@@ -74,11 +75,14 @@ impl Texts {
         if id == 0 {
             return Ok("");
         }
-        if !self.term_texts.contains_key(&id) {
-            let text: String = conn.query_row("SELECT text FROM term WHERE id = ?1", [id], |row| row.get(0))?;
-            self.term_texts.insert(id, text);
+        match self.term_texts.entry(id) {
+            Entry::Occupied(known) => Ok(known.into_mut()),
+            Entry::Vacant(place) => {
+                let sql = "SELECT text FROM term WHERE id = ?1";
+                let text: String = conn.prepare_cached(sql)?.query_row([id], |row| row.get(0))?;
+                Ok(place.insert(text))
+            }
         }
-        Ok(self.term_texts.get(&id).map_or("", String::as_str))
     }
 
     /// The number of a subject, made when new.
@@ -95,11 +99,14 @@ impl Texts {
 
     /// A subject's code.
     pub fn subject_code(&mut self, conn: &Connection, id: SubjectId) -> rusqlite::Result<&str> {
-        if !self.subject_codes.contains_key(&id) {
-            let code: String = conn.query_row("SELECT code FROM subject WHERE id = ?1", [id], |row| row.get(0))?;
-            self.subject_codes.insert(id, code);
+        match self.subject_codes.entry(id) {
+            Entry::Occupied(known) => Ok(known.into_mut()),
+            Entry::Vacant(place) => {
+                let sql = "SELECT code FROM subject WHERE id = ?1";
+                let code: String = conn.prepare_cached(sql)?.query_row([id], |row| row.get(0))?;
+                Ok(place.insert(code))
+            }
         }
-        Ok(self.subject_codes.get(&id).map_or("", String::as_str))
     }
 
     /// The number of a session, made when new.

@@ -339,6 +339,7 @@ pub struct Filing {
     readings: Run,
     holds: i64,
     streams: [Sha256; 4],
+    canon: Canon,
     staged: bool,
 }
 
@@ -451,6 +452,7 @@ impl Records {
             readings: Run::default(),
             holds: 0,
             streams: [Sha256::new(), Sha256::new(), Sha256::new(), Sha256::new()],
+            canon: Canon::default(),
             staged: false,
         })
     }
@@ -501,12 +503,11 @@ impl Records {
 
     /// Adds a reading to a filing.
     pub fn add_reading(&mut self, filing: &mut Filing, new: &NewReading<'_>) -> Result<i64> {
-        let failed = self.failed("filing a reading");
         let stored = NewReading { exported: new.exported.map(stored_real), number: stored_real(new.number), ..*new };
         if stored.number.is_nan() || stored.exported.is_some_and(f64::is_nan) {
             return Err(RecordsError::Refused(format!("\"{}\" is no number and cannot be filed as one", new.text)));
         }
-        self.write_reading(filing, &stored).map_err(failed)
+        self.write_reading(filing, &stored).map_err(|error| self.failed("filing a reading")(error))
     }
 
     fn write_reading(&mut self, filing: &mut Filing, new: &NewReading<'_>) -> rusqlite::Result<i64> {
@@ -521,7 +522,7 @@ impl Records {
             *id = texts.term(conn, text)?;
         }
         let salt = self.new_salt();
-        let digest = reading_digest(&salt, id, filing.id, filing.capture, new);
+        let digest = reading_digest(&mut filing.canon, &salt, (id, filing.id, filing.capture), new);
         self.conn
             .prepare_cached(
                 "INSERT INTO reading (id, filing, capture, line, byte_from, byte_to, cell, instrument, measure, condition,
@@ -614,8 +615,12 @@ fn stored_real(value: f64) -> f64 {
 }
 
 /// The digest of a reading in the canonical form; the columns stand in the order of [`super::codec::OF_FILING`].
-fn reading_digest(salt: &[u8; 16], id: i64, filing: i64, capture: Option<i64>, new: &NewReading<'_>) -> Hash {
-    let mut canon = Canon::default();
+fn reading_digest(
+    canon: &mut Canon,
+    salt: &[u8; 16],
+    (id, filing, capture): (i64, i64, Option<i64>),
+    new: &NewReading<'_>,
+) -> Hash {
     canon.start(salt);
     canon.text("reading");
     canon.integer(id);

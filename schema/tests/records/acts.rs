@@ -140,3 +140,23 @@ fn a_writer_that_holds_the_lock_makes_another_wait_and_give_up() {
     one.commit().unwrap();
     other.act(ActKind::Start, &doer(), |_| Ok(())).unwrap();
 }
+
+#[test]
+fn a_row_is_removed_once_and_only_where_it_holds_values() {
+    let study = super::study::populated();
+    let mut records = study.records();
+    let mut remove = |rows: &[(&str, i64)]| records.act(ActKind::Roster, &doer(), |act| act.remove("S-02", rows));
+    for (rows, wrong) in [
+        ([("reading", 1), ("reading", 2)], "row 2 of reading is removed already"),
+        ([("reading", 1), ("reading", 900)], "there is no row 900 of reading to be removed"),
+        ([("reading", 1), ("trail", 1)], "trail holds nothing that can be removed"),
+    ] {
+        assert_eq!(remove(rows.as_slice()).unwrap_err().to_string(), wrong);
+    }
+    let conn = study.plain();
+    assert_eq!(number(&conn, "SELECT count(*) FROM reading WHERE removed IS NOT NULL"), 1);
+    remove(&[("reading", 1), ("hold", 1), ("reading", 1)]).unwrap();
+    remove(&[]).unwrap();
+    assert_eq!(number(&conn, "SELECT count(*) FROM reading WHERE removed IS NOT NULL AND text IS NULL"), 2);
+    assert_eq!(records.verify(&mut |_, _| {}).unwrap().faults, []);
+}

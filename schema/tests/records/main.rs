@@ -3,6 +3,9 @@
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic, reason = "a test says what is wrong by failing")]
 
 mod acts;
+mod append_only;
 mod opening;
+mod other_tool;
 mod speed;
 mod study;
+mod tampering;

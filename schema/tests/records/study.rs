@@ -82,25 +82,6 @@ impl Study {
         }
         conn
     }
-
-    /// A copy of the study's folder; nothing may be writing.
-    pub fn copy(&self) -> Self {
-        let copy = Self { folder: tempfile::tempdir().unwrap(), world: self.world.clone() };
-        copy_folder(self.path(), copy.path());
-        copy
-    }
-}
-
-fn copy_folder(from: &Path, to: &Path) {
-    std::fs::create_dir_all(to).unwrap();
-    for entry in std::fs::read_dir(from).unwrap() {
-        let entry = entry.unwrap();
-        let target = to.join(entry.file_name());
-        match entry.file_type().unwrap().is_dir() {
-            true => copy_folder(&entry.path(), &target),
-            false => std::fs::copy(entry.path(), target).map(|_| ()).unwrap(),
-        }
-    }
 }
 
 /// The first column of a query.
@@ -230,11 +211,11 @@ pub fn digest_of(conn: &Connection, name: &str, id: i64) -> Vec<u8> {
         let sql = match kind {
             Kind::Plain => format!("SELECT \"{column}\" FROM {name} WHERE id = ?1"),
             Kind::Term => format!(
-                "SELECT coalesce(text, '') FROM {name} t LEFT JOIN term ON term.id = t.{column} WHERE t.id = ?1"
+                "SELECT coalesce(term.text, '') FROM {name} t LEFT JOIN term ON term.id = t.{column} WHERE t.id = ?1"
             ),
             Kind::Subject => format!("SELECT code FROM {name} t JOIN subject s ON s.id = t.{column} WHERE t.id = ?1"),
             Kind::Session => format!(
-                "SELECT code, day, coalesce(text, '') FROM {name} t JOIN session s ON s.id = t.{column}
+                "SELECT code, day, coalesce(term.text, '') FROM {name} t JOIN session s ON s.id = t.{column}
                  JOIN subject ON subject.id = s.subject LEFT JOIN term ON term.id = s.label WHERE t.id = ?1"
             ),
         };
@@ -362,26 +343,14 @@ fn staged(records: &mut Records) {
 fn remove(study: &Study, records: &mut Records) {
     let kept = records.keep_small(b"first export, blanked".to_vec()).unwrap();
     let old = records.keep_small(b"first export".to_vec()).unwrap().sha256;
-    let act = records
+    records
         .act(ActKind::Roster, &doer().because(Some("withdrew consent")), |act| {
             act.add("roster_event", &[Cell::Subject("S-02"), Cell::Text("data"), Cell::Text("removed")])?;
-            act.add("removal", &[Cell::Subject("S-02")])?;
+            act.remove("S-02", &[("reading", 2), ("hold_event", 1), ("roster_event", 3), ("hold", 2)])?;
             act.add_raw(&kept)?;
-            act.add("raw_removal", &[Cell::Bytes(&old), Cell::Bytes(&kept.sha256)])?;
-            Ok(act.number())
+            act.add("raw_removal", &[Cell::Bytes(&old), Cell::Bytes(&kept.sha256)])
         })
         .unwrap();
     let conn = study.plain();
-    for (table, id, blanked) in [
-        ("roster_event", 3, "value"),
-        ("reading", 2, "text, exported, number, mark, byte_from, byte_to"),
-        ("hold", 2, "row, detail, byte_from, byte_to"),
-        ("hold_event", 1, "answer"),
-    ] {
-        let digest = digest_of(&conn, table, id);
-        let blanked: String = blanked.split(", ").map(|column| format!("{column} = NULL, ")).collect();
-        let sql = format!("UPDATE {table} SET {blanked} salt = NULL, digest = ?1, removed = ?2 WHERE id = ?3");
-        conn.execute(&sql, rusqlite::params![digest, act, id]).unwrap();
-    }
     conn.execute("DELETE FROM raw WHERE sha256 = ?1", [old.as_slice()]).unwrap();
 }
