@@ -5,6 +5,7 @@
 //! [`intake`] alone. Every failure is one [`error::Failure`].
 
 pub mod args;
+pub mod by_hand;
 pub mod commands;
 pub mod dataset;
 pub mod error;

@@ -118,7 +118,8 @@ fn planned(now: &View<'_>, analysis: &Analysis) -> Result<bool, Failure> {
     let mut version = 1;
     let mut same = false;
     while let Some(found) = now.plan_version(version)?.filter(|found| found.act < first) {
-        same = plan::parse(&found.files).is_ok_and(|(plan, _)| plan.analysis(&analysis.code).is_some_and(|it| alike(it, analysis)));
+        same = plan::parse(&found.files)
+            .is_ok_and(|(plan, _)| plan.analysis(&analysis.code).is_some_and(|it| alike(it, analysis)));
         version += 1;
     }
     Ok(same)

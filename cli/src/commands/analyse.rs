@@ -9,9 +9,7 @@ use revisant_analysis::anova::repeated_measures;
 use revisant_analysis::contrasts::{Family, Multiplicity as Adjust};
 use revisant_analysis::design::OneWithin;
 use revisant_analysis::{Confidence, Settings};
-use revisant_schema::plan::{
-    Analysis, ContrastKind, Instrument, MeasureIx, MeasureRule, Method, Multiplicity, Plan,
-};
+use revisant_schema::plan::{Analysis, ContrastKind, Instrument, MeasureIx, MeasureRule, Method, Multiplicity, Plan};
 use revisant_schema::records::view::PlanVersion;
 use revisant_schema::records::{ActKind, Records, View};
 use serde_json::json;
@@ -93,7 +91,9 @@ fn same_places(then: &Plan, now: &Plan) -> bool {
 
 /// What this version cannot do yet, in one plain sentence.
 fn refuse(plan: &Plan, analysis: &Analysis) -> Result<(), Failure> {
-    let later = |what: &str| Err(Failure::not_yet(format!("{what}, which comes with a later version")).at(analysis.code.clone()));
+    let later = |what: &str| {
+        Err(Failure::not_yet(format!("{what}, which comes with a later version")).at(analysis.code.clone()))
+    };
     match analysis.method {
         Method::RepeatedMeasures => {}
         Method::Friedman | Method::Agreement => {
@@ -102,7 +102,9 @@ fn refuse(plan: &Plan, analysis: &Analysis) -> Result<(), Failure> {
         Method::MixedModel => return later(&format!("{} is a mixed model", analysis.code)),
     }
     if plan.interim.is_some() {
-        return later("the plan names interim looks, and a result outside them would be a look of its own; it needs `revisant look`");
+        return later(
+            "the plan names interim looks, and a result outside them would be a look of its own; it needs `revisant look`",
+        );
     }
     if !analysis.between.is_empty() {
         return later(&format!("{} compares groups of subjects", analysis.code));
@@ -223,7 +225,7 @@ fn remember(context: &Context<'_, '_>, records: &mut Records, analysed: &Analyse
 
 fn draw(file: &Path, svg: &str) -> Result<(), Failure> {
     let shown = file.display().to_string();
-    std::fs::write(file, svg)
-        .map_err(|error| Failure::new("file", format!("the plot {shown} cannot be written ({error})")).at(shown.clone()))
+    std::fs::write(file, svg).map_err(|error| {
+        Failure::new("file", format!("the plot {shown} cannot be written ({error})")).at(shown.clone())
+    })
 }
-

@@ -1,15 +1,20 @@
 //! The commands, one module each: options, to records, to (analysis), to report.
 
 mod account;
+mod amend;
 mod analyse;
 mod check;
 mod collect;
 mod completeness;
+mod cut;
 mod due;
+mod enter;
 mod holds;
 mod readings;
 mod roster;
 mod status;
+mod strike;
+mod trail;
 
 pub use status::InstrumentLine;
 
@@ -32,6 +37,12 @@ pub fn run(context: &mut Context<'_, '_>, command: &Command) -> Done {
         Command::Account(args) => account::run(context, args),
         Command::Holds(args) => holds::run(context, args),
         Command::Readings(args) => readings::run(context, args),
+        Command::Enter(args) => enter::run(context, args),
+        Command::Amend(args) => amend::run(context, args),
+        Command::Strike(args) => strike::strike(context, args),
+        Command::Restore(args) => strike::restore(context, args),
+        Command::Cut(args) => cut::run(context, args),
+        Command::Trail(args) => trail::run(context, args),
         Command::Analyse(args) => analyse::run(context, args),
         _ => Err(Failure::not_yet("this command is not in this build")),
     }

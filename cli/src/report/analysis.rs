@@ -133,9 +133,7 @@ impl Analysed<'_> {
             ("residual", parts.residual),
             ("total", parts.total),
         ];
-        let line = |(source, line): (&str, revisant_analysis::anova::Line)| {
-            json!({ "source": source, "ss": line.ss, "df": line.df, "ms": line.ms })
-        };
+        let line = |(source, line): (&str, revisant_analysis::anova::Line)| json!({ "source": source, "ss": line.ss, "df": line.df, "ms": line.ms });
         lines.into_iter().map(line).collect()
     }
 
@@ -496,18 +494,22 @@ impl Analysed<'_> {
     /// The state of the data, in one line.
     fn state(&self) -> String {
         let care = &self.data.care;
-        let quiet: Vec<String> = self.instruments.iter().filter(|line| line.silent).map(|it| it.instrument.clone()).collect();
+        let quiet: Vec<String> =
+            self.instruments.iter().filter(|line| line.silent).map(|it| it.instrument.clone()).collect();
         let lost: Vec<String> =
             self.instruments.iter().filter(|line| line.unreachable).map(|it| it.instrument.clone()).collect();
         let parts = [
             (self.open_holds > 0).then(|| count(self.open_holds as u64, "open hold")),
             (!quiet.is_empty()).then(|| format!("{} quiet", list(&quiet))),
             (!lost.is_empty()).then(|| format!("{} unreachable", list(&lost))),
-            (!care.spread.is_empty()).then(|| format!("{} spread over several sessions", count(care.spread.len() as u64, "visit"))),
+            (!care.spread.is_empty())
+                .then(|| format!("{} spread over several sessions", count(care.spread.len() as u64, "visit"))),
             (!care.off_window.is_empty()).then(|| self.off_window()),
-            (!care.fewer_replicates.is_empty())
-                .then(|| format!("{} with fewer replicates than planned", count(care.fewer_replicates.len() as u64, "cell"))),
-            (!care.accounted.is_empty()).then(|| format!("{} accounted for", count(care.accounted.len() as u64, "visit"))),
+            (!care.fewer_replicates.is_empty()).then(|| {
+                format!("{} with fewer replicates than planned", count(care.fewer_replicates.len() as u64, "cell"))
+            }),
+            (!care.accounted.is_empty())
+                .then(|| format!("{} accounted for", count(care.accounted.len() as u64, "visit"))),
         ];
         let parts: Vec<String> = parts.into_iter().flatten().collect();
         match parts.is_empty() {

@@ -50,7 +50,11 @@ pub fn df(value: f64) -> String {
 /// A sum of squares or a statistic: four digits, without powers of ten where that can be read.
 pub fn statistic(value: f64) -> String {
     let size = value.abs();
-    if size != 0.0 && !(1e-4..1e9).contains(&size) { format!("{value:.3e}") } else { fixed(value, decimals_for(size) + 1) }
+    if size != 0.0 && !(1e-4..1e9).contains(&size) {
+        format!("{value:.3e}")
+    } else {
+        fixed(value, decimals_for(size) + 1)
+    }
 }
 
 /// A statistic or a dash.
@@ -93,12 +97,18 @@ mod tests {
 
     #[test]
     fn numbers_in_the_trades_style() {
-        assert_eq!((p_said(0.0341), p_said(1e-9), p_said(1.0)), ("p = .034".into(), "p < .001".into(), "p > .999".into()));
+        assert_eq!(
+            (p_said(0.0341), p_said(1e-9), p_said(1.0)),
+            ("p = .034".into(), "p < .001".into(), "p > .999".into())
+        );
         assert_eq!((share(0.294, 2), share(1.0, 2), share(-0.02, 2)), (".29".into(), "1.00".into(), "−.02".into()));
         assert_eq!((df(2.0), df(48.27)), ("2".into(), "48.3".into()));
         assert_eq!((fixed(-0.001, 2), fixed(-1.25, 1)), ("0.00".into(), "−1.2".into()));
         assert_eq!((decimals_for(6.2), decimals_for(0.0123), decimals_for(4321.0), decimals_for(0.0)), (2, 4, 0, 2));
-        assert_eq!((statistic(9.4123), statistic(0.0), statistic(1e-12)), ("9.412".into(), "0.000".into(), "1.000e-12".into()));
+        assert_eq!(
+            (statistic(9.4123), statistic(0.0), statistic(1e-12)),
+            ("9.412".into(), "0.000".into(), "1.000e-12".into())
+        );
         assert_eq!(plain_or_dash(None), "–");
     }
 }

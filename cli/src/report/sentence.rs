@@ -71,7 +71,8 @@ mod tests {
 
     #[test]
     fn what_is_not_shown_is_not_called_equal() {
-        let rows = [[Some(1.0), Some(2.0), Some(1.5)], [Some(2.0), Some(1.0), Some(1.6)], [Some(1.5), Some(1.4), Some(1.6)]];
+        let rows =
+            [[Some(1.0), Some(2.0), Some(1.5)], [Some(2.0), Some(1.0), Some(1.6)], [Some(1.5), Some(1.4), Some(1.6)]];
         assert!(said(&rows).starts_with("No change of Grip strength over visits was shown, F("));
     }
 
