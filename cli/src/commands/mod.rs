@@ -7,9 +7,12 @@ mod check;
 mod collect;
 mod completeness;
 mod cut;
+mod demo;
 mod due;
 mod enter;
 mod holds;
+mod new;
+mod provenance;
 mod readings;
 mod roster;
 mod status;
@@ -28,6 +31,7 @@ pub type Done = Result<Exit, Failure>;
 /// Runs one command.
 pub fn run(context: &mut Context<'_, '_>, command: &Command) -> Done {
     match command {
+        Command::New(args) => new::run(context, args),
         Command::Check(args) => check::run(context, args),
         Command::Roster(args) => roster::run(context, args),
         Command::Collect(args) => collect::run(context, args),
@@ -44,6 +48,7 @@ pub fn run(context: &mut Context<'_, '_>, command: &Command) -> Done {
         Command::Cut(args) => cut::run(context, args),
         Command::Trail(args) => trail::run(context, args),
         Command::Analyse(args) => analyse::run(context, args),
-        _ => Err(Failure::not_yet("this command is not in this build")),
+        Command::Provenance(args) => provenance::run(context, args),
+        Command::Demo(args) => demo::run(context, args),
     }
 }
