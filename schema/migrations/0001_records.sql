@@ -140,7 +140,7 @@ CREATE TABLE reading (
     digest     BLOB,                     -- only once removed
     removed    INTEGER
 ) STRICT;
-CREATE INDEX reading_identity ON reading (identity) WHERE identity IS NOT NULL;
+CREATE INDEX reading_identity ON reading (identity);
 CREATE INDEX reading_cell ON reading (session, measure, condition, replicate);
 CREATE INDEX reading_supersedes ON reading (supersedes) WHERE supersedes IS NOT NULL;
 
