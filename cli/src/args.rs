@@ -24,13 +24,13 @@ Exit status: 0 done, 1 failed, 2 usage error or unsound plan, 3 a check found so
 With --json a failure is {\"error\": {\"kind\", \"message\", \"where\"}} on standard error.")]
 pub struct Args {
     /// The study's folder, which holds study.toml
-    #[arg(long, value_name = "DIR", global = true, default_value = ".")]
+    #[arg(long, value_name = "DIR", global = true, display_order = 901, default_value = ".")]
     pub study: PathBuf,
     /// Print the result as JSON
-    #[arg(long, global = true)]
+    #[arg(long, global = true, display_order = 902)]
     pub json: bool,
     /// Print nothing but what was asked for
-    #[arg(long, global = true)]
+    #[arg(long, global = true, display_order = 903)]
     pub quiet: bool,
     /// What to do.
     #[command(subcommand)]
@@ -122,12 +122,15 @@ Example:
 JSON: [{\"reading\", \"subject\", \"visit\", \"session\", \"measure\", \"value\", \"unit\", \"state\", …}]")]
     Readings(Readings),
     /// Enter a reading by hand, when an instrument cannot export it
-    #[command(after_help = "\
+    #[command(
+        override_usage = "revisant enter --subject <CODE> --measure <CODE> --value <NUMBER>\n                      --taken-at <MOMENT> --why <TEXT> [OPTIONS]",
+        after_help = "\
 Example:
   revisant enter --subject QM-014 --measure grip --condition hand=left --replicate 1 \\
     --value 31.5 --taken-at 2026-03-31T09:40:00+01:00 --why \"printer tape; export failed\"
 
-JSON: {\"trail\", \"reading\"}")]
+JSON: {\"trail\", \"reading\"}"
+    )]
     Enter(Enter),
     /// Correct whose a reading or a session is, its visit or its value; the original stays linked
     #[command(
@@ -417,14 +420,17 @@ JSON: the hold, with \"instrument\", \"column\", \"wrong\", \"meaning\", \"answe
         hold: i64,
     },
     /// Answer one hold, or all like it in the same export
-    #[command(after_help = "\
+    #[command(
+        override_usage = "revisant holds decide [OPTIONS] <ANSWER> <HOLD> --why <TEXT>",
+        after_help = "\
 Example:
   revisant holds decide 12 --subject QM-014 --why \"code misread; see visit log\"
   revisant holds decide 12 --keep-old --all-like-it       say how many are like it
   revisant holds decide 12 --keep-old --all-like-it 31 --why \"test export of the maker\"
 
 Which answers fit depends on the reason; `revisant holds show N` lists them.
-JSON: {\"trail\", \"holds\", \"filed\", \"held\"}")]
+JSON: {\"trail\", \"holds\", \"filed\", \"held\"}"
+    )]
     Decide(Box<Decide>),
     /// Leave out what is held, for good
     #[command(after_help = "\
