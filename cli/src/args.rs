@@ -43,8 +43,9 @@ pub enum Command {
     /// Write a plan, study.toml, to begin with
     #[command(after_help = "\
 Example:
-  revisant new --study grip --code GR-1 --title \"Grip over 12 weeks\" --zone Europe/London \\
-    --measure grip:kg --visit baseline:0 --visit week-4:28 --instrument dyn-1:exports/dyn-1
+  revisant new --study grip --code GR-1 --title \"Grip\" --zone Europe/London \\
+    --measure grip:kg --visit baseline:0 --visit week-4:28 \\
+    --instrument dyn-1:exports/dyn-1
 
 On a terminal, what is not given is asked for. The plan is never overwritten.
 JSON: {\"plan\": path, \"folders\": [path]}")]
@@ -126,8 +127,8 @@ JSON: [{\"reading\", \"subject\", \"visit\", \"session\", \"measure\", \"value\"
         override_usage = "revisant enter --subject <CODE> --measure <CODE> --value <NUMBER>\n                      --taken-at <MOMENT> --why <TEXT> [OPTIONS]",
         after_help = "\
 Example:
-  revisant enter --subject QM-014 --measure grip --condition hand=left --replicate 1 \\
-    --value 31.5 --taken-at 2026-03-31T09:40:00+01:00 --why \"printer tape; export failed\"
+  revisant enter --subject QM-014 --measure grip --condition hand=left \\
+    --value 31.5 --taken-at 2026-03-31T09:40:00+01:00 --why \"export failed\"
 
 JSON: {\"trail\", \"reading\"}"
     )]
@@ -137,7 +138,7 @@ JSON: {\"trail\", \"reading\"}"
         subcommand,
         after_help = "\
 Example:
-  revisant amend reading 812 --value 31.5 --why \"misread scale; see sheet of 31 March\""
+  revisant amend reading 812 --value 31.5 --why \"misread; see sheet\""
     )]
     Amend(Amend),
     /// Take readings out of use; they stay legible
@@ -261,7 +262,7 @@ JSON: {\"trail\", \"subjects\", \"new\", \"changes\": [{\"subject\", \"field\", 
     /// Add one subject
     #[command(after_help = "\
 Example:
-  revisant roster add QM-049 --enrolled 2026-03-31 --set sex=F --set age=71 --why \"enrolled today\"
+  revisant roster add QM-049 --enrolled 2026-03-31 --set sex=F --why \"enrolled today\"
 
 JSON: as `roster import`")]
     Add {
@@ -425,8 +426,8 @@ JSON: the hold, with \"instrument\", \"column\", \"wrong\", \"meaning\", \"answe
         after_help = "\
 Example:
   revisant holds decide 12 --subject QM-014 --why \"code misread; see visit log\"
-  revisant holds decide 12 --keep-old --all-like-it       say how many are like it
-  revisant holds decide 12 --keep-old --all-like-it 31 --why \"test export of the maker\"
+  revisant holds decide 12 --keep-old --all-like-it      say how many are alike
+  revisant holds decide 12 --keep-old --all-like-it 31 --why \"test export\"
 
 Which answers fit depends on the reason; `revisant holds show N` lists them.
 JSON: {\"trail\", \"holds\", \"filed\", \"held\"}"
@@ -566,7 +567,7 @@ pub enum Amend {
     /// Correct one reading
     #[command(after_help = "\
 Example:
-  revisant amend reading 812 --subject QM-015 --why \"bands swapped; see visit log\"
+  revisant amend reading 812 --subject QM-015 --why \"bands swapped; see log\"
 
 JSON: {\"trail\", \"readings\": [{\"reading\", \"supersedes\"}]}")]
     Reading {
@@ -594,7 +595,7 @@ JSON: {\"trail\", \"readings\": [{\"reading\", \"supersedes\"}]}")]
     /// Correct all current readings of one session
     #[command(after_help = "\
 Example:
-  revisant amend session 40 --swap-with 41 --why \"the two subjects' chairs were changed over\"
+  revisant amend session 40 --swap-with 41 --why \"the subjects changed chairs\"
 
 JSON: {\"trail\", \"readings\": [{\"reading\", \"supersedes\"}]}")]
     Session {
