@@ -262,7 +262,7 @@ JSON: {\"trail\", \"subjects\", \"new\", \"changes\": [{\"subject\", \"field\", 
     /// Add one subject
     #[command(after_help = "\
 Example:
-  revisant roster add QM-049 --enrolled 2026-03-31 --set sex=F --why \"enrolled today\"
+  revisant roster add QM-049 --enrolled 2026-03-31 --set sex=F --why \"enrolled\"
 
 JSON: as `roster import`")]
     Add {
