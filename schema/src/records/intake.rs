@@ -247,27 +247,21 @@ impl Records {
 
     /// The newest act, of those kinds that change how rows are placed.
     pub fn placing_head(&self) -> Result<ActNumber> {
-        let kinds = [
-            ActKind::Plan,
-            ActKind::Roster,
-            ActKind::Decide,
-            ActKind::Dismiss,
-            ActKind::Amend,
-            ActKind::Strike,
-            ActKind::Enter,
-        ]
-        .map(ActKind::code);
-        let marks = kinds.map(|kind| format!("'{kind}'")).join(", ");
-        self.conn
-            .prepare_cached(&format!("SELECT coalesce(max(number), 0) FROM trail WHERE act IN ({marks})"))
-            .and_then(|mut statement| statement.query_row([], |row| row.get(0)))
-            .map_err(self.failed("reading the trail"))
+        use ActKind::{Amend, Decide, Dismiss, Enter, Plan, Restore, Roster, Strike};
+        self.newest_of(&[Plan, Roster, Decide, Dismiss, Amend, Strike, Restore, Enter])
     }
 
     /// The newest act that changed the plan or the roster.
     pub fn rules_head(&self) -> Result<ActNumber> {
+        self.newest_of(&[ActKind::Plan, ActKind::Roster])
+    }
+
+    fn newest_of(&self, kinds: &[ActKind]) -> Result<ActNumber> {
+        // One look into the index for each kind; a list of kinds would have SQLite read all of their acts.
+        let each = |kind: &ActKind| format!("(SELECT max(number) FROM trail WHERE act = '{}')", kind.code());
+        let newest: Vec<String> = kinds.iter().map(|kind| format!("coalesce({}, 0)", each(kind))).collect();
         self.conn
-            .prepare_cached("SELECT coalesce(max(number), 0) FROM trail WHERE act IN ('plan', 'roster')")
+            .prepare_cached(&format!("SELECT max({})", newest.join(", ")))
             .and_then(|mut statement| statement.query_row([], |row| row.get(0)))
             .map_err(self.failed("reading the trail"))
     }
