@@ -4,17 +4,20 @@
 
 use std::path::Path;
 
-use revisant_daemon::intake::collect::{IntakeLock, Progress, Report, collect as collect_once};
-use revisant_daemon::intake::error::IntakeError;
-use revisant_daemon::intake::{plan as plan_door, replace};
+use revisant_daemon::intake::collect::{self, IntakeLock, Progress, Report};
+use revisant_daemon::intake::error::{IntakeError, WouldChange};
+use revisant_daemon::intake::rules::Rules;
+use revisant_daemon::intake::{plan as force, replace};
 use revisant_schema::hold::Answer;
-use revisant_schema::plan::{self, Loaded, Plan};
+use revisant_schema::plan::{Loaded, Plan};
 use revisant_schema::records::exports::ExportState;
 use revisant_schema::records::view::HoldRow;
 use revisant_schema::records::{Doer, Records};
 use serde::Serialize;
+use serde_json::{Map, Value as Json, json};
 
-use crate::error::Failure;
+use crate::error::{Exit, Failure};
+use crate::study::PROGRAM;
 
 /// The plan that is in force now.
 pub struct PlanInForce {
@@ -24,47 +27,59 @@ pub struct PlanInForce {
     pub plan: Plan,
 }
 
-impl From<IntakeError> for Failure {
-    fn from(error: IntakeError) -> Self {
-        match error {
-            IntakeError::Plan(error) => error.into(),
-            IntakeError::Records(error) => error.into(),
-            other => Self::new(other.kind(), other.to_string()),
-        }
-    }
-}
-
 /// Reads the plan of a study's folder.
-pub fn load(study: &Path) -> Result<Loaded, Failure> {
-    Ok(plan::load(study, &|path| std::fs::read_to_string(path))?)
+pub fn load(world: &dyn revisant_schema::world::World, study: &Path) -> Result<Loaded, Failure> {
+    Ok(force::load_plan(world, study)?)
 }
 
 /// Brings the plan of the study's folder into force, if it is not.
 pub fn bring_plan_into_force(records: &mut Records, study: &Path, doer: &Doer) -> Result<PlanInForce, Failure> {
-    let rules = plan_door::bring_into_force(records, study, doer, false)?;
-    Ok(PlanInForce { version: rules.version, plan: rules.plan })
+    let Rules { version, plan, .. } = force::bring_into_force(records, study, doer, false)?;
+    Ok(PlanInForce { version, plan })
 }
 
 /// What a changed plan would change in the records, in words; empty when nothing.
-pub fn would_change(records: &Records, study: &Path) -> Result<Vec<String>, Failure> {
-    let loaded = load(study)?;
-    let rules = plan_door::in_force(records)?;
-    let changes = plan_door::would_change(records, &rules, &loaded.plan)?;
-    Ok(changes
-        .into_iter()
-        .map(|change| format!("{}: {} lines, such as {}", change.export, change.lines, change.example))
-        .collect())
+pub fn would_change(records: &Records, plan: &Plan) -> Result<Vec<String>, Failure> {
+    let Some(rules) = Rules::load(records)? else { return Ok(vec![]) };
+    Ok(force::would_change(records, &rules, plan)?.iter().map(change_words).collect())
+}
+
+fn change_words(change: &WouldChange) -> String {
+    let lines = if change.lines == 1 { "1 line".to_owned() } else { format!("{} lines", change.lines) };
+    format!("{}: {lines}, such as {}", change.export, change.example)
+}
+
+impl From<IntakeError> for Failure {
+    fn from(error: IntakeError) -> Self {
+        let kind = error.kind();
+        match error {
+            IntakeError::Plan(error) => error.into(),
+            IntakeError::Records(error) => error.into(),
+            IntakeError::Differently(changes) => {
+                let list: Vec<String> = changes.iter().map(change_words).collect();
+                let text = list.join("\n");
+                let what = IntakeError::Differently(changes).to_string();
+                Self { exit: Exit::Usage, ..Self::new(kind, what) }.with_faults(text, json!(list))
+            }
+            IntakeError::Meaning(_) => Self { exit: Exit::Usage, ..Self::new(kind, error.to_string()) },
+            IntakeError::Locked(_) => Self::new(kind, error.to_string()),
+        }
+    }
 }
 
 /// What one collect did.
 #[derive(Debug, Clone, Default, Serialize)]
 pub struct Collected {
     /// How many exports are in each state, by the state's code.
-    pub exports: serde_json::Map<String, serde_json::Value>,
+    pub exports: Map<String, Json>,
     /// What became of readings.
     pub readings: CollectedReadings,
     /// How long it took.
     pub seconds: f64,
+    /// Older holds that were settled.
+    pub settled: u64,
+    /// Export folders that could not be looked at, and why, by instrument.
+    pub lost_folders: Map<String, Json>,
 }
 
 /// What became of readings.
@@ -78,46 +93,62 @@ pub struct CollectedReadings {
     pub held: u64,
 }
 
-/// How a collect is to be done.
-pub struct HowToCollect<'a> {
-    /// Read raw copies again with a mended reader.
-    pub adopt: bool,
-    /// Called with how many exports are done, and of how many.
-    pub progress: &'a mut dyn FnMut(u64, u64),
+impl Collected {
+    fn of(reports: [Report; 2]) -> Self {
+        let mut all = Self::default();
+        for state in ExportState::ALL {
+            let count: u64 = reports.iter().filter_map(|report| report.exports.get(state.code())).sum();
+            all.exports.insert(state.code().to_owned(), json!(count));
+        }
+        for report in reports {
+            all.readings.filed += report.filed;
+            all.readings.already += report.already;
+            all.readings.held += report.held;
+            all.settled += report.settled;
+            all.seconds += report.seconds;
+            all.lost_folders.extend(report.lost_folders.into_iter().map(|(code, why)| (code, json!(why))));
+        }
+        all
+    }
 }
 
-/// Reads once all that waits.
-pub fn collect(records: &mut Records, study: &Path, doer: &Doer, how: HowToCollect<'_>) -> Result<Collected, Failure> {
-    let _lock = IntakeLock::take(records, &doer.program)?;
-    let mut adopted = Report::default();
-    if how.adopt {
-        adopted = replace::adopt(records, study, doer)?.1;
-    } else {
-        plan_door::bring_into_force(records, study, doer, false)?;
-    }
-    let HowToCollect { progress, .. } = how;
-    let report = collect_once(records, study, doer, true, &mut |Progress { done, of }| progress(done, of))?;
-    let counts = |state: ExportState| report.exports.get(state.code()).copied().unwrap_or(0).into();
-    Ok(Collected {
-        exports: ExportState::ALL.into_iter().map(|state| (state.code().to_owned(), counts(state))).collect(),
-        readings: CollectedReadings {
-            filed: report.filed + adopted.filed,
-            already: report.already,
-            held: report.held + adopted.held,
-        },
-        seconds: report.seconds,
-    })
+/// Reads once all that waits; with `adopt` first what a mended reader would read differently. `progress` is called
+/// with how many exports are done, and of how many.
+pub fn collect(
+    records: &mut Records,
+    study: &Path,
+    doer: &Doer,
+    adopt: bool,
+    progress: &mut dyn FnMut(u64, u64),
+) -> Result<Collected, Failure> {
+    let _lock = IntakeLock::take(records, PROGRAM)?;
+    let adopted = match adopt {
+        true => replace::adopt(records, study, doer)?.1,
+        false => {
+            force::bring_into_force(records, study, doer, false)?;
+            Report::default()
+        }
+    };
+    let collected = collect::collect(records, study, doer, true, &mut |Progress { done, of }| progress(done, of))?;
+    Ok(Collected::of([adopted, collected]))
 }
 
 /// What deciding came to.
-#[derive(Debug, Clone, Copy, Default, Serialize)]
+#[derive(Debug, Clone, Default, Serialize)]
 pub struct Decided {
     /// Holds that are decided or dismissed now.
-    pub holds: u64,
+    pub holds: Vec<i64>,
     /// Readings filed by it.
     pub filed: u64,
-    /// Holds that the answer opened: the row has another fault.
+    /// Values that turned out to be there already.
+    pub already: u64,
+    /// Holds that are open now on the same rows, for what else is wrong with them.
     pub held: u64,
+}
+
+/// Open holds that the same answer may be given to, this one among them.
+pub fn like(records: &Records, hold: &HoldRow) -> Result<Vec<HoldRow>, Failure> {
+    Ok(replace::like(records, hold)?)
 }
 
 /// Gives a person's answer to holds of one export, or dismisses them (`None`).
@@ -127,16 +158,11 @@ pub fn decide(
     answer: Option<&Answer>,
     doer: &Doer,
 ) -> Result<Decided, Failure> {
-    let decision = match answer {
+    let done = match answer {
         Some(answer) => replace::decide(records, holds, answer, doer)?,
         None => replace::dismiss(records, holds, doer)?,
     };
-    Ok(Decided { holds: decision.ended.len() as u64, filed: decision.filed, held: decision.held })
-}
-
-/// Open holds that one answer may be given to at once: those like it in the same export.
-pub fn like(records: &Records, hold: &HoldRow) -> Result<Vec<HoldRow>, Failure> {
-    Ok(replace::like(records, hold)?)
+    Ok(Decided { holds: done.ended, filed: done.filed, already: done.already, held: done.held })
 }
 
 /// Whether a service is running for the study.

@@ -5,9 +5,12 @@
 //! [`intake`] alone. Every failure is one [`error::Failure`].
 
 pub mod args;
+pub mod by_hand;
 pub mod commands;
+pub mod dataset;
 pub mod error;
 pub mod intake;
+pub mod looked;
 pub mod moment;
 pub mod output;
 pub mod report;

@@ -2,7 +2,6 @@
 //!
 //! Invariant: everything that one answer says comes from one [`View`], so that it stands at one trail number.
 
-use std::collections::HashMap;
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
 
@@ -13,7 +12,7 @@ use revisant_schema::records::codec::Hash;
 use revisant_schema::records::view::{PlanVersion, SessionRow};
 use revisant_schema::records::{AsOf, Doer, Records, RecordsError, View};
 use revisant_schema::roster::Roster;
-use revisant_schema::session::{Courses, SessionFacts, UNSCHEDULED};
+use revisant_schema::session::{Courses, UNSCHEDULED};
 use revisant_schema::world::World;
 
 use crate::args::Then;
@@ -125,7 +124,7 @@ impl Basis {
     pub fn of(view: &View<'_>) -> Result<Self, Failure> {
         let (plan, PlanVersion { version, sha256, .. }) = Self::plan(view)?;
         let roster = view.roster()?;
-        let courses = Courses::derive(&plan, &roster, session_facts(view)?);
+        let courses = Courses::derive(&plan, &roster, view.session_facts()?);
         Ok(Self { plan, version, sha256, roster, courses })
     }
 
@@ -220,26 +219,4 @@ pub struct Place {
     pub off_window: bool,
     /// The number that all sessions of the same subject, visit and day share.
     pub session: i64,
-}
-
-/// Every session that holds a current reading, with the measures it holds.
-fn session_facts(view: &View<'_>) -> Result<Vec<SessionFacts>, Failure> {
-    let mut measures: HashMap<i64, Vec<String>> = HashMap::new();
-    for cell in view.cells()? {
-        let held = measures.entry(cell.session).or_default();
-        if !held.contains(&cell.measure) {
-            held.push(cell.measure);
-        }
-    }
-    let facts = view.all_sessions()?.into_iter().filter_map(|session| {
-        let measures = measures.remove(&session.session)?;
-        Some(SessionFacts {
-            session: session.session,
-            subject: session.subject,
-            day: session.day,
-            label: session.label,
-            measures,
-        })
-    });
-    Ok(facts.collect())
 }

@@ -20,6 +20,10 @@ CREATE TABLE trail (
     previous BLOB NOT NULL,
     hash     BLOB NOT NULL
 ) STRICT;
+CREATE INDEX trail_act ON trail (act);
+
+-- `act` columns carry no foreign key: a trail row is written after the rows of its act, and SQLite would then search
+-- every table for them. `verify` finds rows without an act.
 
 -- Texts that stand in many rows: codes of instruments and measures, conditions, units, labels, operators. A row's
 -- digest covers the text, not the number, so these need none of their own.
@@ -44,7 +48,7 @@ CREATE TABLE session (
 
 CREATE TABLE plan_version (
     id     INTEGER PRIMARY KEY,
-    act    INTEGER NOT NULL REFERENCES trail (number) DEFERRABLE INITIALLY DEFERRED,
+    act    INTEGER NOT NULL,
     sha256 BLOB NOT NULL,
     files  TEXT NOT NULL                 -- JSON: main text and the reader files it names
 ) STRICT;
@@ -52,7 +56,7 @@ CREATE TABLE plan_version (
 -- The roster as a history of cells: field is enrolled, withdrawn, data, arm, or an attribute with a leading '.'.
 CREATE TABLE roster_event (
     id      INTEGER PRIMARY KEY,
-    act     INTEGER NOT NULL REFERENCES trail (number) DEFERRABLE INITIALLY DEFERRED,
+    act     INTEGER NOT NULL,
     subject INTEGER NOT NULL REFERENCES subject (id),
     field   TEXT NOT NULL,
     value   TEXT,
@@ -73,7 +77,7 @@ CREATE TABLE raw (
 -- The bytes that one path held at one time.
 CREATE TABLE capture (
     id         INTEGER PRIMARY KEY,
-    act        INTEGER NOT NULL REFERENCES trail (number) DEFERRABLE INITIALLY DEFERRED,
+    act        INTEGER NOT NULL,
     instrument INTEGER NOT NULL REFERENCES term (id),
     path       TEXT NOT NULL,
     modified   INTEGER NOT NULL,         -- nanoseconds since 1970
@@ -89,7 +93,7 @@ CREATE INDEX capture_bytes ON capture (sha256);
 -- The account of a capture's lines, anew whenever an act changes it.
 CREATE TABLE account (
     id      INTEGER PRIMARY KEY,
-    act     INTEGER NOT NULL REFERENCES trail (number) DEFERRABLE INITIALLY DEFERRED,
+    act     INTEGER NOT NULL,
     capture INTEGER NOT NULL,
     lines   TEXT NOT NULL                -- JSON
 ) STRICT;
@@ -98,7 +102,7 @@ CREATE INDEX account_capture ON account (capture);
 -- One act's readings and holds. Rows that name a filing without a row here are not yet published.
 CREATE TABLE filing (
     id            INTEGER PRIMARY KEY,
-    act           INTEGER NOT NULL REFERENCES trail (number) DEFERRABLE INITIALLY DEFERRED,
+    act           INTEGER NOT NULL,
     capture       INTEGER,
     first_reading INTEGER,
     last_reading  INTEGER,
@@ -140,13 +144,13 @@ CREATE TABLE reading (
     digest     BLOB,                     -- only once removed
     removed    INTEGER
 ) STRICT;
-CREATE INDEX reading_identity ON reading (identity) WHERE identity IS NOT NULL;
+CREATE INDEX reading_identity ON reading (identity);
 CREATE INDEX reading_cell ON reading (session, measure, condition, replicate);
 CREATE INDEX reading_supersedes ON reading (supersedes) WHERE supersedes IS NOT NULL;
 
 CREATE TABLE reading_event (
     id      INTEGER PRIMARY KEY,
-    act     INTEGER NOT NULL REFERENCES trail (number) DEFERRABLE INITIALLY DEFERRED,
+    act     INTEGER NOT NULL,
     reading INTEGER NOT NULL,
     kind    TEXT NOT NULL CHECK (kind IN ('struck', 'restored', 'superseded'))
 ) STRICT;
@@ -175,7 +179,7 @@ CREATE INDEX hold_filing ON hold (filing);
 
 CREATE TABLE hold_event (
     id     INTEGER PRIMARY KEY,
-    act    INTEGER NOT NULL REFERENCES trail (number) DEFERRABLE INITIALLY DEFERRED,
+    act    INTEGER NOT NULL,
     hold   INTEGER NOT NULL,
     state  TEXT NOT NULL CHECK (state IN ('decided', 'dismissed')),
     answer TEXT,                         -- JSON; NULL: settled by a change of plan, roster or bytes
@@ -208,7 +212,7 @@ CREATE INDEX gone_filing ON gone (filing);
 -- Why a planned reading will not come.
 CREATE TABLE accounted (
     id      INTEGER PRIMARY KEY,
-    act     INTEGER NOT NULL REFERENCES trail (number) DEFERRABLE INITIALLY DEFERRED,
+    act     INTEGER NOT NULL,
     subject INTEGER NOT NULL REFERENCES subject (id),
     visit   TEXT NOT NULL,
     measure TEXT                         -- NULL: all of the visit
@@ -216,7 +220,7 @@ CREATE TABLE accounted (
 
 CREATE TABLE cut (
     id    INTEGER PRIMARY KEY,
-    act   INTEGER NOT NULL REFERENCES trail (number) DEFERRABLE INITIALLY DEFERRED,
+    act   INTEGER NOT NULL,
     name  TEXT NOT NULL UNIQUE,
     trail INTEGER NOT NULL
 ) STRICT;
@@ -224,14 +228,14 @@ CREATE TABLE cut (
 -- A subject's data were removed by this act; only then may rows be blanked and raw copies be replaced.
 CREATE TABLE removal (
     id      INTEGER PRIMARY KEY,
-    act     INTEGER NOT NULL UNIQUE REFERENCES trail (number) DEFERRABLE INITIALLY DEFERRED,
+    act     INTEGER NOT NULL UNIQUE,
     subject INTEGER NOT NULL REFERENCES subject (id),
     rows    INTEGER NOT NULL,            -- how many it blanked
     digest  BLOB NOT NULL                -- over what is left of them: no other row can be passed off as removed
 ) STRICT;
 CREATE TABLE raw_removal (
     id      INTEGER PRIMARY KEY,
-    act     INTEGER NOT NULL REFERENCES trail (number) DEFERRABLE INITIALLY DEFERRED,
+    act     INTEGER NOT NULL,
     sha256  BLOB NOT NULL,               -- of the bytes as exported
     instead BLOB NOT NULL                -- of the bytes with the subject blanked
 ) STRICT;

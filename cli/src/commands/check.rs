@@ -23,9 +23,9 @@ pub fn run(context: &mut Context<'_, '_>, args: &Check) -> Done {
         );
     }
     let study = context.folder()?.to_path_buf();
-    let loaded = intake::load(&study)?;
+    let loaded = intake::load(context.world.as_ref(), &study)?;
     let would_change = match Records::folder_of(&study).join("records.sqlite").exists() {
-        true => intake::would_change(&context.records()?, &study)?,
+        true => intake::would_change(&context.records()?, &loaded.plan)?,
         false => vec![],
     };
     if context.out.json {

@@ -5,7 +5,7 @@ use indicatif::{ProgressBar, ProgressDrawTarget, ProgressStyle};
 use super::Done;
 use crate::args::Collect;
 use crate::error::{Exit, Failure};
-use crate::intake::{self, Collected, HowToCollect};
+use crate::intake::{self, Collected};
 use crate::report::text::count;
 use crate::study::{Context, reason};
 
@@ -13,13 +13,12 @@ use crate::study::{Context, reason};
 pub fn run(context: &mut Context<'_, '_>, args: &Collect) -> Done {
     let why = args.why.as_deref().map(reason).transpose()?;
     let mut records = context.records()?;
-    let bar = bar(context);
+    let bar = progress_bar(context, "exports");
     let mut progress = |done: u64, of: u64| {
         bar.set_length(of);
         bar.set_position(done);
     };
-    let how = HowToCollect { adopt: args.adopt, progress: &mut progress };
-    let done = intake::collect(&mut records, &context.study, &context.doer(why), how);
+    let done = intake::collect(&mut records, &context.study, &context.doer(why), args.adopt, &mut progress);
     bar.finish_and_clear();
     let collected = done?;
     match context.out.json {
@@ -30,12 +29,12 @@ pub fn run(context: &mut Context<'_, '_>, args: &Collect) -> Done {
 }
 
 /// A bar on a terminal, on standard error so that the result stays clean; elsewhere nothing.
-fn bar(context: &Context<'_, '_>) -> ProgressBar {
+pub fn progress_bar(context: &Context<'_, '_>, what: &str) -> ProgressBar {
     if !context.out.terminal || context.out.quiet || context.out.json {
         return ProgressBar::hidden();
     }
     let bar = ProgressBar::with_draw_target(None, ProgressDrawTarget::stderr());
-    if let Ok(style) = ProgressStyle::with_template("{bar:30} {pos} of {len} exports, {elapsed}") {
+    if let Ok(style) = ProgressStyle::with_template(&format!("{{bar:30}} {{pos}} of {{len}} {what}, {{elapsed}}")) {
         bar.set_style(style);
     }
     bar

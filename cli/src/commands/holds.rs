@@ -1,23 +1,37 @@
 //! `holds`: what waits for a person, and deciding it.
+//!
+//! Invariant: an answer that goes for many holds at once is given only with their number, so that nobody decides more
+//! than was seen.
 
+use std::collections::BTreeMap;
+
+use revisant_schema::hold::{Answer, Reason};
+use revisant_schema::records::Records;
 use revisant_schema::records::view::HoldRow;
+use serde_json::{Value as Json, json};
 
 use super::Done;
-use crate::args::{Holds, HoldsAct, HoldsList};
+use crate::args::{AnswerOptions, Decide, Holds, HoldsAct, HoldsList};
 use crate::error::{Exit, Failure};
+use crate::intake::{self, Decided};
 use crate::report::json;
 use crate::report::table::{Left, Right, Table};
-use crate::report::text::clip;
-use crate::study::{Context, view};
+use crate::report::text::{clean, clip, count};
+use crate::report::when;
+use crate::study::{Basis, Context, reason, view};
 
 /// Runs it.
 pub fn run(context: &mut Context<'_, '_>, args: &Holds) -> Done {
     match &args.act {
         None => list(context, &args.list),
         Some(HoldsAct::List(args)) => list(context, args),
-        Some(_) => Err(Failure::not_yet("this is not in this build")),
+        Some(HoldsAct::Show { hold }) => show(context, *hold),
+        Some(HoldsAct::Decide(args)) => decide(context, args),
+        Some(HoldsAct::Dismiss { hold, all_like_it, why }) => end(context, *hold, None, *all_like_it, why.as_deref()),
     }
 }
+
+// ---- list ----
 
 fn list(context: &mut Context<'_, '_>, args: &HoldsList) -> Done {
     let records = context.records()?;
@@ -40,17 +54,235 @@ fn table(holds: &[HoldRow], all: bool) -> Table {
     }
     let mut table = Table::new(&columns);
     for hold in holds {
-        let place = hold.place().map_or(String::new(), |place| format!(", {place}"));
         let row = hold.row.as_deref().unwrap_or("(removed)");
         let row = if hold.reason.of_file() { hold.wrong.as_str() } else { row };
-        let mut cells = vec![
-            hold.hold.to_string(),
-            hold.reason.code().to_owned(),
-            format!("{}{place}", hold.export),
-            clip(row, 120),
-        ];
+        let mut cells = vec![hold.hold.to_string(), hold.reason.code().to_owned(), whereabouts(hold), clip(row, 120)];
         cells.extend(all.then(|| hold.state.code().to_owned()));
         table.row(cells);
     }
     table
+}
+
+fn whereabouts(hold: &HoldRow) -> String {
+    let place = hold.place().map_or(String::new(), |place| format!(", {place}"));
+    format!("{}{place}", hold.export)
+}
+
+// ---- show ----
+
+fn show(context: &mut Context<'_, '_>, hold: i64) -> Done {
+    let records = context.records()?;
+    let view = records.view()?;
+    let zone = Basis::plan(&view)?.0.study.time_zone;
+    let hold = view.hold(hold)?;
+    let open = hold.state == revisant_schema::hold::HoldState::Open;
+    let like = if open { intake::like(&records, &hold)?.len() } else { 0 };
+    let commands = if open { commands(context, &hold) } else { vec![] };
+    if context.out.json {
+        context.out.json(&shown_json(&hold, like, &commands))?;
+        return Ok(Exit::Done);
+    }
+    let lines = [
+        format!("Hold {}, {}: {}", hold.hold, hold.state.code(), whereabouts(&hold)),
+        format!("Instrument: {}; since {}", hold.instrument, when::written(&hold.since, zone)),
+        format!("Reason:     {}, {}", hold.reason, hold.reason.meaning()),
+        format!("Wrong:      {}", hold.wrong),
+    ];
+    context.out.text(&lines.map(|line| clean(&line)).join("\n"))?;
+    if let Some(row) = hold.row.as_deref().filter(|row| !row.is_empty()) {
+        context.out.text(&format!("As exported:\n  {}", clean(row.trim_end())))?;
+    }
+    if !hold.likely.is_empty() {
+        context.out.text(&format!("Likeliest:  {}", clean(&hold.likely.join(", "))))?;
+    }
+    if let Some(answer) = &hold.answer {
+        context.out.text(&format!("Answer:     {}", clean(&answer.say())))?;
+    }
+    if like > 1 {
+        context
+            .out
+            .say(&format!("{like} open holds of this export are alike; --all-like-it {like} answers all of them."))?;
+    }
+    if !commands.is_empty() {
+        context.out.text(&format!("\nTo answer it:\n{}", commands.join("\n")))?;
+    }
+    Ok(Exit::Done)
+}
+
+fn shown_json(hold: &HoldRow, like: usize, commands: &[String]) -> Json {
+    let mut shown = json!(json::Hold::new(hold));
+    if let Some(fields) = shown.as_object_mut() {
+        let more = [
+            ("instrument", json!(hold.instrument)),
+            ("column", json!(hold.column)),
+            ("meaning", json!(hold.reason.meaning())),
+            ("answers", json!(hold.reason.answers())),
+            ("commands", json!(commands)),
+            ("like_it", json!(like)),
+            ("answer", json!(hold.answer.as_ref().map(Answer::say))),
+            ("about", json!(hold.about)),
+        ];
+        fields.extend(more.map(|(name, value)| (name.to_owned(), value)));
+    }
+    shown
+}
+
+/// The command lines that answer a hold: one for each likely answer, or one for each kind of answer.
+fn commands(context: &Context<'_, '_>, hold: &HoldRow) -> Vec<String> {
+    let number = hold.hold;
+    let study = match context.study.to_str() {
+        Some(".") | None => String::new(),
+        Some(folder) => format!(" --study {}", quoted(folder)),
+    };
+    let mut lines: Vec<String> = options(hold.reason, &hold.likely)
+        .iter()
+        .map(|option| format!("  revisant holds decide {number} {option}{study} --why \"…\""))
+        .collect();
+    lines.push(format!("  revisant holds dismiss {number}{study} --why \"…\""));
+    lines
+}
+
+fn options(reason: Reason, likely: &[String]) -> Vec<String> {
+    let kinds = reason.answers().split(" or ").filter(|kind| kind.starts_with("--"));
+    let mut options = Vec::new();
+    for kind in kinds {
+        match kind.split_once(' ') {
+            Some((option, "CODE" | "MOMENT" | "FACTOR=LEVEL")) if !likely.is_empty() => {
+                options.extend(likely.iter().map(|answer| format!("{option} {}", quoted(answer))));
+            }
+            _ => options.push(kind.to_owned()),
+        }
+    }
+    options
+}
+
+/// Quoted for a shell where it has to be.
+fn quoted(text: &str) -> String {
+    let plain = |c: char| c.is_ascii_alphanumeric() || "-_./:=+,".contains(c);
+    let text = clean(text);
+    if !text.is_empty() && text.chars().all(plain) { text } else { format!("'{}'", text.replace('\'', "'\\''")) }
+}
+
+// ---- decide and dismiss ----
+
+fn decide(context: &mut Context<'_, '_>, args: &Decide) -> Done {
+    let answer = answer(&args.answer)?;
+    end(context, args.hold, Some(&answer), args.all_like_it, args.why.as_deref())
+}
+
+/// The one answer that was given.
+fn answer(options: &AnswerOptions) -> Result<Answer, Failure> {
+    let conditions: BTreeMap<String, String> = options.condition.iter().cloned().collect();
+    let given = [
+        options.subject.clone().map(Answer::Subject),
+        options.moment.clone().map(Answer::Moment),
+        options.date.map(Answer::Date),
+        options.visit.clone().map(Answer::Visit),
+        options.measure.clone().map(Answer::Measure),
+        (!conditions.is_empty()).then_some(Answer::Condition(conditions)),
+        options.unit.clone().map(Answer::Unit),
+        options.value.clone().map(Answer::Value),
+        options.as_it_stands.then_some(Answer::AsItStands),
+        options.keep_old.then_some(Answer::KeepOld),
+        options.take_new.then_some(Answer::TakeNew),
+        options.replicate.map(Answer::Replicate),
+        options.instead_of.map(Answer::InsteadOf),
+    ];
+    let mut given: Vec<Answer> = given.into_iter().flatten().collect();
+    match (given.pop(), given.len()) {
+        (Some(answer), 0) => Ok(answer),
+        _ => Err(Failure::usage("one answer at a time").then("`revisant holds show N` lists those that fit")),
+    }
+}
+
+fn end(
+    context: &mut Context<'_, '_>,
+    hold: i64,
+    answer: Option<&Answer>,
+    all_like_it: Option<Option<u64>>,
+    why: Option<&str>,
+) -> Done {
+    let mut records = context.records()?;
+    let hold = records.view()?.hold(hold)?;
+    if let Some(answer) = answer.filter(|answer| !hold.reason.accepts(answer)) {
+        let what = format!("hold {} is {}, which \"{}\" does not answer", hold.hold, hold.reason, answer.say());
+        return Err(Failure::usage(what).then(format!("it takes {}", hold.reason.answers())));
+    }
+    let holds = wanted(&records, &hold, all_like_it)?;
+    let Some(why) = why else {
+        return Err(Failure::usage("a reason is owed").then("say --why TEXT"));
+    };
+    let doer = context.doer(Some(reason(why)?));
+    let decided = intake::decide(&mut records, &holds, answer, &doer)?;
+    let trail = records.view()?.upto();
+    report(context, answer, &decided, trail)
+}
+
+/// The holds that are meant: this one, or all like it once their number was said.
+fn wanted(records: &Records, hold: &HoldRow, all_like_it: Option<Option<u64>>) -> Result<Vec<HoldRow>, Failure> {
+    let Some(said) = all_like_it else { return Ok(vec![hold.clone()]) };
+    let like = intake::like(records, hold)?;
+    let there = like.len() as u64;
+    let look = format!("look at them with `revisant holds`, then say --all-like-it {there}");
+    let alike = if there == 1 { "hold is" } else { "holds are" };
+    match said {
+        Some(said) if said == there => Ok(like),
+        Some(said) => {
+            Err(Failure::usage(format!("{there} open {alike} like hold {}, not {said}", hold.hold)).then(look))
+        }
+        None => {
+            Err(Failure::usage(format!("{there} open {alike} like hold {} in {}", hold.hold, hold.export)).then(look))
+        }
+    }
+}
+
+fn report(context: &mut Context<'_, '_>, answer: Option<&Answer>, decided: &Decided, trail: i64) -> Done {
+    if context.out.json {
+        context.out.json(&json!({
+            "trail": trail, "holds": decided.holds, "filed": decided.filed, "already": decided.already,
+            "held": decided.held
+        }))?;
+        return Ok(Exit::Done);
+    }
+    let what = count(decided.holds.len() as u64, "hold");
+    let text = match answer {
+        None => format!("{what} dismissed."),
+        Some(answer) => format!(
+            "{what} decided: {}. {} filed, {} there already.",
+            clean(&answer.say()),
+            count(decided.filed, "reading"),
+            decided.already
+        ),
+    };
+    context.out.say(&text)?;
+    if decided.held > 0 {
+        let more = format!(
+            "{} opened, for what else is wrong with the same rows; see `revisant holds`.",
+            count(decided.held, "hold")
+        );
+        context.out.say(&more)?;
+    }
+    Ok(Exit::Done)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn likely_answers_become_commands() {
+        let likely = ["QM-011".to_owned(), "it's".to_owned()];
+        assert_eq!(options(Reason::UnknownSubject, &likely), ["--subject QM-011", "--subject 'it'\\''s'"]);
+        assert_eq!(options(Reason::ChangedValue, &likely), ["--keep-old", "--take-new"]);
+        assert_eq!(options(Reason::ImplausibleValue, &[]), ["--value NUMBER", "--as-it-stands"]);
+        assert!(options(Reason::UnreadableFile, &[]).is_empty());
+    }
+
+    #[test]
+    fn one_answer_at_a_time() {
+        let both = AnswerOptions { keep_old: true, take_new: true, ..AnswerOptions::default() };
+        assert!(answer(&both).is_err());
+        let one = AnswerOptions { keep_old: true, ..AnswerOptions::default() };
+        assert_eq!(answer(&one), Ok(Answer::KeepOld));
+    }
 }

@@ -40,7 +40,7 @@ fn import(context: &mut Context<'_, '_>, file: &Path, why: Option<&str>) -> Done
     let why = why.map(reason).transpose()?;
     // A roster with faults must leave no trace, so it is held against the plan before any records are made.
     let known = known_roster(context)?;
-    let plan = intake::load(&context.study)?.plan;
+    let plan = intake::load(context.world.as_ref(), &context.study)?.plan;
     known.changes(&plan, &text).map_err(|faults| faulty(&shown, &faults))?;
     let mut records = context.records_or_new()?;
     let plan = intake::bring_plan_into_force(&mut records, &context.study, &context.doer(why))?.plan;

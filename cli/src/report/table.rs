@@ -58,9 +58,16 @@ impl Table {
                 Right => CellAlignment::Right,
             });
         }
-        let lines: Vec<String> = table.lines().map(|line| line.trim_end().to_owned()).collect();
+        let lines: Vec<String> = table.lines().map(|line| inner(&line).to_owned()).collect();
         lines.join("\n")
     }
+}
+
+/// A line without the blank at its beginning and those at its end.
+fn inner(line: &str) -> &str {
+    let mut chars = line.chars();
+    chars.next();
+    chars.as_str().trim_end()
 }
 
 #[cfg(test)]

@@ -551,7 +551,8 @@ impl<'a> Filer<'a> {
         match run.judge.judge(self.records, case)? {
             Verdict::File(slot) => {
                 let new = new_reading(self.rules, run.instrument, here.row, case, slot);
-                self.records.add_reading(filing, &new)?;
+                let reading = self.records.add_reading(filing, &new)?;
+                run.judge.filed(reading, slot);
                 run.placing.outcome.filed += 1;
                 turn.class = turn.class.max(Class::Filed);
             }

@@ -115,7 +115,8 @@ impl Filer<'_> {
             if let Some(slot) = slot {
                 let instrument = &self.rules.plan.instruments[export.instrument];
                 let new = new_reading(self.rules, instrument, row, &case, slot);
-                self.records.add_reading(filing, &new)?;
+                let reading = self.records.add_reading(filing, &new)?;
+                pass.judge.filed(reading, slot);
                 pass.placing.outcome.filed += 1;
             }
         }

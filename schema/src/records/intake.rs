@@ -51,17 +51,20 @@ pub struct Identity<'a> {
 }
 
 impl Identity<'_> {
-    /// FNV-1a, 64 bits, over the five texts, each followed by a byte that no text holds (Fowler, Noll & Vo; the
-    /// constants of the published reference code). Candidates are compared in full, so a collision costs time only.
+    /// Sixty-four bits: the upper half from instrument and subject, so that rows of one subject lie together in the
+    /// index, the lower from the rest. Candidates are compared in full, so a collision costs time only.
     pub fn hash(&self) -> i64 {
-        let mut hash = 0xcbf2_9ce4_8422_2325_u64;
-        for text in [self.instrument, self.measure, self.condition, self.subject, self.written] {
-            for byte in text.bytes().chain([0xff]) {
-                hash = (hash ^ u64::from(byte)).wrapping_mul(0x0000_0100_0000_01b3);
-            }
-        }
-        hash as i64
+        let whose = fnv(&[self.instrument, self.subject]);
+        let what = fnv(&[self.measure, self.condition, self.written]);
+        ((whose & 0xffff_ffff_0000_0000) | (what >> 32)) as i64
     }
+}
+
+/// FNV-1a, 64 bits, over texts, each followed by a byte that no text holds (Fowler, Noll & Vo; the constants of the
+/// published reference code).
+fn fnv(texts: &[&str]) -> u64 {
+    let bytes = texts.iter().flat_map(|text| text.bytes().chain([0xff]));
+    bytes.fold(0xcbf2_9ce4_8422_2325, |hash, byte| (hash ^ u64::from(byte)).wrapping_mul(0x0000_0100_0000_01b3))
 }
 
 /// A replicate that stands in a session already.
@@ -142,21 +145,14 @@ impl Records {
 
     /// The number of a session, if it was ever named.
     pub fn find_session(&mut self, subject: &str, day: i64, label: &str) -> Result<Option<SessionId>> {
-        let failed = self.failed("looking for a session");
+        self.look_for_session(subject, day, label).map_err(self.failed("looking for a session"))
+    }
+
+    fn look_for_session(&mut self, subject: &str, day: i64, label: &str) -> rusqlite::Result<Option<SessionId>> {
         let (conn, texts) = (&self.conn, &mut self.texts);
-        let fact = texts
-            .subject(conn, subject)
-            .and_then(|subject| Ok(texts.find_term(conn, label)?.map(|label| SessionFact { subject, day, label })));
-        match fact.map_err(&failed)? {
-            None => Ok(None),
-            Some(fact) => self
-                .conn
-                .prepare_cached("SELECT id FROM session WHERE subject = ?1 AND day = ?2 AND label = ?3")
-                .and_then(|mut statement| {
-                    statement.query_row(params![fact.subject, fact.day, fact.label], |row| row.get(0)).optional()
-                })
-                .map_err(failed),
-        }
+        let found = (texts.find_subject(conn, subject)?, texts.find_term(conn, label)?);
+        let (Some(subject), Some(label)) = found else { return Ok(None) };
+        texts.find_session(conn, SessionFact { subject, day, label })
     }
 
     /// What one instrument's replicates stand in a cell of a session, superseded ones aside.
@@ -251,27 +247,21 @@ impl Records {
 
     /// The newest act, of those kinds that change how rows are placed.
     pub fn placing_head(&self) -> Result<ActNumber> {
-        let kinds = [
-            ActKind::Plan,
-            ActKind::Roster,
-            ActKind::Decide,
-            ActKind::Dismiss,
-            ActKind::Amend,
-            ActKind::Strike,
-            ActKind::Enter,
-        ]
-        .map(ActKind::code);
-        let marks = kinds.map(|kind| format!("'{kind}'")).join(", ");
-        self.conn
-            .prepare_cached(&format!("SELECT coalesce(max(number), 0) FROM trail WHERE act IN ({marks})"))
-            .and_then(|mut statement| statement.query_row([], |row| row.get(0)))
-            .map_err(self.failed("reading the trail"))
+        use ActKind::{Amend, Decide, Dismiss, Enter, Plan, Restore, Roster, Strike};
+        self.newest_of(&[Plan, Roster, Decide, Dismiss, Amend, Strike, Restore, Enter])
     }
 
     /// The newest act that changed the plan or the roster.
     pub fn rules_head(&self) -> Result<ActNumber> {
+        self.newest_of(&[ActKind::Plan, ActKind::Roster])
+    }
+
+    fn newest_of(&self, kinds: &[ActKind]) -> Result<ActNumber> {
+        // One look into the index for each kind; a list of kinds would have SQLite read all of their acts.
+        let each = |kind: &ActKind| format!("(SELECT max(number) FROM trail WHERE act = '{}')", kind.code());
+        let newest: Vec<String> = kinds.iter().map(|kind| format!("coalesce({}, 0)", each(kind))).collect();
         self.conn
-            .prepare_cached("SELECT coalesce(max(number), 0) FROM trail WHERE act IN ('plan', 'roster')")
+            .prepare_cached(&format!("SELECT max({})", newest.join(", ")))
             .and_then(|mut statement| statement.query_row([], |row| row.get(0)))
             .map_err(self.failed("reading the trail"))
     }

@@ -194,6 +194,8 @@ fn configure(conn: &Connection, file: &Path) -> Result<()> {
          PRAGMA secure_delete = ON;",
     )
     .map_err(failed)?;
+    // Without this SQLite plans a statement anew whenever the value bound to it changes.
+    conn.set_db_config(rusqlite::config::DbConfig::SQLITE_DBCONFIG_ENABLE_QPSG, true).map_err(failed)?;
     conn.set_prepared_statement_cache_capacity(64);
     Ok(())
 }

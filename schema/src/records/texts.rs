@@ -97,6 +97,14 @@ impl Texts {
         Ok(id)
     }
 
+    /// The number of a subject that may not exist.
+    pub fn find_subject(&mut self, conn: &Connection, code: &str) -> rusqlite::Result<Option<SubjectId>> {
+        match self.subjects.get(code) {
+            Some(&id) => Ok(Some(id)),
+            None => find(conn, "SELECT id FROM subject WHERE code = ?1", code),
+        }
+    }
+
     /// A subject's code.
     pub fn subject_code(&mut self, conn: &Connection, id: SubjectId) -> rusqlite::Result<&str> {
         match self.subject_codes.entry(id) {
@@ -109,16 +117,24 @@ impl Texts {
         }
     }
 
-    /// The number of a session, made when new.
-    pub fn session(&mut self, conn: &Connection, fact: SessionFact) -> rusqlite::Result<SessionId> {
+    /// The number of a session that may not exist.
+    pub fn find_session(&mut self, conn: &Connection, fact: SessionFact) -> rusqlite::Result<Option<SessionId>> {
         if let Some(&id) = self.sessions.get(&fact) {
-            return Ok(id);
+            return Ok(Some(id));
         }
         let found = conn
             .prepare_cached("SELECT id FROM session WHERE subject = ?1 AND day = ?2 AND label = ?3")?
             .query_row(params![fact.subject, fact.day, fact.label], |row| row.get(0))
             .optional()?;
-        let id = match found {
+        if let Some(id) = found {
+            self.remember_session(id, fact);
+        }
+        Ok(found)
+    }
+
+    /// The number of a session, made when new.
+    pub fn session(&mut self, conn: &Connection, fact: SessionFact) -> rusqlite::Result<SessionId> {
+        let id = match self.find_session(conn, fact)? {
             Some(id) => id,
             None => {
                 let id = next_id(conn, "session")?;

@@ -8,6 +8,7 @@ use std::collections::{HashMap, HashSet};
 use revisant_schema::hold::{Answer, Reason};
 use revisant_schema::plan::{Changed, Instrument, Measure, ReExport};
 use revisant_schema::records::intake::{Candidate, Identity, Slot};
+use revisant_schema::records::texts::SessionId;
 use revisant_schema::records::view::day_number;
 use revisant_schema::records::{Records, Result};
 
@@ -46,11 +47,20 @@ pub struct Judge<'p> {
     instrument: &'p Instrument,
     capture: i64,
     seen: HashMap<i64, i64>,
+    /// Replicates that stand in the cells met last, so that a row need not ask for them again.
+    slots: HashMap<CellKey, Vec<Slot>>,
+    at: Option<CellKey>,
     /// Readings filed before that this export holds too.
     pub matched: HashSet<i64>,
     /// Placing a row again later: its order among equals follows those that its export has filed.
     pub again: bool,
 }
+
+/// A cell of a session: the sessions that are one occasion, the measure's code, the condition's text.
+type CellKey = ([Option<SessionId>; 2], String, String);
+
+/// Cells remembered at once.
+const MOST_CELLS: usize = 4096;
 
 /// A value with its row, and the label of the other session that is the same occasion, if any.
 pub struct Case<'c> {
@@ -73,7 +83,15 @@ impl<'c> Case<'c> {
 impl<'p> Judge<'p> {
     /// Starts an export.
     pub fn new(instrument: &'p Instrument, capture: i64) -> Self {
-        Self { instrument, capture, seen: HashMap::new(), matched: HashSet::new(), again: false }
+        Self {
+            instrument,
+            capture,
+            seen: HashMap::new(),
+            slots: HashMap::new(),
+            at: None,
+            matched: HashSet::new(),
+            again: false,
+        }
     }
 
     /// The capture judged.
@@ -90,6 +108,7 @@ impl<'p> Judge<'p> {
             subject: &case.row.subject,
             written: &case.row.written,
         };
+        self.at = None;
         let candidates = records.candidates(&identity)?;
         let hash = identity.hash();
         let label = case.value.replicate.or(case.row.replicate);
@@ -115,12 +134,11 @@ impl<'p> Judge<'p> {
         if let Some(known) = same {
             return self.same_or_changed(records, case, known, identity);
         }
-        let slots = self.slots(records, case)?;
-        let taken = slots.iter().find(|slot| slot.replicate == number);
+        let taken = self.slots(records, case)?.iter().find(|slot| slot.replicate == number).copied();
         let slotted = |supersedes| Slotted { replicate: number, labelled: true, identity, ordinal: 1, supersedes };
         match (&case.value.decided, taken) {
             (Some(Answer::InsteadOf(_)), taken) => Ok(Verdict::File(slotted(taken.map(|slot| slot.reading)))),
-            (_, Some(taken)) => Ok(Verdict::Held(taken_already(case, number, taken))),
+            (_, Some(taken)) => Ok(Verdict::Held(taken_already(case, number, &taken))),
             (Some(Answer::Replicate(_)), None) => Ok(Verdict::File(slotted(None))),
             _ if number == 0 || number > case.measure.replicates => Ok(Verdict::Held(beyond_plan(case, number))),
             _ => Ok(Verdict::File(slotted(None))),
@@ -151,8 +169,7 @@ impl<'p> Judge<'p> {
         } else if let Some(known) = candidates.iter().find(|known| earlier(known) && equal(case.value, known)) {
             return Ok(Verdict::Held(looks_the_same(case, known)));
         }
-        let slots = self.slots(records, case)?;
-        let number = 1 + slots.iter().map(|slot| slot.replicate).max().unwrap_or(0);
+        let number = 1 + self.slots(records, case)?.iter().map(|slot| slot.replicate).max().unwrap_or(0);
         if number > case.measure.replicates {
             return Ok(Verdict::Held(beyond_plan(case, number)));
         }
@@ -204,16 +221,41 @@ impl<'p> Judge<'p> {
     }
 
     /// The replicates of this instrument that stand in the cell already, over both sessions of the same occasion.
-    fn slots(&self, records: &mut Records, case: &Case<'_>) -> Result<Vec<Slot>> {
+    fn slots(&mut self, records: &mut Records, case: &Case<'_>) -> Result<&[Slot]> {
         let day = day_number(case.row.day);
-        let mut slots = Vec::new();
-        for label in [Some(case.label()), case.twin].into_iter().flatten() {
-            if let Some(session) = records.find_session(&case.row.subject, day, label)? {
-                let (measure, condition) = (&case.measure.code, &case.value.condition);
-                slots.extend(records.slots(session, measure, condition, &self.instrument.code)?);
+        let mut sessions = [None; 2];
+        for (found, label) in sessions.iter_mut().zip([Some(case.label()), case.twin]) {
+            if let Some(label) = label {
+                *found = records.find_session(&case.row.subject, day, label)?;
             }
         }
+        let (measure, condition) = (&case.measure.code, &case.value.condition);
+        let key = (sessions, measure.clone(), condition.clone());
+        if !self.slots.contains_key(&key) {
+            if self.slots.len() >= MOST_CELLS {
+                self.slots.clear();
+            }
+            let mut slots = Vec::new();
+            for session in sessions.into_iter().flatten() {
+                slots.extend(records.slots(session, measure, condition, &self.instrument.code)?);
+            }
+            self.slots.insert(key.clone(), slots);
+        }
+        let slots = self.slots.get(&key).map_or(&[][..], Vec::as_slice);
+        self.at = Some(key);
         Ok(slots)
+    }
+
+    /// Takes in that the value judged last was filed.
+    pub fn filed(&mut self, reading: i64, slot: Slotted) {
+        match self.at.take() {
+            // A session that was not there before has a number now, under which it is looked up from now on.
+            Some((sessions, ..)) if sessions == [None, None] => {}
+            Some(key) if slot.supersedes.is_none() => {
+                self.slots.entry(key).or_default().push(Slot { reading, replicate: slot.replicate });
+            }
+            _ => self.slots.clear(),
+        }
     }
 }
 

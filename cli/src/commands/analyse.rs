@@ -1,0 +1,231 @@
+//! `analyse`: an analysis of the plan on what has come in.
+//!
+//! Invariant: no result is printed or drawn before it is on the trail that it was looked at.
+
+use std::path::Path;
+
+use chrono::{DateTime, NaiveDate};
+use revisant_analysis::anova::repeated_measures;
+use revisant_analysis::contrasts::{Family, Multiplicity as Adjust};
+use revisant_analysis::design::OneWithin;
+use revisant_analysis::{Confidence, Settings};
+use revisant_schema::plan::{Analysis, ContrastKind, Instrument, MeasureIx, MeasureRule, Method, Multiplicity, Plan};
+use revisant_schema::records::view::PlanVersion;
+use revisant_schema::records::{ActKind, Records, View};
+use serde_json::json;
+
+use super::{Done, status};
+use crate::args::Analyse;
+use crate::dataset::Dataset;
+use crate::error::{Exit, Failure};
+use crate::intake;
+use crate::looked::Looked;
+use crate::report::analysis::{Analysed, PlanUsed};
+use crate::report::plot;
+use crate::study::{Basis, Context, unknown, view};
+
+/// Runs it.
+pub fn run(context: &mut Context<'_, '_>, args: &Analyse) -> Done {
+    let mut records = context.records()?;
+    if args.then.cut.is_none() && args.then.as_of.is_none() {
+        intake::bring_plan_into_force(&mut records, &context.study, &context.doer(None))?;
+    }
+    let then = view(&records, &args.then)?;
+    let basis = Basis::of(&then)?;
+    let (plan_now, version_now) = Basis::plan(&records.view()?)?;
+    let planned = Planned::find(&basis, &plan_now, &version_now, &args.code)?;
+    refuse(planned.plan(&basis, &plan_now), planned.analysis)?;
+    let analysed = analyse(context, &records, &then, &basis, &planned, args)?;
+    let drawing = args.plot.as_deref().map(|file| (file, plot::profiles(&analysed)));
+    remember(context, &mut records, &analysed)?;
+    if let Some((file, svg)) = drawing {
+        draw(file, &svg)?;
+    }
+    match context.out.json {
+        true => context.out.json(&analysed.json())?,
+        false => context.out.text(&analysed.text(context.out.width))?,
+    }
+    Ok(Exit::Done)
+}
+
+/// The analysis asked for: of the plan under which the readings are placed, or else of the plan of now.
+struct Planned<'p> {
+    analysis: &'p Analysis,
+    other: Option<PlanUsed>,
+}
+
+impl<'p> Planned<'p> {
+    fn find(basis: &'p Basis, now: &'p Plan, version: &PlanVersion, code: &str) -> Result<Self, Failure> {
+        if let Some(analysis) = now.analysis(code) {
+            let another = (version.version != basis.version)
+                .then_some(PlanUsed { version: version.version, sha256: version.sha256 });
+            // An analysis of now refers to measures and visits by their places in its own plan.
+            let fits = another.is_none() || same_places(&basis.plan, now);
+            return match fits {
+                true => Ok(Self { analysis, other: another }),
+                false => Self::then(basis, code),
+            };
+        }
+        Self::then(basis, code)
+    }
+
+    fn then(basis: &'p Basis, code: &str) -> Result<Self, Failure> {
+        let known = basis.plan.analyses.iter().map(|analysis| analysis.code.as_str());
+        match basis.plan.analysis(code) {
+            Some(analysis) => Ok(Self { analysis, other: None }),
+            None => Err(unknown("analysis", code, known)),
+        }
+    }
+
+    fn plan<'q>(&self, basis: &'q Basis, now: &'q Plan) -> &'q Plan {
+        if self.other.is_some() { now } else { &basis.plan }
+    }
+}
+
+/// Whether both plans list the same measures and visits at the same places.
+fn same_places(then: &Plan, now: &Plan) -> bool {
+    let measures = |plan: &Plan| plan.measures.iter().map(|it| it.code.clone()).collect::<Vec<_>>();
+    let visits = |plan: &Plan| plan.visits.iter().map(|it| it.code.clone()).collect::<Vec<_>>();
+    measures(then) == measures(now) && visits(then) == visits(now)
+}
+
+/// What this version cannot do yet, in one plain sentence.
+fn refuse(plan: &Plan, analysis: &Analysis) -> Result<(), Failure> {
+    let later = |what: &str| {
+        Err(Failure::not_yet(format!("{what}, which comes with a later version")).at(analysis.code.clone()))
+    };
+    match analysis.method {
+        Method::RepeatedMeasures => {}
+        Method::Friedman | Method::Agreement => {
+            return later(&format!("{} is an analysis by the method {}", analysis.code, analysis.method.name()));
+        }
+        Method::MixedModel => return later(&format!("{} is a mixed model", analysis.code)),
+    }
+    if plan.interim.is_some() {
+        return later(
+            "the plan names interim looks, and a result outside them would be a look of its own; it needs `revisant look`",
+        );
+    }
+    if !analysis.between.is_empty() {
+        return later(&format!("{} compares groups of subjects", analysis.code));
+    }
+    if analysis.within.len() > 1 {
+        return later(&format!("{} has more than one within factor", analysis.code));
+    }
+    if analysis.contrasts.contains(&ContrastKind::Simple) {
+        return later(&format!("{} asks for simple effects", analysis.code));
+    }
+    Ok(())
+}
+
+fn analyse<'a>(
+    context: &Context<'_, '_>,
+    records: &Records,
+    then: &View<'_>,
+    basis: &'a Basis,
+    planned: &Planned<'a>,
+    args: &Analyse,
+) -> Result<Analysed<'a>, Failure> {
+    let analysis = planned.analysis;
+    let measure = &basis.plan.measures[analysis.measure];
+    let standing = then.standing(args.then.cut.as_deref())?;
+    let data = Dataset::build(then, basis, analysis, standing_day(context, basis, args, &standing.moment))?;
+    let result = repeated_measures(&design(&data)?, &settings(analysis)?);
+    let exports = then.exports()?;
+    let instruments = status::instruments(context, then, basis, &exports)?;
+    let measuring: Vec<&str> = measuring(&basis.plan, analysis.measure);
+    let instruments = instruments.into_iter().filter(|line| measuring.contains(&line.instrument.as_str())).collect();
+    let holds = then.holds(true)?;
+    Ok(Analysed {
+        study: &basis.plan.study.code,
+        analysis,
+        measure: &measure.code,
+        label: &measure.label,
+        unit: &measure.unit,
+        standing,
+        plan: PlanUsed { version: basis.version, sha256: basis.sha256 },
+        analysis_plan: planned.other,
+        enrolled: basis.roster.subjects.len(),
+        open_holds: holds.iter().filter(|hold| measuring.contains(&hold.instrument.as_str())).count(),
+        looked: Looked::before(records, then, analysis)?,
+        data,
+        result,
+        instruments,
+    })
+}
+
+/// The local day on which the records stand: that of the last act, or today when they are asked as they are.
+fn standing_day(context: &Context<'_, '_>, basis: &Basis, args: &Analyse, moment: &str) -> NaiveDate {
+    let now = args.then.cut.is_none() && args.then.as_of.is_none();
+    let at = DateTime::parse_from_rfc3339(moment).ok().filter(|_| !now);
+    at.map_or_else(|| context.today(basis.zone()), |at| at.with_timezone(&basis.zone()).date_naive())
+}
+
+/// The instruments that may export a measure.
+fn measuring(plan: &Plan, measure: MeasureIx) -> Vec<&str> {
+    let gives = |instrument: &&Instrument| {
+        instrument.reader.values.iter().any(|value| match &value.measure {
+            MeasureRule::Fixed(fixed) => *fixed == measure,
+            MeasureRule::Found(_) => true,
+        })
+    };
+    plan.instruments.iter().filter(gives).map(|instrument| instrument.code.as_str()).collect()
+}
+
+fn design(data: &Dataset) -> Result<OneWithin, Failure> {
+    let (_, mut rows) = data.design_rows();
+    if rows.is_empty() {
+        // Nobody has a reading: a design of one subject without any says so in its notes.
+        rows.push(vec![None; data.factor.levels.len()]);
+    }
+    let unusable = |error: revisant_analysis::design::DesignError| {
+        Failure::new("design", format!("these readings cannot be analysed: {error}"))
+    };
+    let design = OneWithin::from_rows(&rows).map_err(unusable)?;
+    match &data.positions {
+        // Visits on the same day have no order in time: then there are no trends, which the notes say.
+        Some(positions) => Ok(design.clone().with_positions(positions.clone()).unwrap_or(design)),
+        None => Ok(design),
+    }
+}
+
+fn settings(analysis: &Analysis) -> Result<Settings, Failure> {
+    let confidence = Confidence::new(analysis.confidence).map_err(|error| Failure::refused(error.to_string()))?;
+    let family = |kind: &ContrastKind| match kind {
+        ContrastKind::Pairwise => Some(Family::Pairwise),
+        ContrastKind::EachVsFirst => Some(Family::EachVsFirst),
+        ContrastKind::Polynomial => Some(Family::Polynomial),
+        ContrastKind::Simple => None,
+    };
+    let multiplicity = match analysis.multiplicity {
+        Multiplicity::None => Adjust::None,
+        Multiplicity::Bonferroni => Adjust::Bonferroni,
+        Multiplicity::Holm => Adjust::Holm,
+        Multiplicity::BenjaminiHochberg => Adjust::BenjaminiHochberg,
+    };
+    Ok(Settings { confidence, contrasts: analysis.contrasts.iter().filter_map(family).collect(), multiplicity })
+}
+
+/// Writes the look on the trail.
+fn remember(context: &Context<'_, '_>, records: &mut Records, analysed: &Analysed<'_>) -> Result<(), Failure> {
+    let done = records.act(ActKind::Analyse, &context.doer(None), |act| {
+        act.objects.insert("analysis".to_owned(), json!(analysed.analysis.code));
+        act.objects.insert("trail".to_owned(), json!(analysed.standing.trail));
+        act.objects.insert("stood_at".to_owned(), json!(analysed.looked.stood_at));
+        act.objects.insert("cut".to_owned(), json!(analysed.standing.cut));
+        act.objects.insert("plan".to_owned(), json!(analysed.plan.version));
+        Ok(())
+    });
+    done.map_err(|error| {
+        let failure = Failure::from(error);
+        let what = format!("the result is not shown, since the look cannot be written on the trail: {}", failure.what);
+        Failure { what, ..failure }
+    })
+}
+
+fn draw(file: &Path, svg: &str) -> Result<(), Failure> {
+    let shown = file.display().to_string();
+    std::fs::write(file, svg).map_err(|error| {
+        Failure::new("file", format!("the plot {shown} cannot be written ({error})")).at(shown.clone())
+    })
+}

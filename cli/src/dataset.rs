@@ -1,0 +1,517 @@
+//! Records to a design for analysis, with everything left out and why: the one bridge between the two.
+//!
+//! Invariants: every subject of the roster is in the data set, used or left out; whoever is left out has a reason in
+//! words; one number stands in a cell, made of that cell's current readings in the session that counts as the plan
+//! says, or none does.
+
+use std::collections::{BTreeMap, HashMap};
+
+use chrono::{DateTime, NaiveDate, Utc};
+use revisant_schema::completeness::chosen_session;
+use revisant_schema::plan::{Analysis, Measure, OffWindow, Summary, VisitIx};
+use revisant_schema::reading::{Condition, ReadingState};
+use revisant_schema::records::View;
+use revisant_schema::records::view::{AccountedRow, ReadingFilter, ReadingRow};
+use revisant_schema::session::Course;
+use serde::Serialize;
+
+use crate::error::Failure;
+use crate::report::text::list;
+use crate::study::Basis;
+
+/// The within factor that an analysis has.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Factor {
+    /// `visit`, or a condition's code.
+    pub code: String,
+    /// The codes of its levels.
+    pub levels: Vec<String>,
+    /// What people read.
+    pub labels: Vec<String>,
+}
+
+/// Why a cell is empty.
+#[derive(Debug, Clone, PartialEq, Eq, PartialOrd, Ord)]
+pub enum Empty {
+    /// The subject was enrolled after the day on which the records stand.
+    NotEnrolled,
+    /// The subject was withdrawn before the visit's window.
+    Withdrawn,
+    /// There is no reading.
+    NoReading,
+    /// Nobody expects one: the reason that was given.
+    Accounted(String),
+    /// Some condition that is averaged over is missing.
+    Lacks(String),
+    /// Fewer replicates than the measure needs.
+    Few {
+        /// Those that there are.
+        current: usize,
+        /// Those that it needs.
+        needed: u32,
+    },
+    /// The session lies outside its window, and the analysis leaves such out.
+    OffWindow,
+}
+
+/// One subject.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Row {
+    /// The subject's code.
+    pub subject: String,
+    /// By level: the number that is analysed, or why there is none.
+    pub cells: Vec<Result<f64, Empty>>,
+    /// There is at least one current reading of the measure at the visits analysed.
+    pub any: bool,
+}
+
+impl Row {
+    /// A reading at every level.
+    pub fn complete(&self) -> bool {
+        self.cells.iter().all(Result::is_ok)
+    }
+
+    /// Why it is left out of an analysis of complete subjects, in words; empty when it is not.
+    pub fn why(&self, factor: &Factor) -> String {
+        let mut by_reason: BTreeMap<&Empty, Vec<String>> = BTreeMap::new();
+        for (cell, level) in self.cells.iter().zip(&factor.levels) {
+            if let Err(empty) = cell {
+                by_reason.entry(empty).or_default().push(level.clone());
+            }
+        }
+        let words: Vec<String> = by_reason.into_iter().map(|(empty, levels)| empty.say(&levels)).collect();
+        words.join("; ")
+    }
+}
+
+impl Empty {
+    fn say(&self, levels: &[String]) -> String {
+        let levels = list(levels);
+        match self {
+            Self::NotEnrolled => "not enrolled yet".to_owned(),
+            Self::Withdrawn => format!("withdrawn before {levels}"),
+            Self::NoReading => format!("no reading at {levels}"),
+            Self::Accounted(why) => format!("no reading at {levels} (accounted for: {why})"),
+            Self::Lacks(what) => format!("{levels}: no reading of {what}"),
+            Self::Few { current, needed } => format!("{levels}: {current} of the {needed} replicates needed"),
+            Self::OffWindow => format!("session at {levels} lies outside its window"),
+        }
+    }
+}
+
+/// A visit for which a subject came more than once.
+#[derive(Debug, Clone, PartialEq, Eq, Serialize)]
+pub struct Spread {
+    /// The subject's code.
+    pub subject: String,
+    /// The visit's code.
+    pub visit: String,
+    /// The days of its sessions.
+    pub days: Vec<NaiveDate>,
+    /// The day that counts.
+    pub counts: NaiveDate,
+}
+
+/// A session outside its window.
+#[derive(Debug, Clone, PartialEq, Eq, Serialize)]
+pub struct OffWindowCell {
+    /// The subject's code.
+    pub subject: String,
+    /// The visit's code.
+    pub visit: String,
+    /// The session's day.
+    pub day: NaiveDate,
+    /// Whether it is used all the same.
+    pub used: bool,
+}
+
+/// A cell with fewer replicates than planned.
+#[derive(Debug, Clone, PartialEq, Eq, Serialize)]
+pub struct FewReplicates {
+    /// The subject's code.
+    pub subject: String,
+    /// The visit's code.
+    pub visit: String,
+    /// The condition.
+    pub condition: Condition,
+    /// Replicates there.
+    pub current: usize,
+    /// Replicates planned.
+    pub planned: u32,
+}
+
+/// Planned readings that somebody accounted for.
+#[derive(Debug, Clone, PartialEq, Eq, Serialize)]
+pub struct AccountedCell {
+    /// The subject's code.
+    pub subject: String,
+    /// The visit's code.
+    pub visit: String,
+    /// Why they will not come.
+    pub why: String,
+}
+
+/// What a reader of the result should know about the readings used.
+#[derive(Debug, Clone, Default, PartialEq, Eq)]
+pub struct Care {
+    /// Visits with several sessions.
+    pub spread: Vec<Spread>,
+    /// Sessions outside their window.
+    pub off_window: Vec<OffWindowCell>,
+    /// Cells with fewer replicates than planned.
+    pub fewer_replicates: Vec<FewReplicates>,
+    /// Readings that will not come, and why.
+    pub accounted: Vec<AccountedCell>,
+    /// Readings at a limit of detection.
+    pub at_limit: usize,
+    /// Cells with readings of several instruments.
+    pub several_instruments: usize,
+}
+
+/// The data of one analysis.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Dataset {
+    /// The within factor.
+    pub factor: Factor,
+    /// For visits: days after day 0, cumulated along `after`.
+    pub positions: Option<Vec<f64>>,
+    /// Every subject of the roster, by code.
+    pub rows: Vec<Row>,
+    /// What to know about them.
+    pub care: Care,
+}
+
+impl Dataset {
+    /// From the records as they stand at a view, for an analysis of one within factor; `today` is the local day of
+    /// that standing.
+    pub fn build(view: &View<'_>, basis: &Basis, analysis: &Analysis, today: NaiveDate) -> Result<Self, Failure> {
+        let measure = &basis.plan.measures[analysis.measure];
+        let filter = ReadingFilter { measure: Some(measure.code.clone()), ..ReadingFilter::default() };
+        let readings = by_session(basis, view.readings(&filter)?);
+        let accounted = view.accounted()?;
+        let mut builder = Builder {
+            basis,
+            analysis,
+            measure,
+            readings,
+            accounted,
+            today,
+            factor: factor(basis, analysis),
+            care: Care::default(),
+        };
+        let subjects: Vec<&String> = basis.roster.subjects.keys().collect();
+        let rows = subjects.into_iter().map(|subject| builder.row(subject)).collect();
+        let positions = (builder.factor.code == VISIT).then(|| positions(basis, &analysis.visits));
+        Ok(Self { factor: builder.factor, positions, rows, care: builder.care })
+    }
+
+    /// The cells of each subject that has one, with the subject's place among the rows.
+    pub fn design_rows(&self) -> (Vec<usize>, Vec<Vec<Option<f64>>>) {
+        let with_cell = self.rows.iter().enumerate().filter(|(_, row)| row.cells.iter().any(Result::is_ok));
+        with_cell.map(|(at, row)| (at, row.cells.iter().map(|cell| cell.as_ref().ok().copied()).collect())).unzip()
+    }
+
+    /// How many subjects have a reading at all.
+    pub fn with_any(&self) -> usize {
+        self.rows.iter().filter(|row| row.any).count()
+    }
+
+    /// How many subjects a mixed model would use: those with at least one cell.
+    pub fn mixed_model_would_use(&self) -> usize {
+        self.rows.iter().filter(|row| row.cells.iter().any(Result::is_ok)).count()
+    }
+
+    /// Those who are left out of an analysis of complete subjects, and why.
+    pub fn left_out(&self) -> Vec<(&str, String)> {
+        let left = self.rows.iter().filter(|row| !row.complete());
+        left.map(|row| (row.subject.as_str(), row.why(&self.factor))).collect()
+    }
+}
+
+/// The factor's code when it is the visits.
+pub const VISIT: &str = "visit";
+
+fn factor(basis: &Basis, analysis: &Analysis) -> Factor {
+    let measure = &basis.plan.measures[analysis.measure];
+    let condition = analysis.within.iter().find_map(|code| measure.conditions.iter().find(|it| it.code == *code));
+    match condition {
+        Some(factor) => {
+            Factor { code: factor.code.clone(), levels: factor.levels.clone(), labels: factor.levels.clone() }
+        }
+        None => {
+            let visits = analysis.visits.iter().map(|visit| &basis.plan.visits[*visit]);
+            let (levels, labels) = visits.map(|visit| (visit.code.clone(), visit.label.clone())).unzip();
+            Factor { code: VISIT.to_owned(), levels, labels }
+        }
+    }
+}
+
+/// Days after day 0 of each visit; one that is counted from an earlier visit lies so many days after that one's.
+fn positions(basis: &Basis, visits: &[VisitIx]) -> Vec<f64> {
+    let mut days: Vec<i64> = Vec::with_capacity(basis.plan.visits.len());
+    for visit in &basis.plan.visits {
+        let base = visit.after.and_then(|earlier| days.get(earlier).copied()).unwrap_or(0);
+        days.push(base.saturating_add(visit.day));
+    }
+    visits.iter().filter_map(|visit| days.get(*visit)).map(|day| *day as f64).collect()
+}
+
+/// A reading as far as a cell needs it.
+#[derive(Debug, Clone)]
+struct Value {
+    number: f64,
+    moment: Option<DateTime<Utc>>,
+    replicate: u32,
+    instrument: String,
+    limit: bool,
+}
+
+/// Current readings by session (the number that a visit's sessions of one day share), then by condition.
+type Readings = HashMap<i64, BTreeMap<Condition, Vec<Value>>>;
+
+fn by_session(basis: &Basis, rows: Vec<ReadingRow>) -> Readings {
+    let mut readings = Readings::new();
+    for row in rows {
+        let (Some(number), ReadingState::Current) = (row.number, row.state) else { continue };
+        let session = basis.place(&row.session).session;
+        let value = Value {
+            number,
+            moment: row.moment,
+            replicate: row.replicate,
+            instrument: row.instrument,
+            limit: row.mark.is_some(),
+        };
+        readings.entry(session).or_default().entry(row.condition).or_default().push(value);
+    }
+    readings
+}
+
+struct Builder<'b> {
+    basis: &'b Basis,
+    analysis: &'b Analysis,
+    measure: &'b Measure,
+    readings: Readings,
+    accounted: Vec<AccountedRow>,
+    today: NaiveDate,
+    factor: Factor,
+    care: Care,
+}
+
+impl Builder<'_> {
+    fn row(&mut self, subject: &str) -> Row {
+        let nobody = Course::default();
+        let basis = self.basis;
+        let course = basis.courses.by_subject.get(subject).unwrap_or(&nobody);
+        let visits: Vec<(VisitIx, Option<String>)> = match self.factor.code.as_str() {
+            VISIT => self.analysis.visits.iter().map(|visit| (*visit, None)).collect(),
+            _ => {
+                let levels = self.factor.levels.iter().cloned().map(Some);
+                let visit = self.analysis.visits.first().copied().unwrap_or(0);
+                levels.map(|level| (visit, level)).collect()
+            }
+        };
+        let mut any = false;
+        let mut cells = Vec::with_capacity(visits.len());
+        let mut seen = None;
+        for (visit, level) in visits {
+            let session = chosen_session(&basis.plan, course, visit, &self.measure.code);
+            any |= session.is_some();
+            if seen != Some(visit) {
+                self.note_session(subject, course, visit, session);
+                seen = Some(visit);
+            }
+            cells.push(self.cell(subject, course, visit, level.as_deref(), session));
+        }
+        Row { subject: subject.to_owned(), cells, any }
+    }
+
+    /// Notes what is unusual about the session that counts for a visit.
+    fn note_session(
+        &mut self,
+        subject: &str,
+        course: &Course,
+        visit: VisitIx,
+        session: Option<(NaiveDate, i64, bool)>,
+    ) {
+        let Some((day, _, off_window)) = session else { return };
+        let code = &self.basis.plan.visits[visit].code;
+        let holding = course.sessions.iter().filter(|session| session.visit == Some(visit));
+        let mut days: Vec<NaiveDate> = holding
+            .filter(|session| session.facts.measures.contains(&self.measure.code))
+            .map(|session| session.facts.day)
+            .collect();
+        days.dedup();
+        if days.len() > 1 {
+            let (subject, visit) = (subject.to_owned(), code.clone());
+            self.care.spread.push(Spread { subject, visit, days, counts: day });
+        }
+        if off_window {
+            let used = self.analysis.off_window == OffWindow::Use;
+            let (subject, visit) = (subject.to_owned(), code.clone());
+            self.care.off_window.push(OffWindowCell { subject, visit, day, used });
+        }
+    }
+
+    fn cell(
+        &mut self,
+        subject: &str,
+        course: &Course,
+        visit: VisitIx,
+        level: Option<&str>,
+        session: Option<(NaiveDate, i64, bool)>,
+    ) -> Result<f64, Empty> {
+        let Some((_, session, off_window)) = session else { return Err(self.absent(subject, course, visit)) };
+        if off_window && self.analysis.off_window == OffWindow::Leave {
+            return Err(Empty::OffWindow);
+        }
+        let conditions = self.conditions(level);
+        let mut numbers = Vec::with_capacity(conditions.len());
+        for condition in conditions {
+            numbers.push(self.one_condition(subject, visit, session, condition)?);
+        }
+        Ok(mean(&numbers))
+    }
+
+    /// The conditions that make up a level: all of them, or those with that level of the factor.
+    fn conditions(&self, level: Option<&str>) -> Vec<Condition> {
+        let all = self.measure.cells().into_iter().map(|cell| Condition::of_cell(self.measure, &cell));
+        let wanted = |condition: &Condition| {
+            level.is_none_or(|level| condition.0.get(&self.factor.code).is_some_and(|there| there == level))
+        };
+        all.filter(wanted).collect()
+    }
+
+    fn one_condition(
+        &mut self,
+        subject: &str,
+        visit: VisitIx,
+        session: i64,
+        condition: Condition,
+    ) -> Result<f64, Empty> {
+        let none = vec![];
+        let values = self.readings.get(&session).and_then(|cells| cells.get(&condition)).unwrap_or(&none);
+        let planned = self.measure.replicates;
+        let enough = values.len() >= self.measure.at_least.max(1) as usize;
+        let (current, limits) = (values.len(), values.iter().filter(|value| value.limit).count());
+        let several = values.iter().any(|value| value.instrument != values[0].instrument);
+        let number = if enough { Ok(summarise(self.measure.summary, values)) } else { Err(()) };
+        if current < planned as usize && current > 0 {
+            let (subject, visit) = (subject.to_owned(), self.basis.plan.visits[visit].code.clone());
+            let few = FewReplicates { subject, visit, condition: condition.clone(), current, planned };
+            self.care.fewer_replicates.push(few);
+        }
+        if number.is_ok() {
+            self.care.at_limit += limits;
+            self.care.several_instruments += usize::from(several);
+        }
+        number.map_err(|()| match current {
+            0 if condition.0.is_empty() => Empty::NoReading,
+            0 => Empty::Lacks(condition.to_string()),
+            _ => Empty::Few { current, needed: self.measure.at_least },
+        })
+    }
+
+    /// Why there is no session.
+    fn absent(&mut self, subject: &str, course: &Course, visit: VisitIx) -> Empty {
+        let entry = self.basis.roster.subjects.get(subject);
+        if entry.and_then(|entry| entry.enrolled).is_some_and(|day| day > self.today) {
+            return Empty::NotEnrolled;
+        }
+        let code = &self.basis.plan.visits[visit].code;
+        let said = self.accounted.iter().rev().find(|row| {
+            row.subject == subject
+                && row.visit == *code
+                && row.measure.as_ref().is_none_or(|measure| *measure == self.measure.code)
+        });
+        if let Some(row) = said {
+            let (subject, visit, why) = (subject.to_owned(), code.clone(), row.why.clone());
+            self.care.accounted.push(AccountedCell { subject, visit, why: why.clone() });
+            return Empty::Accounted(why);
+        }
+        let withdrawn = entry.and_then(|entry| entry.withdrawn);
+        let span = course.span(&self.basis.plan, visit);
+        match (withdrawn, span) {
+            (Some(day), Some(span)) if day < span.from => Empty::Withdrawn,
+            (Some(_), None) => Empty::Withdrawn,
+            _ => Empty::NoReading,
+        }
+    }
+}
+
+/// The one number of a cell's replicates; there is at least one.
+fn summarise(summary: Summary, values: &[Value]) -> f64 {
+    let numbers: Vec<f64> = values.iter().map(|value| value.number).collect();
+    let in_order = |value: &&Value| (value.moment, value.replicate);
+    match summary {
+        Summary::Mean => mean(&numbers),
+        Summary::Median => median(numbers),
+        Summary::Min => numbers.into_iter().fold(f64::INFINITY, f64::min),
+        Summary::Max => numbers.into_iter().fold(f64::NEG_INFINITY, f64::max),
+        Summary::First => values.iter().min_by_key(in_order).map_or(0.0, |value| value.number),
+        Summary::Last => values.iter().max_by_key(in_order).map_or(0.0, |value| value.number),
+    }
+}
+
+/// The arithmetic mean, summed as differences from the first so that a large offset costs no digits.
+fn mean(numbers: &[f64]) -> f64 {
+    let Some(first) = numbers.first() else { return 0.0 };
+    first + numbers.iter().map(|number| number - first).sum::<f64>() / numbers.len() as f64
+}
+
+fn median(mut numbers: Vec<f64>) -> f64 {
+    numbers.sort_by(f64::total_cmp);
+    let half = numbers.len() / 2;
+    match numbers.len() % 2 {
+        0 => f64::midpoint(numbers[half - 1], numbers[half]),
+        _ => numbers[half],
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    fn value(number: f64, minute: Option<i64>, replicate: u32) -> Value {
+        let moment = minute.and_then(|minute| DateTime::from_timestamp(minute * 60, 0));
+        Value { number, moment, replicate, instrument: "dyn".to_owned(), limit: false }
+    }
+
+    #[test]
+    fn replicates_become_one_number_as_the_plan_says() {
+        let values = [value(3.0, Some(5), 1), value(1.0, Some(5), 2), value(8.0, Some(1), 3), value(4.0, Some(9), 4)];
+        let of = |summary| summarise(summary, &values);
+        assert_eq!(of(Summary::Mean), 4.0);
+        assert_eq!(of(Summary::Median), 3.5);
+        assert_eq!((of(Summary::Min), of(Summary::Max)), (1.0, 8.0));
+        assert_eq!((of(Summary::First), of(Summary::Last)), (8.0, 4.0));
+        let same_time = [value(3.0, None, 2), value(1.0, None, 1)];
+        assert_eq!(summarise(Summary::First, &same_time), 1.0, "then by replicate number");
+        assert_eq!(summarise(Summary::Last, &same_time), 3.0);
+        assert_eq!(summarise(Summary::Median, &values[..3]), 3.0);
+    }
+
+    #[test]
+    fn a_large_offset_costs_no_digits() {
+        assert_eq!(mean(&[1e9 + 0.25, 1e9 + 0.75]), 1e9 + 0.5);
+        assert_eq!(mean(&[0.1]), 0.1);
+    }
+
+    #[test]
+    fn reasons_are_words() {
+        let factor = Factor {
+            code: VISIT.to_owned(),
+            levels: ["baseline", "week-4", "week-8"].map(str::to_owned).to_vec(),
+            labels: vec![],
+        };
+        let row = |cells: Vec<Result<f64, Empty>>| Row { subject: "A-1".to_owned(), cells, any: true };
+        let none = row(vec![Ok(1.0), Err(Empty::NoReading), Err(Empty::NoReading)]);
+        assert_eq!(none.why(&factor), "no reading at week-4 and week-8");
+        let few = row(vec![Ok(1.0), Err(Empty::Few { current: 1, needed: 2 }), Err(Empty::Withdrawn)]);
+        assert_eq!(few.why(&factor), "withdrawn before week-8; week-4: 1 of the 2 replicates needed");
+        let off = row(vec![Ok(1.0), Err(Empty::OffWindow), Err(Empty::Accounted("in hospital".to_owned()))]);
+        assert_eq!(
+            off.why(&factor),
+            "no reading at week-8 (accounted for: in hospital); session at week-4 lies outside its window"
+        );
+    }
+}
