@@ -7,6 +7,7 @@
 )]
 
 mod corpus;
+mod errors;
 
 use revisant_tests::site::{Programs, Site};
 

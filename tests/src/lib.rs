@@ -14,4 +14,5 @@ pub mod chance;
 pub mod corpus;
 pub mod judge;
 pub mod site;
+pub mod small;
 pub mod snapshot;

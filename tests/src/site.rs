@@ -1,9 +1,9 @@
 //! One study in a folder of its own, and the programs run on it from outside.
 
-use std::cell::Cell;
 use std::fs::{self, File};
 use std::path::{Path, PathBuf};
 use std::process::{Child, Command, Stdio};
+use std::sync::Mutex;
 use std::time::{Duration, SystemTime};
 
 use serde_json::Value as Json;
@@ -27,7 +27,7 @@ pub struct Site {
     programs: Programs,
     folder: TempDir,
     study: PathBuf,
-    clock: Cell<SystemTime>,
+    clock: Mutex<SystemTime>,
 }
 
 impl Site {
@@ -38,7 +38,7 @@ impl Site {
         let root = folder.path().canonicalize().expect("the temporary folder's true name");
         let study = root.join("study");
         fs::create_dir(&study).expect("the study's folder");
-        let clock = Cell::new(SystemTime::now() - AT_REST);
+        let clock = Mutex::new(SystemTime::now() - AT_REST);
         Self { programs, folder, study, clock }
     }
 
@@ -76,15 +76,20 @@ impl Site {
 
     /// Gives a file the next of the times at which exports were written.
     pub fn age(&self, name: impl AsRef<Path>) {
-        let time = self.clock.get() + Duration::from_secs(1);
-        self.clock.set(time);
+        let time = self.later(Duration::from_secs(1));
         let file = File::options().write(true).open(self.path(name)).expect("a file that was just written");
         file.set_modified(time).expect("the file's time");
     }
 
     /// Lets an hour pass before the next export.
     pub fn an_hour_later(&self) {
-        self.clock.set(self.clock.get() + Duration::from_secs(3600));
+        self.later(Duration::from_secs(3600));
+    }
+
+    fn later(&self, by: Duration) -> SystemTime {
+        let mut clock = self.clock.lock().expect("nobody failed while the clock was set");
+        *clock += by;
+        *clock
     }
 
     /// A command on this study, in its folder, with nothing of the caller's surroundings that could change its words.
