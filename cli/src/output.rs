@@ -98,7 +98,7 @@ impl<'w> Out<'w> {
         // What the option parser says is laid out already.
         let message = match failure.what.contains('\n') {
             true => format!("revisant: {}", failure.message()),
-            false => wrap(&format!("revisant: {}.", failure.message().trim_end_matches('.')), self.width, "  "),
+            false => wrap(&format!("revisant: {}", sentence(&failure.message())), self.width, "  "),
         };
         let name = "revisant:";
         let message = match message.strip_prefix(name) {
@@ -106,6 +106,14 @@ impl<'w> Out<'w> {
             _ => message,
         };
         format!("{faults}{message}\n")
+    }
+}
+
+/// A message with the one mark that ends it.
+fn sentence(message: &str) -> String {
+    match message.trim_end_matches('.') {
+        question if question.ends_with('?') => question.to_owned(),
+        statement => format!("{statement}."),
     }
 }
 
