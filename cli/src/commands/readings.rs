@@ -80,8 +80,9 @@ fn cells(basis: &Basis, row: &ReadingRow) -> [String; 7] {
     let place = basis.place(&row.session);
     let visit = basis.visit_code(place.visit).unwrap_or(UNSCHEDULED);
     let off = if place.off_window { " (off-window)" } else { "" };
-    let condition = row.condition.to_string();
-    let measure = if condition.is_empty() { row.measure.clone() } else { format!("{} {condition}", row.measure) };
+    // The levels alone, which tell the condition to whoever knows the plan, so that the table stays narrow.
+    let levels: Vec<&str> = row.condition.0.values().map(String::as_str).collect();
+    let measure = format!("{} {}", row.measure, levels.join(" "));
     let unit = basis.plan.measure(&row.measure).map_or("", |(_, measure)| measure.unit.as_str());
     [
         row.reading.to_string(),
