@@ -8,6 +8,8 @@
 
 mod corpus;
 mod errors;
+mod readings;
+mod reference;
 
 use revisant_tests::site::{Programs, Site};
 
