@@ -8,6 +8,7 @@
 
 mod corpus;
 mod errors;
+mod kills;
 mod readings;
 mod reference;
 
