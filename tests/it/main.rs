@@ -8,6 +8,7 @@
 
 mod corpus;
 mod errors;
+mod house;
 mod kills;
 mod readings;
 mod reference;
