@@ -10,6 +10,7 @@ mod corpus;
 mod errors;
 mod house;
 mod kills;
+mod properties;
 mod readings;
 mod reference;
 
