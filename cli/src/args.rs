@@ -24,13 +24,13 @@ Exit status: 0 done, 1 failed, 2 usage error or unsound plan, 3 a check found so
 With --json a failure is {\"error\": {\"kind\", \"message\", \"where\"}} on standard error.")]
 pub struct Args {
     /// The study's folder, which holds study.toml
-    #[arg(long, value_name = "DIR", global = true, default_value = ".")]
+    #[arg(long, value_name = "DIR", global = true, display_order = 901, default_value = ".")]
     pub study: PathBuf,
     /// Print the result as JSON
-    #[arg(long, global = true)]
+    #[arg(long, global = true, display_order = 902)]
     pub json: bool,
     /// Print nothing but what was asked for
-    #[arg(long, global = true)]
+    #[arg(long, global = true, display_order = 903)]
     pub quiet: bool,
     /// What to do.
     #[command(subcommand)]
@@ -43,8 +43,9 @@ pub enum Command {
     /// Write a plan, study.toml, to begin with
     #[command(after_help = "\
 Example:
-  revisant new --study grip --code GR-1 --title \"Grip over 12 weeks\" --zone Europe/London \\
-    --measure grip:kg --visit baseline:0 --visit week-4:28 --instrument dyn-1:exports/dyn-1
+  revisant new --study grip --code GR-1 --title \"Grip\" --zone Europe/London \\
+    --measure grip:kg --visit baseline:0 --visit week-4:28 \\
+    --instrument dyn-1:exports/dyn-1
 
 On a terminal, what is not given is asked for. The plan is never overwritten.
 JSON: {\"plan\": path, \"folders\": [path]}")]
@@ -122,19 +123,22 @@ Example:
 JSON: [{\"reading\", \"subject\", \"visit\", \"session\", \"measure\", \"value\", \"unit\", \"state\", …}]")]
     Readings(Readings),
     /// Enter a reading by hand, when an instrument cannot export it
-    #[command(after_help = "\
+    #[command(
+        override_usage = "revisant enter --subject <CODE> --measure <CODE> --value <NUMBER>\n                      --taken-at <MOMENT> --why <TEXT> [OPTIONS]",
+        after_help = "\
 Example:
-  revisant enter --subject QM-014 --measure grip --condition hand=left --replicate 1 \\
-    --value 31.5 --taken-at 2026-03-31T09:40:00+01:00 --why \"printer tape; export failed\"
+  revisant enter --subject QM-014 --measure grip --condition hand=left \\
+    --value 31.5 --taken-at 2026-03-31T09:40:00+01:00 --why \"export failed\"
 
-JSON: {\"trail\", \"reading\"}")]
+JSON: {\"trail\", \"reading\"}"
+    )]
     Enter(Enter),
     /// Correct whose a reading or a session is, its visit or its value; the original stays linked
     #[command(
         subcommand,
         after_help = "\
 Example:
-  revisant amend reading 812 --value 31.5 --why \"misread scale; see sheet of 31 March\""
+  revisant amend reading 812 --value 31.5 --why \"misread; see sheet\""
     )]
     Amend(Amend),
     /// Take readings out of use; they stay legible
@@ -260,7 +264,7 @@ JSON: {\"trail\", \"subjects\", \"new\", \"changes\": [{\"subject\", \"field\", 
     /// Add one subject
     #[command(after_help = "\
 Example:
-  revisant roster add QM-049 --enrolled 2026-03-31 --set sex=F --set age=71 --why \"enrolled today\"
+  revisant roster add QM-049 --enrolled 2026-03-31 --set sex=F --why \"enrolled\"
 
 JSON: as `roster import`")]
     Add {
@@ -419,14 +423,17 @@ JSON: the hold, with \"instrument\", \"column\", \"wrong\", \"meaning\", \"answe
         hold: i64,
     },
     /// Answer one hold, or all like it in the same export
-    #[command(after_help = "\
+    #[command(
+        override_usage = "revisant holds decide [OPTIONS] <ANSWER> <HOLD> --why <TEXT>",
+        after_help = "\
 Example:
   revisant holds decide 12 --subject QM-014 --why \"code misread; see visit log\"
-  revisant holds decide 12 --keep-old --all-like-it       say how many are like it
-  revisant holds decide 12 --keep-old --all-like-it 31 --why \"test export of the maker\"
+  revisant holds decide 12 --keep-old --all-like-it      say how many are alike
+  revisant holds decide 12 --keep-old --all-like-it 31 --why \"test export\"
 
 Which answers fit depends on the reason; `revisant holds show N` lists them.
-JSON: {\"trail\", \"holds\", \"filed\", \"held\"}")]
+JSON: {\"trail\", \"holds\", \"filed\", \"held\"}"
+    )]
     Decide(Box<Decide>),
     /// Leave out what is held, for good
     #[command(after_help = "\
@@ -562,7 +569,7 @@ pub enum Amend {
     /// Correct one reading
     #[command(after_help = "\
 Example:
-  revisant amend reading 812 --subject QM-015 --why \"bands swapped; see visit log\"
+  revisant amend reading 812 --subject QM-015 --why \"bands swapped; see log\"
 
 JSON: {\"trail\", \"readings\": [{\"reading\", \"supersedes\"}]}")]
     Reading {
@@ -590,7 +597,7 @@ JSON: {\"trail\", \"readings\": [{\"reading\", \"supersedes\"}]}")]
     /// Correct all current readings of one session
     #[command(after_help = "\
 Example:
-  revisant amend session 40 --swap-with 41 --why \"the two subjects' chairs were changed over\"
+  revisant amend session 40 --swap-with 41 --why \"the subjects changed chairs\"
 
 JSON: {\"trail\", \"readings\": [{\"reading\", \"supersedes\"}]}")]
     Session {

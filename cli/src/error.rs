@@ -47,7 +47,7 @@ pub struct Failure {
     /// What to do next.
     pub next: Option<String>,
     /// Every fault by itself, where there are several: text for people, the same for machines.
-    pub faults: Option<(String, Json)>,
+    pub faults: Option<Box<(String, Json)>>,
 }
 
 impl Failure {
@@ -85,7 +85,7 @@ impl Failure {
 
     /// The same, with every fault by itself.
     pub fn with_faults(mut self, text: String, faults: Json) -> Self {
-        self.faults = Some((text, faults));
+        self.faults = Some(Box::new((text, faults)));
         self
     }
 
@@ -100,8 +100,8 @@ impl Failure {
     /// For machines.
     pub fn json(&self) -> Json {
         let mut error = json!({ "kind": self.kind, "message": self.message(), "where": self.place });
-        if let (Some((_, faults)), Some(fields)) = (&self.faults, error.as_object_mut()) {
-            fields.insert("faults".to_owned(), faults.clone());
+        if let (Some(faults), Some(fields)) = (&self.faults, error.as_object_mut()) {
+            fields.insert("faults".to_owned(), faults.1.clone());
         }
         json!({ "error": error })
     }

@@ -62,7 +62,7 @@ impl Looked {
     /// From the second look on: the table's entry for as many looks or the nearest fewer.
     fn error_rate(&self) -> Option<(usize, f64)> {
         let fits = REPEATED.iter().filter(|(looks, _)| *looks <= self.times && self.times > 1 && self.five_percent);
-        fits.last().copied()
+        fits.copied().next_back()
     }
 
     /// For people.

@@ -20,7 +20,8 @@ impl FromStr for Moment {
     type Err = String;
 
     fn from_str(text: &str) -> Result<Self, String> {
-        if let Ok(day) = NaiveDate::parse_from_str(text, "%Y-%m-%d") {
+        let day = NaiveDate::parse_from_str(text, "%Y-%m-%d").ok();
+        if let Some(day) = day.filter(|day| day.to_string() == text) {
             return Ok(Self::Day(day));
         }
         DateTime::parse_from_rfc3339(text).map(|moment| Self::Instant(moment.to_utc())).map_err(|_| {

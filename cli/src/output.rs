@@ -94,10 +94,11 @@ impl<'w> Out<'w> {
     }
 
     fn plain(&self, failure: &Failure) -> String {
-        let faults = failure.faults.as_ref().map_or(String::new(), |(text, _)| format!("{}\n\n", text.trim_end()));
-        let message = match failure.kind {
-            "usage" => format!("revisant: {}", failure.message()),
-            _ => wrap(&format!("revisant: {}.", failure.message().trim_end_matches('.')), self.width, "  "),
+        let faults = failure.faults.as_ref().map_or(String::new(), |faults| format!("{}\n\n", faults.0.trim_end()));
+        // What the option parser says is laid out already.
+        let message = match failure.what.contains('\n') {
+            true => format!("revisant: {}", failure.message()),
+            false => wrap(&format!("revisant: {}", sentence(&failure.message())), self.width, "  "),
         };
         let name = "revisant:";
         let message = match message.strip_prefix(name) {
@@ -105,6 +106,14 @@ impl<'w> Out<'w> {
             _ => message,
         };
         format!("{faults}{message}\n")
+    }
+}
+
+/// A message with the one mark that ends it.
+fn sentence(message: &str) -> String {
+    match message.trim_end_matches('.') {
+        question if question.ends_with('?') => question.to_owned(),
+        statement => format!("{statement}."),
     }
 }
 

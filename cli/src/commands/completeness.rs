@@ -6,7 +6,7 @@ use revisant_schema::records::View;
 use super::Done;
 use crate::args::Completeness as Args;
 use crate::error::{Exit, Failure};
-use crate::report::table::{Left, Right, Table};
+use crate::report::table::{Left, Right, Table, Whole};
 use crate::report::text::count;
 use crate::study::{Basis, Context, view};
 
@@ -39,7 +39,7 @@ fn text(context: &mut Context<'_, '_>, grid: &Completeness) -> Result<(), Failur
         return context.out.say("Nobody is enrolled; see `revisant roster import`.");
     }
     let mut table =
-        Table::new(&[("subject", Left), ("status", Left), ("visits", Right), ("open", Left), ("missing", Left)]);
+        Table::new(&[("subject", Whole), ("status", Whole), ("visits", Right), ("open", Left), ("missing", Left)]);
     for line in &grid.subjects {
         table.row(cells(line));
     }

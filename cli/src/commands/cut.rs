@@ -14,7 +14,7 @@ use super::readings::table as readings_table;
 use crate::args::Cut;
 use crate::error::{Exit, Failure};
 use crate::report::json;
-use crate::report::table::{Left, Right, Table};
+use crate::report::table::{Left, Right, Table, Whole};
 use crate::report::text::count;
 use crate::report::when;
 use crate::study::{Basis, Context, reason};
@@ -79,11 +79,11 @@ fn list(context: &mut Context<'_, '_>) -> Done {
     } else {
         let zone = Basis::plan(&view)?.0.study.time_zone;
         let mut table = Table::new(&[
-            ("cut", Left),
+            ("cut", Whole),
             ("trail", Right),
-            ("made", Left),
+            ("made", Whole),
             ("who", Left),
-            ("hash", Left),
+            ("hash", Whole),
             ("why", Left),
         ]);
         for cut in cuts {

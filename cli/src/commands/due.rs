@@ -8,7 +8,7 @@ use super::Done;
 use super::completeness::{judge, missing_cells};
 use crate::args::Due;
 use crate::error::Exit;
-use crate::report::table::{Left, Table};
+use crate::report::table::{Left, Table, Whole};
 use crate::report::when;
 use crate::study::{Basis, Context};
 
@@ -56,11 +56,11 @@ fn due_json(line: &SubjectLine, visit: &VisitLine) -> Json {
 
 fn table(due: &[(&SubjectLine, &VisitLine)]) -> Table {
     let mut table = Table::new(&[
-        ("subject", Left),
+        ("subject", Whole),
         ("visit", Left),
-        ("state", Left),
+        ("state", Whole),
         ("window", Left),
-        ("planned", Left),
+        ("planned", Whole),
         ("missing", Left),
     ]);
     for (line, visit) in due {

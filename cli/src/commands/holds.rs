@@ -15,7 +15,7 @@ use crate::args::{AnswerOptions, Decide, Holds, HoldsAct, HoldsList};
 use crate::error::{Exit, Failure};
 use crate::intake::{self, Decided};
 use crate::report::json;
-use crate::report::table::{Left, Right, Table};
+use crate::report::table::{Left, Right, Table, Whole};
 use crate::report::text::{clean, clip, count};
 use crate::report::when;
 use crate::study::{Basis, Context, reason, view};
@@ -48,7 +48,7 @@ fn list(context: &mut Context<'_, '_>, args: &HoldsList) -> Done {
 }
 
 fn table(holds: &[HoldRow], all: bool) -> Table {
-    let mut columns = vec![("hold", Right), ("reason", Left), ("where", Left), ("as exported", Left)];
+    let mut columns = vec![("hold", Right), ("reason", Whole), ("where", Left), ("as exported", Left)];
     if all {
         columns.push(("state", Left));
     }
@@ -104,7 +104,7 @@ fn show(context: &mut Context<'_, '_>, hold: i64) -> Done {
             .say(&format!("{like} open holds of this export are alike; --all-like-it {like} answers all of them."))?;
     }
     if !commands.is_empty() {
-        context.out.text(&format!("\nTo answer it:\n{}", commands.join("\n")))?;
+        context.out.text(&format!("\nTo answer it:\n  {}", commands.join("\n  ")))?;
     }
     Ok(Exit::Done)
 }
@@ -136,9 +136,9 @@ fn commands(context: &Context<'_, '_>, hold: &HoldRow) -> Vec<String> {
     };
     let mut lines: Vec<String> = options(hold.reason, &hold.likely)
         .iter()
-        .map(|option| format!("  revisant holds decide {number} {option}{study} --why \"…\""))
+        .map(|option| format!("revisant holds decide {number} {option}{study} --why \"…\""))
         .collect();
-    lines.push(format!("  revisant holds dismiss {number}{study} --why \"…\""));
+    lines.push(format!("revisant holds dismiss {number}{study} --why \"…\""));
     lines
 }
 

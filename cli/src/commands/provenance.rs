@@ -14,7 +14,7 @@ use crate::args::Provenance;
 use crate::error::{Exit, Failure};
 use crate::report::json;
 use crate::report::number::plain_or_dash;
-use crate::report::table::{Left, Right, Table};
+use crate::report::table::{Left, Right, Table, Whole};
 use crate::report::text::clean;
 use crate::report::when;
 use crate::study::{Basis, Context};
@@ -217,9 +217,9 @@ fn text(
     context.out.text(&lines.join("\n"))?;
     let mut table = Table::new(&[
         ("trail", Right),
-        ("when", Left),
+        ("when", Whole),
         ("who", Left),
-        ("act", Left),
+        ("act", Whole),
         ("reading", Right),
         ("why", Left),
     ]);

@@ -1,5 +1,6 @@
 //! `readings`: what is filed.
 
+use revisant_schema::reading::ReadingState;
 use revisant_schema::records::view::{ReadingFilter, ReadingRow};
 use revisant_schema::session::UNSCHEDULED;
 
@@ -8,7 +9,7 @@ use crate::args::Readings;
 use crate::error::{Exit, Failure};
 use crate::report::json;
 use crate::report::number::plain_or_dash;
-use crate::report::table::{Left, Right, Table};
+use crate::report::table::{Left, Right, Table, Whole};
 use crate::report::when;
 use crate::study::{Basis, Context, view};
 
@@ -46,26 +47,29 @@ fn visit(basis: &Basis, args: &Readings) -> Result<Option<Option<usize>>, Failur
     }
 }
 
-/// The readings as a table.
+/// The readings as a table; their states stand in it only where one is not in use.
 pub fn table(basis: &Basis, rows: &[ReadingRow]) -> Table {
-    let mut table = Table::new(&[
+    let states = rows.iter().any(|row| row.state != ReadingState::Current);
+    let taken = format!("taken, {}", basis.zone());
+    let mut columns = vec![
         ("reading", Right),
-        ("subject", Left),
+        ("subject", Whole),
         ("visit", Left),
         ("measure", Left),
         ("no.", Right),
         ("value", Right),
-        ("unit", Left),
-        ("taken", Left),
-        ("state", Left),
-    ]);
+        (taken.as_str(), Left),
+    ];
+    columns.extend(states.then_some(("state", Whole)));
+    let mut table = Table::new(&columns);
     for row in rows {
-        table.row(cells(basis, row));
+        let state = states.then(|| row.state.code().to_owned());
+        table.row(cells(basis, row).into_iter().chain(state));
     }
     table
 }
 
-fn cells(basis: &Basis, row: &ReadingRow) -> [String; 9] {
+fn cells(basis: &Basis, row: &ReadingRow) -> [String; 7] {
     let place = basis.place(&row.session);
     let visit = basis.visit_code(place.visit).unwrap_or(UNSCHEDULED);
     let off = if place.off_window { " (off-window)" } else { "" };
@@ -78,9 +82,7 @@ fn cells(basis: &Basis, row: &ReadingRow) -> [String; 9] {
         format!("{visit}{off}"),
         measure,
         row.replicate.to_string(),
-        format!("{}{}", row.mark.as_deref().unwrap_or(""), plain_or_dash(row.number)),
-        unit.to_owned(),
-        when::taken(row.moment, row.session.day, basis.zone()),
-        row.state.code().to_owned(),
+        format!("{}{} {unit}", row.mark.as_deref().unwrap_or(""), plain_or_dash(row.number)),
+        when::taken_here(row.moment, row.session.day, basis.zone()),
     ]
 }

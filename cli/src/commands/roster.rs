@@ -14,7 +14,7 @@ use super::Done;
 use crate::args::{Data, Roster as Args, Then};
 use crate::error::{Exit, Failure};
 use crate::intake;
-use crate::report::table::{Left, Table};
+use crate::report::table::{Left, Table, Whole};
 use crate::report::text::{count, list};
 use crate::study::{Basis, Context, reason, view};
 
@@ -227,8 +227,13 @@ fn subject_json((code, entry): (&String, &Enrolled)) -> Json {
 }
 
 fn table(plan: &Plan, roster: &Roster) -> Table {
-    let mut table =
-        Table::new(&[("subject", Left), ("enrolled", Left), ("withdrawn", Left), ("arm", Left), ("attributes", Left)]);
+    let mut table = Table::new(&[
+        ("subject", Whole),
+        ("enrolled", Whole),
+        ("withdrawn", Whole),
+        ("arm", Left),
+        ("attributes", Left),
+    ]);
     let day = |day: Option<NaiveDate>| day.map_or(String::new(), |day| day.to_string());
     for (code, entry) in &roster.subjects {
         let shown = plan.subject.attributes.iter().filter_map(|attribute| {

@@ -13,7 +13,7 @@ use super::Done;
 use crate::args::Status;
 use crate::error::{Exit, Failure};
 use crate::intake;
-use crate::report::table::{Left, Table};
+use crate::report::table::{Left, Table, Whole};
 use crate::report::text::count;
 use crate::report::when;
 use crate::study::{Basis, Context};
@@ -135,7 +135,7 @@ fn text(
     let holds = count(result["holds"]["open"].as_u64().unwrap_or(0), "open hold");
     let shown = if states.is_empty() { "none yet".to_owned() } else { states.join(", ") };
     context.out.text(&format!("{service}\nExports: {shown}.\n{holds}."))?;
-    let mut table = Table::new(&[("instrument", Left), ("last export", Left), ("", Left)]);
+    let mut table = Table::new(&[("instrument", Whole), ("last export", Whole), ("", Left)]);
     for line in instruments {
         let flags = [(line.silent, "quiet"), (line.unreachable, "unreachable")];
         let flags: Vec<&str> = flags.iter().filter(|(flag, _)| *flag).map(|(_, word)| *word).collect();
@@ -148,7 +148,7 @@ fn text(
 
 /// The exports that are not simply filed, with the reason where there is one.
 fn wanting(context: &mut Context<'_, '_>, exports: &[ExportRow]) -> Result<(), Failure> {
-    let mut table = Table::new(&[("export", Left), ("state", Left), ("", Left)]);
+    let mut table = Table::new(&[("export", Left), ("state", Whole), ("", Left)]);
     for export in exports.iter().filter(|export| !matches!(export.state, ExportState::Filed | ExportState::Repeat)) {
         let row = [export.export.clone(), export.state.code().to_owned(), export.detail.clone().unwrap_or_default()];
         table.row(row);

@@ -10,7 +10,7 @@ use super::Done;
 use super::collect::progress_bar;
 use crate::args::{Trail, TrailAct, TrailList};
 use crate::error::{Exit, Failure};
-use crate::report::table::{Left, Right, Table};
+use crate::report::table::{Left, Right, Table, Whole};
 use crate::report::text::count;
 use crate::report::when;
 use crate::study::{Basis, Context};
@@ -35,7 +35,7 @@ fn list(context: &mut Context<'_, '_>, args: &TrailList) -> Done {
     }
     let zone = Basis::plan(&view)?.0.study.time_zone;
     let mut table =
-        Table::new(&[("no.", Right), ("when", Left), ("who", Left), ("act", Left), ("what", Left), ("why", Left)]);
+        Table::new(&[("no.", Right), ("when", Whole), ("who", Left), ("act", Whole), ("what", Left), ("why", Left)]);
     for row in rows {
         let why = row.reason.clone().unwrap_or_default();
         let what = objects_words(&row.objects);
@@ -68,6 +68,9 @@ fn objects_words(objects: &str) -> String {
 fn word(value: &Json) -> Option<String> {
     match value {
         Json::Null => None,
+        Json::String(text) if text.len() == 64 && text.bytes().all(|b| b.is_ascii_hexdigit()) => {
+            Some(format!("{}…", text.get(..8)?))
+        }
         Json::String(text) => Some(text.clone()),
         Json::Array(items) if items.len() > 4 => {
             let first = items.first().and_then(word)?;

@@ -332,6 +332,11 @@ impl Analysed<'_> {
         )
     }
 
+    /// `95 % CI`
+    fn interval_name(&self) -> String {
+        format!("{} % CI", number::plain(number::percent(self.analysis.confidence)))
+    }
+
     fn spread_decimals(&self) -> usize {
         let sds = self.result.cells.iter().filter_map(|cell| cell.sd).filter(|sd| *sd > 0.0);
         number::decimals_for(sds.fold(f64::INFINITY, f64::min))
@@ -345,8 +350,15 @@ impl Analysed<'_> {
 
     fn cells_table(&self) -> Table {
         let decimals = self.spread_decimals();
-        let mut table =
-            Table::new(&[("level", Left), ("n", Right), ("mean", Right), ("SD", Right), ("SE", Right), ("CI", Right)]);
+        let interval = self.interval_name();
+        let mut table = Table::new(&[
+            ("level", Left),
+            ("n", Right),
+            ("mean", Right),
+            ("SD", Right),
+            ("SE", Right),
+            (interval.as_str(), Right),
+        ]);
         for (cell, level) in self.result.cells.iter().zip(&self.data.factor.levels) {
             table.row([
                 level.clone(),
@@ -436,11 +448,12 @@ impl Analysed<'_> {
             Multiplicity::Holm => "p (Holm)",
             Multiplicity::BenjaminiHochberg => "p (B & H)",
         };
+        let interval = self.interval_name();
         let mut table = Table::new(&[
             ("contrast", Left),
             ("n", Right),
             ("estimate", Right),
-            ("CI", Right),
+            (interval.as_str(), Right),
             ("t", Right),
             ("p", Right),
             (adjusted, Right),
@@ -481,13 +494,13 @@ impl Analysed<'_> {
         let unlinked = self.result.if_unlinked?;
         let (f, p, ratio) = (unlinked.f?, unlinked.p?, unlinked.variance_ratio?);
         Some(format!(
-            "Had nobody known who was who, the same readings would have given F({}, {}) = {}, {}; following the same \
-             subjects made the error variance {} times as small.",
+            "Had nobody known who was who, the same readings would have given F({}, {}) = {}, {}, over an error variance \
+             {} times that of following the same subjects.",
             df(unlinked.df),
             df(unlinked.error_df),
             number::fixed(f, 2),
             number::p_said(p),
-            number::fixed(ratio, 1)
+            number::fixed(ratio, if ratio < 10.0 { 2 } else { 0 })
         ))
     }
 

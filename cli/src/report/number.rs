@@ -42,6 +42,11 @@ pub fn decimals_for(spread: f64) -> usize {
     usize::try_from((2 - size).clamp(0, 8)).unwrap_or(2)
 }
 
+/// A proportion as a percentage, without what the arithmetic of doubles adds to it.
+pub fn percent(share: f64) -> f64 {
+    (share * 1e8).round() / 1e6
+}
+
 /// Degrees of freedom: whole, or with one decimal.
 pub fn df(value: f64) -> String {
     if value == value.round() { fixed(value, 0) } else { fixed(value, 1) }

@@ -2,7 +2,7 @@
 //!
 //! Invariants: a table fits the width given, however long its cells; what exports said is cleaned first.
 
-use comfy_table::{CellAlignment, ContentArrangement, ContentLineStyle, LineStyle, TableStyle};
+use comfy_table::{CellAlignment, ColumnConstraint, ContentArrangement, ContentLineStyle, LineStyle, TableStyle};
 
 use super::text::clean;
 
@@ -11,10 +11,12 @@ use super::text::clean;
 pub enum Align {
     /// Texts.
     Left,
-    /// Numbers.
+    /// Texts that must not be broken: codes and dates.
+    Whole,
+    /// Numbers, which must not be broken either.
     Right,
 }
-pub use Align::{Left, Right};
+pub use Align::{Left, Right, Whole};
 
 const STYLE: TableStyle = TableStyle::new()
     .header_lines(ContentLineStyle::new(' ', ' ', ' '))
@@ -24,14 +26,14 @@ const STYLE: TableStyle = TableStyle::new()
 /// A table in the making.
 #[derive(Debug, Clone)]
 pub struct Table {
-    columns: Vec<(&'static str, Align)>,
+    columns: Vec<(String, Align)>,
     rows: Vec<Vec<String>>,
 }
 
 impl Table {
     /// A table with these columns and no rows.
-    pub fn new(columns: &[(&'static str, Align)]) -> Self {
-        Self { columns: columns.to_vec(), rows: vec![] }
+    pub fn new(columns: &[(&str, Align)]) -> Self {
+        Self { columns: columns.iter().map(|(name, align)| ((*name).to_owned(), *align)).collect(), rows: vec![] }
     }
 
     /// Adds a row.
@@ -44,19 +46,26 @@ impl Table {
         self.rows.is_empty()
     }
 
-    /// The table as text, without a line end.
+    /// The table as text, without a line end. Numbers, codes and dates are broken only where nothing else helps.
     pub fn render(&self, width: usize) -> String {
+        let text = self.lay_out(width, true);
+        let fits = text.lines().all(|line| line.chars().count() <= width);
+        if fits { text } else { self.lay_out(width, false) }
+    }
+
+    fn lay_out(&self, width: usize, whole: bool) -> String {
         let mut table = comfy_table::Table::new();
         table.load_style(STYLE).set_content_arrangement(ContentArrangement::Dynamic);
-        table.set_width(u16::try_from(width).unwrap_or(u16::MAX));
-        table.set_header(self.columns.iter().map(|(name, _)| *name));
+        // One more: the blank before the first column is taken away again.
+        table.set_width(u16::try_from(width + 1).unwrap_or(u16::MAX));
+        table.set_header(self.columns.iter().map(|(name, _)| name));
         table.add_rows(self.rows.iter());
         for ((_, align), column) in self.columns.iter().zip(table.column_iter_mut()) {
             column.set_padding((0, 1));
-            column.set_cell_alignment(match align {
-                Left => CellAlignment::Left,
-                Right => CellAlignment::Right,
-            });
+            column.set_cell_alignment(if *align == Right { CellAlignment::Right } else { CellAlignment::Left });
+            if whole && *align != Left {
+                column.set_constraint(ColumnConstraint::ContentWidth);
+            }
         }
         let lines: Vec<String> = table.lines().map(|line| inner(&line).to_owned()).collect();
         lines.join("\n")

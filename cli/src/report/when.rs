@@ -18,6 +18,11 @@ pub fn taken(at: Option<DateTime<Utc>>, day: NaiveDate, zone: Tz) -> String {
     at.map_or_else(|| day.to_string(), |at| moment(at, zone))
 }
 
+/// The same where the zone is shown once for all, as in a table's heading.
+pub fn taken_here(at: Option<DateTime<Utc>>, day: NaiveDate, zone: Tz) -> String {
+    at.map_or_else(|| day.to_string(), |at| at.with_timezone(&zone).format("%Y-%m-%d %H:%M").to_string())
+}
+
 /// When a reading was taken, for machines.
 pub fn taken_json(at: Option<DateTime<Utc>>, day: NaiveDate, zone: Tz) -> String {
     at.map_or_else(|| day.to_string(), |at| at.with_timezone(&zone).to_rfc3339_opts(SecondsFormat::AutoSi, true))

@@ -119,12 +119,30 @@ impl IntakeLock {
     }
 }
 
-/// An export at rest whose bytes are kept.
+/// Bytes of small exports that are held in memory between the survey of day 0 and the filing; what goes beyond is read
+/// again from its file.
+const IN_HAND: u64 = 24 * 1024 * 1024;
+
+/// An export at rest.
 struct Ready {
     found: Found,
-    kept: Kept,
-    source: Option<RawSource>,
+    /// Of its bytes when it was surveyed.
+    sha256: [u8; 32],
+    hand: Option<Hand>,
     continues: Option<Continued>,
+}
+
+/// An export's bytes, kept or in hand to be kept with its filing.
+struct Hand {
+    kept: Kept,
+    source: RawSource,
+}
+
+impl Hand {
+    fn of(records: &Records, mut kept: Kept) -> Self {
+        let source = records.kept_source(&mut kept);
+        Self { kept, source }
+    }
 }
 
 /// Files all that waits at this moment. `wait` also waits for files that are not yet at rest.
@@ -228,7 +246,7 @@ fn write_notes(records: &mut Records, changes: &[(String, Option<Noticed>)], los
     }
 }
 
-/// Files the exports that are ready, in portions whose bytes are kept first.
+/// Files the exports that are ready: first all of them are surveyed for day 0, then they are placed one by one.
 fn file_all(
     records: &mut Records,
     mut rules: Rules,
@@ -239,39 +257,73 @@ fn file_all(
 ) -> Result<()> {
     let of = found.len() as u64;
     progress(Progress { done: 0, of });
-    let world = records.world().clone();
-    let mut ready = Vec::with_capacity(found.len());
-    for one in found {
-        match keep(world.as_ref(), records, &one)? {
-            Keeping::Kept(mut kept) => {
-                let source = kept.bytes.is_some().then(|| records.kept_source(&mut kept));
-                ready.push(Ready { found: one, kept, source, continues: None });
-            }
-            Keeping::Changed => report.count(ExportState::Settling),
-            Keeping::Unreachable(why) => {
-                unreachable(records, &rules.plan, &one, &why)?;
-                report.count(ExportState::Unreachable);
-            }
-        }
-    }
+    let (mut ready, mut gathered) = survey(records, &rules, found, report)?;
     let mut tries = 0;
     let mut next = 0;
     while next < ready.len() {
-        let gathered = gather(records, &rules, &mut ready[next..])?;
         let done = file_portion(records, &rules, gathered, &mut ready, &mut next, doer, report, &mut |done| {
             progress(Progress { done, of });
         });
         match done {
-            Ok(()) => {}
-            Err(RecordsError::Moved) if tries < TRIES => {
+            Ok(()) => return Ok(progress(Progress { done: of, of })),
+            Err(IntakeError::Records(RecordsError::Moved)) if tries < TRIES => {
                 tries += 1;
                 rules = plan::in_force(records)?;
+                let left = ready.split_off(next).into_iter().map(|one| one.found).collect();
+                (ready, gathered) = survey(records, &rules, left, report)?;
+                next = 0;
             }
-            Err(error) => return Err(error.into()),
+            Err(error) => return Err(error),
         }
     }
-    progress(Progress { done: of, of });
     Ok(())
+}
+
+/// Looks through all exports in hand: their hashes, and what they say about day 0.
+fn survey(records: &Records, rules: &Rules, found: Vec<Found>, report: &mut Report) -> Result<(Vec<Ready>, Gathered)> {
+    let mut gathered = Gathered::default();
+    let mut ready = Vec::with_capacity(found.len());
+    let mut in_hand = 0;
+    let needed = day0_is_to_be_found(&rules.plan);
+    for found in found {
+        let Some(hand) = take(records, &rules.plan, &found, report)? else { continue };
+        if needed {
+            // A file that cannot be read adds no session; it is held when its turn comes.
+            let _ = gather_one(rules, records.now(), &found, &hand.source, &mut gathered);
+        }
+        let sha256 = hand.kept.sha256;
+        let small = hand.kept.stored.is_some();
+        in_hand += if small { hand.kept.size } else { 0 };
+        let hand = (!small || in_hand <= IN_HAND).then_some(hand);
+        ready.push(Ready { found, sha256, hand, continues: None });
+    }
+    Ok((ready, gathered))
+}
+
+/// Takes an export's bytes in hand; `None` when it changes meanwhile or cannot be read now.
+fn take(records: &Records, plan: &Plan, found: &Found, report: &mut Report) -> Result<Option<Hand>> {
+    let world = records.world().clone();
+    match keep(world.as_ref(), records, found)? {
+        Keeping::Kept(kept) => Ok(Some(Hand::of(records, kept))),
+        Keeping::Changed => {
+            report.count(ExportState::Settling);
+            Ok(None)
+        }
+        Keeping::Unreachable(why) => {
+            unreachable(records, plan, found, &why)?;
+            report.count(ExportState::Unreachable);
+            Ok(None)
+        }
+    }
+}
+
+/// Whether anything depends on what the exports in hand say about day 0: only a label can disagree with a date, and
+/// only days that are counted from sessions can move.
+fn day0_is_to_be_found(plan: &Plan) -> bool {
+    let labelled = plan.instruments.iter().any(|instrument| instrument.reader.visit.is_some());
+    let from_sessions =
+        matches!(plan.subject.anchor, Anchor::Visit(_)) || plan.visits.iter().any(|visit| visit.after.is_some());
+    labelled && from_sessions
 }
 
 fn unreachable(records: &Records, plan: &Plan, found: &Found, why: &str) -> Result<()> {
@@ -283,27 +335,6 @@ fn unreachable(records: &Records, plan: &Plan, found: &Found, why: &str) -> Resu
         detail: Some(why.to_owned()),
     };
     Ok(records.set_noticed(&found.export, &seen)?)
-}
-
-/// What the exports in hand say about day 0: every session that they would add.
-fn gather(records: &Records, rules: &Rules, ready: &mut [Ready]) -> Result<Gathered> {
-    let mut gathered = Gathered::default();
-    let plan = &rules.plan;
-    let labelled = plan.instruments.iter().any(|instrument| instrument.reader.visit.is_some());
-    let counted_from_sessions =
-        matches!(plan.subject.anchor, Anchor::Visit(_)) || plan.visits.iter().any(|visit| visit.after.is_some());
-    // Only a label can disagree with a date, and only days counted from sessions depend on what is in hand.
-    if !labelled || !counted_from_sessions {
-        return Ok(gathered);
-    }
-    let now = records.now();
-    for one in ready {
-        let source = one.source.take().unwrap_or_else(|| records.kept_source(&mut one.kept));
-        // A file that cannot be read adds no session; it is held when its turn comes.
-        let _ = gather_one(rules, now, &one.found, &source, &mut gathered);
-        one.source = Some(source);
-    }
-    Ok(gathered)
 }
 
 fn gather_one(
@@ -344,36 +375,29 @@ fn file_portion(
     doer: &Doer,
     report: &mut Report,
     progress: &mut dyn FnMut(u64),
-) -> revisant_schema::records::Result<()> {
+) -> Result<()> {
     let mut filer = Filer::new(records, rules, gathered, doer)?;
     // What is not committed when something fails was not filed: the report counts only what was.
     let mut uncommitted: Vec<(Option<Outcome>, ExportState)> = Vec::new();
-    let mut start = *next;
     for at in *next..ready.len() {
-        let done = file_one(&mut filer, &mut ready[at]);
+        let done = file_one(&mut filer, &mut ready[at], report);
         match done {
             Ok(done) => uncommitted.extend(done),
             Err(error) => {
                 filer.give_up();
-                *next = start;
                 return Err(error);
             }
         }
-        let last = at + 1 == ready.len();
-        if let Err(error) = filer.commit(last) {
-            *next = start;
-            return Err(error);
-        }
+        filer.commit(at + 1 == ready.len())?;
         if !filer.is_open() {
-            start = at + 1;
+            *next = at + 1;
             for (outcome, state) in uncommitted.drain(..) {
                 report.count(state);
                 outcome.iter().for_each(|outcome| report.add(outcome));
             }
-            progress(start as u64);
+            progress(*next as u64);
         }
     }
-    *next = ready.len();
     Ok(())
 }
 
@@ -381,26 +405,38 @@ fn file_portion(
 fn file_one(
     filer: &mut Filer<'_>,
     ready: &mut Ready,
-) -> revisant_schema::records::Result<Option<(Option<Outcome>, ExportState)>> {
+    report: &mut Report,
+) -> Result<Option<(Option<Outcome>, ExportState)>> {
     filer.begin()?;
-    let path = ready.found.export.clone();
-    let last = filer.records.last_capture(&path)?;
+    let hand = match ready.hand.take() {
+        Some(hand) => hand,
+        None => match take(filer.records, &filer.rules.plan, &ready.found, report)? {
+            // Other bytes than those surveyed: the next collect sees to them.
+            Some(hand) if hand.kept.sha256 != ready.sha256 => {
+                report.count(ExportState::Settling);
+                return Ok(None);
+            }
+            Some(hand) => hand,
+            None => return Ok(None),
+        },
+    };
+    let last = filer.records.last_capture(&ready.found.export)?;
     if let Some(last) = &last
-        && last.sha256 == ready.kept.sha256
+        && last.sha256 == ready.sha256
     {
         // Touched, not changed.
         note_captured(filer, ready, last.capture)?;
         return Ok(None);
     }
     if let Some(same) = known_bytes(filer, ready)? {
-        let capture = file_repeat(filer, ready, same)?;
+        let capture = file_repeat(filer, ready, &hand, same)?;
         note_captured(filer, ready, capture)?;
         return Ok(Some((None, ExportState::Repeat)));
     }
     if let Some(last) = last {
-        ready.continues = continued(filer.records, &last, ready)?;
+        ready.continues = continued(filer.records, &last, &hand)?;
     }
-    let (capture, outcome) = file_new(filer, ready)?;
+    let (capture, outcome) = file_new(filer, ready, hand)?;
     note_captured(filer, ready, capture)?;
     let state = outcome.state();
     Ok(Some((Some(outcome), state)))
@@ -421,7 +457,7 @@ fn note_captured(filer: &Filer<'_>, ready: &Ready, capture: i64) -> revisant_sch
 /// other bytes since, in which case they are news.
 fn known_bytes(filer: &Filer<'_>, ready: &Ready) -> revisant_schema::records::Result<Option<i64>> {
     let instrument = &filer.rules.plan.instruments[ready.found.instrument];
-    let same = filer.records.captures_of_bytes(&instrument.code, &ready.kept.sha256)?;
+    let same = filer.records.captures_of_bytes(&instrument.code, &ready.sha256)?;
     if same.iter().any(|(_, path)| *path == ready.found.export) {
         return Ok(None);
     }
@@ -444,16 +480,13 @@ pub fn file_name(export: &str) -> String {
 fn continued(
     records: &Records,
     last: &revisant_schema::records::intake::LastCapture,
-    ready: &Ready,
+    hand: &Hand,
 ) -> revisant_schema::records::Result<Option<Continued>> {
-    if last.size <= 0 || last.size.unsigned_abs() >= ready.kept.size {
+    if last.size <= 0 || last.size.unsigned_abs() >= hand.kept.size {
         return Ok(None);
     }
     let older = records.raw_source(&last.sha256)?;
-    let newer = match &ready.source {
-        Some(source) => source.open(),
-        None => return Ok(None),
-    };
+    let newer = hand.source.open();
     let failed = |error: std::io::Error| RecordsError::Damaged(format!("a raw copy could not be read back: {error}"));
     if !begins_with(newer.map_err(failed)?, older.open().map_err(failed)?).map_err(failed)? {
         return Ok(None);
@@ -487,10 +520,10 @@ fn begins_with(
     }
 }
 
-fn file_repeat(filer: &mut Filer<'_>, ready: &Ready, same: i64) -> revisant_schema::records::Result<i64> {
+fn file_repeat(filer: &mut Filer<'_>, ready: &Ready, hand: &Hand, same: i64) -> revisant_schema::records::Result<i64> {
     let (rules, doer) = (filer.rules, filer.doer);
     filer.records.act_within(ActKind::File, doer, |act| {
-        let capture = add_capture(act, rules, ready, Some(same))?;
+        let capture = add_capture(act, rules, ready, &hand.kept, Some(same))?;
         act.objects.insert("export".into(), json!(ready.found.export));
         act.objects.insert("repeat_of".into(), json!(same));
         Ok(capture)
@@ -501,9 +534,10 @@ fn add_capture(
     act: &mut revisant_schema::records::Act<'_>,
     rules: &Rules,
     ready: &Ready,
+    kept: &Kept,
     repeat_of: Option<i64>,
 ) -> revisant_schema::records::Result<i64> {
-    act.add_raw(&ready.kept)?;
+    act.add_raw(kept)?;
     let continues = ready.continues.as_ref().map(|before| before.capture);
     act.add(
         "capture",
@@ -511,8 +545,8 @@ fn add_capture(
             Cell::Term(&rules.plan.instruments[ready.found.instrument].code),
             Cell::Text(&ready.found.export),
             Cell::Int(ready.found.stat.modified),
-            Cell::Int(ready.kept.size as i64),
-            Cell::Bytes(&ready.kept.sha256),
+            Cell::Int(kept.size as i64),
+            Cell::Bytes(&kept.sha256),
             Cell::Int(rules.version),
             Cell::int_or_null(repeat_of),
             Cell::int_or_null(continues),
@@ -520,12 +554,9 @@ fn add_capture(
     )
 }
 
-fn file_new(filer: &mut Filer<'_>, ready: &mut Ready) -> revisant_schema::records::Result<(i64, Outcome)> {
+fn file_new(filer: &mut Filer<'_>, ready: &Ready, hand: Hand) -> revisant_schema::records::Result<(i64, Outcome)> {
+    let Hand { kept, source } = hand;
     let capture = filer.records.next_capture()?;
-    let source = match ready.source.take() {
-        Some(source) => source,
-        None => filer.records.kept_source(&mut ready.kept),
-    };
     let export = Export {
         instrument: ready.found.instrument,
         path: ready.found.export.clone(),
@@ -533,7 +564,7 @@ fn file_new(filer: &mut Filer<'_>, ready: &mut Ready) -> revisant_schema::record
         below: ready.found.below.clone(),
         capture,
         source,
-        size: ready.kept.size,
+        size: kept.size,
         continues: ready.continues.clone(),
         accept_serial: false,
     };
@@ -542,29 +573,22 @@ fn file_new(filer: &mut Filer<'_>, ready: &mut Ready) -> revisant_schema::record
         let wrong = format!("it has {} bytes; the plan's `largest` allows {largest}", export.size);
         (filer.records.new_filing(Some(capture))?, Err(FileFault::TooLarge(wrong)))
     } else {
-        match filer.place(&export, &Scope::Whole) {
-            Ok(placed) => placed,
-            Err(error) => {
-                ready.source = Some(export.source);
-                return Err(error);
-            }
-        }
+        filer.place(&export, &Scope::Whole)?
     };
-    let done = match placed {
+    let outcome = match placed {
         Ok(mut placing) => {
             filer.note_gone(&export, &mut filing, &mut placing)?;
-            publish_rows(filer, ready, filing, placing)
+            publish_rows(filer, ready, &kept, filing, placing)?
         }
-        Err(fault) => publish_fault(filer, ready, filing, &fault),
+        Err(fault) => publish_fault(filer, ready, &kept, filing, &fault)?,
     };
-    // Should the rules turn out to have changed, the export is placed again from the same bytes.
-    ready.source = Some(export.source);
-    done.map(|outcome| (capture, outcome))
+    Ok((capture, outcome))
 }
 
 fn publish_rows(
     filer: &mut Filer<'_>,
     ready: &Ready,
+    kept: &Kept,
     filing: Filing,
     mut placing: Placing,
 ) -> revisant_schema::records::Result<Outcome> {
@@ -575,7 +599,7 @@ fn publish_rows(
     }
     let account = serde_json::to_string(&placing.account).unwrap_or_default();
     filer.records.act_within(ActKind::File, doer, |act| {
-        let capture = add_capture(act, rules, ready, None)?;
+        let capture = add_capture(act, rules, ready, kept, None)?;
         act.add("account", &[Cell::Int(capture), Cell::Text(&account)])?;
         settle_holds(act, &placing.settle)?;
         act.objects.insert("export".into(), json!(ready.found.export));
@@ -593,15 +617,16 @@ fn publish_rows(
 fn publish_fault(
     filer: &mut Filer<'_>,
     ready: &Ready,
+    kept: &Kept,
     mut filing: Filing,
     fault: &FileFault,
 ) -> revisant_schema::records::Result<Outcome> {
     let (rules, doer) = (filer.rules, filer.doer);
     let held = Held::row(reason_of(fault), fault.to_string());
-    let key = row_key(ready.kept.sha256.first_chunk().copied().unwrap_or_default(), 0);
+    let key = row_key(kept.sha256.first_chunk().copied().unwrap_or_default(), 0);
     add_hold(filer.records, &mut filing, None, &held, &key)?;
     filer.records.act_within(ActKind::File, doer, |act| {
-        let capture = add_capture(act, rules, ready, None)?;
+        let capture = add_capture(act, rules, ready, kept, None)?;
         act.objects.insert("export".into(), json!(ready.found.export));
         act.objects.insert("capture".into(), json!(capture));
         act.objects.insert("held".into(), json!(held.reason.code()));

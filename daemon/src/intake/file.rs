@@ -273,7 +273,7 @@ pub struct Filer<'a> {
 impl<'a> Filer<'a> {
     /// Prepares; `gathered` is what the exports in hand say about day 0.
     pub fn new(records: &'a mut Records, rules: &'a Rules, gathered: Gathered, doer: &'a Doer) -> Result<Self> {
-        let courses = CourseBook::new(records, rules, gathered)?;
+        let courses = CourseBook::new(rules, gathered);
         let held = HeldBook::load(records)?;
         let now = records.now();
         Ok(Self { records, rules, courses, held, doer, now, open: false, pending: 0, since: Instant::now() })
@@ -413,7 +413,7 @@ impl<'a> Filer<'a> {
             match here.resolver.resolve(here.row, here.rows, &turn.decided) {
                 RowOutcome::NoValue => {}
                 RowOutcome::Held(held) => self.hold(filing, here, &held, &mut turn, run)?,
-                RowOutcome::Ready(resolved) => match self.disagrees(&resolved) {
+                RowOutcome::Ready(resolved) => match self.disagrees(&resolved)? {
                     Some(held) => self.hold(filing, here, &held, &mut turn, run)?,
                     None => self.place_values(filing, here, &resolved, &mut turn, run)?,
                 },
@@ -479,31 +479,35 @@ impl<'a> Filer<'a> {
     }
 
     /// Whether label and date point to different visits.
-    fn disagrees(&mut self, resolved: &Resolved) -> Option<Held> {
-        let label = resolved.label.as_deref().filter(|label| *label != UNSCHEDULED && !resolved.label_decided)?;
+    fn disagrees(&mut self, resolved: &Resolved) -> Result<Option<Held>> {
+        let label = resolved.label.as_deref().filter(|label| *label != UNSCHEDULED && !resolved.label_decided);
         let plan = &self.rules.plan;
-        let (visit, _) = plan.visit(label)?;
-        let course = self.courses.course(&resolved.subject);
-        let span = course.span(plan, visit)?;
-        if span.counts(resolved.day) {
-            return None;
+        let Some((label, (visit, _))) = label.and_then(|label| Some((label, plan.visit(label)?))) else {
+            return Ok(None);
+        };
+        let course = self.courses.course(self.records, &resolved.subject)?;
+        if course.span(plan, visit).is_none_or(|span| span.counts(resolved.day)) {
+            return Ok(None);
         }
-        let (other, _) = course.visit_on(plan, resolved.day).filter(|(other, _)| *other != visit)?;
-        let other = &plan.visits[other].code;
-        let wrong = format!("the label says {label}, and {} lies in the window of {other}", resolved.day);
-        Some(Held::row(Reason::VisitDisagrees, wrong).likely(vec![label.to_owned(), other.clone()]))
+        let other = course.visit_on(plan, resolved.day).filter(|(other, _)| *other != visit);
+        Ok(other.map(|(other, _)| {
+            let other = &plan.visits[other].code;
+            let wrong = format!("the label says {label}, and {} lies in the window of {other}", resolved.day);
+            Held::row(Reason::VisitDisagrees, wrong).likely(vec![label.to_owned(), other.clone()])
+        }))
     }
 
     /// The label of the other session that is the same occasion as this row's, if there can be one.
-    fn twin(&mut self, resolved: &Resolved) -> Option<String> {
+    fn twin(&mut self, resolved: &Resolved) -> Result<Option<String>> {
         let plan = &self.rules.plan;
-        let (at, _) = self.courses.course(&resolved.subject).visit_on(plan, resolved.day)?;
+        let course = self.courses.course(self.records, &resolved.subject)?;
+        let Some((at, _)) = course.visit_on(plan, resolved.day) else { return Ok(None) };
         let code = &plan.visits[at].code;
-        match resolved.label.as_deref() {
+        Ok(match resolved.label.as_deref() {
             None => Some(code.clone()),
             Some(label) if label == code => Some(String::new()),
             Some(_) => None,
-        }
+        })
     }
 
     fn place_values(
@@ -514,7 +518,7 @@ impl<'a> Filer<'a> {
         turn: &mut Turn<'_>,
         run: &mut Run<'_>,
     ) -> Result<()> {
-        let twin = self.twin(resolved);
+        let twin = self.twin(resolved)?;
         for (value, rule) in resolved.values.iter().zip(&run.instrument.reader.values) {
             let column = rule.column.as_str();
             if !turn.concerns(column) {

@@ -7,7 +7,7 @@ use std::collections::HashSet;
 use std::io::Read;
 use std::path::Path;
 
-use chrono::Utc;
+use chrono::{SecondsFormat, Utc};
 use revisant_schema::plan::meaning::{self, Change};
 use revisant_schema::plan::{Loaded, Plan, load};
 use revisant_schema::reading::Condition;
@@ -22,7 +22,7 @@ use super::collect::file_name;
 use super::error::{IntakeError, Result, WouldChange};
 use super::file;
 use super::place::clock::Local;
-use super::place::resolve::{Decided, Resolver, RowOutcome, ValueOutcome, Whereabouts};
+use super::place::resolve::{Decided, PlacedValue, Resolved, Resolver, RowOutcome, ValueOutcome, Whereabouts};
 use super::read::{self, FileFault, Row, Rows};
 use super::rules::Rules;
 
@@ -263,24 +263,33 @@ impl<'s> Side<'s> {
                     .iter()
                     .filter(|value| !matches!(value, ValueOutcome::Missing))
                     .map(|value| match value {
-                        ValueOutcome::Number(value) => Some(format!(
-                            "{} of {} on {} at {:?}, visit {}, {} {} = {} {}, replicate {:?}",
-                            self.plan.measures[value.measure].code,
-                            row.subject,
-                            row.day,
-                            row.moment,
-                            row.label.as_deref().unwrap_or("by date"),
-                            value.condition,
-                            value.mark.unwrap_or_default(),
-                            value.number,
-                            self.plan.measures[value.measure].unit,
-                            value.replicate.or(row.replicate)
-                        )),
+                        ValueOutcome::Number(value) => Some(self.said(&row, value)),
                         ValueOutcome::Missing | ValueOutcome::Held(_) => None,
                     })
                     .collect(),
             ),
         }
+    }
+
+    /// Everything about one value, in words: two that read alike are filed alike.
+    fn said(&self, row: &Resolved, value: &PlacedValue) -> String {
+        let measure = &self.plan.measures[value.measure];
+        let condition = value.condition.to_string();
+        let condition = if condition.is_empty() { condition } else { format!(" {condition}") };
+        let moment =
+            row.moment.map_or(String::new(), |at| format!(", {}", at.to_rfc3339_opts(SecondsFormat::AutoSi, true)));
+        let visit = row.label.as_deref().map_or("visit by its date".to_owned(), |label| format!("visit {label}"));
+        let replicate = value.replicate.or(row.replicate);
+        let replicate = replicate.map_or(String::new(), |number| format!(", replicate {number}"));
+        format!(
+            "{}{condition} of {} on {}{moment}, {visit}{replicate}: {}{} {}",
+            measure.code,
+            row.subject,
+            row.day,
+            value.mark.unwrap_or_default(),
+            value.number,
+            measure.unit
+        )
     }
 }
 

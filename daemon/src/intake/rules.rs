@@ -97,34 +97,25 @@ fn held_measures(plan: &Plan, bits: u128) -> Vec<String> {
 pub struct CourseBook<'p> {
     plan: &'p Plan,
     roster: &'p Roster,
-    filed: HashMap<String, Vec<SessionFacts>>,
     gathered: Gathered,
     known: HashMap<String, Course>,
 }
 
 impl<'p> CourseBook<'p> {
     /// Opens the book.
-    pub fn new(records: &Records, rules: &'p Rules, gathered: Gathered) -> Result<Self> {
-        let mut filed: HashMap<String, Vec<SessionFacts>> = HashMap::new();
-        for session in session_facts(records)? {
-            filed.entry(session.subject.clone()).or_default().push(session);
-        }
-        Ok(Self { plan: &rules.plan, roster: &rules.roster, filed, gathered, known: HashMap::new() })
+    pub fn new(rules: &'p Rules, gathered: Gathered) -> Self {
+        Self { plan: &rules.plan, roster: &rules.roster, gathered, known: HashMap::new() }
     }
 
     /// A subject's course.
-    pub fn course(&mut self, subject: &str) -> &Course {
+    pub fn course(&mut self, records: &Records, subject: &str) -> Result<&Course> {
         if !self.known.contains_key(subject) {
-            let mut facts = self.filed.remove(subject).unwrap_or_default();
+            let mut facts = records.view()?.facts_of_subject(subject)?;
             facts.extend(self.gathered.facts(self.plan, subject));
             let enrolled = self.roster.subjects.get(subject).and_then(|entry| entry.enrolled);
             self.known.insert(subject.to_owned(), Course::derive(self.plan, enrolled, facts));
         }
-        &self.known[subject]
+        let lost = || RecordsError::Damaged(format!("the course of {subject} is lost"));
+        self.known.get(subject).ok_or_else(lost)
     }
-}
-
-/// Every session of the records that holds a current reading, with the measures it holds.
-pub fn session_facts(records: &Records) -> Result<Vec<SessionFacts>> {
-    records.view()?.session_facts()
 }

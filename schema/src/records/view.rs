@@ -789,6 +789,37 @@ impl View<'_> {
         self.facts_of(&self.cells()?)
     }
 
+    /// The same, of one subject alone.
+    pub fn facts_of_subject(&self, subject: &str) -> Result<Vec<crate::session::SessionFacts>> {
+        let rows = self.records.query_all(
+            "SELECT s.id, s.day, l.text, m.text FROM session s JOIN subject u ON u.id = s.subject
+             LEFT JOIN term l ON l.id = s.label JOIN reading r ON r.session = s.id
+             JOIN filing f ON f.id = r.filing AND f.act <= ?2 JOIN term m ON m.id = r.measure
+             WHERE u.code = ?1 AND NOT EXISTS
+                (SELECT 1 FROM reading n JOIN filing g ON g.id = n.filing WHERE n.supersedes = r.id AND g.act <= ?2)
+             AND coalesce((SELECT e.kind FROM reading_event e WHERE e.reading = r.id AND e.act <= ?2
+                ORDER BY e.id DESC LIMIT 1), 'restored') = 'restored'
+             GROUP BY s.id, r.measure ORDER BY s.id, r.measure",
+            params![subject, self.upto],
+            "reading a subject's sessions",
+            |row| Ok((row.get::<_, i64>(0)?, row.get::<_, i64>(1)?, row.get::<_, Option<String>>(2)?, row.get(3)?)),
+        )?;
+        let mut facts: Vec<crate::session::SessionFacts> = Vec::new();
+        for (session, day, label, measure) in rows {
+            match facts.last_mut() {
+                Some(last) if last.session == session => last.measures.push(measure),
+                _ => facts.push(crate::session::SessionFacts {
+                    session,
+                    subject: subject.to_owned(),
+                    day: day_of_number(day),
+                    label,
+                    measures: vec![measure],
+                }),
+            }
+        }
+        Ok(facts)
+    }
+
     /// The same, from counts already at hand.
     pub fn facts_of(&self, cells: &[CellCount]) -> Result<Vec<crate::session::SessionFacts>> {
         let mut measures: HashMap<i64, Vec<String>> = HashMap::new();

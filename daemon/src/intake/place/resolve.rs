@@ -870,10 +870,10 @@ fn doubled(written: &str, early: DateTime<Utc>, late: DateTime<Utc>) -> Held {
     Held::row(Reason::ClockFold, wrong).likely(vec![text(early), text(late)])
 }
 
-/// The codes nearest to `text`, best first: at most three, none of them farther than half the text.
+/// The codes nearest to `text`, best first: at most three, one or two edits away.
 pub fn nearest<'a>(text: &str, codes: impl Iterator<Item = &'a str>) -> Vec<String> {
     let text = text.to_lowercase();
-    let most = (text.chars().count() / 2).clamp(1, 3);
+    let most = (text.chars().count() / 3).clamp(1, 2);
     let mut near: Vec<(usize, &str)> = codes
         .map(|code| (edits(&text, &code.to_lowercase()), code))
         .filter(|(distance, _)| *distance <= most)
@@ -912,7 +912,7 @@ mod tests {
     #[test]
     fn near_codes_come_best_first() {
         let codes = ["DV-011", "DV-012", "DV-110"];
-        assert_eq!(nearest("DV-O11", codes.into_iter()), ["DV-011", "DV-012"]);
+        assert_eq!(nearest("DV-O11", codes.into_iter()), ["DV-011", "DV-012", "DV-110"]);
         assert_eq!(nearest("DV-101", codes.into_iter()), ["DV-011", "DV-110", "DV-012"]);
         assert!(nearest("ZZ", codes.into_iter()).is_empty());
         assert_eq!(edits("abcd", "acbd"), 1);

@@ -1,0 +1,3 @@
+//! The service `revisantd`, as built for the checks.
+
+fn main() {}
