@@ -16,7 +16,7 @@ use super::{ROSTER, TODAY};
 
 /// The export folders, from the study's folder.
 pub const FOLDERS: [&str; 4] = [GRIP, PLATE, TIMER, SCALE];
-const GRIP: &str = "exports/grip-meter";
+const GRIP: &str = "exports/gauge";
 const PLATE: &str = "exports/plate";
 const TIMER: &str = "exports/timer";
 const SCALE: &str = "exports/scale";
@@ -27,9 +27,9 @@ const VISIT_DAYS: [u64; VISITS] = [0, 28, 56, 84];
 const IRREGULAR: [(&str, usize, i64); 3] = [("QR-123", 2, 8), ("QR-213", 3, -4), ("QR-224", 3, -3)];
 /// A visit that did not take place.
 const MISSED: (&str, usize) = ("QR-134", 2);
-/// A code misread at the grip meter: subject, visit, as typed.
+/// A code misread at the grip gauge: subject, visit, as typed.
 const MISREAD: (&str, usize, &str) = ("QR-156", 1, "QR-158");
-/// A decimal comma forgotten at the grip meter.
+/// A decimal comma forgotten at the grip gauge.
 const NO_COMMA: (&str, usize) = ("QR-202", 1);
 /// A left hand in plaster.
 const PLASTER: (&str, usize) = ("QR-145", 2);
@@ -235,7 +235,7 @@ impl Steps {
     fn grip(&mut self, number: usize, day: NaiveDate, sittings: &[&Sitting]) {
         let tester = ["nb", "jo", "ts"][number % 3];
         let degrees = if number % 2 == 0 { "20,5" } else { "21,0" };
-        let mut text = format!("Grip meter report\nSerial: HG-2209\nRoom: {degrees} °C\nTester: {tester}\n\n");
+        let mut text = format!("Grip gauge report\nSerial: HG-2209\nRoom: {degrees} °C\nTester: {tester}\n\n");
         text.push_str("Subject;Date;Time;Trial;Left [kg];Right [kg]\n");
         let mut rows = 0;
         for sitting in sittings {
@@ -252,7 +252,7 @@ impl Steps {
         text.push_str(&format!("End of report\nRows: {rows}\n"));
         // In Windows-1252 the degree sign is the one byte B0; all else is ASCII.
         let bytes: Vec<u8> = text.chars().map(|c| u8::try_from(u32::from(c)).unwrap_or(b'?')).collect();
-        let file = format!("{GRIP}/grip-{day}.csv");
+        let file = format!("{GRIP}/{day}.csv");
         match number % 3 {
             0 => self.renamed(&file, bytes),
             1 => self.part_written(&file, bytes.clone(), bytes.len() * 2 / 3, PAUSE),
@@ -269,7 +269,7 @@ impl Steps {
             text.push_str(&format!("{time}\t{}\t{open:.2}\t{closed:.2}\r\n", run + 1));
         }
         let bytes = std::iter::once(0xfeff).chain(text.encode_utf16()).flat_map(u16::to_le_bytes).collect();
-        let file = format!("{PLATE}/{}_{}.txt", sitting.code, sitting.day);
+        let file = format!("{PLATE}/{}_{:02}.txt", sitting.code, sitting.visit + 1);
         match sitting.visit {
             1 => self.renamed(&file, bytes),
             _ => self.at_once(&file, bytes),
@@ -286,7 +286,7 @@ impl Steps {
                 text.push_str(&format!("{day}T{time}:{second},{code},V{visit},{test},{value:.2},{unit},jo\n"));
             }
         }
-        let (file, bytes) = (format!("{TIMER}/tests-{day}.csv"), text.into_bytes());
+        let (file, bytes) = (format!("{TIMER}/{day}.csv"), text.into_bytes());
         let any = |which| sittings.iter().any(|sitting| sitting.is(which));
         if any(CUT_OFF) {
             // Within the last result: read too early, it would be another number.
@@ -294,7 +294,7 @@ impl Steps {
             return self.part_written(&file, bytes, cut, LONG_PAUSE);
         }
         if any(COPIED) {
-            let copy = format!("{TIMER}/tests-{day}-copy.csv");
+            let copy = format!("{TIMER}/{day}-copy.csv");
             self.add(self.now + LONG_PAUSE, &copy, What::Write(bytes.clone()));
         }
         self.at_once(&file, bytes);
