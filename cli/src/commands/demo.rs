@@ -13,7 +13,9 @@ use serde_json::{Map, Value as Json, json};
 use super::Done;
 use crate::args::Demo;
 use crate::demo::rig::{FOLDERS, Rig};
-use crate::demo::service::{self, Running};
+use revisant_daemon::service::Handle;
+
+use crate::demo::service;
 use crate::demo::{SEED, TODAY, write_study};
 use crate::error::{Exit, Failure};
 use crate::output::Out;
@@ -100,7 +102,7 @@ fn play(context: &mut Context<'_, '_>, seed: u64) -> Result<u64, Failure> {
     let rig = Rig::new(seed);
     let steps = rig.steps().len() as u64;
     let bar = bar(context, steps);
-    let service = service::start(&context.study, context.world.clone());
+    let service = service::start(&context.study, context.world.clone())?;
     let played = rig.play(&context.study, &mut |done| bar.set_position(done));
     let read = match played {
         Ok(()) => {
@@ -110,7 +112,7 @@ fn play(context: &mut Context<'_, '_>, seed: u64) -> Result<u64, Failure> {
         Err(error) => Err(unwritable(&context.study, &error)),
     };
     bar.finish_and_clear();
-    service.stop().and(read).map(|()| steps)
+    service.stop().map_err(Failure::from).and(read).map(|()| steps)
 }
 
 /// On standard error, where a terminal reads it.
@@ -126,16 +128,16 @@ fn bar(context: &Context<'_, '_>, steps: u64) -> ProgressBar {
     bar
 }
 
-fn wait(context: &Context<'_, '_>, service: &Running) -> Result<(), Failure> {
+fn wait(context: &Context<'_, '_>, service: &Handle) -> Result<(), Failure> {
     let records = Records::open(&context.study, context.world.clone())?;
     let start = Instant::now();
-    while start.elapsed() < PATIENCE && !service.has_ended() {
+    while start.elapsed() < PATIENCE && service.is_alive() {
         if service::has_read_all(&records, &context.study)? {
             return Ok(());
         }
         std::thread::sleep(Duration::from_millis(100));
     }
-    match service.has_ended() {
+    match !service.is_alive() {
         // Stopping it says why.
         true => Ok(()),
         false => Err(Failure::new("service", format!("exports are unread after {} s", PATIENCE.as_secs()))),

@@ -2,50 +2,28 @@
 
 use std::path::Path;
 use std::sync::Arc;
-use std::sync::atomic::{AtomicBool, Ordering};
-use std::thread::JoinHandle;
 use std::time::Duration;
 
-use revisant_daemon::intake::{collect, notice, plan};
-use revisant_schema::records::{Doer, Records};
+use revisant_daemon::intake::{notice, plan};
+use revisant_daemon::service::{Handle, Options, ServiceError, spawn};
+use revisant_schema::records::Records;
 use revisant_schema::world::World;
 
 use crate::error::Failure;
-use crate::study::PROGRAM;
 
-/// A service that runs.
-pub struct Running {
-    stop: Arc<AtomicBool>,
-    thread: JoinHandle<Result<(), Failure>>,
+impl From<ServiceError> for Failure {
+    fn from(error: ServiceError) -> Self {
+        match error {
+            ServiceError::Start { source, .. } => source.into(),
+            other => Self::new("service", other.to_string()),
+        }
+    }
 }
 
 /// Starts the service on a study.
-pub fn start(study: &Path, world: Arc<dyn World>) -> Running {
-    let stop = Arc::new(AtomicBool::new(false));
-    let (told, study) = (stop.clone(), study.to_path_buf());
-    let thread = std::thread::spawn(move || {
-        let mut records = Records::open(&study, world)?;
-        let _lock = collect::IntakeLock::take(&records, "revisantd")?;
-        while !told.load(Ordering::Relaxed) {
-            collect::collect(&mut records, &study, &Doer::this_account(PROGRAM), false, &mut |_| ())?;
-            std::thread::sleep(Duration::from_millis(200));
-        }
-        Ok(())
-    });
-    Running { stop, thread }
-}
-
-impl Running {
-    /// Whether it ended without being asked to.
-    pub fn has_ended(&self) -> bool {
-        self.thread.is_finished()
-    }
-
-    /// Stops it, and says how it ended.
-    pub fn stop(self) -> Result<(), Failure> {
-        self.stop.store(true, Ordering::Relaxed);
-        self.thread.join().unwrap_or_else(|_| Err(Failure::new("service", "the service broke off")))
-    }
+pub fn start(study: &Path, world: Arc<dyn World>) -> Result<Handle, Failure> {
+    let options = Options { study: study.to_path_buf(), every: Duration::from_secs(60), world };
+    Ok(spawn(options, Box::new(|_| {}))?)
 }
 
 /// Whether everything that lies in the export folders is at rest and has been read.
