@@ -1,6 +1,8 @@
 //! The intake as a whole, by what it does to records: holds and their answers, re-exports, paths that change, readers
 //! that were wrong. Every study here is invented.
 
+#![allow(clippy::unwrap_used, clippy::panic, reason = "a test says what went wrong by failing")]
+
 use std::fs;
 use std::path::Path;
 use std::sync::Arc;
