@@ -164,7 +164,22 @@ fn what_does_not_exist() {
         (1, &["account", "W-77", "week-4", "--why", "ill"]),
         (1, &["cut", "compare", "one", "other"]),
         (1, &["analyse", "grip-over-vists"]),
-        (1, &["enter", "--subject", "W-01", "--measure", "grap", "--value", "31", "--taken-at", "2026-03-02", "--why", "tape"]),
+        (
+            1,
+            &[
+                "enter",
+                "--subject",
+                "W-01",
+                "--measure",
+                "grap",
+                "--value",
+                "31",
+                "--taken-at",
+                "2026-03-02",
+                "--why",
+                "tape",
+            ],
+        ),
     ];
     told(&site, "not-there", &failures);
     a_good_day_files_everything(&site);
@@ -307,7 +322,8 @@ fn locked_records_are_waited_for_and_then_reported() {
     // Both at once: each waits as long as a command waits.
     let words = site.command(&["collect"]);
     let json = std::thread::scope(|scope| {
-        let json = scope.spawn(|| site.run(&["roster", "add", "W-05", "--enrolled", "2026-01-08", "--why", "late", "--json"]));
+        let json =
+            scope.spawn(|| site.run(&["roster", "add", "W-05", "--enrolled", "2026-01-08", "--why", "late", "--json"]));
         let ran = Ran::of(&["collect"], words);
         assert_eq!(ran.code, Some(1), "{}", ran.shown());
         well_behaved(&ran);
@@ -378,7 +394,8 @@ const COLLECT_FAILS: &str = r#"
 fn told_apart(site: &Site, name: &str, kind: &str) {
     let words = fs::read_to_string(site.path("words")).expect("its words");
     let status = fs::read_to_string(site.path("status")).expect("its exit status");
-    let ran = Ran { args: vec!["collect".into()], code: status.trim().parse().ok(), stdout: String::new(), stderr: words };
+    let ran =
+        Ran { args: vec!["collect".into()], code: status.trim().parse().ok(), stdout: String::new(), stderr: words };
     well_behaved(&ran);
     assert_eq!(ran.code, Some(1), "{}", ran.shown());
     site.check_snapshot(&format!("errors/{name}"), &ran);

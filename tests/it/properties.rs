@@ -123,7 +123,8 @@ fn value() -> impl Strategy<Value = String> {
 }
 
 fn study() -> impl Strategy<Value = Study> {
-    let label = prop_oneof![3 => Just(""), 2 => Just("first"), 2 => Just("second"), 1 => Just("third"), 1 => Just("extra")];
+    let label =
+        prop_oneof![3 => Just(""), 2 => Just("first"), 2 => Just("second"), 1 => Just("third"), 1 => Just("extra")];
     let note = prop_oneof![4 => Just(""), 1 => Just("müde"), 1 => Just("\"zweimal; links\"")];
     // Subject 4 is on no roster.
     let row = (1_u32..=4, label, 0_u32..20, value(), note);
@@ -175,7 +176,10 @@ fn grid(site: &Site) -> Json {
 /// Whose readings say what: never anything that the whole export does not say.
 fn values(site: &Site) -> BTreeSet<String> {
     let text = |reading: &Json, field: &str| reading[field].as_str().unwrap_or_default().to_owned();
-    site.readings().iter().map(|reading| format!("{} {}", text(reading, "subject"), text(reading, "as_written"))).collect()
+    site.readings()
+        .iter()
+        .map(|reading| format!("{} {}", text(reading, "subject"), text(reading, "as_written")))
+        .collect()
 }
 
 /// Every row that has a value is filed once, or held once; none is there twice, and none is lost.
@@ -190,7 +194,7 @@ fn each_row_is_there_once(site: &Site, rows: &[Row]) {
         let filed = readings.iter().filter(|reading| reading["taken_at"] == stamp.as_str()).count();
         let held = holds.iter().filter(|hold| hold["row"].as_str().is_some_and(|held| held.trim_end() == text)).count();
         let wanted = usize::from(!matches!(row.value.as_str(), "" | "---"));
-        assert_eq!(filed + held, wanted, "{text}: filed {filed} times, held {held} times\n{readings:?}\n{holds:?}");
+        assert_eq!(filed + held, wanted, "{text}: filed {filed} times, held {held} times");
     }
 }
 
@@ -199,7 +203,8 @@ fn lines_add_up(site: &Site) {
     let status = site.json(&["status"]);
     for file in status["files"].as_array().into_iter().flatten().filter(|file| !file["lines"].is_null()) {
         let lines = file["lines"].as_object().expect("an account");
-        let parts: u64 = lines.iter().filter(|(name, _)| *name != "lines").filter_map(|(_, count)| count.as_u64()).sum();
+        let parts: u64 =
+            lines.iter().filter(|(name, _)| *name != "lines").filter_map(|(_, count)| count.as_u64()).sum();
         let text = std::fs::read(site.path(file["export"].as_str().expect("a path"))).expect("the export");
         let ends = text.iter().filter(|byte| **byte == b'\n').count() as u64;
         let there = ends + u64::from(text.last().is_some_and(|byte| *byte != b'\n'));
@@ -358,6 +363,42 @@ proptest! {
         }
         prop_assert_eq!(&site.json(&["trail", "verify"])["sound"], &json!(true));
     }
+}
+
+/// Two rows of one subject: the second is labelled, and came before the day 0 was known by which its label is wrong.
+fn labelled_before_day_0(value: &str) -> Study {
+    let row =
+        |visit, day, second, value: &str| Row { subject: 1, visit, day, second, value: value.to_owned(), note: "" };
+    Study { labelled: true, rows: vec![row("second", 16, 0, value), row("first", 2, 7, "70.1")] }
+}
+
+#[test]
+fn a_filed_row_that_comes_again_is_not_held() {
+    for (value, filed_first, held_first) in [("31.5", 1, 0), ("n/a", 0, 1)] {
+        let study = labelled_before_day_0(value);
+        let site = study.site("grows");
+        site.drop_export("exports/dyn/log-1.csv", export(&study.rows[..1]));
+        let first = site.collect();
+        assert_eq!(first["readings"], json!({ "filed": filed_first, "already": 0, "held": held_first }));
+        site.drop_export("exports/dyn/log-2.csv", export(&study.rows));
+        let second = site.collect();
+        assert_eq!(second["readings"], json!({ "filed": 1, "already": filed_first, "held": 0 }), "{value}");
+        each_row_is_there_once(&site, &study.rows);
+    }
+}
+
+#[test]
+#[ignore = "open: the row is held as after-withdrawal although it is filed, and should be known again"]
+fn a_filed_row_that_comes_again_after_a_withdrawal_is_not_held() {
+    let study = labelled_before_day_0("31.5");
+    let site = study.site("grows");
+    site.drop_export("exports/dyn/log-1.csv", export(&study.rows[..1]));
+    site.collect();
+    site.ok(&["roster", "withdraw", "P-01", "--on", "2026-03-10", "--data", "keep", "--why", "moved away"]);
+    site.drop_export("exports/dyn/log-2.csv", export(&study.rows));
+    let second = site.collect();
+    assert_eq!(second["readings"], json!({ "filed": 1, "already": 1, "held": 0 }));
+    each_row_is_there_once(&site, &study.rows);
 }
 
 fn answers(site: &Site, then: &[&str]) -> [Json; 3] {

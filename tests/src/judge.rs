@@ -131,9 +131,7 @@ fn nothing(json: &Json) -> bool {
 
 fn same_number(wanted: &Json, is: &Json) -> bool {
     match (wanted.as_f64(), is.as_f64()) {
-        (Some(wanted), Some(is)) => {
-            wanted == is || (wanted - is).abs() <= TOLERANCE * wanted.abs().max(is.abs())
-        }
+        (Some(wanted), Some(is)) => wanted == is || (wanted - is).abs() <= TOLERANCE * wanted.abs().max(is.abs()),
         (None, None) => wanted.is_null() && is.is_null(),
         _ => false,
     }
@@ -211,11 +209,10 @@ fn holds(verdict: &mut Verdict, expected: &[Json], found: &[Json]) {
     let mut expected = expected.to_vec();
     let mut found: Vec<Json> = found.iter().filter(|hold| hold["state"] == "open").cloned().collect();
     one_for_a_whole_file(&mut expected, &mut found);
-    let keys: [&dyn Fn(&Json) -> String; 3] = [
-        &|h| json!([h["export"], place(h)]).to_string(),
-        &|h| json!([h["export"], h["reason"]]).to_string(),
-        &|h| h["export"].to_string(),
-    ];
+    let keys: [&dyn Fn(&Json) -> String; 3] =
+        [&|h| json!([h["export"], place(h)]).to_string(), &|h| json!([h["export"], h["reason"]]).to_string(), &|h| {
+            h["export"].to_string()
+        }];
     let matched = pair(&expected, &found, &keys, &hold_differences);
     let words = |h: &Json| format!("{} {} {}", h["reason"], h["export"], h["where"]);
     for (at, _, wrong) in matched.pairs.iter().filter(|(_, _, wrong)| !wrong.is_empty()) {
@@ -264,10 +261,8 @@ fn hold_differences(expected: &Json, found: &Json) -> Vec<String> {
 }
 
 fn states(verdict: &mut Verdict, expected: &Json, files: &[Json]) {
-    let mut found: HashMap<&str, &str> = files
-        .iter()
-        .filter_map(|file| Some((file["export"].as_str()?, file["state"].as_str()?)))
-        .collect();
+    let mut found: HashMap<&str, &str> =
+        files.iter().filter_map(|file| Some((file["export"].as_str()?, file["state"].as_str()?))).collect();
     for (export, wanted) in expected.as_object().into_iter().flatten() {
         verdict.expected += 1;
         let is = found.remove(export.as_str());

@@ -414,8 +414,10 @@ impl<'a> Filer<'a> {
                 RowOutcome::NoValue => {}
                 RowOutcome::Held(held) => self.hold(filing, here, &held, &mut turn, run)?,
                 RowOutcome::Ready(resolved) => match self.disagrees(&resolved)? {
-                    Some(held) => self.hold(filing, here, &held, &mut turn, run)?,
-                    None => self.place_values(filing, here, &resolved, &mut turn, run)?,
+                    Some(held) if !self.placed_before(&resolved, &turn, run)? => {
+                        self.hold(filing, here, &held, &mut turn, run)?;
+                    }
+                    _ => self.place_values(filing, here, &resolved, &mut turn, run)?,
                 },
             }
         }
@@ -495,6 +497,22 @@ impl<'a> Filer<'a> {
             let wrong = format!("the label says {label}, and {} lies in the window of {other}", resolved.day);
             Held::row(Reason::VisitDisagrees, wrong).likely(vec![label.to_owned(), other.clone()])
         }))
+    }
+
+    /// Whether the row came before and was judged by what was then known of day 0: some value of it is filed, or held.
+    fn placed_before(&mut self, resolved: &Resolved, turn: &Turn<'_>, run: &Run<'_>) -> Result<bool> {
+        if !turn.open.is_empty() {
+            return Ok(true);
+        }
+        for value in &resolved.values {
+            if let ValueOutcome::Number(value) = value {
+                let measure = &self.rules.plan.measures[value.measure];
+                if run.judge.came_before(self.records, &Case { row: resolved, value, measure, twin: None })? {
+                    return Ok(true);
+                }
+            }
+        }
+        Ok(false)
     }
 
     /// The label of the other session that is the same occasion as this row's, if there can be one.
