@@ -193,7 +193,9 @@ JSON: see the README; \"subjects\", \"cells\", \"decomposition\", \"effects\", \
 Example:
   revisant demo --into demo-study
 
-JSON: {\"folder\", …}")]
+It writes into a new folder and nowhere else, and takes under half a minute.
+JSON: {\"folder\", \"seed\", \"on\", \"steps\", \"status\", \"holds\", \"completeness\", \"due\", \"analysis\", \"verified\", \"plot\",
+\"seconds\"}, each as its own command gives it")]
     Demo(Demo),
 }
 
@@ -732,9 +734,12 @@ pub struct Analyse {
 /// `demo`
 #[derive(Debug, Group)]
 pub struct Demo {
-    /// The new folder; default: a new one under the current folder
+    /// The new folder; default: revisant-demo under the current folder
     #[arg(long, value_name = "DIR")]
     pub into: Option<PathBuf>,
+    /// Other values and days, the same for the same number
+    #[arg(long, value_name = "N")]
+    pub seed: Option<u64>,
 }
 
 /// `name=value`

@@ -8,6 +8,7 @@ pub mod args;
 pub mod by_hand;
 pub mod commands;
 pub mod dataset;
+pub mod demo;
 pub mod error;
 pub mod intake;
 pub mod looked;
