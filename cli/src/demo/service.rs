@@ -27,7 +27,8 @@ pub fn start(study: &Path, world: Arc<dyn World>) -> Running {
         let mut records = Records::open(&study, world)?;
         let _lock = collect::IntakeLock::take(&records, "revisantd")?;
         while !told.load(Ordering::Relaxed) {
-            collect::collect(&mut records, &study, &Doer::this_account(PROGRAM), false, &mut |_| ())?;
+            let how = collect::How { wait: false, progress: &mut |_| (), stop: &|| told.load(Ordering::Relaxed) };
+            collect::collect(&mut records, &study, &Doer::this_account(PROGRAM), how)?;
             std::thread::sleep(Duration::from_millis(200));
         }
         Ok(())
