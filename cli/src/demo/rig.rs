@@ -115,7 +115,7 @@ impl Rig {
             sitting.iter().for_each(|sitting| steps.plate(sitting));
             steps.timer(*day, sitting);
             weighed.extend(sitting);
-            if number % 5 == 0 || number == last {
+            if number.is_multiple_of(5) || number == last {
                 steps.scale(&weighed, number == last);
             }
         }
@@ -234,7 +234,7 @@ impl Steps {
 
     fn grip(&mut self, number: usize, day: NaiveDate, sittings: &[&Sitting]) {
         let tester = ["nb", "jo", "ts"][number % 3];
-        let degrees = if number % 2 == 0 { "20,5" } else { "21,0" };
+        let degrees = if number.is_multiple_of(2) { "20,5" } else { "21,0" };
         let mut text = format!("Grip gauge report\nSerial: HG-2209\nRoom: {degrees} °C\nTester: {tester}\n\n");
         text.push_str("Subject;Date;Time;Trial;Left [kg];Right [kg]\n");
         let mut rows = 0;
