@@ -129,7 +129,9 @@ pub fn collect(
             Report::default()
         }
     };
-    let collected = collect::collect(records, study, doer, true, &mut |Progress { done, of }| progress(done, of))?;
+    let mut tell = |Progress { done, of }| progress(done, of);
+    let how = collect::How { wait: true, progress: &mut tell, stop: &|| false };
+    let collected = collect::collect(records, study, doer, how)?;
     Ok(Collected::of([adopted, collected]))
 }
 

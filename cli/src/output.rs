@@ -9,6 +9,7 @@ use owo_colors::OwoColorize;
 use serde::Serialize;
 
 use crate::error::{Exit, Failure};
+use crate::report::table::Table;
 use crate::report::text::wrap;
 
 /// The narrowest and the widest that text is laid out for.
@@ -53,6 +54,19 @@ impl<'w> Out<'w> {
     /// What was asked for; ends with a line end whatever the text does.
     pub fn text(&mut self, text: &str) -> Result<(), Failure> {
         self.line(text.strip_suffix('\n').unwrap_or(text))
+    }
+
+    /// A table, its heading set off where colour is allowed.
+    pub fn table(&mut self, table: &Table) -> Result<(), Failure> {
+        let text = table.render(self.width);
+        if !self.colour {
+            return self.text(&text);
+        }
+        let is_rule = |line: &str| line.starts_with('─');
+        let heads = text.lines().take_while(|line| !is_rule(line)).count();
+        let bold = |(at, line): (usize, &str)| if at < heads { line.bold().to_string() } else { line.to_owned() };
+        let lines: Vec<String> = text.lines().enumerate().map(bold).collect();
+        self.text(&lines.join("\n"))
     }
 
     /// A paragraph, wrapped; left out under `--quiet`.

@@ -5,7 +5,7 @@ use std::fs;
 use std::path::Path;
 use std::sync::Arc;
 
-use revisant_daemon::intake::collect::{Report, collect};
+use revisant_daemon::intake::collect::{How, Report, collect};
 use revisant_daemon::intake::error::IntakeError;
 use revisant_daemon::intake::{plan, replace};
 use revisant_schema::hold::{Answer, HoldState, Reason};
@@ -117,7 +117,9 @@ impl Study {
     fn collect(&mut self) -> Report {
         let path = self.path().to_path_buf();
         self.enforce(false).unwrap();
-        let report = collect(&mut self.records, &path, &self.doer, true, &mut |_| {}).unwrap();
+        let report =
+            collect(&mut self.records, &path, &self.doer, How { wait: true, progress: &mut |_| {}, stop: &|| false })
+                .unwrap();
         let verified = self.records.verify(&mut |_, _| {}).unwrap();
         assert_eq!(verified.faults, [], "the records verify after every collect");
         report

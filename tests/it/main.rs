@@ -8,6 +8,11 @@
 
 mod corpus;
 mod errors;
+mod house;
+mod kills;
+mod properties;
+mod readings;
+mod reference;
 
 use revisant_tests::site::{Programs, Site};
 

@@ -33,7 +33,19 @@ pub struct Site {
 impl Site {
     /// An empty study folder.
     pub fn new(programs: Programs) -> Self {
-        let folder = TempDir::with_prefix("revisant-").expect("a temporary folder");
+        Self::in_folder(programs, TempDir::with_prefix("revisant-").expect("a temporary folder"))
+    }
+
+    /// An empty study folder in memory, where the machine has such a place: hundreds of small studies would otherwise
+    /// spend their time waiting for the disk.
+    pub fn in_memory(programs: Programs) -> Self {
+        match TempDir::with_prefix_in("revisant-", "/dev/shm") {
+            Ok(folder) => Self::in_folder(programs, folder),
+            Err(_) => Self::new(programs),
+        }
+    }
+
+    fn in_folder(programs: Programs, folder: TempDir) -> Self {
         // By its true name: the program may say it in a message, where it has to be recognised.
         let root = folder.path().canonicalize().expect("the temporary folder's true name");
         let study = root.join("study");
@@ -44,11 +56,15 @@ impl Site {
 
     /// A study with this plan and roster, the roster imported.
     pub fn with(programs: Programs, plan: &str, roster: &str) -> Self {
-        let site = Self::new(programs);
-        site.write("study.toml", plan);
-        site.write("roster.csv", roster);
-        site.import_roster();
-        site
+        Self::new(programs).laid_out(plan, roster)
+    }
+
+    /// The same site with this plan and roster, the roster imported.
+    pub fn laid_out(self, plan: &str, roster: &str) -> Self {
+        self.write("study.toml", plan);
+        self.write("roster.csv", roster);
+        self.import_roster();
+        self
     }
 
     /// The study's folder.

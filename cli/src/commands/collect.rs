@@ -54,6 +54,10 @@ fn text(context: &mut Context<'_, '_>, collected: &Collected) -> Result<(), Fail
         readings.already,
         readings.held
     ))?;
+    for (instrument, why) in &collected.lost_folders {
+        let why = why.as_str().unwrap_or_default();
+        context.out.say(&format!("The folder of {instrument} cannot be read: {why}."))?;
+    }
     if readings.held > 0 {
         context.out.say("See `revisant holds`.")?;
     }

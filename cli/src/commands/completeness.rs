@@ -43,7 +43,7 @@ fn text(context: &mut Context<'_, '_>, grid: &Completeness) -> Result<(), Failur
     for line in &grid.subjects {
         table.row(cells(line));
     }
-    context.out.text(&table.render(context.out.width))?;
+    context.out.table(&table)?;
     context.out.say(&format!("\n{}", totals(grid)))
 }
 

@@ -10,7 +10,7 @@ use revisant_schema::records::{ActKind, AsOf, Cell, Records};
 use serde_json::{Value as Json, json};
 
 use super::Done;
-use super::readings::table as readings_table;
+use super::readings::{table as readings_table, zone_note};
 use crate::args::Cut;
 use crate::error::{Exit, Failure};
 use crate::report::json;
@@ -90,7 +90,7 @@ fn list(context: &mut Context<'_, '_>) -> Done {
             let why = cut.why.unwrap_or_default();
             table.row([cut.name, cut.trail.to_string(), when::written(&cut.at, zone), cut.who, short(&cut.hash), why]);
         }
-        context.out.text(&table.render(context.out.width))?;
+        context.out.table(&table)?;
     }
     Ok(Exit::Done)
 }
@@ -205,7 +205,7 @@ fn text(
     ];
     for (title, basis, rows) in parts.iter().filter(|(_, _, rows)| !rows.is_empty()) {
         context.out.heading(&format!("\n{title}"))?;
-        context.out.text(&readings_table(basis, rows).render(context.out.width))?;
+        context.out.table(&readings_table(basis, rows))?;
     }
-    Ok(())
+    context.out.say(&format!("\n{}", zone_note(&after.basis)))
 }

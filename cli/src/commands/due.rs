@@ -28,7 +28,7 @@ pub fn run(context: &mut Context<'_, '_>, args: &Due) -> Done {
     } else if due.is_empty() {
         context.out.say(&format!("Nobody is due on {today} or within {} days.", args.days))?;
     } else {
-        context.out.text(&table(&due).render(context.out.width))?;
+        context.out.table(&table(&due))?;
     }
     Ok(Exit::Done)
 }

@@ -40,7 +40,7 @@ fn list(context: &mut Context<'_, '_>, args: &HoldsList) -> Done {
         true => context.out.json(&holds.iter().map(json::Hold::new).collect::<Vec<_>>())?,
         false if holds.is_empty() => context.out.say("Nothing is held.")?,
         false => {
-            context.out.text(&table(&holds, args.all).render(context.out.width))?;
+            context.out.table(&table(&holds, args.all))?;
             context.out.say("\n`revisant holds show N` shows one, with the commands that answer it.")?;
         }
     }

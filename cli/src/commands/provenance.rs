@@ -228,7 +228,7 @@ fn text(
         let at = when::written(&act.at, basis.zone());
         table.row([act.trail.to_string(), at, act.who.clone(), act.act.clone(), act.reading.to_string(), why]);
     }
-    context.out.text(&format!("\n{}", table.render(context.out.width)))
+    context.out.text("").and_then(|()| context.out.table(&table))
 }
 
 #[cfg(test)]

@@ -27,7 +27,10 @@ pub fn run(context: &mut Context<'_, '_>, args: &Readings) -> Done {
     match context.out.json {
         true => context.out.json(&rows.iter().map(|row| json::Reading::new(&basis, row)).collect::<Vec<_>>())?,
         false if rows.is_empty() => context.out.say("There are no such readings.")?,
-        false => context.out.text(&table(&basis, &rows).render(context.out.width))?,
+        false => {
+            context.out.table(&table(&basis, &rows))?;
+            context.out.say(&format!("\n{}", zone_note(&basis)))?;
+        }
     }
     Ok(Exit::Done)
 }
@@ -50,7 +53,6 @@ fn visit(basis: &Basis, args: &Readings) -> Result<Option<Option<usize>>, Failur
 /// The readings as a table; their states stand in it only where one is not in use.
 pub fn table(basis: &Basis, rows: &[ReadingRow]) -> Table {
     let states = rows.iter().any(|row| row.state != ReadingState::Current);
-    let taken = format!("taken, {}", basis.zone());
     let mut columns = vec![
         ("reading", Right),
         ("subject", Whole),
@@ -58,7 +60,7 @@ pub fn table(basis: &Basis, rows: &[ReadingRow]) -> Table {
         ("measure", Left),
         ("no.", Right),
         ("value", Right),
-        (taken.as_str(), Left),
+        ("taken", Left),
     ];
     columns.extend(states.then_some(("state", Whole)));
     let mut table = Table::new(&columns);
@@ -69,12 +71,18 @@ pub fn table(basis: &Basis, rows: &[ReadingRow]) -> Table {
     table
 }
 
+/// In which zone the table's times are.
+pub fn zone_note(basis: &Basis) -> String {
+    format!("Times are those of {}.", basis.zone())
+}
+
 fn cells(basis: &Basis, row: &ReadingRow) -> [String; 7] {
     let place = basis.place(&row.session);
     let visit = basis.visit_code(place.visit).unwrap_or(UNSCHEDULED);
     let off = if place.off_window { " (off-window)" } else { "" };
-    let condition = row.condition.to_string();
-    let measure = if condition.is_empty() { row.measure.clone() } else { format!("{} {condition}", row.measure) };
+    // The levels alone, which tell the condition to whoever knows the plan, so that the table stays narrow.
+    let levels: Vec<&str> = row.condition.0.values().map(String::as_str).collect();
+    let measure = format!("{} {}", row.measure, levels.join(" "));
     let unit = basis.plan.measure(&row.measure).map_or("", |(_, measure)| measure.unit.as_str());
     [
         row.reading.to_string(),

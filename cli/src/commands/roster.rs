@@ -214,7 +214,7 @@ fn show(context: &mut Context<'_, '_>, then: &Then) -> Done {
     let roster = view.roster()?;
     match context.out.json {
         true => context.out.json(&roster.subjects.iter().map(subject_json).collect::<Vec<_>>())?,
-        false => context.out.text(&table(&plan, &roster).render(context.out.width))?,
+        false => context.out.table(&table(&plan, &roster))?,
     }
     Ok(Exit::Done)
 }

@@ -4,6 +4,7 @@ use std::collections::BTreeMap;
 
 use chrono::{DateTime, NaiveDate, SecondsFormat, Utc};
 use revisant_schema::plan::Instrument;
+use revisant_schema::records::codec::hex;
 use revisant_schema::records::exports::{ExportRow, ExportState};
 use revisant_schema::records::{ActKind, View};
 use serde::Serialize;
@@ -41,6 +42,7 @@ pub fn run(context: &mut Context<'_, '_>, args: &Status) -> Done {
     let running = intake::service_running(&context.study);
     let result = json!({
         "service": { "running": running, "since": since(&view, running)? },
+        "plan": { "version": basis.version, "state": plan_state(context, &basis) },
         "exports": totals(&exports),
         "readings": readings(&view, &exports)?,
         "files": exports.iter().map(file_json).collect::<Vec<_>>(),
@@ -53,6 +55,27 @@ pub fn run(context: &mut Context<'_, '_>, args: &Status) -> Done {
     }
     let quiet = instruments.iter().any(|line| line.silent || line.unreachable);
     Ok(if args.strict && (!running || quiet) { Exit::Found } else { Exit::Done })
+}
+
+/// Whether the plan on disk is the one in force, or else what it is.
+fn plan_state(context: &Context<'_, '_>, basis: &Basis) -> &'static str {
+    match intake::load(context.world.as_ref(), &context.study) {
+        Ok(loaded) if loaded.files.sha256() == hex(&basis.sha256) => "in-force",
+        Ok(_) => "changed",
+        Err(failure) if failure.kind == "unsound-plan" => "unsound",
+        Err(_) => "unreadable",
+    }
+}
+
+/// The same in words, where it needs any.
+fn plan_words(state: &str, version: i64) -> Option<String> {
+    let stays = format!("version {version} stays in force");
+    match state {
+        "changed" => Some(format!("The plan on disk has changed; {stays} until the next collect.")),
+        "unsound" => Some(format!("The plan on disk is unsound; {stays}. See `revisant check`.")),
+        "unreadable" => Some(format!("The plan on disk cannot be read; {stays}. See `revisant check`.")),
+        _ => None,
+    }
 }
 
 fn since(view: &View<'_>, running: bool) -> Result<Option<String>, Failure> {
@@ -95,7 +118,9 @@ pub fn instruments(
         let kept = newest.entry(capture.instrument).or_insert(i64::MIN);
         *kept = (*kept).max(capture.modified);
     }
-    let days: Vec<NaiveDate> = view.sessions()?.into_iter().map(|session| session.day).collect();
+    let courses = basis.courses.by_subject.values();
+    let days: Vec<NaiveDate> =
+        courses.flat_map(|course| course.sessions.iter().map(|session| session.facts.day)).collect();
     let line = |instrument: &Instrument| {
         let last = newest.get(&instrument.code).map(|nanos| when::of_nanos(*nanos));
         let lost = !context.study.join(&instrument.folder).is_dir();
@@ -135,6 +160,9 @@ fn text(
     let holds = count(result["holds"]["open"].as_u64().unwrap_or(0), "open hold");
     let shown = if states.is_empty() { "none yet".to_owned() } else { states.join(", ") };
     context.out.text(&format!("{service}\nExports: {shown}.\n{holds}."))?;
+    let plan = &result["plan"];
+    let words = plan_words(plan["state"].as_str().unwrap_or_default(), plan["version"].as_i64().unwrap_or_default());
+    words.map_or(Ok(()), |words| context.out.say(&words))?;
     let mut table = Table::new(&[("instrument", Whole), ("last export", Whole), ("", Left)]);
     for line in instruments {
         let flags = [(line.silent, "quiet"), (line.unreachable, "unreachable")];
@@ -142,7 +170,7 @@ fn text(
         let last = line.last_export.clone().unwrap_or_else(|| "none".to_owned());
         table.row([line.instrument.clone(), last, flags.join(", ")]);
     }
-    context.out.text(&format!("\n{}", table.render(context.out.width)))?;
+    context.out.text("").and_then(|()| context.out.table(&table))?;
     wanting(context, exports)
 }
 
@@ -155,6 +183,6 @@ fn wanting(context: &mut Context<'_, '_>, exports: &[ExportRow]) -> Result<(), F
     }
     match table.is_empty() {
         true => Ok(()),
-        false => context.out.text(&format!("\n{}", table.render(context.out.width))),
+        false => context.out.text("").and_then(|()| context.out.table(&table)),
     }
 }

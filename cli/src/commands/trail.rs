@@ -41,7 +41,7 @@ fn list(context: &mut Context<'_, '_>, args: &TrailList) -> Done {
         let what = objects_words(&row.objects);
         table.row([row.number.to_string(), when::written(&row.at, zone), row.who.clone(), row.act.clone(), what, why]);
     }
-    context.out.text(&table.render(context.out.width))?;
+    context.out.table(&table)?;
     Ok(Exit::Done)
 }
 

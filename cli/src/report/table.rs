@@ -2,7 +2,9 @@
 //!
 //! Invariants: a table fits the width given, however long its cells; what exports said is cleaned first.
 
-use comfy_table::{CellAlignment, ColumnConstraint, ContentArrangement, ContentLineStyle, LineStyle, TableStyle};
+use comfy_table::{
+    CellAlignment, ColumnConstraint, ContentArrangement, ContentLineStyle, LineStyle, TableStyle, Width,
+};
 
 use super::text::clean;
 
@@ -22,6 +24,9 @@ const STYLE: TableStyle = TableStyle::new()
     .header_lines(ContentLineStyle::new(' ', ' ', ' '))
     .header_separator(LineStyle::new('─', '─', '─', '─'))
     .content_lines(ContentLineStyle::new(' ', ' ', ' '));
+
+/// A longer word may be broken.
+const LONGEST_WORD: usize = 20;
 
 /// A table in the making.
 #[derive(Debug, Clone)]
@@ -48,12 +53,13 @@ impl Table {
 
     /// The table as text, without a line end. Numbers, codes and dates are broken only where nothing else helps.
     pub fn render(&self, width: usize) -> String {
-        let text = self.lay_out(width, true);
-        let fits = text.lines().all(|line| line.chars().count() <= width);
-        if fits { text } else { self.lay_out(width, false) }
+        let fits = |text: &String| text.lines().all(|line| line.chars().count() <= width);
+        let wide = self.lay_out(width, true, 1);
+        let narrow = Some(wide).filter(fits).or_else(|| Some(self.lay_out(width, true, 0)).filter(fits));
+        narrow.unwrap_or_else(|| self.lay_out(width, false, 0))
     }
 
-    fn lay_out(&self, width: usize, whole: bool) -> String {
+    fn lay_out(&self, width: usize, whole: bool, padding: u16) -> String {
         let mut table = comfy_table::Table::new();
         table.load_style(STYLE).set_content_arrangement(ContentArrangement::Dynamic);
         // One more: the blank before the first column is taken away again.
@@ -61,14 +67,32 @@ impl Table {
         table.set_header(self.columns.iter().map(|(name, _)| name));
         table.add_rows(self.rows.iter());
         for ((_, align), column) in self.columns.iter().zip(table.column_iter_mut()) {
-            column.set_padding((0, 1));
+            column.set_padding((0, padding));
             column.set_cell_alignment(if *align == Right { CellAlignment::Right } else { CellAlignment::Left });
             if whole && *align != Left {
                 column.set_constraint(ColumnConstraint::ContentWidth);
             }
         }
+        if whole {
+            self.keep_words(&mut table, padding);
+        }
         let lines: Vec<String> = table.lines().map(|line| inner(&line).to_owned()).collect();
         lines.join("\n")
+    }
+}
+
+impl Table {
+    /// Gives every column of texts room for its longest word, as long as that is no path or the like.
+    fn keep_words(&self, table: &mut comfy_table::Table, padding: u16) {
+        for (at, ((name, align), column)) in self.columns.iter().zip(table.column_iter_mut()).enumerate() {
+            if *align == Left {
+                let words = self.rows.iter().filter_map(|row| row.get(at)).flat_map(|cell| cell.split(' '));
+                let lengths = words.chain([name.as_str()]).map(|word| word.chars().count());
+                let longest = lengths.filter(|length| *length <= LONGEST_WORD).max().unwrap_or(0);
+                let width = u16::try_from(longest).unwrap_or(0) + padding;
+                column.set_constraint(ColumnConstraint::LowerBoundary(Width::Fixed(width)));
+            }
+        }
     }
 }
 

@@ -46,6 +46,8 @@ pub struct Report {
     pub seconds: f64,
     /// Export folders that could not be looked at: instrument and why.
     pub lost_folders: BTreeMap<String, String>,
+    /// When the first of the files that are not at rest will have rested.
+    pub next_rest: Option<DateTime<Utc>>,
 }
 
 impl Report {
@@ -145,14 +147,19 @@ impl Hand {
     }
 }
 
-/// Files all that waits at this moment. `wait` also waits for files that are not yet at rest.
-pub fn collect(
-    records: &mut Records,
-    study: &Path,
-    doer: &Doer,
-    wait: bool,
-    progress: &mut dyn FnMut(Progress),
-) -> Result<Report> {
+/// How a collect is to be done.
+pub struct How<'h> {
+    /// Wait for files that are not yet at rest.
+    pub wait: bool,
+    /// Told how far it has come.
+    pub progress: &'h mut dyn FnMut(Progress),
+    /// Asked between exports, and within large ones, whether to stop: what is finished stays, the rest waits.
+    pub stop: &'h dyn Fn() -> bool,
+}
+
+/// Files all that waits at this moment.
+pub fn collect(records: &mut Records, study: &Path, doer: &Doer, how: How<'_>) -> Result<Report> {
+    let How { wait, progress, stop } = how;
     let start = Instant::now();
     records.clear_unpublished()?;
     let mut report = Report::default();
@@ -160,7 +167,8 @@ pub fn collect(
     replace::after_changes(records, &rules, doer, &mut report)?;
     let walked = walk_until_rested(records, study, &rules.plan, wait)?;
     note_walk(records, &rules.plan, &walked, &mut report)?;
-    file_all(records, rules, walked.ready, doer, &mut report, progress)?;
+    report.next_rest = walked.settling.iter().filter_map(|(_, until)| *until).min();
+    file_all(records, rules, walked.ready, doer, &mut report, progress, stop)?;
     report.seconds = start.elapsed().as_secs_f64();
     Ok(report)
 }
@@ -254,6 +262,7 @@ fn file_all(
     doer: &Doer,
     report: &mut Report,
     progress: &mut dyn FnMut(Progress),
+    stop: &dyn Fn() -> bool,
 ) -> Result<()> {
     let of = found.len() as u64;
     progress(Progress { done: 0, of });
@@ -261,10 +270,12 @@ fn file_all(
     let mut tries = 0;
     let mut next = 0;
     while next < ready.len() {
-        let done = file_portion(records, &rules, gathered, &mut ready, &mut next, doer, report, &mut |done| {
-            progress(Progress { done, of });
-        });
+        let mut tell = |done| progress(Progress { done, of });
+        let mut filer = Filer::new(records, &rules, gathered, doer)?;
+        filer.stop = stop;
+        let done = file_portion(filer, &mut ready, &mut next, report, &mut tell);
         match done {
+            Err(IntakeError::Records(RecordsError::Stopped)) => return Ok(()),
             Ok(()) => return Ok(progress(Progress { done: of, of })),
             Err(IntakeError::Records(RecordsError::Moved)) if tries < TRIES => {
                 tries += 1;
@@ -365,18 +376,13 @@ fn gather_one(
     Ok(())
 }
 
-#[expect(clippy::too_many_arguments, reason = "the loop of `file_all`, apart so that its failure can be looked at")]
 fn file_portion(
-    records: &mut Records,
-    rules: &Rules,
-    gathered: Gathered,
+    mut filer: Filer<'_>,
     ready: &mut [Ready],
     next: &mut usize,
-    doer: &Doer,
     report: &mut Report,
     progress: &mut dyn FnMut(u64),
 ) -> Result<()> {
-    let mut filer = Filer::new(records, rules, gathered, doer)?;
     // What is not committed when something fails was not filed: the report counts only what was.
     let mut uncommitted: Vec<(Option<Outcome>, ExportState)> = Vec::new();
     for at in *next..ready.len() {
@@ -388,7 +394,8 @@ fn file_portion(
                 return Err(error);
             }
         }
-        filer.commit(at + 1 == ready.len())?;
+        let stopped = (filer.stop)();
+        filer.commit(stopped || at + 1 == ready.len())?;
         if !filer.is_open() {
             *next = at + 1;
             for (outcome, state) in uncommitted.drain(..) {
@@ -396,6 +403,9 @@ fn file_portion(
                 outcome.iter().for_each(|outcome| report.add(outcome));
             }
             progress(*next as u64);
+        }
+        if stopped {
+            return Err(RecordsError::Stopped.into());
         }
     }
     Ok(())

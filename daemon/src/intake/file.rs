@@ -265,6 +265,8 @@ pub struct Filer<'a> {
     pub doer: &'a Doer,
     /// The moment of collection.
     pub now: DateTime<Utc>,
+    /// Whether to stop.
+    pub stop: &'a dyn Fn() -> bool,
     open: bool,
     pending: u32,
     since: Instant,
@@ -276,7 +278,18 @@ impl<'a> Filer<'a> {
         let courses = CourseBook::new(rules, gathered);
         let held = HeldBook::load(records)?;
         let now = records.now();
-        Ok(Self { records, rules, courses, held, doer, now, open: false, pending: 0, since: Instant::now() })
+        Ok(Self {
+            records,
+            rules,
+            courses,
+            held,
+            doer,
+            now,
+            stop: &|| false,
+            open: false,
+            pending: 0,
+            since: Instant::now(),
+        })
     }
 
     /// Opens a transaction if none is, and sees that the rules are still those in force.
@@ -335,6 +348,8 @@ impl<'a> Filer<'a> {
                 self.held.forget(export.capture);
                 Ok((self.records.new_filing(Some(export.capture))?, Err(fault)))
             }
+            // There may be much to clear, and little time: the next start does it.
+            Err(RecordsError::Stopped) => Err(RecordsError::Stopped),
             Err(error) => {
                 // The first error is the one worth telling.
                 let _ = self.records.clear_filing(filing.id);
@@ -393,6 +408,9 @@ impl<'a> Filer<'a> {
         if filing.readings() / STAGE > run.staged {
             run.staged = filing.readings() / STAGE;
             self.records.stage(filing)?;
+            if (self.stop)() {
+                return Err(RecordsError::Stopped);
+            }
             self.check_rules()?;
         }
         Ok(())

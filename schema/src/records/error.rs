@@ -89,6 +89,9 @@ pub enum RecordsError {
     /// The roster or the plan changed while an export was being placed.
     #[error("the plan, the roster or a decision changed meanwhile")]
     Moved,
+    /// The work was stopped on request; what was not finished waits.
+    #[error("the work was stopped on request")]
+    Stopped,
     /// What was asked for does not exist, or cannot be done as asked.
     #[error("{0}")]
     Refused(String),
@@ -141,6 +144,7 @@ impl RecordsError {
             Self::File { .. } => "file",
             Self::Damaged(_) => "damaged",
             Self::Moved => "moved",
+            Self::Stopped => "stopped",
             Self::Refused(_) => "refused",
         }
     }

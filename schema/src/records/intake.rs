@@ -377,3 +377,14 @@ impl Records {
             .map_err(self.failed("reading where a hold was seen"))
     }
 }
+
+impl Records {
+    /// How many exports are being filed in parts and not yet published.
+    pub fn staged(&self) -> Result<u64> {
+        self.conn
+            .prepare_cached("SELECT count(*) FROM staging")
+            .and_then(|mut statement| statement.query_row([], |row| row.get::<_, i64>(0)))
+            .map(i64::unsigned_abs)
+            .map_err(self.failed("looking for unfinished exports"))
+    }
+}

@@ -1,0 +1,23 @@
+//! Logs: lines for people, or JSON for machines, to standard error.
+
+use tracing_subscriber::EnvFilter;
+
+/// How logs are written.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, clap::ValueEnum)]
+pub enum Format {
+    /// A line an event.
+    Lines,
+    /// A JSON object an event.
+    Json,
+}
+
+/// Sets the logs up, once for the process.
+pub fn set_up(format: Format, level: &str) {
+    let filter = EnvFilter::try_new(level).unwrap_or_else(|_| EnvFilter::new("info"));
+    let builder = tracing_subscriber::fmt().with_env_filter(filter).with_writer(std::io::stderr).with_target(false);
+    // A second set-up in one process (a test) changes nothing.
+    let _ = match format {
+        Format::Lines => builder.with_ansi(false).try_init(),
+        Format::Json => builder.json().flatten_event(true).try_init(),
+    };
+}

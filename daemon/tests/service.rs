@@ -1,0 +1,293 @@
+//! The service from outside: real files, the built program, real signals. Every study here is invented.
+
+use std::fs;
+use std::io::Write;
+use std::path::Path;
+use std::process::{Child, Command, Stdio};
+use std::sync::Arc;
+use std::time::{Duration, Instant};
+
+use revisant_daemon::intake::collect::IntakeLock;
+use revisant_daemon::intake::plan;
+use revisant_schema::records::view::ReadingFilter;
+use revisant_schema::records::{ActKind, Doer, Records};
+use revisant_schema::roster;
+use revisant_schema::world::RealWorld;
+
+const PLAN: &str = r#"
+[study]
+code = "SV-1"
+title = "Pulse at rest"
+time_zone = "Europe/London"
+[subject]
+pattern = 'SV\d{4}'
+normalise = ["trim", "upper"]
+anchor = "enrolment"
+[[measure]]
+code = "pulse"
+unit = "/min"
+replicates = 100000
+[[visit]]
+code = "only"
+day = 0
+window = [0, 400]
+[[instrument]]
+code = "belt"
+folder = "exports/belt"
+files = "*.csv"
+rest = "0s"
+[instrument.reader]
+format = "delimited"
+delimiter = ","
+header = { row = 1 }
+subject = { column = "who" }
+taken_at = { column = "at", format = "iso" }
+[[instrument.reader.value]]
+measure = "pulse"
+column = "pulse"
+"#;
+
+struct Site {
+    folder: tempfile::TempDir,
+}
+
+impl Site {
+    fn new() -> Self {
+        let site = Self { folder: tempfile::tempdir().unwrap() };
+        fs::create_dir_all(site.path().join("exports/belt")).unwrap();
+        site.plan(PLAN);
+        let mut records = Records::open_or_create(site.path(), Arc::new(RealWorld)).unwrap();
+        let doer = Doer { who: "tester".into(), program: "test 0".into(), why: None };
+        let rules = plan::bring_into_force(&mut records, site.path(), &doer, false).unwrap();
+        let lines: Vec<String> = (0..20).map(|at| format!("SV{at:04},2025-01-01,")).collect();
+        let text = format!("subject,enrolled,withdrawn\n{}\n", lines.join("\n"));
+        let changes = rules.roster.changes(&rules.plan, &text).unwrap();
+        records.act(ActKind::Roster, &doer, |act| roster::write(act, &changes)).unwrap();
+        site
+    }
+
+    fn path(&self) -> &Path {
+        self.folder.path()
+    }
+
+    fn plan(&self, text: &str) {
+        fs::write(self.path().join("study.toml"), text).unwrap();
+    }
+
+    fn belt(&self, name: &str) -> std::path::PathBuf {
+        self.path().join("exports/belt").join(name)
+    }
+
+    fn start(&self) -> Service {
+        let child = Command::new(env!("CARGO_BIN_EXE_revisantd"))
+            .arg("--study")
+            .arg(self.path())
+            .stderr(fs::File::options().create(true).append(true).open(self.path().join("log")).unwrap())
+            .stdout(Stdio::null())
+            .spawn()
+            .unwrap();
+        let service = Service(child);
+        self.until("the service has started", || {
+            self.log().contains("started") && IntakeLock::holder(&Records::folder_of(self.path())).is_some()
+        });
+        service
+    }
+
+    fn log(&self) -> String {
+        fs::read_to_string(self.path().join("log")).unwrap_or_default()
+    }
+
+    fn records(&self) -> Records {
+        Records::open(self.path(), Arc::new(RealWorld)).unwrap()
+    }
+
+    fn readings(&self) -> usize {
+        self.records().view().unwrap().readings(&ReadingFilter::default()).unwrap().len()
+    }
+
+    /// Waits, with a deadline that only a failure reaches.
+    fn until(&self, what: &str, mut done: impl FnMut() -> bool) {
+        let deadline = Instant::now() + Duration::from_secs(60);
+        while !done() {
+            assert!(Instant::now() < deadline, "not within a minute: {what}\n{}", self.log());
+            std::thread::sleep(Duration::from_millis(20));
+        }
+    }
+
+    fn until_readings(&self, count: usize) {
+        self.until(&format!("{count} readings"), || self.readings() >= count);
+        assert_eq!(self.readings(), count);
+    }
+
+    fn sound(&self) {
+        assert_eq!(self.records().verify(&mut |_, _| {}).unwrap().faults, []);
+    }
+}
+
+/// A running service, killed when it goes out of sight.
+struct Service(Child);
+
+impl Service {
+    fn signal(&self, name: &str) {
+        let done = Command::new("kill").arg(format!("-{name}")).arg(self.0.id().to_string()).status().unwrap();
+        assert!(done.success());
+    }
+
+    /// Stops it, and gives how long that took.
+    fn stop(mut self) -> Duration {
+        let start = Instant::now();
+        self.signal("TERM");
+        assert!(self.0.wait().unwrap().success());
+        start.elapsed()
+    }
+}
+
+impl Drop for Service {
+    fn drop(&mut self) {
+        let _ = self.0.kill();
+        let _ = self.0.wait();
+    }
+}
+
+fn rows(from: usize, count: usize) -> String {
+    let row = |at: usize| {
+        let seconds = at / 20;
+        let (minute, second) = (seconds / 60, seconds % 60);
+        let (day, hour, minute) = (1 + minute / 1440, minute / 60 % 24, minute % 60);
+        format!("SV{:04},2025-01-{day:02}T{hour:02}:{minute:02}:{second:02},{}\n", at % 20, 50 + at % 60)
+    };
+    (from..from + count).map(row).collect()
+}
+
+#[test]
+fn what_arrives_is_filed_whole_or_in_parts_and_in_any_folder() {
+    let site = Site::new();
+    let service = site.start();
+    let header = "who,at,pulse\n";
+    fs::write(site.belt("a.csv"), format!("{header}{}", rows(0, 10))).unwrap();
+    site.until_readings(10);
+    // A file that is written in parts: each part is new bytes of the same path.
+    let mut file = fs::File::create(site.belt("b.csv")).unwrap();
+    for part in 0..5 {
+        if part == 0 {
+            file.write_all(header.as_bytes()).unwrap();
+        }
+        file.write_all(rows(100 + part * 4, 4).as_bytes()).unwrap();
+        file.sync_all().unwrap();
+        std::thread::sleep(Duration::from_millis(120));
+    }
+    drop(file);
+    site.until_readings(30);
+    // Nested folders, moved in as a whole: no event tells of their files.
+    let outside = site.path().join("outside/2025/03");
+    fs::create_dir_all(&outside).unwrap();
+    fs::write(outside.join("c.csv"), format!("{header}{}", rows(200, 5))).unwrap();
+    fs::rename(site.path().join("outside"), site.belt("inside")).unwrap();
+    site.until_readings(35);
+    // Written under a passing name, then renamed.
+    fs::write(site.belt("d.csv.part"), format!("{header}{}", rows(300, 5))).unwrap();
+    fs::rename(site.belt("d.csv.part"), site.belt("d.csv")).unwrap();
+    site.until_readings(40);
+    service.stop();
+    site.sound();
+    let records = site.records();
+    let acts = records.view().unwrap();
+    assert_eq!(acts.acts_on(ActKind::Start, "process").unwrap().len(), 1);
+    assert_eq!(acts.acts_on(ActKind::Stop, "process").unwrap().len(), 1);
+}
+
+#[test]
+fn folders_that_are_lost_and_come_back_are_read_again() {
+    let site = Site::new();
+    fs::remove_dir_all(site.path().join("exports")).unwrap();
+    let service = site.start();
+    site.until("the loss is told", || site.log().contains("unreachable"));
+    fs::create_dir_all(site.path().join("exports/belt")).unwrap();
+    fs::write(site.belt("a.csv"), format!("who,at,pulse\n{}", rows(0, 10))).unwrap();
+    site.until_readings(10);
+    fs::remove_dir_all(site.path().join("exports/belt")).unwrap();
+    fs::create_dir_all(site.path().join("exports/belt")).unwrap();
+    fs::write(site.belt("b.csv"), format!("who,at,pulse\n{}", rows(50, 10))).unwrap();
+    site.until_readings(20);
+    service.stop();
+    assert_eq!(site.log().matches("is unreachable").count(), 1, "a trouble is told once\n{}", site.log());
+}
+
+#[test]
+fn a_changed_plan_and_roster_are_taken_up_and_an_unsound_plan_is_not() {
+    let site = Site::new();
+    let service = site.start();
+    fs::write(site.belt("a.csv"), "who,at,pulse\nSV0001,2025-01-01T10:00:00,60\nSV0099,2025-01-01T10:00:00,61\n")
+        .unwrap();
+    site.until_readings(1);
+    // The roster learns a subject: the held row files itself.
+    let doer = Doer { who: "tester".into(), program: "test 0".into(), why: None };
+    {
+        let mut records = site.records();
+        let rules = plan::in_force(&records).unwrap();
+        let changes = rules.roster.changes(&rules.plan, "subject,enrolled,withdrawn\nSV0099,2025-01-01,\n").unwrap();
+        records.act(ActKind::Roster, &doer, |act| roster::write(act, &changes)).unwrap();
+    }
+    site.until_readings(2);
+    site.plan(&PLAN.replace("code = \"belt\"", "cod = \"belt\""));
+    site.until("the fault is told", || site.log().contains("not in force"));
+    fs::write(site.belt("b.csv"), "who,at,pulse\nSV0002,2025-01-01T10:00:00,62\n").unwrap();
+    site.until_readings(3);
+    site.plan(&PLAN.replace("title = \"Pulse at rest\"", "title = \"Pulse\""));
+    site.until("the plan is in force", || site.records().view().unwrap().plan().unwrap().unwrap().version == 2);
+    service.stop();
+    site.sound();
+}
+
+#[test]
+fn two_services_do_not_serve_one_study() {
+    let site = Site::new();
+    let _service = site.start();
+    let second = Command::new(env!("CARGO_BIN_EXE_revisantd")).arg("--study").arg(site.path()).output().unwrap();
+    assert_eq!(second.status.code(), Some(1));
+    let text = String::from_utf8(second.stderr).unwrap();
+    assert!(text.contains("revisantd") && text.contains("process"), "{text}");
+    let nowhere = Command::new(env!("CARGO_BIN_EXE_revisantd")).args(["--study", "/nowhere"]).output().unwrap();
+    assert_eq!(nowhere.status.code(), Some(1));
+    assert!(String::from_utf8(nowhere.stderr).unwrap().contains("no study in /nowhere"));
+}
+
+#[test]
+fn a_stop_in_the_middle_of_a_large_export_is_quick_and_loses_nothing() {
+    const ROWS: usize = 120_000;
+    let site = Site::new();
+    let service = site.start();
+    fs::write(site.belt("large.tmp"), format!("who,at,pulse\n{}", rows(0, ROWS))).unwrap();
+    fs::rename(site.belt("large.tmp"), site.belt("large.csv")).unwrap();
+    site.until("a part is staged", || site.records().staged().unwrap() > 0 || site.readings() > 0);
+    let took = service.stop();
+    assert!(took < Duration::from_secs(5), "{took:?}");
+    assert!([0, ROWS].contains(&site.readings()), "wholly filed or not at all");
+    let service = site.start();
+    site.until_readings(ROWS);
+    service.stop();
+    site.sound();
+}
+
+#[test]
+fn killed_at_any_moment_it_goes_on_where_it_was() {
+    let site = Site::new();
+    let mut state = 7_u64;
+    let mut written = 0;
+    for _ in 0..8 {
+        let service = site.start();
+        for _ in 0..25 {
+            fs::write(site.belt("next.part"), format!("who,at,pulse\n{}", rows(written * 5, 5))).unwrap();
+            fs::rename(site.belt("next.part"), site.belt(&format!("{written:05}.csv"))).unwrap();
+            written += 1;
+        }
+        state = state.wrapping_mul(6_364_136_223_846_793_005).wrapping_add(1_442_695_040_888_963_407);
+        std::thread::sleep(Duration::from_millis((state >> 33) % 150));
+        service.signal("KILL");
+        drop(service);
+    }
+    let service = site.start();
+    site.until_readings(written * 5);
+    service.stop();
+    site.sound();
+}

@@ -1,0 +1,204 @@
+//! Reference values through the whole program: plan, export, `collect`, `analyse --json`, each value at its tolerance.
+//!
+//! The published source of each case stands in its file; expected values were computed in 60-digit arithmetic.
+
+use revisant_tests::reference::{Case, Compared, find};
+use serde_json::{Value as Json, json};
+
+use crate::PROGRAMS;
+
+const OVER_VISITS: &str = "[[analysis]]\ncode = \"over-visits\"\nmeasure = \"response\"\nmethod = \"repeated-measures\"\n";
+
+/// Key of the case, and where it stands in an effect.
+const EFFECT: [(&str, &str); 22] = [
+    ("ss", "/ss"),
+    ("df", "/df"),
+    ("ms", "/ms"),
+    ("sse", "/error_ss"),
+    ("dfe", "/error_df"),
+    ("mse", "/error_ms"),
+    ("F", "/f"),
+    ("p", "/p"),
+    ("pes", "/partial_eta_sq"),
+    ("ges", "/generalized_eta_sq"),
+    ("eps_lb", "/epsilon/lower_bound"),
+    ("eps_gg", "/epsilon/greenhouse_geisser"),
+    ("eps_hf_lecoutre", "/epsilon/lecoutre"),
+    ("eps_hf_classic", "/epsilon/huynh_feldt"),
+    ("p_lb", "/corrected/lower_bound/p"),
+    ("p_gg", "/corrected/greenhouse_geisser/p"),
+    ("p_hf_lecoutre", "/corrected/lecoutre/p"),
+    ("p_hf_classic", "/corrected/huynh_feldt/p"),
+    ("mauchly_W", "/mauchly/w"),
+    ("mauchly_chi2", "/mauchly/chi2"),
+    ("mauchly_df", "/mauchly/df"),
+    ("mauchly_p_box", "/mauchly/p"),
+];
+
+const CORRECTED: [(&str, &str); 4] =
+    [("lb", "lower_bound"), ("gg", "greenhouse_geisser"), ("hf_lecoutre", "lecoutre"), ("hf_classic", "huynh_feldt")];
+
+fn at<'j>(json: &'j Json, pointer: &str) -> &'j Json {
+    json.pointer(pointer).unwrap_or(&Json::Null)
+}
+
+macro_rules! cases {
+    ($check:ident: $($name:ident in $folder:literal)*) => {$(
+        #[test]
+        fn $name() {
+            let case = Case::load(concat!($folder, "/", stringify!($name)));
+            let compared = $check(&case);
+            assert!(compared.values > 20, "only {} values compared", compared.values);
+            assert!(compared.differences.is_empty(), "{}", compared.differences.join("\n"));
+        }
+    )*};
+}
+
+cases! { decomposition:
+    all_equal_4x3 in "repeated_measures"
+    ar_12x5 in "repeated_measures"
+    k2_sleep in "repeated_measures"
+    missing_listwise_14x4 in "repeated_measures"
+    n_lt_k_4x6 in "repeated_measures"
+    nearsing_10x4 in "repeated_measures"
+    offset1e9_8x4 in "repeated_measures"
+    orthodont_girls in "repeated_measures"
+    rounding_times in "repeated_measures"
+    tiny_3x3 in "repeated_measures"
+    zero_resid_5x3 in "repeated_measures"
+}
+
+cases! { pairs:
+    missing_pairwise_8x4 in "contrasts"
+    orthodont_boys_8_14 in "contrasts"
+    unequal_0_1_2_4_8_24 in "contrasts"
+}
+
+/// Everything that one within factor gives.
+fn decomposition(case: &Case) -> Compared<'_> {
+    let site = case.collected(PROGRAMS, OVER_VISITS);
+    let result = site.json(&["analyse", "over-visits"]);
+    let mut compared = Compared::new(case);
+    common(&mut compared, case, &result);
+    compared.exactly("subjects used", &result["subjects"]["used"], &case.config["n_subjects_used"]);
+    let left_out: Vec<&Json> = result["subjects"]["left_out"].as_array().into_iter().flatten().map(|it| &it["subject"]).collect();
+    compared.exactly("subjects left out", &json!(left_out), &case.config["dropped_subjects"]);
+    means(&mut compared, case, &result);
+    parts(&mut compared, case, &result);
+    effect(&mut compared, case, find(&result["effects"], &[("source", "visit")]));
+    unlinked(&mut compared, case, &result);
+    compared
+}
+
+/// What every result says of itself.
+fn common(compared: &mut Compared<'_>, case: &Case, result: &Json) {
+    for field in ["/program/name", "/program/version", "/as_of/trail", "/as_of/hash", "/as_of/moment", "/plan/version"] {
+        assert!(!at(result, field).is_null(), "no {field}: {result}");
+    }
+    compared.exactly("method", &result["method"], &json!("repeated-measures"));
+    compared.exactly("measure", &result["measure"], &json!("response"));
+    compared.exactly("unit", &result["unit"], &json!("mm"));
+    compared.exactly("subjects enrolled", &result["subjects"]["enrolled"], &json!(case.subjects.len()));
+}
+
+fn means(compared: &mut Compared<'_>, case: &Case, result: &Json) {
+    let cells: Vec<&Json> = case.visits.iter().map(|(code, ..)| find(&result["cells"], &[("visit", code)])).collect();
+    let means: Vec<f64> = cells.iter().map(|cell| cell["mean"].as_f64().expect("a mean")).collect();
+    compared.key("condition_means", &json!(means));
+    // One factor and complete subjects: the cells are of one size.
+    compared.key("grand_mean", &json!(means.iter().sum::<f64>() / means.len() as f64));
+}
+
+fn parts(compared: &mut Compared<'_>, case: &Case, result: &Json) {
+    let part = |source: &str| find(&result["decomposition"], &[("source", source)]);
+    for (source, field) in [("total", "ss"), ("total", "df"), ("subject", "ss"), ("subject", "df"), ("subject", "ms")] {
+        compared.key(&format!("{field}.{source}"), &part(source)[field]);
+    }
+    for (key, source, field) in [
+        ("ss", "visit", "ss"),
+        ("df", "visit", "df"),
+        ("ms", "visit", "ms"),
+        ("sse", "residual", "ss"),
+        ("dfe", "residual", "df"),
+        ("mse", "residual", "ms"),
+    ] {
+        compared.key(&format!("{}.{key}", case.factor), &part(source)[field]);
+    }
+}
+
+fn effect(compared: &mut Compared<'_>, case: &Case, effect: &Json) {
+    let key = |name: &str| format!("{}.{name}", case.factor);
+    let number = |name: &str| case.value(&key(name)).and_then(Json::as_f64);
+    // An F that is infinite or undefined is null; its p may be 0 or null.
+    let no_f = case.value(&key("F")).is_some_and(Json::is_string);
+    for (name, pointer) in EFFECT {
+        compared.key_or_null(&key(name), at(effect, pointer), no_f && name == "p");
+    }
+    compared.exactly("error", &effect["error"], &json!("residual"));
+    for (name, field) in CORRECTED {
+        if let (Some(epsilon), Some(df), Some(error_df)) = (number(&format!("eps_{name}")), number("df"), number("dfe")) {
+            let corrected = &effect["corrected"][field];
+            compared.also(&format!("corrected df, {field}"), &corrected["df"], epsilon.min(1.0) * df, 1e-8);
+            compared.also(&format!("corrected error df, {field}"), &corrected["error_df"], epsilon.min(1.0) * error_df, 1e-8);
+        }
+    }
+    if number("eps_gg").is_some() && case.value(&key("mauchly_W")).is_none() {
+        compared.exactly("Mauchly's W", at(effect, "/mauchly/w"), &Json::Null);
+        compared.exactly("Mauchly's p", at(effect, "/mauchly/p"), &Json::Null);
+    }
+}
+
+/// What the same readings would have given if nobody had known who was who.
+fn unlinked(compared: &mut Compared<'_>, case: &Case, result: &Json) {
+    for (name, field) in [("F", "f"), ("df1", "df"), ("df2", "error_df"), ("p", "p")] {
+        compared.key(&format!("indep.{name}"), &result["if_unlinked"][field]);
+    }
+    let number = |key: &str| case.value(key).and_then(Json::as_f64);
+    let residual = number(&format!("{}.mse", case.factor)).filter(|mse| *mse > 0.0);
+    if let (Some(ss), Some(df), Some(residual)) = (number("indep.ss_within"), number("indep.df2"), residual) {
+        compared.also("variance ratio", &result["if_unlinked"]["variance_ratio"], ss / df / residual, 1e-9);
+    }
+}
+
+/// Every pair of levels, with each of the three adjustments.
+fn pairs(case: &Case) -> Compared<'_> {
+    let adjustments = [("holm", "p_holm"), ("bonferroni", "p_bonferroni"), ("benjamini-hochberg", "p_BH")];
+    let plan: String = adjustments
+        .iter()
+        .map(|(name, _)| {
+            format!(
+                "[[analysis]]\ncode = \"pairs-{name}\"\nmeasure = \"response\"\nmethod = \"repeated-measures\"\n\
+                 contrasts = [\"pairwise\"]\nmultiplicity = \"{name}\"\nconfidence = 0.95\n\n"
+            )
+        })
+        .collect();
+    let site = case.collected(PROGRAMS, &plan);
+    let mut compared = Compared::new(case);
+    for (name, adjusted) in adjustments {
+        let result = site.json(&["analyse", &format!("pairs-{name}")]);
+        for (at, (against, ..)) in case.visits.iter().enumerate() {
+            for (level, ..) in &case.visits[at + 1..] {
+                pair(&mut compared, case, &result, level, against, adjusted);
+            }
+        }
+    }
+    compared
+}
+
+fn pair(compared: &mut Compared<'_>, case: &Case, result: &Json, level: &str, against: &str, adjusted: &str) {
+    let label = |code: &str| case.visits.iter().find(|(it, ..)| it == code).map_or("", |(_, label, _)| label.as_str());
+    let key = |name: &str| format!("{}-{}.{name}", label(level), label(against));
+    assert!(case.value(&key("n")).is_some(), "the case knows no {}", key("n"));
+    let pair = find(&result["contrasts"], &[("kind", "pairwise"), ("level", level), ("against", against)]);
+    let flat = case.value(&key("sd_diff")).and_then(Json::as_f64) == Some(0.0);
+    for (name, field) in [("n", "n"), ("mean_diff", "estimate"), ("t", "t"), ("df", "df"), ("d_z", "dz"), ("d_av_mean_sd", "dav")] {
+        compared.key(&key(name), &pair[field]);
+    }
+    compared.key_or_null(&key("p"), &pair["p"], flat);
+    compared.key_or_null(&key(adjusted), &pair["p_adjusted"], flat);
+    compared.key(&key("ci_lo"), &pair["ci"][0]);
+    compared.key(&key("ci_hi"), &pair["ci"][1]);
+    if let (Some(se), Some(n)) = (pair["se"].as_f64(), pair["n"].as_f64()) {
+        compared.key(&key("sd_diff"), &json!(se * n.sqrt()));
+    }
+}
