@@ -74,7 +74,8 @@ fn lines_with(files: &[(String, String)], pattern: &str) -> Vec<String> {
 
 #[test]
 fn crates_import_only_what_lies_below_them() {
-    let manifest = |of: &str| (of.to_owned(), fs::read_to_string(root().join(of).join("Cargo.toml")).expect("a manifest"));
+    let manifest =
+        |of: &str| (of.to_owned(), fs::read_to_string(root().join(of).join("Cargo.toml")).expect("a manifest"));
     let names = |of: &str, banned: &str| {
         let mut files = sources(of);
         files.push(manifest(of));
@@ -101,13 +102,18 @@ fn the_numerical_crate_cannot_reach_the_world() {
 #[test]
 fn main_files_are_thin() {
     for (path, text) in texts(&["src/main.rs"]) {
-        assert!(text.lines().count() < 15, "{path} has {} lines; what it does belongs to the library", text.lines().count());
+        assert!(
+            text.lines().count() < 15,
+            "{path} has {} lines; what it does belongs to the library",
+            text.lines().count()
+        );
     }
 }
 
 #[test]
 fn nothing_panics_on_purpose_outside_tests() {
-    let panics = Regex::new(r"\.unwrap\(\)|\.expect\(|\b(panic|todo|unimplemented|unreachable|dbg)!|\bunsafe\b").expect("a pattern");
+    let panics = Regex::new(r"\.unwrap\(\)|\.expect\(|\b(panic|todo|unimplemented|unreachable|dbg)!|\bunsafe\b")
+        .expect("a pattern");
     let mut found = Vec::new();
     for of in ["schema", "daemon", "cli", "cli/analysis"] {
         for (path, text) in sources(of) {
@@ -185,7 +191,10 @@ fn words_are_spelt_the_british_way() {
             // Of code, what people read: comments and texts. Names of other people's functions are as they are.
             let comment = line.split_once("//").map_or("", |(_, comment)| comment);
             let read = match path.ends_with(".rs") {
-                true => format!("{comment} {}", string.captures_iter(line).map(|it| it[1].to_owned()).collect::<Vec<_>>().join(" ")),
+                true => format!(
+                    "{comment} {}",
+                    string.captures_iter(line).map(|it| it[1].to_owned()).collect::<Vec<_>>().join(" ")
+                ),
                 false => line.to_owned(),
             };
             if let Some(word) = words.find(&quoted.replace_all(&read, "")) {
@@ -284,7 +293,10 @@ fn visit(command: &clap::Command, name: &str, wanting: &mut Vec<String>) {
         wanting.push(format!("{name}: {} has a short form; options are long and plain", option.get_id()));
     }
     let said = |arg: &&clap::Arg| arg.get_help().is_none() && !arg.is_hide_set();
-    command.get_arguments().filter(said).for_each(|arg| wanting.push(format!("{name}: {} is not explained", arg.get_id())));
+    command
+        .get_arguments()
+        .filter(said)
+        .for_each(|arg| wanting.push(format!("{name}: {} is not explained", arg.get_id())));
     command.get_subcommands().for_each(|inner| visit(inner, &format!("{name} {}", inner.get_name()), wanting));
 }
 

@@ -18,8 +18,7 @@ const TRIALS: usize = 3;
 const KILLS: usize = 50;
 
 fn plan() -> String {
-    let visits: String =
-        (0..DAYS).map(|day| format!("[[visit]]\ncode = \"day-{day}\"\nday = {day}\n\n")).collect();
+    let visits: String = (0..DAYS).map(|day| format!("[[visit]]\ncode = \"day-{day}\"\nday = {day}\n\n")).collect();
     format!(
         r#"[study]
 code = "KILL"

@@ -123,7 +123,8 @@ fn value() -> impl Strategy<Value = String> {
 }
 
 fn study() -> impl Strategy<Value = Study> {
-    let label = prop_oneof![3 => Just(""), 2 => Just("first"), 2 => Just("second"), 1 => Just("third"), 1 => Just("extra")];
+    let label =
+        prop_oneof![3 => Just(""), 2 => Just("first"), 2 => Just("second"), 1 => Just("third"), 1 => Just("extra")];
     let note = prop_oneof![4 => Just(""), 1 => Just("müde"), 1 => Just("\"zweimal; links\"")];
     // Subject 4 is on no roster.
     let row = (1_u32..=4, label, 0_u32..20, value(), note);
@@ -175,7 +176,10 @@ fn grid(site: &Site) -> Json {
 /// Whose readings say what: never anything that the whole export does not say.
 fn values(site: &Site) -> BTreeSet<String> {
     let text = |reading: &Json, field: &str| reading[field].as_str().unwrap_or_default().to_owned();
-    site.readings().iter().map(|reading| format!("{} {}", text(reading, "subject"), text(reading, "as_written"))).collect()
+    site.readings()
+        .iter()
+        .map(|reading| format!("{} {}", text(reading, "subject"), text(reading, "as_written")))
+        .collect()
 }
 
 /// Every row that has a value is filed once, or held once; none is there twice, and none is lost.
@@ -199,7 +203,8 @@ fn lines_add_up(site: &Site) {
     let status = site.json(&["status"]);
     for file in status["files"].as_array().into_iter().flatten().filter(|file| !file["lines"].is_null()) {
         let lines = file["lines"].as_object().expect("an account");
-        let parts: u64 = lines.iter().filter(|(name, _)| *name != "lines").filter_map(|(_, count)| count.as_u64()).sum();
+        let parts: u64 =
+            lines.iter().filter(|(name, _)| *name != "lines").filter_map(|(_, count)| count.as_u64()).sum();
         let text = std::fs::read(site.path(file["export"].as_str().expect("a path"))).expect("the export");
         let ends = text.iter().filter(|byte| **byte == b'\n').count() as u64;
         let there = ends + u64::from(text.last().is_some_and(|byte| *byte != b'\n'));

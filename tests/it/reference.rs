@@ -7,7 +7,8 @@ use serde_json::{Value as Json, json};
 
 use crate::PROGRAMS;
 
-const OVER_VISITS: &str = "[[analysis]]\ncode = \"over-visits\"\nmeasure = \"response\"\nmethod = \"repeated-measures\"\n";
+const OVER_VISITS: &str =
+    "[[analysis]]\ncode = \"over-visits\"\nmeasure = \"response\"\nmethod = \"repeated-measures\"\n";
 
 /// Key of the case, and where it stands in an effect.
 const EFFECT: [(&str, &str); 22] = [
@@ -81,7 +82,8 @@ fn decomposition(case: &Case) -> Compared<'_> {
     let mut compared = Compared::new(case);
     common(&mut compared, case, &result);
     compared.exactly("subjects used", &result["subjects"]["used"], &case.config["n_subjects_used"]);
-    let left_out: Vec<&Json> = result["subjects"]["left_out"].as_array().into_iter().flatten().map(|it| &it["subject"]).collect();
+    let left_out: Vec<&Json> =
+        result["subjects"]["left_out"].as_array().into_iter().flatten().map(|it| &it["subject"]).collect();
     compared.exactly("subjects left out", &json!(left_out), &case.config["dropped_subjects"]);
     means(&mut compared, case, &result);
     parts(&mut compared, case, &result);
@@ -92,7 +94,8 @@ fn decomposition(case: &Case) -> Compared<'_> {
 
 /// What every result says of itself.
 fn common(compared: &mut Compared<'_>, case: &Case, result: &Json) {
-    for field in ["/program/name", "/program/version", "/as_of/trail", "/as_of/hash", "/as_of/moment", "/plan/version"] {
+    for field in ["/program/name", "/program/version", "/as_of/trail", "/as_of/hash", "/as_of/moment", "/plan/version"]
+    {
         assert!(!at(result, field).is_null(), "no {field}: {result}");
     }
     compared.exactly("method", &result["method"], &json!("repeated-measures"));
@@ -136,10 +139,16 @@ fn effect(compared: &mut Compared<'_>, case: &Case, effect: &Json) {
     }
     compared.exactly("error", &effect["error"], &json!("residual"));
     for (name, field) in CORRECTED {
-        if let (Some(epsilon), Some(df), Some(error_df)) = (number(&format!("eps_{name}")), number("df"), number("dfe")) {
+        if let (Some(epsilon), Some(df), Some(error_df)) = (number(&format!("eps_{name}")), number("df"), number("dfe"))
+        {
             let corrected = &effect["corrected"][field];
             compared.also(&format!("corrected df, {field}"), &corrected["df"], epsilon.min(1.0) * df, 1e-8);
-            compared.also(&format!("corrected error df, {field}"), &corrected["error_df"], epsilon.min(1.0) * error_df, 1e-8);
+            compared.also(
+                &format!("corrected error df, {field}"),
+                &corrected["error_df"],
+                epsilon.min(1.0) * error_df,
+                1e-8,
+            );
         }
     }
     if number("eps_gg").is_some() && case.value(&key("mauchly_W")).is_none() {
@@ -191,7 +200,9 @@ fn pair(compared: &mut Compared<'_>, case: &Case, result: &Json, level: &str, ag
     assert!(case.value(&key("n")).is_some(), "the case knows no {}", key("n"));
     let pair = find(&result["contrasts"], &[("kind", "pairwise"), ("level", level), ("against", against)]);
     let flat = case.value(&key("sd_diff")).and_then(Json::as_f64) == Some(0.0);
-    for (name, field) in [("n", "n"), ("mean_diff", "estimate"), ("t", "t"), ("df", "df"), ("d_z", "dz"), ("d_av_mean_sd", "dav")] {
+    for (name, field) in
+        [("n", "n"), ("mean_diff", "estimate"), ("t", "t"), ("df", "df"), ("d_z", "dz"), ("d_av_mean_sd", "dav")]
+    {
         compared.key(&key(name), &pair[field]);
     }
     compared.key_or_null(&key("p"), &pair["p"], flat);

@@ -100,13 +100,15 @@ fn play(context: &mut Context<'_, '_>, seed: u64) -> Result<u64, Failure> {
     let rig = Rig::new(seed);
     let steps = rig.steps().len() as u64;
     let bar = bar(context, steps);
-    let service = service::start(&context.study, context.world.clone());
-    let played = rig.play(&context.study, &mut |done| bar.set_position(done));
+    let service = service::start(&context.study, context.world.clone())?;
+    let show = |done: u64| {
+        let (filed, held) = service.done.so_far();
+        bar.set_position(done);
+        bar.set_message(format!("{filed} filed, {held} held"));
+    };
+    let played = rig.play(&context.study, &mut |done| show(done));
     let read = match played {
-        Ok(()) => {
-            bar.set_message("the service reads what is left");
-            wait(context, &service)
-        }
+        Ok(()) => wait(context, &service, &mut || show(steps)),
         Err(error) => Err(unwritable(&context.study, &error)),
     };
     bar.finish_and_clear();
@@ -119,27 +121,28 @@ fn bar(context: &Context<'_, '_>, steps: u64) -> ProgressBar {
         return ProgressBar::hidden();
     }
     let bar = ProgressBar::with_draw_target(Some(steps), ProgressDrawTarget::stderr());
-    if let Ok(style) = ProgressStyle::with_template("{bar:30} {pos} of {len} steps, {elapsed}  {msg}") {
+    let template = "{bar:24} {pos} of {len} steps of the rig, {elapsed}; {msg}";
+    if let Ok(style) = ProgressStyle::with_template(template) {
         bar.set_style(style);
     }
-    bar.set_message("the instruments write");
     bar
 }
 
-fn wait(context: &Context<'_, '_>, service: &Running) -> Result<(), Failure> {
+/// Waits until the service has read everything that is at rest.
+fn wait(context: &Context<'_, '_>, service: &Running, show: &mut dyn FnMut()) -> Result<(), Failure> {
     let records = Records::open(&context.study, context.world.clone())?;
     let start = Instant::now();
-    while start.elapsed() < PATIENCE && !service.has_ended() {
+    while start.elapsed() < PATIENCE {
+        show();
         if service::has_read_all(&records, &context.study)? {
             return Ok(());
         }
+        if !service.is_alive() {
+            return Err(Failure::new("service", "the service broke down"));
+        }
         std::thread::sleep(Duration::from_millis(100));
     }
-    match service.has_ended() {
-        // Stopping it says why.
-        true => Ok(()),
-        false => Err(Failure::new("service", format!("exports are unread after {} s", PATIENCE.as_secs()))),
-    }
+    Err(Failure::new("service", format!("exports are still unread after {} s", PATIENCE.as_secs())))
 }
 
 // ---- what is shown ----
@@ -281,8 +284,11 @@ fn what_next(context: &mut Context<'_, '_>) -> Result<(), Failure> {
     let folder = context.study.display().to_string();
     context.out.heading("\nWhat to try next")?;
     context.out.say("Each line can be pasted.\n")?;
+    let alias = alias();
+    // Built from source, the service may not have been built yet.
+    let service = alias.as_ref().is_none_or(|alias| alias.contains("revisantd="));
     let mut lines = vec![format!("cd {folder}")];
-    lines.extend(alias());
+    lines.extend(alias);
     if let Some(hold) = number("unknown-subject") {
         lines.push(format!("revisant holds show {hold}"));
         lines.push(format!("revisant holds decide {hold} --subject QR-156 --all-like-it 2 --why \"misread\""));
@@ -301,7 +307,10 @@ fn what_next(context: &mut Context<'_, '_>) -> Result<(), Failure> {
         lines.push(format!("revisant provenance {reading}"));
     }
     lines.push("revisant trail list --last 10".to_owned());
-    lines.push("revisantd      # the service: write a file into an export folder and see".to_owned());
+    lines.push("revisant check".to_owned());
+    if service {
+        lines.push("revisantd --study .      # the service; write an export and see".to_owned());
+    }
     for line in lines {
         context.out.text(&format!("  {line}"))?;
     }
@@ -317,5 +326,7 @@ fn alias() -> Option<String> {
     let called = Path::new(&called);
     called.parent().filter(|folder| !folder.as_os_str().is_empty())?;
     let whole = std::path::absolute(called).ok()?;
-    Some(format!("alias revisant={} revisantd={}", whole.display(), whole.with_file_name("revisantd").display()))
+    let service = whole.with_file_name("revisantd");
+    let service = if service.exists() { format!(" revisantd={}", service.display()) } else { String::new() };
+    Some(format!("alias revisant={}{service}", whole.display()))
 }

@@ -1,50 +1,73 @@
 //! The real service, run inside this process for as long as the demo lasts.
+//!
+//! Invariant: it is started and stopped as `revisantd` starts and stops it; nothing is filed by any other way.
 
 use std::path::Path;
 use std::sync::Arc;
-use std::sync::atomic::{AtomicBool, Ordering};
-use std::thread::JoinHandle;
+use std::sync::atomic::{AtomicU64, Ordering};
 use std::time::Duration;
 
-use revisant_daemon::intake::{collect, notice, plan};
-use revisant_schema::records::{Doer, Records};
+use revisant_daemon::intake::{notice, plan};
+use revisant_daemon::service::{Handle, Options, ServiceError, spawn};
+use revisant_schema::records::Records;
 use revisant_schema::world::World;
 
 use crate::error::Failure;
-use crate::study::PROGRAM;
+
+/// How often the service walks through all folders when nothing seems to happen.
+const EVERY: Duration = Duration::from_secs(60);
+
+/// What the service has done so far.
+#[derive(Debug, Default)]
+pub struct Done {
+    filed: AtomicU64,
+    held: AtomicU64,
+}
+
+impl Done {
+    /// Readings filed, and holds opened.
+    pub fn so_far(&self) -> (u64, u64) {
+        (self.filed.load(Ordering::Relaxed), self.held.load(Ordering::Relaxed))
+    }
+}
 
 /// A service that runs.
 pub struct Running {
-    stop: Arc<AtomicBool>,
-    thread: JoinHandle<Result<(), Failure>>,
+    handle: Handle,
+    /// What it has done.
+    pub done: Arc<Done>,
 }
 
 /// Starts the service on a study.
-pub fn start(study: &Path, world: Arc<dyn World>) -> Running {
-    let stop = Arc::new(AtomicBool::new(false));
-    let (told, study) = (stop.clone(), study.to_path_buf());
-    let thread = std::thread::spawn(move || {
-        let mut records = Records::open(&study, world)?;
-        let _lock = collect::IntakeLock::take(&records, "revisantd")?;
-        while !told.load(Ordering::Relaxed) {
-            collect::collect(&mut records, &study, &Doer::this_account(PROGRAM), false, &mut |_| ())?;
-            std::thread::sleep(Duration::from_millis(200));
-        }
-        Ok(())
-    });
-    Running { stop, thread }
+pub fn start(study: &Path, world: Arc<dyn World>) -> Result<Running, Failure> {
+    let done = Arc::new(Done::default());
+    let seen = done.clone();
+    let options = Options { study: study.to_path_buf(), every: EVERY, world };
+    let handle = spawn(
+        options,
+        Box::new(move |report| {
+            seen.filed.fetch_add(report.filed, Ordering::Relaxed);
+            seen.held.fetch_add(report.held, Ordering::Relaxed);
+        }),
+    )?;
+    Ok(Running { handle, done })
 }
 
 impl Running {
-    /// Whether it ended without being asked to.
-    pub fn has_ended(&self) -> bool {
-        self.thread.is_finished()
+    /// Whether it is at work.
+    pub fn is_alive(&self) -> bool {
+        self.handle.is_alive()
     }
 
-    /// Stops it, and says how it ended.
+    /// Stops it.
     pub fn stop(self) -> Result<(), Failure> {
-        self.stop.store(true, Ordering::Relaxed);
-        self.thread.join().unwrap_or_else(|_| Err(Failure::new("service", "the service broke off")))
+        Ok(self.handle.stop()?)
+    }
+}
+
+impl From<ServiceError> for Failure {
+    fn from(error: ServiceError) -> Self {
+        Self::new("service", error.to_string())
     }
 }
 
