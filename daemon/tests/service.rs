@@ -26,7 +26,7 @@ anchor = "enrolment"
 [[measure]]
 code = "pulse"
 unit = "/min"
-replicates = 100000
+replicates = 10000
 [[visit]]
 code = "only"
 day = 0

@@ -172,7 +172,7 @@ pub fn judge(
 }
 
 /// Current readings by session, measure and condition: of the instrument that gave most, since replicates are counted
-/// for each instrument.
+/// for each instrument, with those entered by hand, which stand in for an instrument that could not export.
 type Counts<'a> = HashMap<(i64, &'a str, &'a Condition), u32>;
 
 fn by_cell<'a>(courses: &Courses, counts: &'a [CellCount]) -> Counts<'a> {
@@ -182,9 +182,14 @@ fn by_cell<'a>(courses: &Courses, counts: &'a [CellCount]) -> Counts<'a> {
         *per_instrument.entry((session, &cell.measure, &cell.condition, &cell.instrument)).or_default() += cell.current;
     }
     let mut most: Counts<'a> = HashMap::new();
-    for ((session, measure, condition, _), count) in per_instrument {
-        let kept = most.entry((session, measure, condition)).or_default();
+    let mut by_hand: Counts<'a> = HashMap::new();
+    for ((session, measure, condition, instrument), count) in per_instrument {
+        let counts = if instrument.is_empty() { &mut by_hand } else { &mut most };
+        let kept = counts.entry((session, measure, condition)).or_default();
         *kept = (*kept).max(count);
+    }
+    for (cell, count) in by_hand {
+        *most.entry(cell).or_default() += count;
     }
     most
 }

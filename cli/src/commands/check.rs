@@ -18,9 +18,8 @@ pub fn run(context: &mut Context<'_, '_>, args: &Check) -> Done {
         return Err(Failure::not_yet(what).then("leave --sample out; `revisant collect` holds what does not fit"));
     }
     if args.schema {
-        return Err(
-            Failure::not_yet("the JSON Schema of the plan comes with a later version").then("leave --schema out")
-        );
+        context.out.json(&revisant_schema::plan::schema())?;
+        return Ok(Exit::Done);
     }
     let study = context.folder()?.to_path_buf();
     let loaded = intake::load(context.world.as_ref(), &study)?;

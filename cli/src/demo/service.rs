@@ -67,7 +67,10 @@ impl Running {
 
 impl From<ServiceError> for Failure {
     fn from(error: ServiceError) -> Self {
-        Self::new("service", error.to_string())
+        match error {
+            ServiceError::Start { source, .. } => source.into(),
+            other => Self::new("service", other.to_string()),
+        }
     }
 }
 

@@ -276,7 +276,10 @@ fn file_all(
         let done = file_portion(filer, &mut ready, &mut next, report, &mut tell);
         match done {
             Err(IntakeError::Records(RecordsError::Stopped)) => return Ok(()),
-            Ok(()) => return Ok(progress(Progress { done: of, of })),
+            Ok(()) => {
+                progress(Progress { done: of, of });
+                return Ok(());
+            }
             Err(IntakeError::Records(RecordsError::Moved)) if tries < TRIES => {
                 tries += 1;
                 rules = plan::in_force(records)?;

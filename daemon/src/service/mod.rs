@@ -57,7 +57,7 @@ pub enum ServiceError {
         /// The study's folder.
         study: PathBuf,
         /// Why.
-        source: IntakeError,
+        source: Box<IntakeError>,
     },
     /// The study's folder is not there.
     #[error("there is no study in {}: it holds no study.toml. Name the study's folder with --study DIR", .0.display())]
@@ -94,7 +94,7 @@ pub fn spawn(options: Options, observer: Observer) -> Result<Handle, ServiceErro
     if !options.study.join(revisant_schema::plan::MAIN).exists() {
         return Err(ServiceError::NoStudy(options.study));
     }
-    let start = |source: IntakeError| ServiceError::Start { study: options.study.clone(), source };
+    let start = |source: IntakeError| ServiceError::Start { study: options.study.clone(), source: source.into() };
     let records =
         Records::open_or_create(&options.study, options.world.clone()).map_err(|error| start(error.into()))?;
     let lock = IntakeLock::take(&records, PROGRAM).map_err(start)?;
@@ -102,7 +102,7 @@ pub fn spawn(options: Options, observer: Observer) -> Result<Handle, ServiceErro
     let stop = Arc::new(AtomicBool::new(false));
     let study = options.study.clone();
     let mut worker = Worker::new(options, records, lock, wake.clone(), stop.clone(), observer);
-    worker.begin().map_err(|source| ServiceError::Start { study: study.clone(), source })?;
+    worker.begin().map_err(|source| ServiceError::Start { study: study.clone(), source: source.into() })?;
     let thread = std::thread::Builder::new()
         .name("intake".to_owned())
         .spawn(move || worker.run(&woken))

@@ -218,7 +218,7 @@ impl Worker {
     }
 
     fn tell(&mut self, report: &Report) {
-        if !report.is_quiet() || report.exports.get("repeat").is_some() {
+        if !report.is_quiet() || report.exports.contains_key("repeat") {
             let exports = report
                 .exports
                 .iter()

@@ -224,12 +224,12 @@ impl Records {
             .map_err(self.failed("looking for known bytes"))
     }
 
-    /// Readings of one capture, superseded ones aside.
+    /// Readings as one capture gave them, superseded ones aside.
     pub fn readings_of_capture(&self, capture: i64) -> Result<Vec<i64>> {
         self.conn
             .prepare_cached(
                 "SELECT r.id FROM filing f JOIN reading r ON r.id BETWEEN f.first_reading AND f.last_reading
-                 AND r.filing = f.id WHERE f.capture = ?1
+                 AND r.filing = f.id AND r.source = 0 WHERE f.capture = ?1
                  AND NOT EXISTS (SELECT 1 FROM reading n WHERE n.supersedes = r.id) ORDER BY r.id",
             )
             .and_then(|mut statement| statement.query_map([capture], |row| row.get(0))?.collect())

@@ -140,7 +140,7 @@ impl Act<'_> {
         self.records
     }
 
-    /// Adds a row to a table of [`OF_ACT`]; `cells` are its columns after `id` and `act`. Gives the row's number.
+    /// Adds a row to a table of [`super::codec::OF_ACT`]; `cells` are its columns after `id` and `act`. Gives the row's number.
     pub fn add(&mut self, name: &str, cells: &[Cell<'_>]) -> Result<i64> {
         let failed = self.records.failed("writing a row");
         let Some((rank, table)) = table(name) else {

@@ -229,6 +229,8 @@ impl<'p> Judge<'p> {
                 *found = records.find_session(&case.row.subject, day, label)?;
             }
         }
+        // One occasion has one key, whichever of its two sessions the row at hand is in.
+        sessions.sort_unstable();
         let (measure, condition) = (&case.measure.code, &case.value.condition);
         let key = (sessions, measure.clone(), condition.clone());
         if !self.slots.contains_key(&key) {
@@ -250,7 +252,7 @@ impl<'p> Judge<'p> {
     pub fn filed(&mut self, reading: i64, slot: Slotted) {
         match self.at.take() {
             // A session that was not there before has a number now, under which it is looked up from now on.
-            Some((sessions, ..)) if sessions == [None, None] => {}
+            Some(([None, None], ..)) => {}
             Some(key) if slot.supersedes.is_none() => {
                 self.slots.entry(key).or_default().push(Slot { reading, replicate: slot.replicate });
             }
