@@ -68,7 +68,7 @@ impl Running {
 impl From<ServiceError> for Failure {
     fn from(error: ServiceError) -> Self {
         match error {
-            ServiceError::Start { source, .. } => source.into(),
+            ServiceError::Start { source, .. } => (*source).into(),
             other => Self::new("service", other.to_string()),
         }
     }
