@@ -7,7 +7,6 @@ use std::path::{Path, PathBuf};
 use std::time::{Duration, Instant};
 
 use indicatif::{ProgressBar, ProgressDrawTarget, ProgressStyle};
-use revisant_schema::records::Records;
 use serde_json::{Map, Value as Json, json};
 
 use super::Done;
@@ -108,7 +107,7 @@ fn play(context: &mut Context<'_, '_>, seed: u64) -> Result<u64, Failure> {
     };
     let played = rig.play(&context.study, &mut |done| show(done));
     let read = match played {
-        Ok(()) => wait(context, &service, &mut || show(steps)),
+        Ok(()) => wait(&service, &mut || show(steps)),
         Err(error) => Err(unwritable(&context.study, &error)),
     };
     bar.finish_and_clear();
@@ -129,12 +128,11 @@ fn bar(context: &Context<'_, '_>, steps: u64) -> ProgressBar {
 }
 
 /// Waits until the service has read everything that is at rest.
-fn wait(context: &Context<'_, '_>, service: &Running, show: &mut dyn FnMut()) -> Result<(), Failure> {
-    let records = Records::open(&context.study, context.world.clone())?;
-    let start = Instant::now();
+fn wait(service: &Running, show: &mut dyn FnMut()) -> Result<(), Failure> {
+    let (start, rounds) = (Instant::now(), service.rounds());
     while start.elapsed() < PATIENCE {
         show();
-        if service::has_read_all(&records, &context.study)? {
+        if service.has_read_all(rounds) {
             return Ok(());
         }
         if !service.is_alive() {
