@@ -1,6 +1,8 @@
 //! The intake as a whole, by what it does to records: holds and their answers, re-exports, paths that change, readers
 //! that were wrong. Every study here is invented.
 
+#![allow(clippy::unwrap_used, clippy::panic, reason = "a test says what went wrong by failing")]
+
 use std::fs;
 use std::path::Path;
 use std::sync::Arc;
@@ -493,4 +495,24 @@ fn a_file_too_large_is_held_and_its_bytes_are_kept() {
     study.plan(&study.plan_text().replace("1KiB", "1MiB"));
     study.collect();
     assert_eq!(study.current(), ["IN-01 2025-03-03 #1 70"]);
+}
+
+#[test]
+fn a_row_filed_before_a_withdrawal_was_known_is_not_held_when_it_comes_again() {
+    let mut study = Study::new("re_export = \"grows\"", LABELLED);
+    study.rows("a.csv", &["IN-01,2025-03-03 09:00,first,1,70", "IN-01,2025-03-31 09:00,second,1,71"]);
+    study.collect();
+    study.roster("subject,enrolled,withdrawn\nIN-01,2025-03-01,2025-03-20\n");
+    study.rows(
+        "b.csv",
+        &[
+            "IN-01,2025-03-03 09:00,first,1,70",
+            "IN-01,2025-03-31 09:00,second,1,71",
+            "IN-01,2025-03-31 09:05,second,2,72",
+        ],
+    );
+    let report = study.collect();
+    assert_eq!((report.filed, report.already, report.held), (0, 2, 1));
+    assert_eq!(study.one(Reason::AfterWithdrawal).line, Some(4));
+    assert_eq!(study.current().len(), 2);
 }

@@ -1,5 +1,7 @@
 //! The service from outside: real files, the built program, real signals. Every study here is invented.
 
+#![allow(clippy::unwrap_used, clippy::panic, reason = "a test says what went wrong by failing")]
+
 use std::fs;
 use std::io::Write;
 use std::path::Path;

@@ -194,7 +194,7 @@ fn each_row_is_there_once(site: &Site, rows: &[Row]) {
         let filed = readings.iter().filter(|reading| reading["taken_at"] == stamp.as_str()).count();
         let held = holds.iter().filter(|hold| hold["row"].as_str().is_some_and(|held| held.trim_end() == text)).count();
         let wanted = usize::from(!matches!(row.value.as_str(), "" | "---"));
-        assert_eq!(filed + held, wanted, "{text}: filed {filed} times, held {held} times\n{readings:?}\n{holds:?}");
+        assert_eq!(filed + held, wanted, "{text}: filed {filed} times, held {held} times");
     }
 }
 
@@ -363,6 +363,42 @@ proptest! {
         }
         prop_assert_eq!(&site.json(&["trail", "verify"])["sound"], &json!(true));
     }
+}
+
+/// Two rows of one subject: the second is labelled, and came before the day 0 was known by which its label is wrong.
+fn labelled_before_day_0(value: &str) -> Study {
+    let row =
+        |visit, day, second, value: &str| Row { subject: 1, visit, day, second, value: value.to_owned(), note: "" };
+    Study { labelled: true, rows: vec![row("second", 16, 0, value), row("first", 2, 7, "70.1")] }
+}
+
+#[test]
+fn a_filed_row_that_comes_again_is_not_held() {
+    for (value, filed_first, held_first) in [("31.5", 1, 0), ("n/a", 0, 1)] {
+        let study = labelled_before_day_0(value);
+        let site = study.site("grows");
+        site.drop_export("exports/dyn/log-1.csv", export(&study.rows[..1]));
+        let first = site.collect();
+        assert_eq!(first["readings"], json!({ "filed": filed_first, "already": 0, "held": held_first }));
+        site.drop_export("exports/dyn/log-2.csv", export(&study.rows));
+        let second = site.collect();
+        assert_eq!(second["readings"], json!({ "filed": 1, "already": filed_first, "held": 0 }), "{value}");
+        each_row_is_there_once(&site, &study.rows);
+    }
+}
+
+#[test]
+#[ignore = "open: the row is held as after-withdrawal although it is filed, and should be known again"]
+fn a_filed_row_that_comes_again_after_a_withdrawal_is_not_held() {
+    let study = labelled_before_day_0("31.5");
+    let site = study.site("grows");
+    site.drop_export("exports/dyn/log-1.csv", export(&study.rows[..1]));
+    site.collect();
+    site.ok(&["roster", "withdraw", "P-01", "--on", "2026-03-10", "--data", "keep", "--why", "moved away"]);
+    site.drop_export("exports/dyn/log-2.csv", export(&study.rows));
+    let second = site.collect();
+    assert_eq!(second["readings"], json!({ "filed": 1, "already": 1, "held": 0 }));
+    each_row_is_there_once(&site, &study.rows);
 }
 
 fn answers(site: &Site, then: &[&str]) -> [Json; 3] {

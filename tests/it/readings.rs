@@ -1,5 +1,5 @@
 //! Real readings: the growth of children's jaws and the sleep of ten people, each written as one export for a child and
-//! a visit, dropped in any order.
+//! a visit, dropped in any order into the folder of a running service.
 //!
 //! Potthoff & Roy 1964, "A generalized multivariate analysis of variance model useful especially for growth curve
 //! problems", Biometrika 51:313; Student 1908, "The probable error of a mean", Biometrika 6:1.
@@ -24,13 +24,13 @@ fn exports(case: &Case, seed: u64) -> Vec<(String, String)> {
     exports
 }
 
-/// Drops exports while the program files them, and waits until it has filed so many readings.
-fn file(site: &Site, exports: &[(String, String)], readings: usize) {
+/// Drops exports into the folder of the running service, and waits until so many are filed, one reading each.
+fn file(site: &Site, exports: &[(String, String)], all: usize) {
     for (path, text) in exports {
         site.drop_export(path, text);
     }
-    site.collect();
-    assert_eq!(site.readings().len(), readings);
+    site.wait_until_filed(all);
+    assert_eq!(site.readings().len(), all);
 }
 
 /// Without one child's last export the child is incomplete and left out, and says why; when it comes, all is as published.
@@ -43,6 +43,7 @@ fn as_published(name: &str, seed: u64, check: impl Fn(&mut Compared<'_>, &Case, 
     let late = exports.remove(late);
     let child = late.0.rsplit('/').next().and_then(|name| name.strip_suffix(".csv")).expect("a child").to_owned();
 
+    let service = site.serve();
     file(&site, &exports, case.rows.len() - 1);
     let grid = site.json(&["completeness", "--on", "2016-12-31"]);
     let statuses = grid["subjects"].as_array().expect("subjects");
@@ -71,6 +72,7 @@ fn as_published(name: &str, seed: u64, check: impl Fn(&mut Compared<'_>, &Case, 
     assert!(compared.values >= 3, "only {} values compared", compared.values);
     assert!(compared.differences.is_empty(), "{}", compared.differences.join("\n"));
     assert_eq!(site.json(&["trail", "verify"])["sound"], true);
+    service.stop();
 }
 
 fn whole_decomposition(compared: &mut Compared<'_>, case: &Case, result: &Json) {

@@ -4,13 +4,16 @@ use std::fs::{self, File};
 use std::path::{Path, PathBuf};
 use std::process::{Child, Command, Stdio};
 use std::sync::Mutex;
-use std::time::{Duration, SystemTime};
+use std::time::{Duration, Instant, SystemTime};
 
 use serde_json::Value as Json;
 use tempfile::TempDir;
 
 /// How long ago the first export of a site was written: long before any `rest`, and in the past of every clock.
 const AT_REST: Duration = Duration::from_secs(40 * 86_400);
+
+/// How long anything is waited for.
+const LONGEST: Duration = Duration::from_secs(300);
 
 /// Where the two programs under test lie.
 #[derive(Debug, Clone, Copy)]
@@ -84,10 +87,14 @@ impl Site {
         fs::write(&path, bytes).unwrap_or_else(|error| panic!("{}: {error}", path.display()));
     }
 
-    /// An export that has rested for long: each is a second younger than the one dropped before.
+    /// An export that has rested for long: each is a second younger than the one dropped before. It is there at once
+    /// and as a whole, so that a running service cannot see half of it.
     pub fn drop_export(&self, name: impl AsRef<Path>, bytes: impl AsRef<[u8]>) {
-        self.write(&name, bytes);
-        self.age(&name);
+        let mut part = name.as_ref().as_os_str().to_owned();
+        part.push(".part");
+        self.write(&part, bytes);
+        self.age(&part);
+        fs::rename(self.path(&part), self.path(name)).expect("an export gets its name");
     }
 
     /// Gives a file the next of the times at which exports were written.
@@ -113,9 +120,36 @@ impl Site {
         self.surroundings(self.programs.revisant, args)
     }
 
-    /// The service on this study.
-    pub fn service(&self, args: &[&str]) -> Command {
-        self.surroundings(self.programs.revisantd, args)
+    /// The service on this study, not yet started; it logs into `revisantd.log`.
+    pub fn service(&self) -> Command {
+        let log = File::options().append(true).create(true).open(self.path("revisantd.log")).expect("the log");
+        let mut command = self.surroundings(self.programs.revisantd, &["--study", "."]);
+        command.stdout(Stdio::null()).stderr(log);
+        command
+    }
+
+    /// The service on this study, at work.
+    pub fn serve(&self) -> Running {
+        let running = Running(self.service().spawn().expect("the service starts"));
+        self.wait_until("the service runs", || self.json(&["status"])["service"]["running"] == true);
+        running
+    }
+
+    /// Waits until so many exports are filed, and nothing waits.
+    pub fn wait_until_filed(&self, exports: usize) {
+        self.wait_until(&format!("{exports} exports are filed"), || {
+            self.json(&["status"])["exports"]["filed"] == exports
+        });
+    }
+
+    /// Waits until something is so; long, since a slow machine is no failure.
+    pub fn wait_until(&self, what: &str, so: impl Fn() -> bool) {
+        let start = Instant::now();
+        while !so() {
+            let log = || fs::read_to_string(self.path("revisantd.log")).unwrap_or_default();
+            assert!(start.elapsed() < LONGEST, "waited in vain until {what}\n{}", log());
+            std::thread::sleep(Duration::from_millis(50));
+        }
     }
 
     fn surroundings(&self, program: &str, args: &[&str]) -> Command {
@@ -252,6 +286,17 @@ fn shell_word(arg: &str) -> String {
 /// A program in the background, which ends with this value.
 #[derive(Debug)]
 pub struct Running(pub Child);
+
+impl Running {
+    /// Asks it to stop (SIGTERM) and waits; it must end well.
+    pub fn stop(mut self) {
+        let process = self.0.id().to_string();
+        let asked = Command::new("kill").args(["-TERM", &process]).status().expect("a signal can be sent");
+        assert!(asked.success(), "process {process} was not there to be stopped");
+        let ended = self.0.wait().expect("its end");
+        assert!(ended.success(), "it ended badly: {ended}");
+    }
+}
 
 impl Drop for Running {
     fn drop(&mut self) {

@@ -369,6 +369,9 @@ fn gather_one(
     let none = Decided::default();
     while rows.next_row(&mut row)? {
         let RowOutcome::Ready(resolved) = resolver.resolve(&row, rows.as_ref(), &none) else { continue };
+        if resolved.outside.is_some() {
+            continue;
+        }
         for value in &resolved.values {
             if let ValueOutcome::Number(value) = value {
                 let label = resolved.label.as_deref();

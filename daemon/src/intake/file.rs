@@ -431,9 +431,11 @@ impl<'a> Filer<'a> {
             match here.resolver.resolve(here.row, here.rows, &turn.decided) {
                 RowOutcome::NoValue => {}
                 RowOutcome::Held(held) => self.hold(filing, here, &held, &mut turn, run)?,
-                RowOutcome::Ready(resolved) => match self.disagrees(&resolved)? {
-                    Some(held) => self.hold(filing, here, &held, &mut turn, run)?,
-                    None => self.place_values(filing, here, &resolved, &mut turn, run)?,
+                RowOutcome::Ready(resolved) => match self.late_fault(&resolved)? {
+                    Some(held) if !self.placed_before(&resolved, &turn, run)? => {
+                        self.hold(filing, here, &held, &mut turn, run)?;
+                    }
+                    _ => self.place_values(filing, here, &resolved, &mut turn, run)?,
                 },
             }
         }
@@ -513,6 +515,30 @@ impl<'a> Filer<'a> {
             let wrong = format!("the label says {label}, and {} lies in the window of {other}", resolved.day);
             Held::row(Reason::VisitDisagrees, wrong).likely(vec![label.to_owned(), other.clone()])
         }))
+    }
+
+    /// A fault of the row that depends on what may become known after it was filed: roster and day 0.
+    fn late_fault(&mut self, resolved: &Resolved) -> Result<Option<Held>> {
+        match &resolved.outside {
+            Some(held) => Ok(Some(held.clone())),
+            None => self.disagrees(resolved),
+        }
+    }
+
+    /// Whether the row came before and was judged by what was then known: some value of it is filed, or held.
+    fn placed_before(&mut self, resolved: &Resolved, turn: &Turn<'_>, run: &Run<'_>) -> Result<bool> {
+        if !turn.open.is_empty() {
+            return Ok(true);
+        }
+        for value in &resolved.values {
+            if let ValueOutcome::Number(value) = value {
+                let measure = &self.rules.plan.measures[value.measure];
+                if run.judge.came_before(self.records, &Case { row: resolved, value, measure, twin: None })? {
+                    return Ok(true);
+                }
+            }
+        }
+        Ok(false)
     }
 
     /// The label of the other session that is the same occasion as this row's, if there can be one.

@@ -93,6 +93,7 @@ impl Filer<'_> {
                 pass.ended.extend(olds.iter().map(|reading| reading.reading));
                 return Ok(());
             }
+            RowOutcome::Ready(resolved) if resolved.outside.is_some() => return Ok(()),
             RowOutcome::Ready(resolved) => resolved,
         };
         let any_held = resolved.values.iter().any(|value| matches!(value, ValueOutcome::Held(_)));

@@ -258,6 +258,7 @@ impl<'s> Side<'s> {
         match self.resolver.resolve(&self.row, self.rows.as_ref(), &Decided::default()) {
             RowOutcome::NoValue => Some(vec![]),
             RowOutcome::Held(_) => None,
+            RowOutcome::Ready(row) if row.outside.is_some() => None,
             RowOutcome::Ready(row) => Some(
                 row.values
                     .iter()

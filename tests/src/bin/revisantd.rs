@@ -1,3 +1,5 @@
 //! The service `revisantd`, as built for the checks.
 
-fn main() {}
+fn main() -> std::process::ExitCode {
+    revisant_daemon::service::command::main()
+}

@@ -99,15 +99,26 @@ impl<'p> Judge<'p> {
         self.capture
     }
 
-    /// Judges one value.
-    pub fn judge(&mut self, records: &mut Records, case: &Case<'_>) -> Result<Verdict> {
-        let identity = Identity {
-            instrument: &self.instrument.code,
+    /// What identifies a value, whatever export it stands in.
+    fn identity<'c>(instrument: &'c Instrument, case: &Case<'c>) -> Identity<'c> {
+        Identity {
+            instrument: &instrument.code,
             measure: &case.measure.code,
             condition: &case.value.condition,
             subject: &case.row.subject,
             written: &case.row.written,
-        };
+        }
+    }
+
+    /// Whether an earlier export had a value that is identified alike.
+    pub fn came_before(&self, records: &mut Records, case: &Case<'_>) -> Result<bool> {
+        let candidates = records.candidates(&Self::identity(self.instrument, case))?;
+        Ok(candidates.iter().any(|known| known.capture != Some(self.capture)))
+    }
+
+    /// Judges one value.
+    pub fn judge(&mut self, records: &mut Records, case: &Case<'_>) -> Result<Verdict> {
+        let identity = Self::identity(self.instrument, case);
         self.at = None;
         let candidates = records.candidates(&identity)?;
         let hash = identity.hash();

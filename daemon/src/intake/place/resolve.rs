@@ -98,6 +98,9 @@ pub struct Resolved {
     pub operator: String,
     /// One for each value of the row.
     pub values: Vec<ValueOutcome>,
+    /// The day lies outside the subject's enrolment: the row is held for it, unless it was filed when the roster did
+    /// not say so yet.
+    pub outside: Option<Held>,
 }
 
 /// What became of one value.
@@ -390,12 +393,27 @@ impl<'p> Resolver<'p> {
             Taken::Moment(moment, finer, day) => (Some(moment), finer, day),
             Taken::Day(day) => (None, false, day),
         };
-        self.check_enrolment(&subject, day, decided)?;
-        let (label, label_decided) = self.label(row, rows, decided)?;
-        let replicate = self.replicate_of(row, rows)?;
+        let outside = self.check_enrolment(&subject, day, decided).err();
+        // Of two faults the one that is looked for first is told.
+        let first = |later: Box<Held>| outside.clone().unwrap_or(later);
+        let (label, label_decided) = self.label(row, rows, decided).map_err(first)?;
+        let replicate = self.replicate_of(row, rows).map_err(first)?;
+        let outside = outside.map(|held| *held);
         let values = self.values.iter().map(|value| self.value(value, row, rows, day, decided)).collect();
         let operator = self.operator.as_ref().map(|finder| finder.find(row, rows).into_owned()).unwrap_or_default();
-        Ok(Resolved { subject, day, moment, written, finer, label, label_decided, replicate, operator, values })
+        Ok(Resolved {
+            subject,
+            day,
+            moment,
+            written,
+            finer,
+            label,
+            label_decided,
+            replicate,
+            operator,
+            values,
+            outside,
+        })
     }
 
     fn subject_of(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<String, Box<Held>> {

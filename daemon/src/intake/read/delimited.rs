@@ -2,7 +2,7 @@
 //!
 //! Invariants: the plan decides and nothing is guessed; a quote that does not close spoils the line on which it
 //! opened, never the lines after it; a row is handed out without a fault only when more bytes at the export's end
-//! could not have made it another row (see [`Doubt`] for the one place where that rests on a likelihood); every
+//! could not have made it another row (see `Doubt` for the one place where that rests on a likelihood); every
 //! physical line is counted once, whatever the bytes are.
 
 use regex::Regex;
