@@ -7,15 +7,12 @@ use std::path::{Path, PathBuf};
 use std::time::{Duration, Instant};
 
 use indicatif::{ProgressBar, ProgressDrawTarget, ProgressStyle};
-use revisant_schema::records::Records;
 use serde_json::{Map, Value as Json, json};
 
 use super::Done;
 use crate::args::Demo;
 use crate::demo::rig::{FOLDERS, Rig};
-use revisant_daemon::service::Handle;
-
-use crate::demo::service;
+use crate::demo::service::{self, Running};
 use crate::demo::{SEED, TODAY, write_study};
 use crate::error::{Exit, Failure};
 use crate::output::Out;
@@ -103,16 +100,18 @@ fn play(context: &mut Context<'_, '_>, seed: u64) -> Result<u64, Failure> {
     let steps = rig.steps().len() as u64;
     let bar = bar(context, steps);
     let service = service::start(&context.study, context.world.clone())?;
-    let played = rig.play(&context.study, &mut |done| bar.set_position(done));
+    let show = |done: u64| {
+        let (filed, held) = service.done.so_far();
+        bar.set_position(done);
+        bar.set_message(format!("{filed} filed, {held} held"));
+    };
+    let played = rig.play(&context.study, &mut |done| show(done));
     let read = match played {
-        Ok(()) => {
-            bar.set_message("the service reads what is left");
-            wait(context, &service)
-        }
+        Ok(()) => wait(&service, &mut || show(steps)),
         Err(error) => Err(unwritable(&context.study, &error)),
     };
     bar.finish_and_clear();
-    service.stop().map_err(Failure::from).and(read).map(|()| steps)
+    service.stop().and(read).map(|()| steps)
 }
 
 /// On standard error, where a terminal reads it.
@@ -121,27 +120,27 @@ fn bar(context: &Context<'_, '_>, steps: u64) -> ProgressBar {
         return ProgressBar::hidden();
     }
     let bar = ProgressBar::with_draw_target(Some(steps), ProgressDrawTarget::stderr());
-    if let Ok(style) = ProgressStyle::with_template("{bar:30} {pos} of {len} steps, {elapsed}  {msg}") {
+    let template = "{bar:24} {pos} of {len} steps of the rig, {elapsed}; {msg}";
+    if let Ok(style) = ProgressStyle::with_template(template) {
         bar.set_style(style);
     }
-    bar.set_message("the instruments write");
     bar
 }
 
-fn wait(context: &Context<'_, '_>, service: &Handle) -> Result<(), Failure> {
-    let records = Records::open(&context.study, context.world.clone())?;
-    let start = Instant::now();
-    while start.elapsed() < PATIENCE && service.is_alive() {
-        if service::has_read_all(&records, &context.study)? {
+/// Waits until the service has read everything that is at rest.
+fn wait(service: &Running, show: &mut dyn FnMut()) -> Result<(), Failure> {
+    let (start, rounds) = (Instant::now(), service.rounds());
+    while start.elapsed() < PATIENCE {
+        show();
+        if service.has_read_all(rounds) {
             return Ok(());
+        }
+        if !service.is_alive() {
+            return Err(Failure::new("service", "the service broke down"));
         }
         std::thread::sleep(Duration::from_millis(100));
     }
-    match !service.is_alive() {
-        // Stopping it says why.
-        true => Ok(()),
-        false => Err(Failure::new("service", format!("exports are unread after {} s", PATIENCE.as_secs()))),
-    }
+    Err(Failure::new("service", format!("exports are still unread after {} s", PATIENCE.as_secs())))
 }
 
 // ---- what is shown ----
@@ -283,8 +282,11 @@ fn what_next(context: &mut Context<'_, '_>) -> Result<(), Failure> {
     let folder = context.study.display().to_string();
     context.out.heading("\nWhat to try next")?;
     context.out.say("Each line can be pasted.\n")?;
+    let alias = alias();
+    // Built from source, the service may not have been built yet.
+    let service = alias.as_ref().is_none_or(|alias| alias.contains("revisantd="));
     let mut lines = vec![format!("cd {folder}")];
-    lines.extend(alias());
+    lines.extend(alias);
     if let Some(hold) = number("unknown-subject") {
         lines.push(format!("revisant holds show {hold}"));
         lines.push(format!("revisant holds decide {hold} --subject QR-156 --all-like-it 2 --why \"misread\""));
@@ -303,7 +305,10 @@ fn what_next(context: &mut Context<'_, '_>) -> Result<(), Failure> {
         lines.push(format!("revisant provenance {reading}"));
     }
     lines.push("revisant trail list --last 10".to_owned());
-    lines.push("revisantd      # the service: write a file into an export folder and see".to_owned());
+    lines.push("revisant check".to_owned());
+    if service {
+        lines.push("revisantd --study .      # the service; write an export and see".to_owned());
+    }
     for line in lines {
         context.out.text(&format!("  {line}"))?;
     }
@@ -319,5 +324,7 @@ fn alias() -> Option<String> {
     let called = Path::new(&called);
     called.parent().filter(|folder| !folder.as_os_str().is_empty())?;
     let whole = std::path::absolute(called).ok()?;
-    Some(format!("alias revisant={} revisantd={}", whole.display(), whole.with_file_name("revisantd").display()))
+    let service = whole.with_file_name("revisantd");
+    let service = if service.exists() { format!(" revisantd={}", service.display()) } else { String::new() };
+    Some(format!("alias revisant={}{service}", whole.display()))
 }

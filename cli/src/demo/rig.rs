@@ -115,7 +115,7 @@ impl Rig {
             sitting.iter().for_each(|sitting| steps.plate(sitting));
             steps.timer(*day, sitting);
             weighed.extend(sitting);
-            if number % 5 == 0 || number == last {
+            if number.is_multiple_of(5) || number == last {
                 steps.scale(&weighed, number == last);
             }
         }
