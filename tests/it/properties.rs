@@ -388,7 +388,6 @@ fn a_filed_row_that_comes_again_is_not_held() {
 }
 
 #[test]
-#[ignore = "open: the row is held as after-withdrawal although it is filed, and should be known again"]
 fn a_filed_row_that_comes_again_after_a_withdrawal_is_not_held() {
     let study = labelled_before_day_0("31.5");
     let site = study.site("grows");
