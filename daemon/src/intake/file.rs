@@ -267,6 +267,9 @@ pub struct Filer<'a> {
     pub now: DateTime<Utc>,
     /// Whether to stop.
     pub stop: &'a dyn Fn() -> bool,
+    /// Everything in one transaction, however large: for who does not hold the intake's lock, since the intake clears
+    /// what it finds unpublished.
+    pub in_one: bool,
     open: bool,
     pending: u32,
     since: Instant,
@@ -286,6 +289,7 @@ impl<'a> Filer<'a> {
             doer,
             now,
             stop: &|| false,
+            in_one: false,
             open: false,
             pending: 0,
             since: Instant::now(),
@@ -405,7 +409,7 @@ impl<'a> Filer<'a> {
     }
 
     fn stage_when_due(&mut self, filing: &mut Filing, run: &mut Run<'_>) -> Result<()> {
-        if filing.readings() / STAGE > run.staged {
+        if !self.in_one && filing.readings() / STAGE > run.staged {
             run.staged = filing.readings() / STAGE;
             self.records.stage(filing)?;
             if (self.stop)() {

@@ -267,6 +267,7 @@ pub fn decide(records: &mut Records, holds: &[HoldRow], answer: &Answer, doer: &
     let Some(first) = holds.first() else { return Ok(Decision::default()) };
     let capture = capture_of(records, first)?;
     let mut filer = Filer::new(records, &rules, Gathered::default(), doer)?;
+    filer.in_one = true;
     holds.iter().for_each(|hold| filer.held.decide(hold.hold, answer));
     let done = decide_within(&mut filer, &capture, holds, answer);
     match done {
