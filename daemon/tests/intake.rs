@@ -516,3 +516,23 @@ fn a_row_filed_before_a_withdrawal_was_known_is_not_held_when_it_comes_again() {
     assert_eq!(study.one(Reason::AfterWithdrawal).line, Some(4));
     assert_eq!(study.current().len(), 2);
 }
+
+#[test]
+fn adopting_leaves_what_a_person_has_seen_to_and_holds_its_new_value() {
+    let mut study = Study::new("re_export = \"grows\"", LABELLED);
+    study.rows("a.csv", &["IN-01,2025-03-03 09:00,first,1,70", "IN-02,2025-03-03 09:01,first,1,61"]);
+    study.collect();
+    let reading = study.all()[0].reading;
+    study.strike(reading);
+    study.plan(&study.plan_text().replace("column = \"length\"", "column = \"length\"\nunit = { code = \"[in_i]\" }"));
+    let path = study.path().to_path_buf();
+    let (_, report) = replace::adopt(&mut study.records, &path, &study.doer).unwrap();
+    assert_eq!((report.filed, report.held), (1, 1));
+    assert_eq!(study.current(), ["IN-02 2025-03-03 #1 154.94"]);
+    let hold = study.one(Reason::ChangedValue);
+    assert_eq!((hold.line, hold.about), (Some(2), Some(reading)));
+    assert_eq!(study.account("a.csv")["held"], 1);
+    study.decide(&hold, Answer::TakeNew);
+    assert_eq!(study.current(), ["IN-01 2025-03-03 #1 177.8", "IN-02 2025-03-03 #1 154.94"]);
+    assert_eq!(study.account("a.csv")["held"], 0);
+}

@@ -75,6 +75,7 @@ fn written(context: &Context<'_, '_>, view: &View<'_>, basis: &Basis, args: &Ent
 fn written_time(taken_at: Moment) -> String {
     match taken_at {
         Moment::Day(day) => day.to_string(),
+        Moment::Local(local) => local.format("%Y-%m-%dT%H:%M:%S").to_string(),
         Moment::Instant(moment) => moment.to_rfc3339(),
     }
 }
@@ -82,9 +83,10 @@ fn written_time(taken_at: Moment) -> String {
 fn taken(context: &Context<'_, '_>, basis: &Basis, at: Moment) -> Result<(NaiveDate, Option<DateTime<Utc>>), Failure> {
     let zone = basis.zone();
     let day = at.day(zone);
-    let (future, moment) = match at {
-        Moment::Day(day) => (day > context.today(zone), None),
-        Moment::Instant(moment) => (moment > context.world.now(), Some(moment)),
+    let moment = at.exact(zone).map_err(Failure::refused)?;
+    let future = match moment {
+        None => day > context.today(zone),
+        Some(moment) => moment > context.world.now(),
     };
     match future {
         true => Err(Failure::refused(format!("{} lies in the future", written_time(at)))),

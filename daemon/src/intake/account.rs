@@ -82,6 +82,15 @@ impl Account {
         self.filed = rest - self.held - self.already;
     }
 
+    /// Moves so many lines that were filed, or there already, to those that are held.
+    pub fn hold(&mut self, lines: u64) {
+        let from_filed = lines.min(self.filed);
+        let from_already = (lines - from_filed).min(self.already);
+        self.filed -= from_filed;
+        self.already -= from_already;
+        self.held += from_filed + from_already;
+    }
+
     /// Whether the parts add up.
     pub fn balanced(&self) -> bool {
         let parts = [

@@ -1,18 +1,21 @@
 //! Placing filed rows over, after a reader was wrong: each new reading supersedes the one that it corrects.
 //!
-//! Invariants: a row that the mended reader cannot place leaves its readings as they are; a reading that the mended
-//! reader no longer gives is superseded without a successor; nothing is overwritten.
+//! Invariants: a row that the mended reader cannot place leaves its readings as they are; what a person has struck or
+//! amended is not changed, its new value is held; any other reading that the mended reader no longer gives is
+//! superseded without a successor; nothing is overwritten.
 
 use std::collections::{HashMap, HashSet};
 
+use revisant_schema::hold::Reason;
+use revisant_schema::reading::ReadingState;
 use revisant_schema::records::intake::Identity;
 use revisant_schema::records::view::ReadingRow;
 use revisant_schema::records::{Filing, RecordsError, Result};
 
 use super::account::{Account, Class};
-use super::file::{Export, Filer, Placing, new_reading};
+use super::file::{Export, Filer, Placing, add_hold, new_reading, row_key};
 use super::place::identity::{Case, Judge, Slotted, Verdict};
-use super::place::resolve::{Decided, Resolved, Resolver, RowOutcome, ValueOutcome, Whereabouts};
+use super::place::resolve::{Decided, Held, Resolved, Resolver, RowOutcome, ValueOutcome, Whereabouts};
 use super::read::{self, FileFault, Row};
 
 /// What placing over gave, and the readings that have no successor.
@@ -23,6 +26,21 @@ struct Pass<'p> {
     placing: Placing,
     ended: Vec<i64>,
     orders: HashMap<i64, i64>,
+    held_lines: HashSet<u64>,
+    /// Physical lines that are held now and were not.
+    moved: u64,
+}
+
+impl Pass<'_> {
+    /// Readings without a successor, but for those that a person has seen to.
+    fn end(&mut self, olds: &[ReadingRow]) {
+        self.ended.extend(olds.iter().filter(|reading| !by_hand(reading)).map(|reading| reading.reading));
+    }
+}
+
+/// Whether a person has struck or amended it.
+fn by_hand(reading: &ReadingRow) -> bool {
+    reading.source != 0 || reading.state == ReadingState::Struck
 }
 
 impl Filer<'_> {
@@ -50,6 +68,8 @@ impl Filer<'_> {
             placing: Placing::default(),
             ended: vec![],
             orders: HashMap::new(),
+            held_lines: HashSet::new(),
+            moved: 0,
         };
         let mut row = Row::default();
         loop {
@@ -64,17 +84,18 @@ impl Filer<'_> {
             if wanted_lines.contains(&row.line) {
                 let olds = old.remove(&(row.line as i64)).unwrap_or_default();
                 let outcome = resolver.resolve(&row, rows.as_ref(), &Decided::default());
-                self.row_over(&mut filing, export, &row, outcome, olds, &mut pass)?;
+                let here = (&row, resolver.row_hash(&row, rows.as_ref()));
+                self.row_over(&mut filing, export, here, outcome, olds, &mut pass)?;
             }
         }
         for line in lines {
-            let olds = old.remove(&(*line as i64)).unwrap_or_default();
-            pass.ended.extend(olds.iter().map(|reading| reading.reading));
+            pass.end(&old.remove(&(*line as i64)).unwrap_or_default());
         }
         let before = self.records.account_of(export.capture)?;
         let before: Account = before.and_then(|text| serde_json::from_str(&text).ok()).unwrap_or_default();
         pass.placing.account.take(rows.counts(), rows.lines());
         pass.placing.account.rest_as(&before);
+        pass.placing.account.hold(pass.moved);
         Ok((filing, Ok((pass.placing, pass.ended))))
     }
 
@@ -82,7 +103,7 @@ impl Filer<'_> {
         &mut self,
         filing: &mut Filing,
         export: &Export,
-        row: &Row,
+        here: (&Row, [u8; 16]),
         outcome: RowOutcome,
         mut olds: Vec<ReadingRow>,
         pass: &mut Pass<'_>,
@@ -90,7 +111,7 @@ impl Filer<'_> {
         let resolved = match outcome {
             RowOutcome::Held(_) => return Ok(()),
             RowOutcome::NoValue => {
-                pass.ended.extend(olds.iter().map(|reading| reading.reading));
+                pass.end(&olds);
                 return Ok(());
             }
             RowOutcome::Ready(resolved) if resolved.outside.is_some() => return Ok(()),
@@ -107,6 +128,10 @@ impl Filer<'_> {
             let at = olds.iter().position(same).or((!olds.is_empty()).then_some(0));
             let slot = match at.map(|at| olds.remove(at)) {
                 Some(reading) if unchanged(&reading, &case) => continue,
+                Some(reading) if by_hand(&reading) => {
+                    self.hold_over(filing, here, &case, &reading, pass)?;
+                    continue;
+                }
                 Some(reading) => Some(self.slot_over(export, &case, &reading, pass)),
                 None => match pass.judge.judge(self.records, &case)? {
                     Verdict::File(slot) => Some(slot),
@@ -115,14 +140,36 @@ impl Filer<'_> {
             };
             if let Some(slot) = slot {
                 let instrument = &self.rules.plan.instruments[export.instrument];
-                let new = new_reading(self.rules, instrument, row, &case, slot);
+                let new = new_reading(self.rules, instrument, here.0, &case, slot);
                 let reading = self.records.add_reading(filing, &new)?;
                 pass.judge.filed(reading, slot);
                 pass.placing.outcome.filed += 1;
             }
         }
         if !any_held {
-            pass.ended.extend(olds.iter().map(|reading| reading.reading));
+            pass.end(&olds);
+        }
+        Ok(())
+    }
+
+    /// Holds the new value of a reading that a person has struck or amended.
+    fn hold_over(
+        &mut self,
+        filing: &mut Filing,
+        (row, hash): (&Row, [u8; 16]),
+        case: &Case<'_>,
+        old: &ReadingRow,
+        pass: &mut Pass<'_>,
+    ) -> Result<()> {
+        let wrong = format!(
+            "the mended reader gives {} {}; a person has struck or amended reading {}",
+            case.value.number, case.measure.unit, old.reading
+        );
+        let held = Held::row(Reason::ChangedValue, wrong).on(&case.value.column).about(old.reading);
+        add_hold(self.records, filing, Some(row), &held, &row_key(hash, 1))?;
+        pass.placing.outcome.held += 1;
+        if pass.held_lines.insert(row.line) {
+            pass.moved += row.lines;
         }
         Ok(())
     }

@@ -192,6 +192,17 @@ impl Records {
             .map_err(self.failed("looking at a reading's history"))
     }
 
+    /// The reading that stands where this one stood: itself, or the last of those that supersede one another.
+    pub fn newest_of_line(&self, reading: i64) -> Result<i64> {
+        self.conn
+            .prepare_cached(
+                "WITH RECURSIVE line (id) AS (VALUES (?1) UNION SELECT r.id FROM reading r JOIN line ON r.supersedes = line.id)
+                 SELECT max(id) FROM line",
+            )
+            .and_then(|mut statement| statement.query_row([reading], |row| row.get(0)))
+            .map_err(self.failed("looking at a reading's history"))
+    }
+
     /// What a path held last.
     pub fn last_capture(&self, path: &str) -> Result<Option<LastCapture>> {
         self.conn

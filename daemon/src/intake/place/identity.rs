@@ -214,7 +214,8 @@ impl<'p> Judge<'p> {
             labelled: known.labelled,
             identity,
             ordinal: known.ordinal,
-            supersedes: Some(known.reading),
+            // A person may have amended it since: the newest of its line is what a new value takes the place of.
+            supersedes: Some(records.newest_of_line(known.reading)?),
         };
         match case.value.decided {
             Some(Answer::KeepOld) => return Ok(Verdict::Left),
