@@ -14,6 +14,8 @@ use std::time::Instant;
 pub struct Measured {
     /// Wall time, from the start of the process to its end.
     pub seconds: f64,
+    /// Time on the processors, which other programs on the machine change less; `None` where the kernel does not say.
+    pub busy: Option<f64>,
     /// The greatest resident memory, in MiB; `None` where the kernel does not say.
     pub mib: Option<f64>,
     /// Its results.
@@ -29,10 +31,17 @@ pub fn child() -> Option<ExitCode> {
     let note = args.next()?;
     let code = revisant::main(std::iter::once(OsString::from("revisant")).chain(args));
     if let Ok(status) = fs::read_to_string("/proc/self/status") {
-        let peak = status.lines().find_map(|line| line.strip_prefix("VmHWM:"));
-        fs::write(note, peak.unwrap_or_default().trim()).expect("the note of memory");
+        let peak = status.lines().find_map(|line| line.strip_prefix("VmHWM:")).unwrap_or_default();
+        fs::write(note, format!("{}\n{}", peak.trim(), ticks().unwrap_or_default())).expect("the note of memory");
     }
     Some(code)
+}
+
+/// This process's time on the processors, in hundredths of a second (proc(5): fields 14 and 15 of stat).
+fn ticks() -> Option<u64> {
+    let stat = fs::read_to_string("/proc/self/stat").ok()?;
+    let fields: Vec<&str> = stat.rsplit_once(')')?.1.split_whitespace().collect();
+    Some(fields.get(11)?.parse::<u64>().ok()? + fields.get(12)?.parse::<u64>().ok()?)
 }
 
 /// Runs the command line in a process of its own; it must succeed.
@@ -51,9 +60,11 @@ pub fn revisant(study: &Path, args: &[&str]) -> Measured {
         .expect("the bench starts itself");
     let seconds = start.elapsed().as_secs_f64();
     assert!(output.status.success(), "{}", String::from_utf8_lossy(&output.stderr));
-    let kib = fs::read_to_string(&note).ok().and_then(|note| note.split(' ').next()?.parse::<f64>().ok());
+    let note = fs::read_to_string(&note).unwrap_or_default();
+    let kib = note.split(' ').next().and_then(|kib| kib.parse::<f64>().ok());
+    let busy = note.lines().nth(1).and_then(|ticks| ticks.parse::<f64>().ok()).map(|ticks| ticks / 100.0);
     let stdout = String::from_utf8(output.stdout).expect("results in UTF-8");
-    Measured { seconds, mib: kib.map(|kib| kib / 1024.0), stdout }
+    Measured { seconds, busy, mib: kib.map(|kib| kib / 1024.0), stdout }
 }
 
 /// The middle one.
