@@ -19,7 +19,8 @@ Example:
   revisant roster import roster.csv --study grip-study --why \"first enrolments\"
   revisant collect --study grip-study   file what the instruments exported
 
-A MOMENT is a date (2026-03-31) or a moment of RFC 3339 (2026-03-31T14:00:00+01:00).
+A MOMENT is a date (2026-03-31), a local time of the study's zone (2026-03-31T14:00) or a moment of RFC 3339
+(2026-03-31T14:00:00+01:00).
 Exit status: 0 done, 1 failed, 2 usage error or unsound plan, 3 a check found something.
 With --json a failure is {\"error\": {\"kind\", \"message\", \"where\"}} on standard error.")]
 pub struct Args {

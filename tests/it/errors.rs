@@ -6,7 +6,7 @@ use std::fs;
 use std::process::Command;
 use std::time::Duration;
 
-use revisant_tests::site::{Ran, Site};
+use revisant_tests::site::{Ran, Running, Site};
 use revisant_tests::small::{self, FAULTY, PLAN, ROSTER, a_good_day_files_everything, all_of_it, filed};
 use rusqlite::Connection;
 
@@ -368,6 +368,51 @@ fn only_one_program_collects() {
     a_good_day_files_everything(&site);
 }
 
+#[test]
+fn a_service_that_cannot_start_says_why() {
+    let site = small::lay_out(PROGRAMS);
+    site.write("empty/nothing.txt", "");
+    let mut shown: Vec<String> = Vec::new();
+    let mut fails = |code: i32, args: &[&str]| {
+        let ran = site.service_fails(args);
+        assert_eq!(ran.code, Some(code), "{}", ran.shown());
+        assert!(!ran.stderr.contains("panicked"), "{}", ran.shown());
+        assert_eq!(ran.stdout, "", "{}", ran.shown());
+        shown.push(site.redact(&ran.shown()));
+    };
+    fails(2, &[]);
+    fails(1, &["--study", "nowhere"]);
+    fails(1, &["--study", "empty"]);
+    site.import_roster();
+    let service = site.serve();
+    fails(1, &["--study", "."]);
+    // What the running one does is not disturbed.
+    site.wait_until_filed(small::EXPORTS.len());
+    told(&site, "collected-by-the-service", &[(1, &["collect"])]);
+    service.stop();
+    revisant_tests::snapshot::check("errors/service", &shown.join("\n"));
+    a_good_day_files_everything(&site);
+}
+
+#[test]
+fn a_service_waits_for_a_sound_plan() {
+    let site = small::lay_out(PROGRAMS);
+    site.write("study.toml", PLAN.replace("plausible", "plausibel"));
+    let service = Running(site.service().spawn().expect("the service starts"));
+    let log = || fs::read_to_string(site.path("revisantd.log")).unwrap_or_default();
+    site.wait_until("the fault is in the log", || log().contains("plausibel"));
+    site.write("study.toml", PLAN);
+    site.import_roster();
+    site.wait_until_filed(small::EXPORTS.len());
+    // Unsound again: the last sound one stays in force, and what comes is filed by it.
+    site.write("study.toml", "[study");
+    site.drop_export(FAULTY.0, FAULTY.1);
+    site.wait_until("the odd export is held", || site.holds().len() == 4);
+    site.write("study.toml", PLAN);
+    service.stop();
+    assert_eq!(filed(&site), all_of_it());
+}
+
 /// Runs a script in a mount namespace of its own, where it may mount without being asked for rights outside. `None` where
 /// the machine does not allow that.
 fn apart(site: &Site, script: &str) -> Option<Ran> {
@@ -394,8 +439,13 @@ const COLLECT_FAILS: &str = r#"
 fn told_apart(site: &Site, name: &str, kind: &str) {
     let words = fs::read_to_string(site.path("words")).expect("its words");
     let status = fs::read_to_string(site.path("status")).expect("its exit status");
-    let ran =
-        Ran { args: vec!["collect".into()], code: status.trim().parse().ok(), stdout: String::new(), stderr: words };
+    let ran = Ran {
+        program: "revisant",
+        args: vec!["collect".into()],
+        code: status.trim().parse().ok(),
+        stdout: String::new(),
+        stderr: words,
+    };
     well_behaved(&ran);
     assert_eq!(ran.code, Some(1), "{}", ran.shown());
     site.check_snapshot(&format!("errors/{name}"), &ran);

@@ -128,6 +128,11 @@ impl Site {
         command
     }
 
+    /// Starts the service with these options, where it must end by itself.
+    pub fn service_fails(&self, args: &[&str]) -> Ran {
+        Ran { program: "revisantd", ..Ran::of(args, self.surroundings(self.programs.revisantd, args)) }
+    }
+
     /// The service on this study, at work.
     pub fn serve(&self) -> Running {
         let running = Running(self.service().spawn().expect("the service starts"));
@@ -206,7 +211,7 @@ impl Site {
     /// Text with everything in it that differs from run to run taken out.
     pub fn redact(&self, text: &str) -> String {
         let root = self.study.parent().unwrap_or(&self.study);
-        let text = text.replace(&*root.to_string_lossy(), "FOLDER");
+        let text = text.replace("-under-test", "").replace(&*root.to_string_lossy(), "FOLDER");
         crate::snapshot::redact(&text.replace(&*self.folder.path().to_string_lossy(), "FOLDER"))
     }
 
@@ -227,6 +232,8 @@ pub fn list(json: Json) -> Vec<Json> {
 /// What a command did.
 #[derive(Debug, Clone)]
 pub struct Ran {
+    /// Which program it was.
+    pub program: &'static str,
     /// Its options.
     pub args: Vec<String>,
     /// Its exit status; `None` when a signal ended it.
@@ -240,8 +247,19 @@ pub struct Ran {
 impl Ran {
     /// Runs a command to its end.
     pub fn of(args: &[&str], mut command: Command) -> Self {
-        let output = command.output().expect("the program under test runs");
+        command.stdout(Stdio::piped()).stderr(Stdio::piped());
+        let child = command.spawn().expect("the program under test starts");
+        let process = child.id().to_string();
+        let (done, wait) = std::sync::mpsc::channel();
+        std::thread::spawn(move || done.send(child.wait_with_output()));
+        let output = wait.recv_timeout(LONGEST).unwrap_or_else(|_| {
+            // One that never ends must not keep all checks waiting.
+            let _ = Command::new("kill").args(["-KILL", &process]).status();
+            panic!("it did not end: {args:?}");
+        });
+        let output = output.expect("the program under test runs");
         Self {
+            program: "revisant",
             args: args.iter().map(|arg| (*arg).to_owned()).collect(),
             code: output.status.code(),
             stdout: String::from_utf8(output.stdout).expect("results in UTF-8"),
@@ -258,7 +276,7 @@ impl Ran {
             text => format!("--- {name}\n{}\n", text.trim_end_matches('\n')),
         };
         let (stdout, stderr) = (part("standard output", &self.stdout), part("standard error", &self.stderr));
-        format!("$ revisant {}\n{stdout}{stderr}--- {code}\n", args.join(" "))
+        format!("$ {} {}\n{stdout}{stderr}--- {code}\n", self.program, args.join(" "))
     }
 
     /// The results as JSON.

@@ -5,6 +5,7 @@
 
 use std::collections::{BTreeMap, HashMap};
 use std::io;
+use std::os::unix::ffi::OsStrExt;
 use std::path::{Path, PathBuf};
 
 use chrono::{DateTime, Utc};
@@ -195,13 +196,31 @@ pub fn is_passing(name: &str) -> bool {
         || WHOLE.contains(&lower.as_str())
 }
 
+/// A path as the records name it. Bytes that are no UTF-8 are written as `\xff`, so that two such names stay two.
 fn name_of(study: &Path, path: &Path) -> String {
-    path.strip_prefix(study).unwrap_or(path).to_string_lossy().into_owned()
+    let path = path.strip_prefix(study).unwrap_or(path);
+    let mut name = String::new();
+    for chunk in path.as_os_str().as_bytes().utf8_chunks() {
+        name.push_str(chunk.valid());
+        chunk.invalid().iter().for_each(|byte| name.push_str(&format!("\\x{byte:02x}")));
+    }
+    name
 }
 
 #[cfg(test)]
 mod tests {
+    use std::ffi::OsStr;
+
     use super::*;
+
+    #[test]
+    fn names_that_are_no_text_stay_apart() {
+        let name = |bytes: &[u8]| name_of(Path::new("/s"), &Path::new("/s/exports").join(OsStr::from_bytes(bytes)));
+        assert_eq!(name(b"a.csv"), "exports/a.csv");
+        assert_eq!(name("\u{e9}.csv".as_bytes()), "exports/\u{e9}.csv");
+        assert_eq!(name(b"a\xff.csv"), "exports/a\\xff.csv");
+        assert_ne!(name(b"a\xff.csv"), name(b"a\xfe.csv"));
+    }
 
     #[test]
     fn passing_names_are_no_exports() {

@@ -4,12 +4,14 @@
 //! or between the parts of a large one, which then stays unpublished.
 
 use std::collections::BTreeMap;
+use std::path::PathBuf;
 use std::sync::Arc;
 use std::sync::atomic::{AtomicBool, Ordering};
 use std::sync::mpsc::{Receiver, RecvTimeoutError, Sender};
 use std::time::{Duration, Instant};
 
 use chrono::{DateTime, SecondsFormat, Utc};
+use revisant_schema::plan::{MAIN, reader_files};
 use revisant_schema::records::{ActKind, Doer, Records};
 use serde_json::json;
 use tracing::{error, info, warn};
@@ -46,6 +48,8 @@ pub struct Worker {
     plan_trouble: Option<String>,
     lost: BTreeMap<String, String>,
     seen_rules: i64,
+    /// The plan's files, and what the file system said of each.
+    plan_files: Vec<PathBuf>,
     plan_stamp: Vec<Option<(u64, i64)>>,
     // Last, so that nobody else starts to file before all of the above is done with.
     _lock: IntakeLock,
@@ -76,6 +80,7 @@ impl Worker {
             plan_trouble: None,
             lost: BTreeMap::new(),
             seen_rules: -1,
+            plan_files: vec![],
             plan_stamp: vec![],
             _lock: lock,
         }
@@ -148,16 +153,22 @@ impl Worker {
     }
 
     fn stamp(&self) -> Vec<Option<(u64, i64)>> {
-        let stat = |path: &std::path::Path| self.options.world.stat(path).ok().map(|stat| (stat.size, stat.modified));
-        let main = self.options.study.join(revisant_schema::plan::MAIN);
-        let named = std::fs::read_to_string(&main).map(|text| revisant_schema::plan::reader_files(&text));
-        let readers = named.unwrap_or_default().into_iter().map(|name| self.options.study.join(name));
-        std::iter::once(main.clone()).chain(readers).map(|path| stat(&path)).collect()
+        let stat = |path: &PathBuf| self.options.world.stat(path).ok().map(|stat| (stat.size, stat.modified));
+        self.plan_files.iter().map(stat).collect()
+    }
+
+    /// The files that the plan on disk is made of.
+    fn find_plan_files(&self) -> Vec<PathBuf> {
+        let main = self.options.study.join(MAIN);
+        let named = std::fs::read_to_string(&main).map(|text| reader_files(&text)).unwrap_or_default();
+        let readers = named.into_iter().map(|name| self.options.study.join(name));
+        std::iter::once(main.clone()).chain(readers).collect()
     }
 
     fn cycle(&mut self) {
         self.sooner = None;
         self.next_walk = Instant::now() + self.options.every;
+        self.plan_files = self.find_plan_files();
         self.plan_stamp = self.stamp();
         match self.work() {
             Ok(report) => {
