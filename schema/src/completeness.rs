@@ -322,7 +322,8 @@ fn enrolment(plan: &Plan, roster: &Roster, today: NaiveDate) -> Enrolment {
     let Some(enrol) = plan.study.enrol else { return result };
     let gone = (today.min(enrol.until) - enrol.from).num_days() + 1;
     let left = (enrol.until - today.max(enrol.from)).num_days().max(0);
-    if gone < 1 || enrolled == 0 {
+    // Once enrolment is over there is nothing to project.
+    if gone < 1 || left < 1 || enrolled == 0 {
         return result;
     }
     let expected = f64::from(enrolled) * left as f64 / gone as f64;

@@ -308,6 +308,7 @@ impl Analysed<'_> {
         parts.extend(self.corrections_table().map(|table| table.render(width)));
         parts.extend(self.sphericity().map(say));
         parts.extend(self.contrasts_table().map(|table| table.render(width)));
+        parts.extend(self.pairs_use_more().map(say));
         parts.push(say(self.sentence()));
         parts.push(say(self.who()));
         parts.extend(self.linked().map(say));
@@ -426,11 +427,21 @@ impl Analysed<'_> {
         Some(table)
     }
 
+    /// Why pairs may count more subjects than the effect does.
+    fn pairs_use_more(&self) -> Option<String> {
+        let used = self.result.used.len();
+        let more = self.result.contrasts.iter().any(|contrast| contrast.n > used);
+        more.then(|| {
+            "A pair uses all subjects complete on that pair; the effect and trends those complete on all.".into()
+        })
+    }
+
     fn sphericity(&self) -> Option<String> {
         let mauchly = self.result.effect.as_ref()?.mauchly?;
         let (w, chi2, degrees, p) = (mauchly.w?, mauchly.chi2?, mauchly.df?, mauchly.p?);
         Some(format!(
-            "Mauchly's test of sphericity: W = {}, χ²({}) = {}, {}. It is reported, and does not choose which p is shown.",
+            "An epsilon above 1 counts as 1. Mauchly's test of sphericity: W = {}, χ²({}) = {}, {}. It is reported, and \
+             does not choose which p is shown.",
             number::share(w, 3),
             df(degrees),
             number::fixed(chi2, 2),

@@ -218,23 +218,13 @@ impl Frame {
     fn lines(&self, svg: &mut String, rows: &[Row]) {
         for row in rows {
             let cells = row.cells.iter().zip(&self.positions);
-            let there: Vec<String> =
-                cells.filter_map(|(cell, position)| Some(self.point(*position, *cell.as_ref().ok()?))).collect();
+            let points: Vec<Option<String>> =
+                cells.map(|(cell, position)| Some(self.point(*position, *cell.as_ref().ok()?))).collect();
             let style = if row.complete() { COMPLETE } else { INCOMPLETE };
             let who = escape(&row.subject);
-            match there.as_slice() {
-                [] => {}
-                [one] => {
-                    let (x, y) = one.split_once(',').unwrap_or_default();
-                    let _ = writeln!(
-                        svg,
-                        r##"<circle cx="{x}" cy="{y}" r="2.2" fill="none" stroke="#777"><title>{who}</title></circle>"##
-                    );
-                }
-                points => {
-                    let points = points.join(" ");
-                    let _ = writeln!(svg, r#"<polyline points="{points}" {style}><title>{who}</title></polyline>"#);
-                }
+            // A line across a visit that is missing would look like a reading there.
+            for run in points.split(Option::is_none) {
+                stretch(svg, &run.iter().flatten().map(String::as_str).collect::<Vec<_>>(), style, &who);
             }
         }
     }
@@ -317,6 +307,24 @@ fn decimals_of(step: f64) -> usize {
     // The cast cannot go wrong: steps are finite.
     let size = step.log10().floor() as i32;
     usize::try_from((-size).clamp(0, 8)).unwrap_or(0)
+}
+
+/// One stretch of a subject's line: visits that follow one another without a gap.
+fn stretch(svg: &mut String, points: &[&str], style: &str, who: &str) {
+    match points {
+        [] => {}
+        [one] => {
+            let (x, y) = one.split_once(',').unwrap_or_default();
+            let _ = writeln!(
+                svg,
+                r##"<circle cx="{x}" cy="{y}" r="2.2" fill="none" stroke="#777"><title>{who}</title></circle>"##
+            );
+        }
+        points => {
+            let points = points.join(" ");
+            let _ = writeln!(svg, r#"<polyline points="{points}" {style}><title>{who}</title></polyline>"#);
+        }
+    }
 }
 
 #[cfg(test)]

@@ -74,7 +74,7 @@ pub struct ExportRow {
 #[derive(Debug, Default, Clone)]
 struct HoldsOn {
     lines: HashSet<i64>,
-    file: bool,
+    file: Option<String>,
     dismissed: bool,
 }
 
@@ -91,7 +91,7 @@ impl View<'_> {
                 lines: capture.lines,
                 capture: Some(capture.capture),
                 at: Some(capture.at),
-                detail: None,
+                detail: holds.get(&capture.capture).and_then(|holds| holds.file.clone()),
             };
             exports.insert(capture.path, row);
         }
@@ -123,7 +123,7 @@ impl View<'_> {
         for hold in self.holds(false)? {
             let entry = on.entry(hold.capture).or_default();
             match (hold.line, hold.state) {
-                (None, HoldState::Open) => entry.file = true,
+                (None, HoldState::Open) => entry.file = Some(format!("{}: {}", hold.reason, hold.wrong)),
                 (None, HoldState::Dismissed) => entry.dismissed = true,
                 (Some(line), HoldState::Open) => {
                     entry.lines.insert(line);
@@ -146,7 +146,7 @@ fn state_of(capture: &CaptureRow, holds: Option<&HoldsOn>) -> ExportState {
     let count = |key: &str| capture.lines.as_ref().and_then(|lines| lines[key].as_u64()).unwrap_or(0);
     match holds {
         _ if capture.repeat_of.is_some() => ExportState::Repeat,
-        Some(holds) if holds.file => ExportState::Held,
+        Some(holds) if holds.file.is_some() => ExportState::Held,
         Some(holds) if !holds.lines.is_empty() && count("filed") + count("already") > 0 => ExportState::PartFiled,
         Some(holds) if !holds.lines.is_empty() => ExportState::Held,
         Some(holds) if holds.dismissed && capture.lines.is_none() => ExportState::Ignored,

@@ -221,6 +221,11 @@ fn make_private_folder(folder: &Path) -> Result<()> {
     if folder.is_dir() {
         return Ok(());
     }
+    // Asked of one look: another program may be making the folder at this moment.
+    if folder.metadata().is_ok_and(|meta| !meta.is_dir()) {
+        let text = format!("{} is a file where the records' folder belongs; move it away", folder.display());
+        return Err(RecordsError::Refused(text));
+    }
     fs::DirBuilder::new()
         .recursive(true)
         .mode(0o700)
