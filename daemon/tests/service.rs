@@ -116,6 +116,15 @@ impl Site {
         }
     }
 
+    /// The same, for what must not wait for the minute's walk.
+    fn until_soon(&self, what: &str, mut done: impl FnMut() -> bool) {
+        let deadline = Instant::now() + Duration::from_secs(20);
+        while !done() {
+            assert!(Instant::now() < deadline, "not within twenty seconds: {what}\n{}", self.log());
+            std::thread::sleep(Duration::from_millis(20));
+        }
+    }
+
     fn until_readings(&self, count: usize) {
         self.until(&format!("{count} readings"), || self.readings() >= count);
         assert_eq!(self.readings(), count);
@@ -292,4 +301,89 @@ fn killed_at_any_moment_it_goes_on_where_it_was() {
     site.until_readings(written * 5);
     service.stop();
     site.sound();
+}
+
+#[test]
+fn files_in_folders_made_meanwhile_do_not_wait_for_the_minute() {
+    let site = Site::new();
+    let service = site.start();
+    let mut written = 0;
+    // Each folder is filled the moment it is made, before anyone can watch it.
+    for at in 0..30 {
+        let folder = site.belt(&format!("{at:02}/a/b/c"));
+        fs::create_dir_all(&folder).unwrap();
+        for _ in 0..4 {
+            fs::write(folder.join(format!("{written}.csv")), format!("who,at,pulse\n{}", rows(written * 3, 3))).unwrap();
+            written += 1;
+        }
+    }
+    site.until_soon("all of them are filed", || site.readings() == written * 3);
+    service.stop();
+    site.sound();
+}
+
+#[test]
+fn a_folder_that_is_made_anew_again_and_again_is_watched_each_time() {
+    let site = Site::new();
+    let service = site.start();
+    for at in 0..6 {
+        fs::remove_dir_all(site.path().join("exports/belt")).unwrap();
+        fs::create_dir_all(site.path().join("exports/belt")).unwrap();
+        fs::write(site.belt("first.csv"), format!("who,at,pulse\n{}", rows(at * 20, 5))).unwrap();
+        site.until_soon("the first file is filed", || site.readings() == at * 10 + 5);
+        // Long after the change was noticed: only a watch on the new folder tells of this one.
+        std::thread::sleep(Duration::from_millis(1500));
+        fs::write(site.belt("second.csv"), format!("who,at,pulse\n{}", rows(at * 20 + 10, 5))).unwrap();
+        site.until_soon("the second file is filed", || site.readings() == at * 10 + 10);
+    }
+    service.stop();
+    assert_eq!(site.log().matches("unreachable").count(), site.log().matches("there again").count());
+}
+
+#[test]
+fn a_stop_during_the_first_walk_is_quick_too() {
+    const ROWS: usize = 300_000;
+    let site = Site::new();
+    fs::write(site.belt("large.csv"), format!("who,at,pulse\n{}", rows(0, ROWS))).unwrap();
+    let service = site.start();
+    site.until("a part is staged", || site.records().staged().unwrap() > 0 || site.readings() > 0);
+    let took = service.stop();
+    assert!(took < Duration::from_secs(5), "{took:?}");
+    assert_eq!(site.readings(), 0, "it was stopped in the middle");
+    let service = site.start();
+    site.until_readings(ROWS);
+    service.stop();
+    site.sound();
+}
+
+#[test]
+fn a_level_that_does_not_exist_is_refused() {
+    let done = Command::new(env!("CARGO_BIN_EXE_revisantd")).args(["--study", "/nowhere", "--log-level", "inof"]).output();
+    assert_eq!(done.unwrap().status.code(), Some(2));
+}
+
+#[test]
+fn a_study_that_cannot_be_served_ends_the_others_in_order() {
+    let site = Site::new();
+    let done =
+        Command::new(env!("CARGO_BIN_EXE_revisantd")).arg("--study").arg(site.path()).args(["--study", "/nowhere"]).output();
+    assert_eq!(done.unwrap().status.code(), Some(1));
+    let records = site.records();
+    let acts = records.view().unwrap();
+    assert_eq!(acts.acts_on(ActKind::Start, "process").unwrap().len(), 1);
+    assert_eq!(acts.acts_on(ActKind::Stop, "process").unwrap().len(), 1);
+}
+
+#[test]
+fn a_file_without_bytes_costs_nothing() {
+    let site = Site::new();
+    fs::write(site.belt("empty.csv"), "").unwrap();
+    let service = site.start();
+    let seen = || site.records().working("service_seen").unwrap();
+    site.until("the first cycle is over", || seen().is_some());
+    std::thread::sleep(Duration::from_millis(1500));
+    let before = seen();
+    std::thread::sleep(Duration::from_millis(4000));
+    assert_eq!(seen(), before, "nothing happened, and it walked");
+    service.stop();
 }
