@@ -42,7 +42,8 @@ pub struct Worker {
     observer: Observer,
     agenda: Agenda,
     plan: PlanOnDisk,
-    trouble: Option<String>,
+    /// The kind of failure that lasts: texts may name another temporary file each time.
+    trouble: Option<&'static str>,
     /// Why the plan on disk is not in force; the outer `None`: not looked yet.
     plan_trouble: Option<Option<String>>,
     /// Instruments whose folder is lost, and why.
@@ -225,10 +226,8 @@ impl Worker {
 
     fn fail(&mut self, error: &IntakeError) {
         self.agenda.failed(Instant::now());
-        let text = error.to_string();
-        if self.trouble.as_ref() != Some(&text) {
-            error!(kind = error.kind(), "filing waits: {text}");
-            self.trouble = Some(text);
+        if self.trouble.replace(error.kind()) != Some(error.kind()) {
+            error!(kind = error.kind(), "filing waits: {error}");
         }
     }
 
