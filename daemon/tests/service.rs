@@ -4,6 +4,7 @@
 
 use std::fs;
 use std::io::Write;
+use std::os::unix::net::UnixDatagram;
 use std::path::Path;
 use std::process::{Child, Command, Stdio};
 use std::sync::Arc;
@@ -11,6 +12,7 @@ use std::time::{Duration, Instant};
 
 use revisant_daemon::intake::collect::IntakeLock;
 use revisant_daemon::intake::plan;
+use revisant_daemon::service::{Options, run, spawn};
 use revisant_schema::records::view::ReadingFilter;
 use revisant_schema::records::{ActKind, Doer, Records};
 use revisant_schema::roster;
@@ -81,7 +83,14 @@ impl Site {
     }
 
     fn start(&self) -> Service {
-        let child = Command::new(env!("CARGO_BIN_EXE_revisantd"))
+        self.start_with(|_| {})
+    }
+
+    fn start_with(&self, with: impl FnOnce(&mut Command)) -> Service {
+        let mut command = Command::new(env!("CARGO_BIN_EXE_revisantd"));
+        with(&mut command);
+        let before = self.log().matches("started").count();
+        let child = command
             .arg("--study")
             .arg(self.path())
             .stderr(fs::File::options().create(true).append(true).open(self.path().join("log")).unwrap())
@@ -89,9 +98,7 @@ impl Site {
             .spawn()
             .unwrap();
         let service = Service(child);
-        self.until("the service has started", || {
-            self.log().contains("started") && IntakeLock::holder(&Records::folder_of(self.path())).is_some()
-        });
+        self.until("the service has started", || self.log().matches("started").count() > before);
         service
     }
 
@@ -116,9 +123,26 @@ impl Site {
         }
     }
 
+    /// The same, for what must not wait for the minute's walk.
+    fn until_soon(&self, what: &str, mut done: impl FnMut() -> bool) {
+        let deadline = Instant::now() + Duration::from_secs(20);
+        while !done() {
+            assert!(Instant::now() < deadline, "not within twenty seconds: {what}\n{}", self.log());
+            std::thread::sleep(Duration::from_millis(20));
+        }
+    }
+
     fn until_readings(&self, count: usize) {
         self.until(&format!("{count} readings"), || self.readings() >= count);
         assert_eq!(self.readings(), count);
+    }
+
+    /// Whether some reading came from each of so many exports, and none twice.
+    fn filed_once(&self, readings: usize) {
+        let records = self.records();
+        let rows = records.view().unwrap().readings(&ReadingFilter::default()).unwrap();
+        let places: std::collections::HashSet<_> = rows.iter().map(|row| (row.export.clone(), row.line)).collect();
+        assert_eq!((rows.len(), places.len()), (readings, readings));
     }
 
     fn sound(&self) {
@@ -136,11 +160,16 @@ impl Service {
     }
 
     /// Stops it, and gives how long that took.
-    fn stop(mut self) -> Duration {
+    fn stop(self) -> Duration {
         let start = Instant::now();
         self.signal("TERM");
-        assert!(self.0.wait().unwrap().success());
+        assert_eq!(self.code(), Some(0));
         start.elapsed()
+    }
+
+    /// How it ended.
+    fn code(mut self) -> Option<i32> {
+        self.0.wait().unwrap().code()
     }
 }
 
@@ -277,7 +306,7 @@ fn killed_at_any_moment_it_goes_on_where_it_was() {
     let site = Site::new();
     let mut state = 7_u64;
     let mut written = 0;
-    for _ in 0..8 {
+    for _ in 0..10 {
         let service = site.start();
         for _ in 0..25 {
             fs::write(site.belt("next.part"), format!("who,at,pulse\n{}", rows(written * 5, 5))).unwrap();
@@ -292,5 +321,291 @@ fn killed_at_any_moment_it_goes_on_where_it_was() {
     let service = site.start();
     site.until_readings(written * 5);
     service.stop();
+    site.filed_once(written * 5);
+    site.sound();
+}
+
+#[test]
+fn files_in_folders_made_meanwhile_do_not_wait_for_the_minute() {
+    let site = Site::new();
+    let service = site.start();
+    let mut written = 0;
+    // Each folder is filled the moment it is made, before anyone can watch it.
+    for at in 0..30 {
+        let folder = site.belt(&format!("{at:02}/a/b/c"));
+        fs::create_dir_all(&folder).unwrap();
+        for _ in 0..4 {
+            fs::write(folder.join(format!("{written}.csv")), format!("who,at,pulse\n{}", rows(written * 3, 3)))
+                .unwrap();
+            written += 1;
+        }
+    }
+    site.until_soon("all of them are filed", || site.readings() == written * 3);
+    service.stop();
+    site.sound();
+}
+
+#[test]
+fn a_folder_that_is_made_anew_again_and_again_is_watched_each_time() {
+    let site = Site::new();
+    let service = site.start();
+    for at in 0..6 {
+        fs::remove_dir_all(site.path().join("exports/belt")).unwrap();
+        fs::create_dir_all(site.path().join("exports/belt")).unwrap();
+        fs::write(site.belt("first.csv"), format!("who,at,pulse\n{}", rows(at * 20, 5))).unwrap();
+        site.until_soon("the first file is filed", || site.readings() == at * 10 + 5);
+        // Long after the change was noticed: only a watch on the new folder tells of this one.
+        std::thread::sleep(Duration::from_millis(1500));
+        fs::write(site.belt("second.csv"), format!("who,at,pulse\n{}", rows(at * 20 + 10, 5))).unwrap();
+        site.until_soon("the second file is filed", || site.readings() == at * 10 + 10);
+    }
+    service.stop();
+    assert_eq!(site.log().matches("unreachable").count(), site.log().matches("there again").count());
+}
+
+#[test]
+fn a_stop_during_the_first_walk_is_quick_too() {
+    // Unoptimised, each row costs thirty times as much.
+    const ROWS: usize = if cfg!(debug_assertions) { 40_000 } else { 300_000 };
+    let site = Site::new();
+    fs::write(site.belt("large.csv"), format!("who,at,pulse\n{}", rows(0, ROWS))).unwrap();
+    let service = site.start();
+    site.until("a part is staged", || site.records().staged().unwrap() > 0 || site.readings() > 0);
+    let took = service.stop();
+    assert!(took < Duration::from_secs(5), "{took:?}");
+    assert_eq!(site.readings(), 0, "it was stopped in the middle");
+    let service = site.start();
+    site.until_readings(ROWS);
+    service.stop();
+    site.sound();
+}
+
+#[test]
+fn a_level_that_does_not_exist_is_refused() {
+    let done =
+        Command::new(env!("CARGO_BIN_EXE_revisantd")).args(["--study", "/nowhere", "--log-level", "inof"]).output();
+    assert_eq!(done.unwrap().status.code(), Some(2));
+}
+
+#[test]
+fn a_study_that_cannot_be_served_ends_the_others_in_order() {
+    let site = Site::new();
+    let done = Command::new(env!("CARGO_BIN_EXE_revisantd"))
+        .arg("--study")
+        .arg(site.path())
+        .args(["--study", "/nowhere"])
+        .output();
+    assert_eq!(done.unwrap().status.code(), Some(1));
+    let records = site.records();
+    let acts = records.view().unwrap();
+    assert_eq!(acts.acts_on(ActKind::Start, "process").unwrap().len(), 1);
+    assert_eq!(acts.acts_on(ActKind::Stop, "process").unwrap().len(), 1);
+}
+
+#[test]
+fn a_file_without_bytes_costs_nothing() {
+    let site = Site::new();
+    fs::write(site.belt("empty.csv"), "").unwrap();
+    let service = site.start();
+    let seen = || site.records().working("service_seen").unwrap();
+    site.until("the first cycle is over", || seen().is_some());
+    std::thread::sleep(Duration::from_millis(1500));
+    let before = seen();
+    std::thread::sleep(Duration::from_millis(4000));
+    assert_eq!(seen(), before, "nothing happened, and it walked");
+    service.stop();
+}
+
+#[test]
+fn a_file_is_read_once_it_has_rested_and_then_without_delay() {
+    let site = Site::new();
+    site.plan(&PLAN.replace("rest = \"0s\"", "rest = \"2s\""));
+    let service = site.start();
+    let mut file = fs::File::create(site.belt("slow.csv")).unwrap();
+    file.write_all(b"who,at,pulse\n").unwrap();
+    for part in 0..8 {
+        file.write_all(rows(part * 4, 4).as_bytes()).unwrap();
+        assert_eq!(site.readings(), 0, "read before it was finished");
+        std::thread::sleep(Duration::from_millis(400));
+    }
+    drop(file);
+    let written = fs::metadata(site.belt("slow.csv")).unwrap().modified().unwrap();
+    site.until_readings(32);
+    service.stop();
+    let view = site.records();
+    let acts = view.view().unwrap().acts_on(ActKind::File, "export").unwrap();
+    assert_eq!(acts.len(), 1, "it was filed in one piece");
+    let filed = chrono::DateTime::parse_from_rfc3339(&acts[0].1).unwrap();
+    let took = (filed.to_utc() - chrono::DateTime::<chrono::Utc>::from(written)).to_std().unwrap();
+    // Its two seconds, one more, and what a busy machine may take.
+    assert!(took >= Duration::from_millis(1990) && took < Duration::from_secs(6), "{took:?}");
+}
+
+#[test]
+fn a_plan_that_is_half_written_is_not_taken_for_a_whole() {
+    let site = Site::new();
+    let service = site.start();
+    // The first half is a sound plan of its own; it is written on before anyone should believe in it.
+    let other = PLAN[PLAN.find("[[instrument]]").unwrap()..].replace("belt", "watch");
+    fs::create_dir_all(site.path().join("exports/watch")).unwrap();
+    let mut file = fs::File::create(site.path().join("study.toml")).unwrap();
+    file.write_all(PLAN.as_bytes()).unwrap();
+    let (mut written, mut longest) = (Instant::now(), Duration::ZERO);
+    for part in other.as_bytes().chunks(other.len() / 15) {
+        std::thread::sleep(Duration::from_millis(120));
+        file.write_all(part).unwrap();
+        longest = longest.max(written.elapsed());
+        written = Instant::now();
+    }
+    drop(file);
+    fs::write(site.path().join("exports/watch/a.csv"), format!("who,at,pulse\n{}", rows(0, 10))).unwrap();
+    site.until_readings(10);
+    service.stop();
+    if longest > Duration::from_millis(450) {
+        // The machine is too busy to write without a rest, and a rest is what the service goes by.
+        return;
+    }
+    assert_eq!(site.records().view().unwrap().plan().unwrap().unwrap().version, 2, "{}", site.log());
+    assert!(!site.log().contains("not in force"), "{}", site.log());
+}
+
+#[test]
+fn a_refused_plan_is_noted_until_a_sound_one_takes_its_place() {
+    let site = Site::new();
+    let note = || site.records().working("plan_refused").unwrap().unwrap_or_default();
+    let service = site.start();
+    site.plan("[study]\n");
+    site.until("the refusal is noted", || !note().is_empty());
+    service.stop();
+    // Mended while nobody looked.
+    site.plan(PLAN);
+    let service = site.start();
+    site.until("the note is cleared", || note().is_empty());
+    service.stop();
+    assert_eq!(site.log().matches("not in force").count(), 1, "{}", site.log());
+}
+
+#[test]
+fn the_service_manager_is_told_and_signals_are_heeded() {
+    let site = Site::new();
+    let socket = site.path().join("manager");
+    let manager = UnixDatagram::bind(&socket).unwrap();
+    manager.set_read_timeout(Some(Duration::from_secs(30))).unwrap();
+    let service = site.start_with(|command| {
+        command.env("NOTIFY_SOCKET", &socket).env("WATCHDOG_USEC", "2000000").args(["--log", "json", "--every", "1h"]);
+    });
+    let told = || {
+        let mut bytes = [0; 256];
+        let count = manager.recv(&mut bytes).unwrap();
+        String::from_utf8_lossy(&bytes[..count]).trim().to_owned()
+    };
+    let mut heard = vec![];
+    while !heard.contains(&"READY=1".to_owned()) || !heard.contains(&"WATCHDOG=1".to_owned()) {
+        heard.push(told());
+    }
+    let seen = || site.records().working("service_seen").unwrap();
+    let before = seen();
+    service.signal("HUP");
+    site.until_soon("it looks when told to", || seen() != before);
+    service.signal("TERM");
+    while told() != "STOPPING=1" {}
+    assert_eq!(service.code(), Some(0));
+    for line in site.log().lines() {
+        assert!(line.starts_with('{') && line.ends_with('}'), "{line}");
+    }
+}
+
+#[test]
+fn a_disturbed_service_says_so_once_and_goes_on() {
+    let site = Site::new();
+    let service = site.start();
+    fs::write(site.belt("a.csv"), format!("who,at,pulse\n{}", rows(0, 10))).unwrap();
+    site.until_readings(10);
+    // A copy of bytes that are too large for the database has to be written where nothing can be.
+    let raw = site.path().join("records/raw");
+    fs::rename(&raw, site.path().join("records/away")).unwrap();
+    fs::write(&raw, "in the way").unwrap();
+    fs::write(site.belt("b.csv"), format!("who,at,pulse\n{}", rows(100, 8000))).unwrap();
+    site.until("the trouble is told", || site.log().contains("filing waits"));
+    std::thread::sleep(Duration::from_millis(4500));
+    assert_eq!(site.log().matches("filing waits").count(), 1, "{}", site.log());
+    fs::remove_file(&raw).unwrap();
+    fs::rename(site.path().join("records/away"), &raw).unwrap();
+    site.until_readings(8010);
+    assert_eq!(site.log().matches("filing goes on").count(), 1, "{}", site.log());
+    service.stop();
+    site.sound();
+}
+
+#[test]
+fn a_collect_is_refused_while_it_runs_and_looking_at_the_lock_disturbs_nobody() {
+    let site = Site::new();
+    let service = site.start();
+    let refused = IntakeLock::take(&site.records(), "revisant test").unwrap_err().to_string();
+    assert!(refused.contains("revisantd"), "{refused}");
+    service.stop();
+    let folder = Records::folder_of(site.path());
+    let looking = Arc::new(std::sync::atomic::AtomicBool::new(true));
+    let on = looking.clone();
+    let looker = std::thread::spawn(move || {
+        while on.load(std::sync::atomic::Ordering::Relaxed) {
+            IntakeLock::holder(&folder);
+        }
+    });
+    let records = site.records();
+    for _ in 0..300 {
+        drop(IntakeLock::take(&records, "revisant test").unwrap());
+    }
+    looking.store(false, std::sync::atomic::Ordering::Relaxed);
+    looker.join().unwrap();
+}
+
+#[test]
+fn a_service_inside_a_program_tells_of_each_cycle_and_stops() {
+    let site = Site::new();
+    fs::write(site.belt("a.csv"), format!("who,at,pulse\n{}", rows(0, 10))).unwrap();
+    let (tell, told) = std::sync::mpsc::channel();
+    let options =
+        || Options { study: site.path().to_path_buf(), every: Duration::from_secs(60), world: Arc::new(RealWorld) };
+    let handle = spawn(options(), Box::new(move |report| tell.send(report.filed).unwrap_or_default())).unwrap();
+    assert_eq!(told.recv_timeout(Duration::from_secs(30)), Ok(10));
+    assert!(spawn(options(), Box::new(|_| {})).is_err(), "one at a time");
+    handle.stop().unwrap();
+    let (tell, told) = std::sync::mpsc::channel();
+    let runtime = tokio::runtime::Builder::new_current_thread().enable_all().build().unwrap();
+    let enough = async move {
+        tokio::task::spawn_blocking(move || told.recv_timeout(Duration::from_secs(30)).unwrap()).await.unwrap();
+    };
+    let observer = Box::new(move |_: &_| tell.send(()).unwrap_or_default());
+    runtime.block_on(run(options(), observer, enough)).unwrap();
+    let records = site.records();
+    assert_eq!(records.view().unwrap().acts_on(ActKind::Stop, "process").unwrap().len(), 2);
+}
+
+#[test]
+fn a_stop_is_quick_while_somebody_else_writes_and_a_second_signal_quicker() {
+    let site = Site::new();
+    let mut other = site.records();
+    let service = site.start();
+    site.until("the first cycle is over", || site.records().working("service_seen").unwrap().is_some());
+    other.begin().unwrap();
+    // The worker waits for its turn to file this.
+    fs::write(site.belt("a.csv"), format!("who,at,pulse\n{}", rows(0, 10))).unwrap();
+    std::thread::sleep(Duration::from_millis(700));
+    let took = service.stop();
+    assert!(took < Duration::from_secs(5), "{took:?}");
+    other.roll_back();
+    let service = site.start();
+    site.until_readings(10);
+    other.begin().unwrap();
+    service.signal("TERM");
+    site.until("it is stopping", || site.log().matches("stopping").count() == 2);
+    service.signal("TERM");
+    let start = Instant::now();
+    assert!(service.code().is_some());
+    assert!(start.elapsed() < Duration::from_secs(2), "{:?}", start.elapsed());
+    other.roll_back();
+    site.start().stop();
+    site.filed_once(10);
     site.sound();
 }

@@ -62,6 +62,14 @@ impl Report {
         self.settled += outcome.settled;
     }
 
+    /// A file that changes at this moment is to be looked at again once it may have rested.
+    fn rests_from(&mut self, now: DateTime<Utc>, rest: Duration) {
+        // Even where a file need not rest: else one that is written to all the time would be tried all the time.
+        let rest = rest.max(Duration::from_millis(250));
+        let until = chrono::TimeDelta::from_std(rest).ok().and_then(|rest| now.checked_add_signed(rest));
+        self.next_rest = self.next_rest.into_iter().chain(until).min();
+    }
+
     /// Whether nothing was filed, held or settled.
     pub fn is_quiet(&self) -> bool {
         self.filed + self.already + self.held + self.settled == 0
@@ -77,6 +85,10 @@ pub struct Progress {
     pub of: u64,
 }
 
+/// How often, and with what pauses, the lock is tried: who only looks whether it is held holds it for a moment.
+const LOCK_TRIES: u32 = 10;
+const LOCK_PAUSE: Duration = Duration::from_millis(20);
+
 /// The lock that only the one program holds that files exports.
 #[derive(Debug)]
 pub struct IntakeLock {
@@ -91,7 +103,7 @@ impl IntakeLock {
         let failed = |error| RecordsError::file(&path, "taking the lock", error);
         let options = File::options().read(true).write(true).create(true).truncate(false).open(&path);
         let mut file = options.map_err(failed)?;
-        match file.try_lock() {
+        match lock_patiently(&file) {
             Ok(()) => {
                 let note = format!("{program}, process {}", std::process::id());
                 file.set_len(0)
@@ -119,6 +131,16 @@ impl IntakeLock {
             Err(_) => Some(std::fs::read_to_string(&path).unwrap_or_default()),
         }
     }
+}
+
+fn lock_patiently(file: &File) -> std::result::Result<(), std::fs::TryLockError> {
+    for _ in 1..LOCK_TRIES {
+        match file.try_lock() {
+            Err(std::fs::TryLockError::WouldBlock) => std::thread::sleep(LOCK_PAUSE),
+            done => return done,
+        }
+    }
+    file.try_lock()
 }
 
 /// Bytes of small exports that are held in memory between the survey of day 0 and the filing; what goes beyond is read
@@ -153,24 +175,32 @@ pub struct How<'h> {
     pub wait: bool,
     /// Told how far it has come.
     pub progress: &'h mut dyn FnMut(Progress),
-    /// Asked between exports, and within large ones, whether to stop: what is finished stays, the rest waits.
+    /// Asked between exports, and again and again within them, whether to stop: what is finished stays, the rest waits.
     pub stop: &'h dyn Fn() -> bool,
 }
 
 /// Files all that waits at this moment.
 pub fn collect(records: &mut Records, study: &Path, doer: &Doer, how: How<'_>) -> Result<Report> {
-    let How { wait, progress, stop } = how;
     let start = Instant::now();
-    records.clear_unpublished()?;
     let mut report = Report::default();
+    match collect_into(&mut report, records, study, doer, how) {
+        Ok(()) | Err(IntakeError::Records(RecordsError::Stopped)) => {
+            report.seconds = start.elapsed().as_secs_f64();
+            Ok(report)
+        }
+        Err(error) => Err(error),
+    }
+}
+
+fn collect_into(report: &mut Report, records: &mut Records, study: &Path, doer: &Doer, how: How<'_>) -> Result<()> {
+    let How { wait, progress, stop } = how;
+    records.clear_unpublished()?;
     let rules = plan::in_force(records)?;
-    replace::after_changes(records, &rules, doer, &mut report)?;
+    replace::after_changes(records, &rules, doer, report, stop)?;
     let walked = walk_until_rested(records, study, &rules.plan, wait)?;
-    note_walk(records, &rules.plan, &walked, &mut report)?;
+    note_walk(records, &rules.plan, &walked, report)?;
     report.next_rest = walked.settling.iter().filter_map(|(_, until)| *until).min();
-    file_all(records, rules, walked.ready, doer, &mut report, progress, stop)?;
-    report.seconds = start.elapsed().as_secs_f64();
-    Ok(report)
+    file_all(records, rules, walked.ready, doer, report, progress, stop)
 }
 
 /// Walks, and with `wait` walks again until everything has rested that will within its time.
@@ -266,7 +296,7 @@ fn file_all(
 ) -> Result<()> {
     let of = found.len() as u64;
     progress(Progress { done: 0, of });
-    let (mut ready, mut gathered) = survey(records, &rules, found, report)?;
+    let (mut ready, mut gathered) = survey(records, &rules, found, report, stop)?;
     let mut tries = 0;
     let mut next = 0;
     while next < ready.len() {
@@ -275,7 +305,6 @@ fn file_all(
         filer.stop = stop;
         let done = file_portion(filer, &mut ready, &mut next, report, &mut tell);
         match done {
-            Err(IntakeError::Records(RecordsError::Stopped)) => return Ok(()),
             Ok(()) => {
                 progress(Progress { done: of, of });
                 return Ok(());
@@ -284,7 +313,7 @@ fn file_all(
                 tries += 1;
                 rules = plan::in_force(records)?;
                 let left = ready.split_off(next).into_iter().map(|one| one.found).collect();
-                (ready, gathered) = survey(records, &rules, left, report)?;
+                (ready, gathered) = survey(records, &rules, left, report, stop)?;
                 next = 0;
             }
             Err(error) => return Err(error),
@@ -294,12 +323,21 @@ fn file_all(
 }
 
 /// Looks through all exports in hand: their hashes, and what they say about day 0.
-fn survey(records: &Records, rules: &Rules, found: Vec<Found>, report: &mut Report) -> Result<(Vec<Ready>, Gathered)> {
+fn survey(
+    records: &Records,
+    rules: &Rules,
+    found: Vec<Found>,
+    report: &mut Report,
+    stop: &dyn Fn() -> bool,
+) -> Result<(Vec<Ready>, Gathered)> {
     let mut gathered = Gathered::default();
     let mut ready = Vec::with_capacity(found.len());
     let mut in_hand = 0;
     let needed = day0_is_to_be_found(&rules.plan);
     for found in found {
+        if stop() {
+            return Err(RecordsError::Stopped.into());
+        }
         let Some(hand) = take(records, &rules.plan, &found, report)? else { continue };
         if needed {
             // A file that cannot be read adds no session; it is held when its turn comes.
@@ -321,6 +359,7 @@ fn take(records: &Records, plan: &Plan, found: &Found, report: &mut Report) -> R
         Keeping::Kept(kept) => Ok(Some(Hand::of(records, kept))),
         Keeping::Changed => {
             report.count(ExportState::Settling);
+            report.rests_from(records.now(), plan.instruments[found.instrument].rest);
             Ok(None)
         }
         Keeping::Unreachable(why) => {
@@ -430,6 +469,7 @@ fn file_one(
             // Other bytes than those surveyed: the next collect sees to them.
             Some(hand) if hand.kept.sha256 != ready.sha256 => {
                 report.count(ExportState::Settling);
+                report.rests_from(filer.records.now(), filer.rules.plan.instruments[ready.found.instrument].rest);
                 return Ok(None);
             }
             Some(hand) => hand,

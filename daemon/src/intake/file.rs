@@ -26,6 +26,8 @@ use super::rules::{CourseBook, Gathered, Rules};
 
 /// Rows after which an unpublished part is committed, so that others may write in between.
 const STAGE: i64 = 10_000;
+/// Rows after which it is asked whether to stop.
+const ASK: u64 = 1_000;
 /// Exports, and time, after which finished exports are committed together.
 const GROUP: u32 = 256;
 const GROUP_TIME: Duration = Duration::from_millis(250);
@@ -381,7 +383,10 @@ impl<'a> Filer<'a> {
         let mut run = Run::new(export, instrument, scope, &self.held);
         let mut row = Row::default();
         let mut first = true;
-        loop {
+        for at in 0_u64.. {
+            if at % ASK == 0 && (self.stop)() {
+                return Err(RecordsError::Stopped);
+            }
             match rows.next_row(&mut row) {
                 Ok(true) => {}
                 Ok(false) => break,
@@ -412,9 +417,6 @@ impl<'a> Filer<'a> {
         if !self.in_one && filing.readings() / STAGE > run.staged {
             run.staged = filing.readings() / STAGE;
             self.records.stage(filing)?;
-            if (self.stop)() {
-                return Err(RecordsError::Stopped);
-            }
             self.check_rules()?;
         }
         Ok(())

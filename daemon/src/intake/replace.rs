@@ -30,8 +30,15 @@ type Done<T> = revisant_schema::records::Result<T>;
 /// The note of how far changes of plan and roster have been followed up.
 const FOLLOWED: &str = "placed_again_after";
 
-/// Tries held rows again if the plan or the roster has changed since that was last done.
-pub fn after_changes(records: &mut Records, rules: &Rules, doer: &Doer, report: &mut Report) -> Result<()> {
+/// Tries held rows again if the plan or the roster has changed since that was last done. When it is stopped, the next
+/// collect begins anew.
+pub fn after_changes(
+    records: &mut Records,
+    rules: &Rules,
+    doer: &Doer,
+    report: &mut Report,
+    stop: &dyn Fn() -> bool,
+) -> Result<()> {
     let head = records.rules_head()?;
     let followed: i64 = records.working(FOLLOWED)?.and_then(|text| text.parse().ok()).unwrap_or(0);
     if head <= followed {
@@ -42,7 +49,11 @@ pub fn after_changes(records: &mut Records, rules: &Rules, doer: &Doer, report: 
         records.view()?.captures()?.into_iter().map(|capture| (capture.capture, capture)).collect();
     for (capture, holds) in by_capture(open) {
         let Some(capture) = captures.get(&capture) else { continue };
+        if stop() {
+            return Err(RecordsError::Stopped.into());
+        }
         let mut filer = Filer::new(records, rules, Gathered::default(), doer)?;
+        filer.stop = stop;
         let done = try_again(&mut filer, capture, &holds);
         match done {
             Ok(outcome) => {

@@ -9,11 +9,18 @@ use clap::Parser;
 use revisant_schema::world::RealWorld;
 use sd_notify::NotifyState;
 use tokio::signal::unix::{Signal, SignalKind, signal};
+use tokio::task::JoinHandle;
 use tokio_util::sync::CancellationToken;
+use tracing::level_filters::LevelFilter;
 use tracing::{info, warn};
 
 use super::logs::{self, Format};
-use super::{Handle, Options, ServiceError, spawn};
+use super::{Handle, Options, Ready, ServiceError, start as start_one};
+
+/// How long the workers may take to stop. One that hangs in a file system or waits for another writer is left where it
+/// is: every instant is one at which the process may end.
+const STOP_WITHIN: Duration = Duration::from_millis(4500);
+const DAY: u64 = 86_400;
 
 /// Watches the export folders of studies and files what arrives.
 ///
@@ -31,17 +38,41 @@ struct Args {
     #[arg(long, value_enum, default_value = "lines")]
     log: Format,
     /// The least serious events that are logged: error, warn, info or debug
-    #[arg(long, value_name = "LEVEL", default_value = "info")]
-    log_level: String,
-    /// Walk through all folders at least so often, in seconds; shorter where a share tells nothing of its files
-    #[arg(long, value_name = "SECONDS", default_value_t = 60, value_parser = clap::value_parser!(u64).range(1..=86_400))]
-    every: u64,
+    #[arg(long, value_name = "LEVEL", default_value = "info", value_parser = level)]
+    log_level: LevelFilter,
+    /// Walk through all folders at least so often, such as 10s or 5m; shorter where a share tells nothing of its files
+    #[arg(long, value_name = "TIME", default_value = "60s", value_parser = time)]
+    every: Duration,
+}
+
+fn level(text: &str) -> Result<LevelFilter, String> {
+    match text {
+        "error" => Ok(LevelFilter::ERROR),
+        "warn" => Ok(LevelFilter::WARN),
+        "info" => Ok(LevelFilter::INFO),
+        "debug" => Ok(LevelFilter::DEBUG),
+        _ => Err("it is one of error, warn, info and debug".to_owned()),
+    }
+}
+
+fn time(text: &str) -> Result<Duration, String> {
+    let end = text.find(|c: char| !c.is_ascii_digit()).unwrap_or(text.len());
+    let (number, unit) = text.split_at(end);
+    let unit = match unit {
+        "" | "s" => Some(1),
+        "m" => Some(60),
+        "h" => Some(3600),
+        _ => None,
+    };
+    let seconds = number.parse::<u64>().ok().zip(unit).and_then(|(number, unit)| number.checked_mul(unit));
+    let fits = seconds.filter(|seconds| (1..=DAY).contains(seconds));
+    fits.map(Duration::from_secs).ok_or_else(|| "it is a time from 1s to 24h, such as 10s or 5m".to_owned())
 }
 
 /// Runs the program.
 pub fn main() -> ExitCode {
     let args = Args::parse();
-    logs::set_up(args.log, &args.log_level);
+    logs::set_up(args.log, args.log_level);
     // Records hold personal data: nobody but their owner may read what this process makes.
     rustix::process::umask(rustix::fs::Mode::RWXG | rustix::fs::Mode::RWXO);
     let runtime = tokio::runtime::Builder::new_multi_thread().worker_threads(1).enable_all().build();
@@ -62,26 +93,13 @@ async fn serve(args: &Args) -> Result<(), String> {
     // Before the first filing, so that a signal that comes early is not lost.
     let failed = |error| format!("signals cannot be taken: {error}");
     let mut ending = Ending::new().map_err(failed)?;
-    let mut hang_up = signal(SignalKind::hangup()).map_err(failed)?;
-    let services = start(args).await.map_err(|error| error.to_string())?;
-    tell(&[NotifyState::Ready]);
-    let quiet = CancellationToken::new();
-    let dog = sd_notify::watchdog_enabled();
-    let mut beat = tokio::time::interval(dog.map_or(Duration::from_secs(5), |period| period / 2));
-    let broken = loop {
-        tokio::select! {
-            () = ending.wanted() => break false,
-            _ = hang_up.recv() => services.iter().for_each(Handle::reload),
-            _ = beat.tick() => {
-                if !services.iter().all(Handle::is_alive) {
-                    break true;
-                }
-                tell(&[NotifyState::Watchdog]);
-            }
-        }
-    };
+    let hang_up = signal(SignalKind::hangup()).map_err(failed)?;
+    let mut services = start(args).await.map_err(|error| error.to_string())?;
+    let ready = services.iter_mut().map(Handle::take_ready).collect();
+    let broken = attend(&services, ready, &mut ending, hang_up).await;
     tell(&[NotifyState::Stopping]);
     info!("stopping");
+    let quiet = CancellationToken::new();
     leave_at_second_signal(ending, quiet.clone());
     let ended = stop(services).await;
     quiet.cancel();
@@ -93,19 +111,62 @@ async fn serve(args: &Args) -> Result<(), String> {
 }
 
 async fn start(args: &Args) -> Result<Vec<Handle>, ServiceError> {
-    let every = Duration::from_secs(args.every);
+    let every = args.every;
     let studies = args.study.clone();
     let started = tokio::task::spawn_blocking(move || {
-        let one = |study: PathBuf| spawn(Options { study, every, world: Arc::new(RealWorld) }, Box::new(|_| {}));
+        let one = |study: PathBuf| start_one(Options { study, every, world: Arc::new(RealWorld) }, Box::new(|_| {}));
+        // Should one fail, those before it are stopped as they go out of sight.
         studies.into_iter().map(one).collect()
     });
-    started.await.unwrap_or_else(|_| Err(ServiceError::Broken(PathBuf::from("the first walk"))))
+    started.await.unwrap_or_else(|_| Err(ServiceError::Broken(PathBuf::from("a study"))))
+}
+
+/// Keeps the service manager informed until a signal comes; gives whether a worker broke down instead.
+async fn attend(services: &[Handle], ready: Vec<Ready>, ending: &mut Ending, mut hang_up: Signal) -> bool {
+    let mut all_ready = AllReady(Some(tokio::task::spawn_blocking(|| ready.into_iter().for_each(Ready::wait))));
+    let dog = sd_notify::watchdog_enabled();
+    let mut beat = tokio::time::interval(dog.map_or(Duration::from_secs(5), |period| period / 2));
+    loop {
+        tokio::select! {
+            () = ending.wanted() => return false,
+            _ = hang_up.recv() => services.iter().for_each(Handle::reload),
+            () = all_ready.wait() => tell(&[NotifyState::Ready]),
+            _ = beat.tick() => {
+                if !services.iter().all(Handle::is_alive) {
+                    return true;
+                }
+                tell(&[NotifyState::Watchdog]);
+            }
+        }
+    }
+}
+
+/// Comes about once all services are ready, and never again.
+struct AllReady(Option<JoinHandle<()>>);
+
+impl AllReady {
+    async fn wait(&mut self) {
+        match &mut self.0 {
+            Some(waiting) => {
+                // Only a process that is coming to its end gives up waiting.
+                let _ = waiting.await;
+                self.0 = None;
+            }
+            None => std::future::pending().await,
+        }
+    }
 }
 
 async fn stop(services: Vec<Handle>) -> Result<(), ServiceError> {
     services.iter().for_each(Handle::ask_to_stop);
     let stopped = tokio::task::spawn_blocking(move || services.into_iter().try_for_each(Handle::stop));
-    stopped.await.unwrap_or_else(|_| Err(ServiceError::Broken(PathBuf::from("the stop"))))
+    match tokio::time::timeout(STOP_WITHIN, stopped).await {
+        Ok(ended) => ended.unwrap_or_else(|_| Err(ServiceError::Broken(PathBuf::from("a study")))),
+        Err(_) => {
+            warn!("stopped in the midst of work; what was not finished is cleared at the next start");
+            std::process::exit(0);
+        }
+    }
 }
 
 fn tell(states: &[NotifyState<'_>]) {
@@ -143,4 +204,22 @@ fn leave_at_second_signal(mut ending: Ending, quiet: CancellationToken) {
             () = quiet.cancelled() => {}
         }
     });
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn times_and_levels_are_read_or_refused() {
+        assert_eq!(time("60s"), Ok(Duration::from_secs(60)));
+        assert_eq!(time("5"), Ok(Duration::from_secs(5)));
+        assert_eq!(time("2m"), Ok(Duration::from_secs(120)));
+        assert_eq!(time("24h"), Ok(Duration::from_secs(DAY)));
+        for wrong in ["", "s", "0s", "25h", "1d", "-1s", "1.5s", "99999999999999999999s", "5 m"] {
+            assert!(time(wrong).is_err(), "{wrong}");
+        }
+        assert_eq!(level("warn"), Ok(LevelFilter::WARN));
+        assert!(level("inof").is_err());
+    }
 }

@@ -1,6 +1,6 @@
 //! Logs: lines for people, or JSON for machines, to standard error.
 
-use tracing_subscriber::EnvFilter;
+use tracing::level_filters::LevelFilter;
 
 /// How logs are written.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, clap::ValueEnum)]
@@ -12,9 +12,8 @@ pub enum Format {
 }
 
 /// Sets the logs up, once for the process.
-pub fn set_up(format: Format, level: &str) {
-    let filter = EnvFilter::try_new(level).unwrap_or_else(|_| EnvFilter::new("info"));
-    let builder = tracing_subscriber::fmt().with_env_filter(filter).with_writer(std::io::stderr).with_target(false);
+pub fn set_up(format: Format, level: LevelFilter) {
+    let builder = tracing_subscriber::fmt().with_max_level(level).with_writer(std::io::stderr).with_target(false);
     // A second set-up in one process (a test) changes nothing.
     let _ = match format {
         Format::Lines => builder.with_ansi(false).try_init(),

@@ -2,17 +2,19 @@
 //!
 //! Invariants: one worker a study owns its records and does all the filing, one cycle at a time; a cycle that fails is
 //! told once in plain words and tried again, it never ends the service; events only cause a cycle, what a cycle does
-//! depends on the folders alone.
+//! depends on the folders alone; whoever lets go of a [`Handle`] has stopped its service.
 
+mod agenda;
 pub mod command;
+mod glance;
 mod logs;
 mod watch;
 mod worker;
 
-use std::path::PathBuf;
+use std::path::{Path, PathBuf};
 use std::sync::Arc;
 use std::sync::atomic::{AtomicBool, Ordering};
-use std::sync::mpsc::{Sender, channel};
+use std::sync::mpsc::{Receiver, Sender, channel};
 use std::thread::JoinHandle;
 use std::time::Duration;
 
@@ -68,10 +70,14 @@ pub enum ServiceError {
 }
 
 /// What makes a worker look.
-#[derive(Debug, Clone, Copy, PartialEq, Eq)]
-pub enum Wake {
+#[derive(Debug, Clone, PartialEq, Eq)]
+enum Wake {
     /// Something happened in the folders.
     Files,
+    /// This folder is gone from its place.
+    Gone(PathBuf),
+    /// Events were lost.
+    Lost,
     /// Look at everything now.
     Reload,
     /// Stop.
@@ -83,34 +89,79 @@ pub struct Handle {
     study: PathBuf,
     wake: Sender<Wake>,
     stop: Arc<AtomicBool>,
+    ready: Option<Receiver<()>>,
     thread: Option<JoinHandle<()>>,
 }
 
 /// What is told after each cycle.
 pub type Observer = Box<dyn FnMut(&Report) + Send>;
 
-/// Starts a service for one study. It is ready when this returns: the first walk through all folders is done.
+/// Starts a service for one study and waits until it is ready: the first walk through all folders is done, and what it
+/// found is being filed.
 pub fn spawn(options: Options, observer: Observer) -> Result<Handle, ServiceError> {
+    let mut handle = start(options, observer)?;
+    handle.take_ready().wait();
+    Ok(handle)
+}
+
+/// Starts a service for one study. When this returns, the study is locked and the start is on the trail.
+pub fn start(options: Options, observer: Observer) -> Result<Handle, ServiceError> {
     if !options.study.join(revisant_schema::plan::MAIN).exists() {
         return Err(ServiceError::NoStudy(options.study));
     }
-    let start = |source: IntakeError| ServiceError::Start { study: options.study.clone(), source: source.into() };
-    let records =
-        Records::open_or_create(&options.study, options.world.clone()).map_err(|error| start(error.into()))?;
-    let lock = IntakeLock::take(&records, PROGRAM).map_err(start)?;
-    let (wake, woken) = channel();
-    let stop = Arc::new(AtomicBool::new(false));
     let study = options.study.clone();
+    let failed = |source: IntakeError| ServiceError::Start { study: study.clone(), source: source.into() };
+    let records = Records::open_or_create(&study, options.world.clone()).map_err(|error| failed(error.into()))?;
+    let lock = IntakeLock::take(&records, PROGRAM).map_err(failed)?;
+    let (wake, woken) = channel();
+    let (tell_ready, ready) = channel();
+    let stop = Arc::new(AtomicBool::new(false));
     let mut worker = Worker::new(options, records, lock, wake.clone(), stop.clone(), observer);
-    worker.begin().map_err(|source| ServiceError::Start { study: study.clone(), source: source.into() })?;
+    worker.begin().map_err(failed)?;
     let thread = std::thread::Builder::new()
         .name("intake".to_owned())
-        .spawn(move || worker.run(&woken))
+        .spawn(move || worker.run(&woken, &tell_ready))
         .map_err(|_| ServiceError::Broken(study.clone()))?;
-    Ok(Handle { study, wake, stop, thread: Some(thread) })
+    Ok(Handle { study, wake, stop, ready: Some(ready), thread: Some(thread) })
+}
+
+/// Serves one study until `shutdown` comes about, and then stops in order.
+pub async fn run(options: Options, observer: Observer, shutdown: impl Future<Output = ()>) -> Result<(), ServiceError> {
+    let study = options.study.clone();
+    let broken = || ServiceError::Broken(study.clone());
+    let handle = tokio::task::spawn_blocking(move || start(options, observer)).await.map_err(|_| broken())??;
+    let mut look = tokio::time::interval(Duration::from_secs(1));
+    tokio::pin!(shutdown);
+    loop {
+        tokio::select! {
+            () = &mut shutdown => break,
+            _ = look.tick() => if !handle.is_alive() { break },
+        }
+    }
+    let alive = handle.is_alive();
+    tokio::task::spawn_blocking(move || handle.stop()).await.map_err(|_| broken())??;
+    if alive { Ok(()) } else { Err(broken()) }
+}
+
+/// That a service is ready will be heard of here.
+pub struct Ready(Option<Receiver<()>>);
+
+impl Ready {
+    /// Waits until it is, or has ended.
+    pub fn wait(self) {
+        if let Some(ready) = self.0 {
+            // A worker that ended before it was ready is noticed by `is_alive`.
+            let _ = ready.recv();
+        }
+    }
 }
 
 impl Handle {
+    /// To be waited for where that does no harm; once.
+    pub fn take_ready(&mut self) -> Ready {
+        Ready(self.ready.take())
+    }
+
     /// Looks at everything now.
     pub fn reload(&self) {
         // A worker that is gone is noticed by `is_alive`.
@@ -123,7 +174,7 @@ impl Handle {
     }
 
     /// The study it serves.
-    pub fn study(&self) -> &PathBuf {
+    pub fn study(&self) -> &Path {
         &self.study
     }
 
@@ -135,10 +186,21 @@ impl Handle {
 
     /// Stops it and waits until it has.
     pub fn stop(mut self) -> Result<(), ServiceError> {
+        self.end()
+    }
+
+    fn end(&mut self) -> Result<(), ServiceError> {
         self.ask_to_stop();
         match self.thread.take().map(JoinHandle::join) {
             Some(Err(_)) => Err(ServiceError::Broken(self.study.clone())),
             _ => Ok(()),
         }
+    }
+}
+
+impl Drop for Handle {
+    fn drop(&mut self) {
+        // Nobody is left who could be told that the worker broke down.
+        let _ = self.end();
     }
 }

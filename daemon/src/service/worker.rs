@@ -1,7 +1,7 @@
 //! A study's worker: cycles, one at a time, and what causes them.
 //!
 //! Invariants: a trouble is told when it begins and when it ends, not while it lasts; the worker stops between exports,
-//! or between the parts of a large one, which then stays unpublished.
+//! or between rows of a large one, which then stays unpublished.
 
 use std::collections::BTreeMap;
 use std::path::PathBuf;
@@ -11,11 +11,13 @@ use std::sync::mpsc::{Receiver, RecvTimeoutError, Sender};
 use std::time::{Duration, Instant};
 
 use chrono::{DateTime, SecondsFormat, Utc};
-use revisant_schema::plan::{MAIN, reader_files};
+use revisant_schema::plan::Plan;
 use revisant_schema::records::{ActKind, Doer, Records};
 use serde_json::json;
-use tracing::{error, info, warn};
+use tracing::{Span, error, info, info_span, warn};
 
+use super::agenda::Agenda;
+use super::glance::PlanOnDisk;
 use super::watch::Watches;
 use super::{Observer, Options, PROGRAM, Wake, notes};
 use crate::intake::collect::{How, IntakeLock, Report, collect};
@@ -24,13 +26,10 @@ use crate::intake::plan::{bring_into_force, in_force};
 
 /// Events that come close together cause one cycle.
 const GATHER: Duration = Duration::from_millis(80);
-/// After events the folders are walked again: events of files in folders that were just made get lost.
-const AFTERWARDS: Duration = Duration::from_secs(1);
-/// How often it is looked whether plan or roster have changed.
+/// How often it is looked whether plan, roster or folders have changed.
 const GLANCE: Duration = Duration::from_secs(1);
-/// Waiting time after a failure, doubled up to a minute.
-const FIRST_PAUSE: Duration = Duration::from_secs(1);
-const LONGEST_PAUSE: Duration = Duration::from_secs(60);
+/// How long to wait for another writer when stopping, which has to be done within seconds.
+const LAST_PATIENCE: Duration = Duration::from_secs(2);
 
 /// A study's worker.
 pub struct Worker {
@@ -38,19 +37,18 @@ pub struct Worker {
     records: Records,
     doer: Doer,
     stop: Arc<AtomicBool>,
+    span: Span,
     watches: Watches,
     observer: Observer,
-    /// The next walk by the clock, and one wanted sooner.
-    next_walk: Instant,
-    sooner: Option<Instant>,
-    pause: Duration,
-    trouble: Option<String>,
-    plan_trouble: Option<String>,
+    agenda: Agenda,
+    plan: PlanOnDisk,
+    /// The kind of failure that lasts: texts may name another temporary file each time.
+    trouble: Option<&'static str>,
+    /// Why the plan on disk is not in force; the outer `None`: not looked yet.
+    plan_trouble: Option<Option<String>>,
+    /// Instruments whose folder is lost, and why.
     lost: BTreeMap<String, String>,
-    seen_rules: i64,
-    /// The plan's files, and what the file system said of each.
-    plan_files: Vec<PathBuf>,
-    plan_stamp: Vec<Option<(u64, i64)>>,
+    lost_folders: Vec<PathBuf>,
     // Last, so that nobody else starts to file before all of the above is done with.
     _lock: IntakeLock,
 }
@@ -65,53 +63,48 @@ impl Worker {
         stop: Arc<AtomicBool>,
         observer: Observer,
     ) -> Self {
-        let now = Instant::now();
         Self {
-            watches: Watches::new(options.study.clone(), wake),
+            doer: Doer::this_account(PROGRAM),
+            span: info_span!("study", folder = %options.study.display()),
+            watches: Watches::new(records.folder().to_path_buf(), wake),
+            agenda: Agenda::new(options.every, Instant::now()),
+            plan: PlanOnDisk::new(options.study.clone(), options.world.clone()),
             options,
             records,
-            doer: Doer::this_account(PROGRAM),
             stop,
             observer,
-            next_walk: now,
-            sooner: None,
-            pause: FIRST_PAUSE,
             trouble: None,
             plan_trouble: None,
             lost: BTreeMap::new(),
-            seen_rules: -1,
-            plan_files: vec![],
-            plan_stamp: vec![],
+            lost_folders: vec![],
             _lock: lock,
         }
     }
 
-    /// Registers the watches, writes down the start, and walks through everything once.
+    /// Writes down the start.
     pub fn begin(&mut self) -> Result<()> {
-        let study = self.options.study.display().to_string();
         self.records.act(ActKind::Start, &self.doer, |act| {
             act.objects.insert("process".into(), json!(std::process::id()));
             Ok(())
         })?;
         self.records.set_working(notes::SINCE, &moment(self.records.now()))?;
-        info!(study, "started");
-        self.cycle();
+        self.span.in_scope(|| info!("started"));
         Ok(())
     }
 
-    /// Works until it is stopped.
-    pub fn run(&mut self, woken: &Receiver<Wake>) {
+    /// Works until it is stopped; `ready` hears when the first walk is done.
+    pub fn run(mut self, woken: &Receiver<Wake>, ready: &Sender<()>) {
+        let span = self.span.clone();
+        let _entered = span.enter();
+        self.cycle(ready);
         while !self.stopped() {
             match woken.recv_timeout(self.patience()) {
-                Ok(Wake::Stop) | Err(RecvTimeoutError::Disconnected) => break,
-                Ok(Wake::Reload) => self.sooner = Some(Instant::now()),
-                Ok(Wake::Files) => self.gather(woken),
+                Ok(wake) => self.gather(wake, woken),
                 Err(RecvTimeoutError::Timeout) => {}
+                Err(RecvTimeoutError::Disconnected) => break,
             }
-            let now = Instant::now();
-            let wanted = self.sooner.is_some_and(|at| at <= now) || self.next_walk <= now;
-            if !self.stopped() && (wanted || self.rules_changed()) {
-                self.cycle();
+            if !self.stopped() && (self.agenda.next() <= Instant::now() || self.glance()) {
+                self.cycle(ready);
             }
         }
         self.end();
@@ -122,75 +115,93 @@ impl Worker {
     }
 
     fn patience(&self) -> Duration {
-        let now = Instant::now();
-        let next = self.sooner.map_or(self.next_walk, |at| at.min(self.next_walk));
-        next.saturating_duration_since(now).min(GLANCE)
+        let glance = if self.plan.is_steady() { GLANCE } else { GLANCE / 4 };
+        self.agenda.next().saturating_duration_since(Instant::now()).min(glance)
     }
 
-    /// Takes in the events that come with one, and wants a cycle then.
-    fn gather(&mut self, woken: &Receiver<Wake>) {
+    /// Takes in a message and those that come with it.
+    fn gather(&mut self, first: Wake, woken: &Receiver<Wake>) {
         let until = Instant::now() + GATHER;
-        while let Some(left) = until.checked_duration_since(Instant::now()).filter(|left| !left.is_zero()) {
+        self.take(first);
+        while !self.stopped() {
+            let left = until.saturating_duration_since(Instant::now());
             match woken.recv_timeout(left) {
-                Ok(Wake::Files | Wake::Reload) => {}
-                Ok(Wake::Stop) => {
-                    self.stop.store(true, Ordering::SeqCst);
-                    return;
-                }
-                Err(_) => break,
+                Ok(wake) => self.take(wake),
+                Err(_) => return,
             }
         }
-        let now = Instant::now();
-        if self.trouble.is_none() {
-            self.sooner = Some(now);
+    }
+
+    fn take(&mut self, wake: Wake) {
+        match wake {
+            Wake::Files => {}
+            Wake::Gone(folder) => self.watches.forget(&folder),
+            Wake::Lost => self.watches.forget_all(),
+            Wake::Reload => {
+                self.plan.read_anew();
+                return self.agenda.want(Instant::now());
+            }
+            Wake::Stop => return self.stop.store(true, Ordering::SeqCst),
         }
-        self.next_walk = self.next_walk.min(now + AFTERWARDS);
+        self.agenda.events(Instant::now());
     }
 
-    /// Whether the plan's files or the roster changed since the last cycle: a glance that costs nothing.
-    fn rules_changed(&self) -> bool {
-        self.records.rules_head().is_ok_and(|head| head != self.seen_rules) || self.stamp() != self.plan_stamp
+    /// Whether the plan's files, the roster or the folders themselves have changed: a look that costs next to nothing.
+    fn glance(&mut self) -> bool {
+        if self.agenda.is_failing() {
+            return false;
+        }
+        let world = &self.options.world;
+        self.records.rules_head().is_ok_and(|head| self.plan.is_to_be_read(head))
+            || self.watches.is_out_of_date()
+            || self.lost_folders.iter().any(|folder| world.list(folder).is_ok())
     }
 
-    fn stamp(&self) -> Vec<Option<(u64, i64)>> {
-        let stat = |path: &PathBuf| self.options.world.stat(path).ok().map(|stat| (stat.size, stat.modified));
-        self.plan_files.iter().map(stat).collect()
-    }
-
-    /// The files that the plan on disk is made of.
-    fn find_plan_files(&self) -> Vec<PathBuf> {
-        let main = self.options.study.join(MAIN);
-        let named = std::fs::read_to_string(&main).map(|text| reader_files(&text)).unwrap_or_default();
-        let readers = named.into_iter().map(|name| self.options.study.join(name));
-        std::iter::once(main.clone()).chain(readers).collect()
-    }
-
-    fn cycle(&mut self) {
-        self.sooner = None;
-        self.next_walk = Instant::now() + self.options.every;
-        self.plan_files = self.find_plan_files();
-        self.plan_stamp = self.stamp();
-        match self.work() {
+    fn cycle(&mut self, ready: &Sender<()>) {
+        let began = Instant::now();
+        self.agenda.begin(began);
+        match self.work(ready) {
             Ok(report) => {
-                self.over();
+                self.agenda.ended(began, Instant::now(), report.is_quiet());
+                if self.trouble.take().is_some() {
+                    info!("filing goes on");
+                }
                 self.tell(&report);
                 self.want_rest(&report);
                 (self.observer)(&report);
             }
             Err(error) => self.fail(&error),
         }
-        self.seen_rules = self.records.rules_head().unwrap_or(-1);
+        // Also when the first cycle fails: there is nothing more to wait for.
+        let _ = ready.send(());
     }
 
-    fn work(&mut self) -> Result<Report> {
-        self.take_plan()?;
-        let rules = in_force(&self.records)?;
-        self.watches.refresh(&rules.plan);
+    fn work(&mut self, ready: &Sender<()>) -> Result<Report> {
+        self.see_to_plan()?;
+        let plan = in_force(&self.records)?.plan;
+        // Watches before the walk: what happens in between is then in one or the other.
+        self.watches.refresh(&self.options.study, &plan);
         let stop = self.stop.clone();
-        let how = How { wait: false, progress: &mut |_| {}, stop: &|| stop.load(Ordering::SeqCst) };
+        let how = How {
+            wait: false,
+            progress: &mut |_| {
+                let _ = ready.send(());
+            },
+            stop: &|| stop.load(Ordering::SeqCst),
+        };
         let report = collect(&mut self.records, &self.options.study, &self.doer, how)?;
+        self.lost_folders = folders(&self.options, &plan, &report);
         self.records.set_working(notes::SEEN, &moment(self.records.now()))?;
         Ok(report)
+    }
+
+    fn see_to_plan(&mut self) -> Result<()> {
+        let head = self.records.rules_head()?;
+        if self.plan.is_to_be_read(head) {
+            self.take_plan()?;
+            self.plan.was_read(self.records.rules_head()?);
+        }
+        Ok(())
     }
 
     /// Brings a changed plan into force; one that may not be leaves the last sound one in force.
@@ -200,45 +211,30 @@ impl Worker {
             Err(error @ (IntakeError::Records(_) | IntakeError::Locked(_))) => return Err(error),
             Err(error) => Some(error.to_string()),
         };
-        if trouble != self.plan_trouble {
-            match &trouble {
-                Some(text) => warn!("the plan on disk is not in force: {text}"),
-                None => info!("the plan on disk is in force"),
-            }
-            self.records.set_working(notes::PLAN_REFUSED, trouble.as_deref().unwrap_or_default())?;
-            self.plan_trouble = trouble;
+        if self.plan_trouble.as_ref() == Some(&trouble) {
+            return Ok(());
         }
+        match (&trouble, &self.plan_trouble) {
+            (Some(text), _) => warn!("the plan on disk is not in force: {text}"),
+            (None, Some(_)) => info!("the plan on disk is in force"),
+            (None, None) => {}
+        }
+        self.records.set_working(notes::PLAN_REFUSED, trouble.as_deref().unwrap_or_default())?;
+        self.plan_trouble = Some(trouble);
         Ok(())
     }
 
-    fn over(&mut self) {
-        self.pause = FIRST_PAUSE;
-        if self.trouble.take().is_some() {
-            info!("filing goes on");
-        }
-    }
-
     fn fail(&mut self, error: &IntakeError) {
-        let text = error.to_string();
-        if self.trouble.as_ref() != Some(&text) {
-            error!(kind = error.kind(), "filing waits: {text}");
-            self.trouble = Some(text);
+        self.agenda.failed(Instant::now());
+        if self.trouble.replace(error.kind()) != Some(error.kind()) {
+            error!(kind = error.kind(), "filing waits: {error}");
         }
-        self.next_walk = Instant::now() + self.pause;
-        self.pause = (self.pause * 2).min(LONGEST_PAUSE);
     }
 
     fn tell(&mut self, report: &Report) {
         if !report.is_quiet() || report.exports.contains_key("repeat") {
-            let exports = report
-                .exports
-                .iter()
-                .filter(|(state, _)| **state != "ignored" && **state != "settling")
-                .map(|(state, count)| format!("{count} {state}"))
-                .collect::<Vec<_>>()
-                .join(", ");
             info!(
-                exports,
+                exports = states(report),
                 readings = report.filed,
                 already = report.already,
                 held = report.held,
@@ -255,33 +251,40 @@ impl Worker {
         for instrument in self.lost.keys().filter(|code| !report.lost_folders.contains_key(*code)) {
             info!(instrument, "its export folder is there again");
         }
-        self.lost = report.lost_folders.clone();
+        self.lost.clone_from(&report.lost_folders);
     }
 
-    /// Wants a cycle when the first of the files that are settling will have rested, and looks sooner for folders that
-    /// are lost.
+    /// Wants a cycle when the first of the files that are settling will have rested.
     fn want_rest(&mut self, report: &Report) {
         if let Some(until) = report.next_rest {
             let left = (until - self.records.now()).to_std().unwrap_or_default() + Duration::from_millis(2);
-            self.sooner = Some(Instant::now() + left);
-        } else if report.exports.contains_key("settling") {
-            self.next_walk = self.next_walk.min(Instant::now() + AFTERWARDS);
-        }
-        if !report.lost_folders.is_empty() {
-            self.next_walk = self.next_walk.min(Instant::now() + Duration::from_secs(2));
+            self.agenda.want(Instant::now() + left);
         }
     }
 
     fn end(&mut self) {
-        let done = self.records.act(ActKind::Stop, &self.doer, |act| {
-            act.objects.insert("process".into(), json!(std::process::id()));
-            Ok(())
+        let done = self.records.set_patience(LAST_PATIENCE).and_then(|()| {
+            self.records.act(ActKind::Stop, &self.doer, |act| {
+                act.objects.insert("process".into(), json!(std::process::id()));
+                Ok(())
+            })
         });
         match done {
             Ok(()) => info!("stopped"),
             Err(error) => error!("stopped, which could not be written to the trail: {error}"),
         }
     }
+}
+
+/// How many exports came to which state, those left out that say nothing new.
+fn states(report: &Report) -> String {
+    let telling = report.exports.iter().filter(|(state, _)| !matches!(**state, "ignored" | "settling"));
+    telling.map(|(state, count)| format!("{count} {state}")).collect::<Vec<_>>().join(", ")
+}
+
+fn folders(options: &Options, plan: &Plan, report: &Report) -> Vec<PathBuf> {
+    let lost = plan.instruments.iter().filter(|instrument| report.lost_folders.contains_key(&instrument.code));
+    lost.map(|instrument| options.study.join(&instrument.folder)).collect()
 }
 
 fn moment(at: DateTime<Utc>) -> String {
