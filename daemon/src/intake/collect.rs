@@ -197,34 +197,45 @@ fn collect_into(report: &mut Report, records: &mut Records, study: &Path, doer: 
     records.clear_unpublished()?;
     let rules = plan::in_force(records)?;
     replace::after_changes(records, &rules, doer, report, stop)?;
-    let walked = walk_until_rested(records, study, &rules.plan, wait)?;
-    note_walk(records, &rules.plan, &walked, report)?;
+    let known = records.noticed()?;
+    let walked = walk_until_rested(records, study, &rules.plan, &known, wait);
+    note_walk(records, &rules.plan, &known, &walked, report)?;
     report.next_rest = walked.settling.iter().filter_map(|(_, until)| *until).min();
     file_all(records, rules, walked.ready, doer, report, progress, stop)
 }
 
 /// Walks, and with `wait` walks again until everything has rested that will within its time.
-fn walk_until_rested(records: &Records, study: &Path, plan: &Plan, wait: bool) -> Result<Walk> {
+fn walk_until_rested(
+    records: &Records,
+    study: &Path,
+    plan: &Plan,
+    known: &HashMap<String, Noticed>,
+    wait: bool,
+) -> Walk {
     let world = records.world().clone();
-    let known = records.noticed()?;
     let longest = plan.instruments.iter().map(|instrument| instrument.rest).max().unwrap_or_default();
     let deadline = Instant::now() + longest * 2 + Duration::from_secs(10);
     loop {
-        let walked = walk(world.as_ref(), study, plan, &known);
+        let walked = walk(world.as_ref(), study, plan, known);
         let next = walked.settling.iter().filter_map(|(_, until)| *until).min();
         match next {
             Some(until) if wait && Instant::now() < deadline => {
                 let left = (until - world.now()).to_std().unwrap_or_default();
                 std::thread::sleep(left.min(Duration::from_secs(5)) + Duration::from_millis(5));
             }
-            _ => return Ok(walked),
+            _ => return walked,
         }
     }
 }
 
 /// Writes down what was seen of files that are not to be read now.
-fn note_walk(records: &mut Records, plan: &Plan, walked: &Walk, report: &mut Report) -> Result<()> {
-    let known = records.noticed()?;
+fn note_walk(
+    records: &mut Records,
+    plan: &Plan,
+    known: &HashMap<String, Noticed>,
+    walked: &Walk,
+    report: &mut Report,
+) -> Result<()> {
     let mut changes: Vec<(String, Option<Noticed>)> = Vec::new();
     let mut note = |found: &Found, state: &str, detail: Option<String>| {
         let instrument = plan.instruments[found.instrument].code.clone();

@@ -11,9 +11,10 @@ const AFTERWARDS: Duration = Duration::from_secs(1);
 const FIRST_PAUSE: Duration = Duration::from_secs(1);
 const LONGEST_PAUSE: Duration = Duration::from_secs(60);
 /// A cycle that events caused for nothing is followed by this many times its length without another such, so that a
-/// file that is written to all day does not keep the walk going all day.
+/// file that is written to all day does not keep the walk going all day; never so long that an export that comes
+/// meanwhile would be filed late.
 const BREATHS: u32 = 4;
-const LONGEST_BREATH: Duration = Duration::from_secs(2);
+const LONGEST_BREATH: Duration = Duration::from_millis(500);
 
 /// What is to be done when.
 #[derive(Debug, Clone)]
