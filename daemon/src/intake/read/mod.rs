@@ -5,8 +5,14 @@
 
 pub mod cells;
 pub mod delimited;
+pub mod fixed_width;
 pub mod heading;
+pub mod json;
+pub mod json_lines;
+pub mod paths;
 pub mod text;
+pub mod workbook;
+pub mod xml;
 
 use std::io::Read;
 
@@ -86,9 +92,10 @@ pub enum RowFault {
 pub struct Row {
     /// The physical line on which it begins, from 1 (text formats); the sheet's row (workbooks).
     pub line: u64,
-    /// How many physical lines it takes.
+    /// How many it counts in the account: the physical lines it takes (delimited, fixed-width), else one.
     pub lines: u64,
-    /// Its first byte and the one after its last, line end excluded; `None` where bytes say nothing (workbooks).
+    /// Its first byte and the one after its last, line end excluded; `None` where bytes say nothing (workbooks). Rows
+    /// that share a line have different first bytes.
     pub bytes: Option<(u64, u64)>,
     /// The row as exported, decoded, without its line end.
     pub raw: String,
@@ -130,10 +137,16 @@ pub trait Rows {
     fn unit(&self, slot: usize) -> Option<&str>;
     /// Fills `row` with the next one; `false` at the end.
     fn next_row(&mut self, row: &mut Row) -> Result<bool, FileFault>;
+    /// The cell of a workbook (`C7`) in which the wanted column `slot` of the sheet's row `line` stands; `None` for
+    /// every other format.
+    fn cell_name(&self, _line: u64, _slot: usize) -> Option<String> {
+        None
+    }
     /// The lines counted so far that were no rows.
     fn counts(&self) -> LineCounts;
-    /// The physical lines read so far; after the end, all that the export has. At any time it is the sum of
-    /// [`Self::counts`] and of the [`Row::lines`] handed out.
+    /// What the account counts, so far; after the end, all that the export has. At any time it is the sum of
+    /// [`Self::counts`] and of the [`Row::lines`] handed out. Physical lines in delimited and fixed-width text, rows of
+    /// the sheet in workbooks, rows in JSON and XML (and in JSON lines the lines that hold none).
     fn lines(&self) -> u64;
 }
 
