@@ -21,7 +21,7 @@ use super::account::{Account, Class};
 use super::place::clock::{Folds, Local};
 use super::place::identity::{Case, Judge, Slotted, Verdict};
 use super::place::resolve::{Decided, Held, Resolved, Resolver, RowOutcome, ValueOutcome, Whereabouts};
-use super::read::{self, Bytes, FileFault, Row, Rows};
+use super::read::{self, At, Bytes, FileFault, Row, Rows};
 use super::rules::{CourseBook, Gathered, Rules};
 
 /// Rows after which an unpublished part is committed, so that others may write in between.
@@ -856,14 +856,14 @@ pub fn settle_folds(
     resolver: &Resolver<'_>,
     instrument: &Instrument,
     source: &dyn Bytes,
-) -> std::result::Result<HashMap<u64, DateTime<Utc>>, FileFault> {
+) -> std::result::Result<HashMap<At, DateTime<Utc>>, FileFault> {
     let mut folds = Folds::default();
     let mut rows = read::open(&instrument.reader, source)?;
     let mut row = Row::default();
     while rows.next_row(&mut row)? {
         match resolver.local(&row, rows.as_ref()) {
             Some(Local::Once(moment)) => folds.once(moment),
-            Some(Local::Twice(early, late)) => folds.twice(row.line, early, late),
+            Some(Local::Twice(early, late)) => folds.twice(row.at(), early, late),
             Some(Local::Never) | None => {}
         }
     }

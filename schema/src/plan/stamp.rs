@@ -92,10 +92,15 @@ impl CompiledStamp {
 
     /// Reads one text.
     pub fn read(&self, text: &str) -> Option<Read> {
+        self.read_in(text, false)
+    }
+
+    /// Reads one text of a workbook whose day numbers may count from 1904.
+    pub fn read_in(&self, text: &str, since_1904: bool) -> Option<Read> {
         let text = text.trim();
         match &self.0 {
             Kind::Iso => iso(text),
-            Kind::Serial => serial(text.parse().ok()?, false),
+            Kind::Serial => serial(day_number(text)?, since_1904),
             Kind::Pattern(steps) => {
                 let mut scan = Scan(text.as_bytes());
                 let mut parts = Parts::default();
@@ -436,6 +441,13 @@ fn iso(text: &str) -> Option<Read> {
 
 // ---- day numbers of workbooks ----
 
+/// The number of a text: one, or a whole day and, after a blank, the part of a day that stood in a cell of its own.
+fn day_number(text: &str) -> Option<f64> {
+    let Some((day, part)) = text.split_once(char::is_whitespace) else { return text.parse().ok() };
+    let (day, part): (f64, f64) = (day.parse().ok()?, part.trim_start().parse().ok()?);
+    (day.fract() == 0.0 && (0.0..1.0).contains(&part)).then_some(day + part)
+}
+
 /// A workbook's day number: days since the end of 1899, with the 29 February 1900 that never was, or since 1904.
 ///
 /// A whole number is a date; a fraction is rounded to the nearest millisecond. Numbers below 1 (a time alone), 60 of
@@ -611,6 +623,9 @@ mod tests {
             ("45740.3125", "2025-03-24T07:30:00"),
             ("45740.31255787037", "2025-03-24T07:30:05 finer"),
             ("45740.312557870", "2025-03-24T07:30:05 finer"),
+            ("45740 0.3125", "2025-03-24T07:30:00"),
+            ("45740.5 0.3125", "none"),
+            ("45740 1.3125", "none"),
             ("45740.999999999", "2025-03-25T00:00:00"),
             ("1", "1900-01-01"),
             ("59", "1900-02-28"),

@@ -10,6 +10,8 @@ use chrono::{MappedLocalTime, TimeZone};
 use chrono_tz::Tz;
 use revisant_schema::plan::{ClockError, Instrument};
 
+use crate::intake::read::At;
+
 /// What a local time is in a zone.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub enum Local {
@@ -56,7 +58,7 @@ pub struct Folds {
 
 #[derive(Debug, Clone, Copy)]
 struct Doubled {
-    line: u64,
+    at: At,
     early: DateTime<Utc>,
     late: DateTime<Utc>,
     /// The least moment on which the rows before it can end.
@@ -74,12 +76,12 @@ impl Folds {
     }
 
     /// A row with two.
-    pub fn twice(&mut self, line: u64, early: DateTime<Utc>, late: DateTime<Utc>) {
+    pub fn twice(&mut self, at: At, early: DateTime<Utc>, late: DateTime<Utc>) {
         if let Some(last) = self.doubled.last_mut() {
             last.ceiling = self.ceiling.take();
         }
         self.ceiling = None;
-        self.doubled.push(Doubled { line, early, late, floor: self.floor, ceiling: None });
+        self.doubled.push(Doubled { at, early, late, floor: self.floor, ceiling: None });
         let fits = |moment: DateTime<Utc>| self.floor.is_none_or(|floor| moment >= floor);
         match (fits(early), fits(late)) {
             (true, _) => self.floor = Some(early),
@@ -88,8 +90,8 @@ impl Folds {
         }
     }
 
-    /// The settled moments, by line.
-    pub fn settle(mut self) -> HashMap<u64, DateTime<Utc>> {
+    /// The settled moments, by row.
+    pub fn settle(mut self) -> HashMap<At, DateTime<Utc>> {
         if let Some(last) = self.doubled.last_mut() {
             last.ceiling = self.ceiling;
         }
@@ -106,7 +108,7 @@ impl Folds {
             };
             let good: Vec<DateTime<Utc>> = [row.early, row.late].into_iter().filter(fits).collect();
             if let [only] = good.as_slice() {
-                settled.insert(row.line, *only);
+                settled.insert(row.at, *only);
             }
             let below_roof = |moment: &DateTime<Utc>| roof.is_none_or(|roof| *moment <= roof);
             match [row.late, row.early].into_iter().find(below_roof) {
@@ -171,13 +173,13 @@ mod tests {
                 if early == late {
                     folds.once(at(*early));
                 } else {
-                    folds.twice(line as u64, at(*early), at(*late));
+                    folds.twice(At { line: line as u64, from: 0 }, at(*early), at(*late));
                 }
             }
             let settled = folds.settle();
             for (line, (row, expected)) in rows.iter().zip(by_trying(&rows)).enumerate() {
                 if row.0 != row.1 {
-                    let found = settled.get(&(line as u64)).map(|moment| moment.timestamp() / 60);
+                    let found = settled.get(&At { line: line as u64, from: 0 }).map(|moment| moment.timestamp() / 60);
                     assert_eq!(found, expected, "row {line} of {rows:?}");
                 }
             }

@@ -22,7 +22,7 @@ use sha2::{Digest, Sha256};
 
 use super::clock::{self, Local};
 use super::number;
-use crate::intake::read::{Row, RowFault, Rows};
+use crate::intake::read::{At, Row, RowFault, Rows};
 
 /// Something that a person must look at.
 #[derive(Debug, Clone, PartialEq)]
@@ -281,8 +281,8 @@ pub struct Resolver<'p> {
     replicate: Option<Finder<'p>>,
     operator: Option<Finder<'p>>,
     values: Vec<ValueFinder<'p>>,
-    /// Settled moments of doubled local times, by line.
-    pub settled: HashMap<u64, DateTime<Utc>>,
+    /// Settled moments of doubled local times, by row.
+    pub settled: HashMap<At, DateTime<Utc>>,
 }
 
 struct ValueFinder<'p> {
@@ -349,7 +349,7 @@ impl<'p> Resolver<'p> {
         if row.fault.is_some() || self.nothing_there(row, rows) {
             return None;
         }
-        match self.stamp.read(&self.taken_at.find(row, rows))?.written {
+        match self.stamp.read_in(&self.taken_at.find(row, rows), rows.since_1904())?.written {
             Written::Local(local) => Some(clock::in_zone(self.instrument.time_zone, local)),
             Written::Moment(moment) => Some(Local::Once(moment.to_utc())),
             Written::Date(_) => None,
@@ -445,7 +445,7 @@ impl<'p> Resolver<'p> {
         let taken = match said {
             Some(Err(day)) => Taken::Day(day),
             Some(Ok(text)) => self.decided_moment(&text)?,
-            None => self.stamped(row, &written)?,
+            None => self.stamped(row, rows, &written)?,
         };
         let (future, what) = match taken {
             Taken::Moment(moment, ..) => (moment > self.now, written.clone()),
@@ -461,11 +461,11 @@ impl<'p> Resolver<'p> {
         self.now.with_timezone(&self.plan.study.time_zone).date_naive()
     }
 
-    fn stamped(&self, row: &Row, written: &str) -> Result<Taken, Box<Held>> {
+    fn stamped(&self, row: &Row, rows: &dyn Rows, written: &str) -> Result<Taken, Box<Held>> {
         if written.is_empty() {
             return Err(Box::new(Held::row(Reason::NoStamp, "the row says no time")));
         }
-        let Some(read) = self.stamp.read(written) else {
+        let Some(read) = self.stamp.read_in(written, rows.since_1904()) else {
             let wrong = format!("\"{written}\" cannot be read as the plan says a time is written");
             return Err(Box::new(Held::row(Reason::UnreadableStamp, wrong)));
         };
@@ -475,7 +475,7 @@ impl<'p> Resolver<'p> {
             Written::Local(local) => {
                 let moment = match clock::in_zone(self.instrument.time_zone, local) {
                     Local::Once(moment) => moment,
-                    Local::Twice(early, late) => match self.settled.get(&row.line) {
+                    Local::Twice(early, late) => match self.settled.get(&row.at()) {
                         Some(moment) => *moment,
                         None => return Err(Box::new(doubled(written, early, late))),
                     },
@@ -781,7 +781,8 @@ impl<'p> Resolver<'p> {
             }
         }
         let text = row.cell(value.slot).trim();
-        if let Some(number) = parse(text) {
+        let as_it_stands = if row.is_number(value.slot) { number::parse(text, '.', None) } else { parse(text) };
+        if let Some(number) = as_it_stands {
             return Ok(Some(Number { exported: number, used: number, mark: None }));
         }
         let unreadable = || Held::row(Reason::UnreadableValue, format!("\"{text}\" is no number"));

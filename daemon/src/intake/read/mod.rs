@@ -103,9 +103,32 @@ pub struct Row {
     pub fault: Option<RowFault>,
     text: String,
     ends: Vec<usize>,
+    /// The slots of cells that are numbers in the export itself.
+    numbers: Vec<usize>,
+}
+
+/// Where a row stands in its export; no two rows of one export stand at the same place.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, PartialOrd, Ord)]
+pub struct At {
+    /// [`Row::line`].
+    pub line: u64,
+    /// Its first byte, since rows of a nested document may share a line; 0 where bytes say nothing.
+    pub from: u64,
+}
+
+impl At {
+    /// As the records keep it.
+    pub fn of(line: i64, bytes: Option<(i64, i64)>) -> Self {
+        Self { line: line.unsigned_abs(), from: bytes.map_or(0, |(from, _)| from.unsigned_abs()) }
+    }
 }
 
 impl Row {
+    /// Where it stands.
+    pub fn at(&self) -> At {
+        At { line: self.line, from: self.bytes.map_or(0, |(from, _)| from) }
+    }
+
     /// The text of the wanted column `slot` as exported, without surrounding quotes and blanks; empty when absent.
     pub fn cell(&self, slot: usize) -> &str {
         let Some(&end) = self.ends.get(slot) else { return "" };
@@ -118,6 +141,7 @@ impl Row {
         self.raw.clear();
         self.text.clear();
         self.ends.clear();
+        self.numbers.clear();
         self.fault = None;
         self.bytes = None;
     }
@@ -126,6 +150,18 @@ impl Row {
     pub fn push(&mut self, cell: &str) {
         self.text.push_str(cell);
         self.ends.push(self.text.len());
+    }
+
+    /// Adds the next wanted column's number, for formats whose numbers are no texts: whatever marks the plan states for
+    /// texts, its decimal mark is a point and it has no thousands mark.
+    pub fn push_number(&mut self, cell: &str) {
+        self.numbers.push(self.ends.len());
+        self.push(cell);
+    }
+
+    /// Whether the wanted column `slot` is a number in the export itself, and no text.
+    pub fn is_number(&self, slot: usize) -> bool {
+        self.numbers.contains(&slot)
     }
 }
 
@@ -141,6 +177,10 @@ pub trait Rows {
     /// every other format.
     fn cell_name(&self, _line: u64, _slot: usize) -> Option<String> {
         None
+    }
+    /// Whether day numbers count from 1904 (a setting of some workbooks).
+    fn since_1904(&self) -> bool {
+        false
     }
     /// The lines counted so far that were no rows.
     fn counts(&self) -> LineCounts;
