@@ -232,6 +232,8 @@ pub fn open<'a>(reader: &'a Reader, bytes: &'a dyn Bytes) -> Result<Box<dyn Rows
     match &reader.format {
         Format::Delimited { delimiter } => Ok(Box::new(delimited::Delimited::open(reader, *delimiter, bytes)?)),
         Format::FixedWidth { columns } => Ok(Box::new(fixed_width::FixedWidth::open(reader, columns, bytes)?)),
+        Format::Json { rows } => Ok(Box::new(json::Json::open(reader, rows, bytes)?)),
+        Format::JsonLines { rows } => Ok(Box::new(json_lines::JsonLines::open(reader, rows, bytes)?)),
         other => Err(FileFault::Layout(format!(
             "exports of the format \"{}\" cannot be read by this version; \"delimited\" can",
             other.name()
