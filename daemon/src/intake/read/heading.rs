@@ -35,7 +35,8 @@ pub struct Above {
 }
 
 impl Above {
-    fn add(&mut self, line: &str) {
+    /// Adds a line, as long as there is room.
+    pub fn add(&mut self, line: &str) {
         self.count += 1;
         if self.size + line.len() <= LONGEST_PREAMBLE {
             self.size += line.len() + 1;
