@@ -230,6 +230,7 @@ pub fn wanted(reader: &Reader) -> Vec<String> {
 pub fn open<'a>(reader: &'a Reader, bytes: &'a dyn Bytes) -> Result<Box<dyn Rows + 'a>, FileFault> {
     match &reader.format {
         Format::Delimited { delimiter } => Ok(Box::new(delimited::Delimited::open(reader, *delimiter, bytes)?)),
+        Format::Xml { rows } => Ok(Box::new(xml::Xml::open(reader, rows, bytes)?)),
         other => Err(FileFault::Layout(format!(
             "exports of the format \"{}\" cannot be read by this version; \"delimited\" can",
             other.name()
