@@ -13,6 +13,7 @@ mod kills;
 mod properties;
 mod readings;
 mod reference;
+mod sample;
 
 use revisant_tests::site::{Programs, Site};
 

@@ -502,12 +502,13 @@ impl<'r> View<'r> {
         let terms = self.terms()?;
         let paths = self.paths()?;
         let (condition, values) = filter.sql();
+        let most = filter.most.and_then(|most| i64::try_from(most).ok()).unwrap_or(i64::MAX);
         let sql = format!(
             "SELECT r.id, f.act, r.capture, r.line, r.byte_from, r.byte_to, r.cell, r.instrument, r.measure, r.condition,
              r.replicate, r.labelled, r.session, s.day, s.label, u.code, r.text, r.exported, r.unit, r.number, r.mark,
              r.written, r.moment, r.operator, r.plan, r.supersedes, r.source
              FROM reading r JOIN filing f ON f.id = r.filing AND f.act <= ?1
-             JOIN session s ON s.id = r.session JOIN subject u ON u.id = s.subject {condition} ORDER BY r.id"
+             JOIN session s ON s.id = r.session JOIN subject u ON u.id = s.subject {condition} ORDER BY r.id LIMIT {most}"
         );
         let mut values = values;
         values.insert(0, rusqlite::types::Value::Integer(self.upto));
@@ -683,6 +684,8 @@ pub struct ReadingFilter {
     pub capture: Option<i64>,
     /// This one.
     pub reading: Option<i64>,
+    /// No more than so many, the first.
+    pub most: Option<u64>,
 }
 
 impl ReadingFilter {

@@ -374,6 +374,11 @@ impl<'p> Resolver<'p> {
         digest.first_chunk().copied().unwrap_or_default()
     }
 
+    /// The subject's code that a row names, tidied as the plan says; empty where it names none.
+    pub fn subject_code(&self, row: &Row, rows: &dyn Rows) -> String {
+        tidy(&self.subject.find(row, rows), &self.plan.subject.normalise)
+    }
+
     /// Resolves one row, with what people have decided about it.
     pub fn resolve(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> RowOutcome {
         if self.nothing_there(row, rows) {
