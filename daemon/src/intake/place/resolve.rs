@@ -757,9 +757,9 @@ impl<'p> Resolver<'p> {
         match known {
             Some(conversion) => Ok((code, *conversion)),
             None => {
-                let meant = units::meant(&code).map(str::to_owned).into_iter().collect();
-                let wrong = format!("\"{code}\" does not convert to {target}");
-                Err(Held::row(Reason::UnknownUnit, wrong).likely(meant))
+                let converts = |meant: &String| units::convert(meant, target).is_some();
+                let meant = units::meant(&code).filter(converts).into_iter().collect();
+                Err(Held::row(Reason::UnknownUnit, unit_fault(&code, target)).likely(meant))
             }
         }
     }
@@ -872,6 +872,15 @@ impl<'p> ValueFinder<'p> {
             Some((_, Err(finder))) => finder.find(row, rows),
             None => Cow::Borrowed(""),
         }
+    }
+}
+
+fn unit_fault(code: &str, target: &str) -> String {
+    match units::apart(code, target) {
+        Some(why) => format!(
+            "the unit \"{code}\" does not convert to {target}: {why}. If it is right, the plan needs `times` for it"
+        ),
+        None => format!("the unit \"{code}\" is no UCUM code, and the plan's unit is {target}"),
     }
 }
 
