@@ -26,7 +26,7 @@ impl Scratch {
     /// Empty ones.
     pub fn empty(world: Arc<dyn World>) -> Result<Self> {
         let folder = temporary()?;
-        Ok(Self { records: Records::open_or_create(folder.path(), world)?, folder })
+        Self::open(folder, world)
     }
 
     /// A copy of these, as they are at this moment. Raw copies that lie in files of their own are not copied.
@@ -41,7 +41,14 @@ impl Scratch {
         backup.run_to_completion(i32::MAX, Duration::from_millis(20), None).map_err(&failed)?;
         drop(backup);
         drop(target);
-        Ok(Self { records: Records::open_or_create(folder.path(), records.world.clone())?, folder })
+        Self::open(folder, records.world.clone())
+    }
+
+    fn open(folder: TempDir, world: Arc<dyn World>) -> Result<Self> {
+        let records = Records::open_or_create(folder.path(), world)?;
+        // Nothing of it has to outlive a loss of power.
+        records.conn.execute_batch("PRAGMA synchronous = OFF").map_err(records.failed("opening the copy"))?;
+        Ok(Self { records, folder })
     }
 
     /// The folder, as a study's.
