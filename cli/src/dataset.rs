@@ -18,6 +18,7 @@ use serde::Serialize;
 use crate::error::Failure;
 use crate::report::text::list;
 use crate::study::Basis;
+use crate::took_part::{Corrections, TookPart, outside_use};
 
 /// The within factor that an analysis has.
 #[derive(Debug, Clone, PartialEq, Eq)]
@@ -164,8 +165,10 @@ pub struct Care {
     pub accounted: Vec<AccountedCell>,
     /// Readings at a limit of detection.
     pub at_limit: usize,
-    /// Cells with readings of several instruments.
+    /// Cells with readings of several instruments, all of which make up the cell's number.
     pub several_instruments: usize,
+    /// Which instruments gave the readings.
+    pub took_part: TookPart,
 }
 
 /// The data of one analysis.
@@ -187,7 +190,7 @@ impl Dataset {
     pub fn build(view: &View<'_>, basis: &Basis, analysis: &Analysis, today: NaiveDate) -> Result<Self, Failure> {
         let measure = &basis.plan.measures[analysis.measure];
         let filter = ReadingFilter { measure: Some(measure.code.clone()), ..ReadingFilter::default() };
-        let readings = by_session(basis, view.readings(&filter)?);
+        let readings = by_session(view, basis, view.readings(&filter)?)?;
         let accounted = view.accounted()?;
         let mut builder = Builder {
             basis,
@@ -264,13 +267,16 @@ struct Value {
     replicate: u32,
     instrument: String,
     limit: bool,
+    corrected: bool,
+    outside_use: bool,
 }
 
 /// Current readings by session (the number that a visit's sessions of one day share), then by condition.
 type Readings = HashMap<i64, BTreeMap<Condition, Vec<Value>>>;
 
-fn by_session(basis: &Basis, rows: Vec<ReadingRow>) -> Readings {
+fn by_session(view: &View<'_>, basis: &Basis, rows: Vec<ReadingRow>) -> Result<Readings, Failure> {
     let mut readings = Readings::new();
+    let mut corrections = Corrections::new(*view);
     for row in rows {
         let (Some(number), ReadingState::Current) = (row.number, row.state) else { continue };
         let session = basis.place(&row.session).session;
@@ -278,12 +284,14 @@ fn by_session(basis: &Basis, rows: Vec<ReadingRow>) -> Readings {
             number,
             moment: row.moment,
             replicate: row.replicate,
-            instrument: row.instrument,
             limit: row.mark.is_some(),
+            corrected: corrections.of(&row)?.is_some(),
+            outside_use: outside_use(&basis.plan, &row.instrument, row.session.day),
+            instrument: row.instrument,
         };
         readings.entry(session).or_default().entry(row.condition).or_default().push(value);
     }
-    readings
+    Ok(readings)
 }
 
 struct Builder<'b> {
@@ -395,14 +403,19 @@ impl Builder<'_> {
         let (current, limits) = (values.len(), values.iter().filter(|value| value.limit).count());
         let several = values.iter().any(|value| value.instrument != values[0].instrument);
         let number = if enough { Ok(summarise(self.measure.summary, values)) } else { Err(()) };
-        if current < planned as usize && current > 0 {
+        // Replicates are planned for each instrument; those entered by hand stand in for one that could not export.
+        let current_of_one = most_of_one(values);
+        if current_of_one < planned as usize && current > 0 {
             let (subject, visit) = (subject.to_owned(), self.basis.plan.visits[visit].code.clone());
-            let few = FewReplicates { subject, visit, condition: condition.clone(), current, planned };
+            let few = FewReplicates { subject, visit, condition: condition.clone(), current: current_of_one, planned };
             self.care.fewer_replicates.push(few);
         }
         if number.is_ok() {
             self.care.at_limit += limits;
             self.care.several_instruments += usize::from(several);
+            for value in values {
+                self.care.took_part.see(&value.instrument, visit, value.corrected, value.outside_use);
+            }
         }
         number.map_err(|()| match current {
             0 if condition.0.is_empty() => Empty::NoReading,
@@ -438,7 +451,14 @@ impl Builder<'_> {
     }
 }
 
-/// The one number of a cell's replicates; there is at least one.
+/// How many the instrument gave that gave most, with those by hand.
+fn most_of_one(values: &[Value]) -> usize {
+    let by = |code: &str| values.iter().filter(|value| value.instrument == code).count();
+    let most = values.iter().filter(|value| !value.instrument.is_empty()).map(|value| by(&value.instrument)).max();
+    most.unwrap_or(0) + by("")
+}
+
+/// The one number of a cell's replicates, of all instruments that gave some; there is at least one.
 fn summarise(summary: Summary, values: &[Value]) -> f64 {
     let numbers: Vec<f64> = values.iter().map(|value| value.number).collect();
     let in_order = |value: &&Value| (value.moment, value.replicate);
@@ -473,7 +493,15 @@ mod tests {
 
     fn value(number: f64, minute: Option<i64>, replicate: u32) -> Value {
         let moment = minute.and_then(|minute| DateTime::from_timestamp(minute * 60, 0));
-        Value { number, moment, replicate, instrument: "dyn".to_owned(), limit: false }
+        Value {
+            number,
+            moment,
+            replicate,
+            instrument: "dyn".to_owned(),
+            limit: false,
+            corrected: false,
+            outside_use: false,
+        }
     }
 
     #[test]

@@ -10,6 +10,7 @@ mod corpus;
 mod cuts;
 mod errors;
 mod house;
+mod instruments;
 mod kills;
 mod properties;
 mod readings;

@@ -656,13 +656,7 @@ impl<'p> Resolver<'p> {
     }
 
     fn corrected(&self, measure: MeasureIx, number: f64, day: NaiveDate) -> f64 {
-        let entry = self
-            .instrument
-            .correct
-            .iter()
-            .filter(|entry| entry.from <= day && entry.measure.is_none_or(|only| only == measure))
-            .max_by_key(|entry| entry.from);
-        entry.map_or(number, |entry| number * entry.times + entry.plus)
+        self.instrument.correction(measure, day).map_or(number, |entry| number * entry.times + entry.plus)
     }
 
     fn measure_of(
