@@ -6,12 +6,12 @@
 
 use std::collections::{BTreeMap, HashMap};
 
-use chrono::{DateTime, NaiveDate, Utc};
+use chrono::NaiveDate;
 use revisant_schema::completeness::chosen_session;
-use revisant_schema::plan::{Analysis, Measure, OffWindow, Summary, VisitIx};
-use revisant_schema::reading::{Condition, ReadingState};
+use revisant_schema::plan::{Analysis, Measure, OffWindow, Plan, Summary, VisitIx};
+use revisant_schema::reading::Condition;
 use revisant_schema::records::View;
-use revisant_schema::records::view::{AccountedRow, ReadingFilter, ReadingRow};
+use revisant_schema::records::view::{AccountedRow, ValueRow};
 use revisant_schema::session::Course;
 use serde::Serialize;
 
@@ -189,9 +189,11 @@ impl Dataset {
     /// that standing.
     pub fn build(view: &View<'_>, basis: &Basis, analysis: &Analysis, today: NaiveDate) -> Result<Self, Failure> {
         let measure = &basis.plan.measures[analysis.measure];
-        let filter = ReadingFilter { measure: Some(measure.code.clone()), ..ReadingFilter::default() };
-        let readings = by_session(view, basis, view.readings(&filter)?)?;
+        let readings = Readings::of(view.values(&measure.code)?);
         let accounted = view.accounted()?;
+        let factor = factor(basis, analysis);
+        let conditions = conditions(view, measure, &factor)?;
+        let corrections = Corrections::of(view, readings.values.iter().filter_map(|value| value.placed_by))?;
         let mut builder = Builder {
             basis,
             analysis,
@@ -199,7 +201,9 @@ impl Dataset {
             readings,
             accounted,
             today,
-            factor: factor(basis, analysis),
+            factor,
+            conditions,
+            instruments: Instruments { codes: view.terms()?, corrections },
             care: Care::default(),
         };
         let subjects: Vec<&String> = basis.roster.subjects.keys().collect();
@@ -259,39 +263,83 @@ fn positions(basis: &Basis, visits: &[VisitIx]) -> Vec<f64> {
     visits.iter().filter_map(|visit| days.get(*visit)).map(|day| *day as f64).collect()
 }
 
-/// A reading as far as a cell needs it.
-#[derive(Debug, Clone)]
-struct Value {
-    number: f64,
-    moment: Option<DateTime<Utc>>,
-    replicate: u32,
-    instrument: String,
-    limit: bool,
-    corrected: bool,
-    outside_use: bool,
+/// Current readings, those of one session and condition side by side.
+struct Readings {
+    values: Vec<ValueRow>,
+    /// Where each session's begin and end.
+    sessions: HashMap<i64, (usize, usize)>,
 }
 
-/// Current readings by session (the number that a visit's sessions of one day share), then by condition.
-type Readings = HashMap<i64, BTreeMap<Condition, Vec<Value>>>;
-
-fn by_session(view: &View<'_>, basis: &Basis, rows: Vec<ReadingRow>) -> Result<Readings, Failure> {
-    let mut readings = Readings::new();
-    let mut corrections = Corrections::new(*view);
-    for row in rows {
-        let (Some(number), ReadingState::Current) = (row.number, row.state) else { continue };
-        let session = basis.place(&row.session).session;
-        let value = Value {
-            number,
-            moment: row.moment,
-            replicate: row.replicate,
-            limit: row.mark.is_some(),
-            corrected: corrections.of(&row)?.is_some(),
-            outside_use: outside_use(&basis.plan, &row.instrument, row.session.day),
-            instrument: row.instrument,
-        };
-        readings.entry(session).or_default().entry(row.condition).or_default().push(value);
+impl Readings {
+    /// From values ordered by session and condition.
+    fn of(values: Vec<ValueRow>) -> Self {
+        let mut sessions = HashMap::new();
+        let mut from = 0;
+        for same in values.chunk_by(|one, other| one.session == other.session) {
+            sessions.extend(same.first().map(|value| (value.session, (from, from + same.len()))));
+            from += same.len();
+        }
+        Self { values, sessions }
     }
-    Ok(readings)
+
+    /// Those of one session of the records and one condition.
+    fn of_cell(&self, session: i64, condition: i64) -> impl Iterator<Item = ValueRow> {
+        let (from, to) = self.sessions.get(&session).copied().unwrap_or_default();
+        let held = self.values.get(from..to).unwrap_or_default();
+        held.iter().filter(move |value| value.condition == condition).copied()
+    }
+}
+
+/// One condition that takes part in a level: itself, and the term that it is in the records (`None`: it has never been
+/// filed).
+struct Part {
+    condition: Condition,
+    term: Option<i64>,
+}
+
+/// By level of the factor: the conditions that make it up. For visits there is one entry for all.
+fn conditions(view: &View<'_>, measure: &Measure, factor: &Factor) -> Result<Vec<Vec<Part>>, Failure> {
+    let terms: HashMap<String, i64> = view.terms()?.into_iter().map(|(term, text)| (text, term)).collect();
+    let all: Vec<Condition> = measure.cells().into_iter().map(|cell| Condition::of_cell(measure, &cell)).collect();
+    let of_level = |level: Option<&String>| {
+        let holds = |condition: &&Condition| level.is_none_or(|level| condition.0.get(&factor.code) == Some(level));
+        // The empty text has no row of its own.
+        let term = |text: String| if text.is_empty() { Some(0) } else { terms.get(&text).copied() };
+        let part = |condition: &Condition| Part { condition: condition.clone(), term: term(condition.to_string()) };
+        all.iter().filter(holds).map(part).collect()
+    };
+    Ok(match factor.code.as_str() {
+        VISIT => vec![of_level(None)],
+        _ => factor.levels.iter().map(|level| of_level(Some(level))).collect(),
+    })
+}
+
+/// What is known of the instruments that gave values.
+struct Instruments {
+    /// Every term; that of an instrument is its code, empty for readings by hand.
+    codes: HashMap<i64, String>,
+    corrections: Corrections,
+}
+
+impl Instruments {
+    fn code(&self, value: &ValueRow) -> &str {
+        self.codes.get(&value.instrument).map_or("", String::as_str)
+    }
+
+    /// How many the instrument gave that gave most, with those by hand.
+    fn most_of_one(&self, values: &[ValueRow]) -> usize {
+        let (by_hand, exported): (Vec<&ValueRow>, Vec<&ValueRow>) =
+            values.iter().partition(|value| self.code(value).is_empty());
+        let of = |instrument: i64| exported.iter().filter(|value| value.instrument == instrument).count();
+        exported.iter().map(|value| of(value.instrument)).max().unwrap_or(0) + by_hand.len()
+    }
+
+    fn note(&self, took_part: &mut TookPart, value: &ValueRow, seen: (&Plan, &str, VisitIx, NaiveDate)) {
+        let (plan, measure, visit, day) = seen;
+        let code = self.code(value);
+        let corrected = value.placed_by.and_then(|plan| self.corrections.find(plan, code, measure, day));
+        took_part.see(code, visit, corrected.is_some(), outside_use(plan, code, day));
+    }
 }
 
 struct Builder<'b> {
@@ -302,6 +350,8 @@ struct Builder<'b> {
     accounted: Vec<AccountedRow>,
     today: NaiveDate,
     factor: Factor,
+    conditions: Vec<Vec<Part>>,
+    instruments: Instruments,
     care: Care,
 }
 
@@ -310,12 +360,11 @@ impl Builder<'_> {
         let nobody = Course::default();
         let basis = self.basis;
         let course = basis.courses.by_subject.get(subject).unwrap_or(&nobody);
-        let visits: Vec<(VisitIx, Option<String>)> = match self.factor.code.as_str() {
-            VISIT => self.analysis.visits.iter().map(|visit| (*visit, None)).collect(),
+        let visits: Vec<(VisitIx, usize)> = match self.factor.code.as_str() {
+            VISIT => self.analysis.visits.iter().map(|visit| (*visit, 0)).collect(),
             _ => {
-                let levels = self.factor.levels.iter().cloned().map(Some);
                 let visit = self.analysis.visits.first().copied().unwrap_or(0);
-                levels.map(|level| (visit, level)).collect()
+                (0..self.factor.levels.len()).map(|level| (visit, level)).collect()
             }
         };
         let mut any = false;
@@ -328,7 +377,7 @@ impl Builder<'_> {
                 self.note_session(subject, course, visit, session);
                 seen = Some(visit);
             }
-            cells.push(self.cell(subject, course, visit, level.as_deref(), session));
+            cells.push(self.cell(subject, course, visit, level, session));
         }
         Row { subject: subject.to_owned(), cells, any }
     }
@@ -345,7 +394,7 @@ impl Builder<'_> {
         let code = &self.basis.plan.visits[visit].code;
         let holding = course.sessions.iter().filter(|session| session.visit == Some(visit));
         let mut days: Vec<NaiveDate> = holding
-            .filter(|session| session.facts.measures.contains(&self.measure.code))
+            .filter(|session| session.facts.measures.iter().any(|code| **code == *self.measure.code))
             .map(|session| session.facts.day)
             .collect();
         days.dedup();
@@ -365,57 +414,50 @@ impl Builder<'_> {
         subject: &str,
         course: &Course,
         visit: VisitIx,
-        level: Option<&str>,
+        level: usize,
         session: Option<(NaiveDate, i64, bool)>,
     ) -> Result<f64, Empty> {
-        let Some((_, session, off_window)) = session else { return Err(self.absent(subject, course, visit)) };
+        let Some((day, session, off_window)) = session else { return Err(self.absent(subject, course, visit)) };
         if off_window && self.analysis.off_window == OffWindow::Leave {
             return Err(Empty::OffWindow);
         }
-        let conditions = self.conditions(level);
-        let mut numbers = Vec::with_capacity(conditions.len());
-        for condition in conditions {
-            numbers.push(self.one_condition(subject, visit, session, condition)?);
+        // A visit's sessions of one day share their number; each has its own in the records.
+        let same = course.sessions.iter().filter(|other| other.session == session);
+        let sessions: Vec<i64> = same.map(|other| other.facts.session).collect();
+        let mut numbers = Vec::new();
+        for part in 0..self.conditions.get(level).map_or(0, Vec::len) {
+            numbers.push(self.one_condition(subject, (visit, day), &sessions, (level, part))?);
         }
         Ok(mean(&numbers))
-    }
-
-    /// The conditions that make up a level: all of them, or those with that level of the factor.
-    fn conditions(&self, level: Option<&str>) -> Vec<Condition> {
-        let all = self.measure.cells().into_iter().map(|cell| Condition::of_cell(self.measure, &cell));
-        let wanted = |condition: &Condition| {
-            level.is_none_or(|level| condition.0.get(&self.factor.code).is_some_and(|there| there == level))
-        };
-        all.filter(wanted).collect()
     }
 
     fn one_condition(
         &mut self,
         subject: &str,
-        visit: VisitIx,
-        session: i64,
-        condition: Condition,
+        (visit, day): (VisitIx, NaiveDate),
+        sessions: &[i64],
+        (level, part): (usize, usize),
     ) -> Result<f64, Empty> {
-        let none = vec![];
-        let values = self.readings.get(&session).and_then(|cells| cells.get(&condition)).unwrap_or(&none);
+        let Part { condition, term } = &self.conditions[level][part];
+        let held = sessions.iter().flat_map(|session| term.iter().map(move |term| (*session, *term)));
+        let values: Vec<ValueRow> = held.flat_map(|(session, term)| self.readings.of_cell(session, term)).collect();
         let planned = self.measure.replicates;
         let enough = values.len() >= self.measure.at_least.max(1) as usize;
         let (current, limits) = (values.len(), values.iter().filter(|value| value.limit).count());
         let several = values.iter().any(|value| value.instrument != values[0].instrument);
-        let number = if enough { Ok(summarise(self.measure.summary, values)) } else { Err(()) };
+        let number = if enough { Ok(summarise(self.measure.summary, &values)) } else { Err(()) };
         // Replicates are planned for each instrument; those entered by hand stand in for one that could not export.
-        let current_of_one = most_of_one(values);
-        if current_of_one < planned as usize && current > 0 {
+        let of_one = self.instruments.most_of_one(&values);
+        if of_one < planned as usize && current > 0 {
             let (subject, visit) = (subject.to_owned(), self.basis.plan.visits[visit].code.clone());
-            let few = FewReplicates { subject, visit, condition: condition.clone(), current: current_of_one, planned };
+            let few = FewReplicates { subject, visit, condition: condition.clone(), current: of_one, planned };
             self.care.fewer_replicates.push(few);
         }
         if number.is_ok() {
             self.care.at_limit += limits;
             self.care.several_instruments += usize::from(several);
-            for value in values {
-                self.care.took_part.see(&value.instrument, visit, value.corrected, value.outside_use);
-            }
+            let seen = (&self.basis.plan, self.measure.code.as_str(), visit, day);
+            values.iter().for_each(|value| self.instruments.note(&mut self.care.took_part, value, seen));
         }
         number.map_err(|()| match current {
             0 if condition.0.is_empty() => Empty::NoReading,
@@ -451,17 +493,10 @@ impl Builder<'_> {
     }
 }
 
-/// How many the instrument gave that gave most, with those by hand.
-fn most_of_one(values: &[Value]) -> usize {
-    let by = |code: &str| values.iter().filter(|value| value.instrument == code).count();
-    let most = values.iter().filter(|value| !value.instrument.is_empty()).map(|value| by(&value.instrument)).max();
-    most.unwrap_or(0) + by("")
-}
-
 /// The one number of a cell's replicates, of all instruments that gave some; there is at least one.
-fn summarise(summary: Summary, values: &[Value]) -> f64 {
+fn summarise(summary: Summary, values: &[ValueRow]) -> f64 {
     let numbers: Vec<f64> = values.iter().map(|value| value.number).collect();
-    let in_order = |value: &&Value| (value.moment, value.replicate);
+    let in_order = |value: &&ValueRow| (value.moment, value.replicate);
     match summary {
         Summary::Mean => mean(&numbers),
         Summary::Median => median(numbers),
@@ -491,16 +526,18 @@ fn median(mut numbers: Vec<f64>) -> f64 {
 mod tests {
     use super::*;
 
-    fn value(number: f64, minute: Option<i64>, replicate: u32) -> Value {
-        let moment = minute.and_then(|minute| DateTime::from_timestamp(minute * 60, 0));
-        Value {
+    fn value(number: f64, minute: Option<i64>, replicate: u32) -> ValueRow {
+        let moment = minute.map(|minute| minute * 60_000);
+        ValueRow {
+            reading: 1,
+            session: 1,
+            condition: 1,
+            instrument: 1,
+            replicate,
             number,
             moment,
-            replicate,
-            instrument: "dyn".to_owned(),
             limit: false,
-            corrected: false,
-            outside_use: false,
+            placed_by: None,
         }
     }
 

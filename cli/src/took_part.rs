@@ -7,38 +7,36 @@ use std::collections::{BTreeMap, HashMap};
 use chrono::NaiveDate;
 use revisant_schema::plan::{self, Correction, Instrument, Plan, VisitIx};
 use revisant_schema::records::View;
-use revisant_schema::records::view::ReadingRow;
 use serde_json::{Value as Json, json};
 
 use crate::error::Failure;
 use crate::report::text::{count, list};
 
-/// Corrections as they stood in the plan version that placed each reading.
-pub struct Corrections<'v> {
-    view: View<'v>,
-    plans: HashMap<i64, Option<Plan>>,
-}
+/// Corrections as they stood in the plan versions that placed readings.
+pub struct Corrections(HashMap<i64, Plan>);
 
-impl<'v> Corrections<'v> {
-    /// Of the records as they stand at a view.
-    pub fn new(view: View<'v>) -> Self {
-        Self { view, plans: HashMap::new() }
+impl Corrections {
+    /// Those of some plan versions of the records.
+    pub fn of(view: &View<'_>, versions: impl Iterator<Item = i64>) -> Result<Self, Failure> {
+        let mut plans = HashMap::new();
+        let mut last = None;
+        for version in versions {
+            // Readings come in long runs of one version.
+            if last.replace(version) == Some(version) || plans.contains_key(&version) {
+                continue;
+            }
+            let files = view.plan_version(version)?.map(|found| found.files);
+            plans.extend(files.and_then(|files| plan::parse(&files).ok()).map(|(plan, _)| (version, plan)));
+        }
+        Ok(Self(plans))
     }
 
-    /// The correction that a reading's number carries; `None` for one as exported, entered by hand or amended.
-    pub fn of(&mut self, row: &ReadingRow) -> Result<Option<&Correction>, Failure> {
-        if !self.plans.contains_key(&row.plan) {
-            let version = self.view.plan_version(row.plan)?;
-            let parsed = version.and_then(|version| plan::parse(&version.files).ok()).map(|(plan, _)| plan);
-            self.plans.insert(row.plan, parsed);
-        }
-        let exported = row.source == 0;
-        let plan = self.plans.get(&row.plan).and_then(Option::as_ref).filter(|_| exported);
-        Ok(plan.and_then(|plan| {
-            let (_, instrument) = plan.instrument(&row.instrument)?;
-            let (measure, _) = plan.measure(&row.measure)?;
-            instrument.correction(measure, row.session.day).filter(|it| it.times != 1.0 || it.plus != 0.0)
-        }))
+    /// The correction that the number of a reading of a day carries; `None` for one as exported.
+    pub fn find(&self, version: i64, instrument: &str, measure: &str, day: NaiveDate) -> Option<&Correction> {
+        let plan = self.0.get(&version)?;
+        let (measure, _) = plan.measure(measure)?;
+        let (_, instrument) = plan.instrument(instrument)?;
+        instrument.correction(measure, day).filter(|it| it.times != 1.0 || it.plus != 0.0)
     }
 }
 

@@ -50,10 +50,13 @@ pub fn run(context: &mut Context<'_, '_>, args: &Provenance) -> Done {
     let row = view.reading(args.reading)?;
     let source = source(&records, &view, &row)?;
     let history = history(&records, &view, &row)?;
-    let correction = Corrections::new(view).of(&row)?.cloned();
+    let corrections = Corrections::of(&view, std::iter::once(row.plan))?;
+    let correction = corrections.find(row.plan, &row.instrument, &row.measure, row.session.day);
+    // One that a person has amended or entered is as that person said.
+    let correction = correction.filter(|_| row.source == 0);
     match context.out.json {
-        true => context.out.json(&whole_json(&basis, &row, &source, correction.as_ref(), &history))?,
-        false => text(context, &basis, &row, &source, correction.as_ref(), &history)?,
+        true => context.out.json(&whole_json(&basis, &row, &source, correction, &history))?,
+        false => text(context, &basis, &row, &source, correction, &history)?,
     }
     Ok(Exit::Done)
 }

@@ -152,7 +152,7 @@ fn outside_use(view: &View<'_>, basis: &Basis) -> Result<BTreeMap<String, u64>, 
     for cell in view.cells()? {
         let day = days.get(&cell.session);
         if day.is_some_and(|day| took_part::outside_use(&basis.plan, &cell.instrument, *day)) {
-            *outside.entry(cell.instrument).or_default() += u64::from(cell.current);
+            *outside.entry(cell.instrument.to_string()).or_default() += u64::from(cell.current);
         }
     }
     Ok(outside)

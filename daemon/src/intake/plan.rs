@@ -6,6 +6,7 @@
 use std::collections::HashSet;
 use std::io::Read;
 use std::path::Path;
+use std::sync::Arc;
 
 use chrono::{SecondsFormat, Utc};
 use revisant_schema::plan::meaning::{self, Change};
@@ -83,7 +84,7 @@ fn refuse_other_meaning(records: &Records, old: &Plan, new: &Plan) -> Result<()>
 /// What there are data of.
 struct Data {
     /// (measure, condition, readings)
-    cells: Vec<(String, Condition, u32)>,
+    cells: Vec<(Arc<str>, Arc<Condition>, u32)>,
     /// Visits that have a session, by code.
     visits: HashSet<String>,
     roster: Roster,
