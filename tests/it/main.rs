@@ -10,10 +10,12 @@ mod corpus;
 mod cuts;
 mod errors;
 mod house;
+mod instruments;
 mod kills;
 mod properties;
 mod readings;
 mod reference;
+mod sample;
 
 use revisant_tests::site::{Programs, Site};
 

@@ -15,6 +15,7 @@ mod new;
 mod provenance;
 mod readings;
 mod roster;
+mod sample;
 mod status;
 mod strike;
 mod trail;
