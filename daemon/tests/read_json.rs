@@ -747,7 +747,7 @@ mod whatever_the_bytes {
         fn string(&mut self, text: &str) {
             self.text.push('"');
             for character in text.chars() {
-                if self.next() % 8 == 0 || character.is_ascii_control() || matches!(character, '"' | '\\') {
+                if self.next().is_multiple_of(8) || character.is_ascii_control() || matches!(character, '"' | '\\') {
                     for unit in character.encode_utf16(&mut [0; 2]) {
                         self.text.push_str(&format!("\\u{unit:04x}"));
                     }
@@ -856,8 +856,8 @@ mod whatever_the_bytes {
                 let good: Vec<&Kept> = seen.rows.iter().filter(|row| row.fault.is_none()).collect();
                 assert!(seen.rows.len() - good.len() <= 1, "{seen:?}");
                 assert!(good.iter().zip(&all.rows).all(|(one, other)| **one == *other), "{seen:?} at {cut}");
-                // Each line that is whole has given all its rows (a line end takes two bytes at most).
-                let whole = all.rows.iter().filter(|row| row.bytes.unwrap().1 + 2 <= cut as u64).count();
+                // Each line that is whole has given all its rows (blanks, and half a code unit, may follow its value).
+                let whole = all.rows.iter().filter(|row| row.bytes.unwrap().1 + 4 <= cut as u64).count();
                 assert!(good.len() >= whole, "{seen:?} at {cut}");
             }
         }
@@ -889,7 +889,7 @@ mod whatever_the_bytes {
     }
 
     proptest! {
-        #![proptest_config(ProptestConfig::with_cases(1000))]
+        #![proptest_config(ProptestConfig::with_cases(400))]
 
         #[test]
         fn random_bytes_do_no_harm(reader in any_reader(), bytes in prop::collection::vec(any::<u8>(), 0..200)) {
