@@ -224,6 +224,10 @@ fn a_key_that_stands_twice_outside_the_rows_is_a_fault_too() {
     assert_eq!((seen.good(), seen.unreadable()), (vec![vec!["3", "3"]], vec![1, 1]));
     let seen = whole(&json("/*/rows/*", &[".", "../d/e"]), text);
     assert_eq!((seen.good(), seen.unreadable()), (vec![vec!["3", ""]], vec![1, 1]));
+    // However often, it takes no more memory and no more time than it must.
+    let text =
+        format!("{{\"a\":[1],{}\"d\":0}}", format!("\"d\":\"{}\",", "x".repeat(1000)).repeat(100_000)).into_bytes();
+    assert_eq!(read_all(&json("/a/*", &[".", "../d"]), &text).unwrap().unreadable(), [1]);
     // The rows themselves twice: nobody can say which.
     for reader in [json("/a/*", &[".", "x"]), json("/a/*", &[".", "../x"])] {
         says(&unreadable(&reader, r#"{"a":[1],"a":[2]}"#), &["\"a\"", "twice", "line 1, column 14"]);
