@@ -482,6 +482,8 @@ fn too_large_a_row_is_a_fault_and_anything_larger_is_passed_over() {
     for text in [format!("{{\"a\":[{{}},\"{large}\"]}}"), format!("{{\"{large}\":1,\"a\":[]}}")] {
         assert!(matches!(read(text), Err(FileFault::TooLarge(what)) if what.contains("16 MiB")));
     }
+    // It need not end for that: no more than this is kept.
+    assert!(matches!(read(format!("{{\"a\":[\"{large}{large}")), Err(FileFault::TooLarge(_))));
     let passed = format!("{{\"b\":\"{large}\",\"c\":[{{\"{large}\":{}}}],\"a\":[{{\"id\":1}}]}}", "7".repeat(17 << 20));
     assert_eq!(read(passed).unwrap().good(), [["1", "", ""]]);
     let outer = json("/a/*", &["id", "../b", "x"]);
