@@ -247,7 +247,9 @@ impl<'a> Workbook<'a> {
         }
         let taken = &mut self.sheet.row;
         let by_line = |rule: &Ignore| matches!(rule, Ignore::Line(line) if line.is_match(&taken.raw));
-        if self.reader.ignore.iter().any(by_line) || self.rules.iter().any(|rule| rule.holds.is(taken.text_at(rule.column))) {
+        if self.reader.ignore.iter().any(by_line)
+            || self.rules.iter().any(|rule| rule.holds.is(taken.text_at(rule.column)))
+        {
             self.counts.ignored += 1;
             return Ok(false);
         }
@@ -286,11 +288,7 @@ impl Rows for Workbook<'_> {
         loop {
             let before = self.lines();
             let Some(taken) = self.sheet.take()? else { return Ok(false) };
-            let between = taken.number.saturating_sub(before + 1);
-            if between > 0 {
-                self.counts.blank += between;
-                // As in a text, units may stand under a repeated header and a blank row.
-            }
+            self.counts.blank += taken.number.saturating_sub(before + 1);
             if self.read_row(row)? {
                 self.given += 1;
                 return Ok(true);
