@@ -142,10 +142,11 @@ impl Package {
         }
         let (send, blocks) = sync_channel(BLOCKS_AHEAD);
         let part = name.to_owned();
-        let inflate = move || match self.part(&part, most) {
-            Ok(Some(part)) => pump(part, &send),
-            // It was there a moment ago: the reader meets a stream without an end, which is a fault.
-            Ok(None) | Err(_) => {}
+        let inflate = move || {
+            // It was there a moment ago; were it not, the reader would meet a stream without an end, which is a fault.
+            if let Ok(Some(part)) = self.part(&part, most) {
+                pump(part, &send);
+            }
         };
         thread::Builder::new().name("workbook part".to_owned()).spawn(inflate)?;
         Ok(Stream { blocks, block: vec![], at: 0, ended: false })
