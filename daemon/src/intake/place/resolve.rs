@@ -5,15 +5,16 @@
 //! collection alone, never on other rows (but for doubled local times, which the export's order may settle).
 
 use std::borrow::Cow;
-use std::collections::{BTreeMap, HashMap};
+use std::cell::RefCell;
+use std::collections::{BTreeMap, HashMap, HashSet};
 
 use chrono::{DateTime, NaiveDate, Utc};
 use regex::Regex;
 use revisant_schema::hold::{Answer, Reason};
 use revisant_schema::plan::stamp::{CompiledStamp, Written};
 use revisant_schema::plan::{
-    Affine, Instrument, LevelRule, LimitRule, MeasureIx, MeasureRule, Place, Plan, Reader, Source, UnitRule, ValueRule,
-    units,
+    Affine, ConditionFactor, Instrument, LevelRule, LimitRule, MeasureIx, MeasureRule, Place, Plan, Reader, Source,
+    UnitRule, ValueRule, units,
 };
 use revisant_schema::reading::Condition;
 use revisant_schema::roster::{Roster, tidy};
@@ -281,17 +282,34 @@ pub struct Resolver<'p> {
     replicate: Option<Finder<'p>>,
     operator: Option<Finder<'p>>,
     values: Vec<ValueFinder<'p>>,
+    /// The visits' codes, and `unscheduled`.
+    labels: HashSet<&'p str>,
+    /// Subjects met, by the text that names them.
+    subjects: RefCell<HashMap<String, Listed>>,
     /// Settled moments of doubled local times, by row.
     pub settled: HashMap<At, DateTime<Utc>>,
 }
 
+/// A subject of the roster.
+#[derive(Debug, Clone)]
+struct Listed {
+    code: String,
+    enrolled: Option<NaiveDate>,
+    withdrawn: Option<NaiveDate>,
+}
+
+/// Texts that name subjects remembered at once.
+const MOST_MET: usize = 4096;
+
 struct ValueFinder<'p> {
     rule: &'p ValueRule,
     slot: usize,
+    /// The condition, where it is the same in every row.
+    condition: Option<String>,
     measure: Option<Finder<'p>>,
     unit: Option<Finder<'p>>,
     levels: Vec<(&'p str, Result<&'p str, Finder<'p>>)>,
-    conversions: std::cell::RefCell<HashMap<(String, MeasureIx), Option<Affine>>>,
+    conversions: RefCell<HashMap<(String, MeasureIx), Option<Affine>>>,
 }
 
 /// What the stamp of a row comes to.
@@ -323,7 +341,9 @@ impl<'p> Resolver<'p> {
             visit: reader.visit.as_ref().map(finder),
             replicate: reader.replicate.as_ref().map(finder),
             operator: reader.operator.as_ref().map(finder),
-            values: reader.values.iter().map(|rule| ValueFinder::new(rule, wanted, whereabouts)).collect(),
+            values: reader.values.iter().map(|rule| ValueFinder::new(plan, rule, wanted, whereabouts)).collect(),
+            labels: plan.visits.iter().map(|visit| visit.code.as_str()).chain([UNSCHEDULED]).collect(),
+            subjects: Default::default(),
             settled: HashMap::new(),
         })
     }
@@ -393,7 +413,7 @@ impl<'p> Resolver<'p> {
             Taken::Moment(moment, finer, day) => (Some(moment), finer, day),
             Taken::Day(day) => (None, false, day),
         };
-        let outside = self.check_enrolment(&subject, day, decided).err();
+        let outside = check_enrolment(&subject, day, decided).err();
         // Of two faults the one that is looked for first is told.
         let first = |later: Box<Held>| outside.clone().unwrap_or(later);
         let (label, label_decided) = self.label(row, rows, decided).map_err(first)?;
@@ -402,7 +422,7 @@ impl<'p> Resolver<'p> {
         let values = self.values.iter().map(|value| self.value(value, row, rows, day, decided)).collect();
         let operator = self.operator.as_ref().map(|finder| finder.find(row, rows).into_owned()).unwrap_or_default();
         Ok(Resolved {
-            subject,
+            subject: subject.code,
             day,
             moment,
             written,
@@ -416,23 +436,39 @@ impl<'p> Resolver<'p> {
         })
     }
 
-    fn subject_of(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<String, Box<Held>> {
+    fn subject_of(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<Listed, Box<Held>> {
         let said = decided.find("", |_, answer| match answer {
             Answer::Subject(code) => Some(code.clone()),
             _ => None,
         });
         let found = said.map_or_else(|| self.subject.find(row, rows), Cow::Owned);
-        let code = tidy(&found, &self.plan.subject.normalise);
+        if let Some(met) = self.subjects.borrow().get(found.as_ref()) {
+            return Ok(met.clone());
+        }
+        let listed = self.listed(&found)?;
+        let mut subjects = self.subjects.borrow_mut();
+        if subjects.len() >= MOST_MET {
+            subjects.clear();
+        }
+        subjects.insert(found.into_owned(), listed.clone());
+        Ok(listed)
+    }
+
+    /// The subject that a text names.
+    fn listed(&self, found: &str) -> Result<Listed, Box<Held>> {
+        let code = tidy(found, &self.plan.subject.normalise);
         if code.trim().is_empty() {
             return Err(Box::new(Held::row(Reason::NoSubject, "the row names no subject")));
         }
-        if self.plan.subject.pattern.is_match(&code) && self.roster.subjects.contains_key(&code) {
-            return Ok(code);
-        }
         let fits = self.plan.subject.pattern.is_match(&code);
-        let why = if fits { "is not on the roster" } else { "does not fit the plan's pattern" };
-        let held = Held::row(Reason::UnknownSubject, format!("\"{code}\" {why}"));
-        Err(Box::new(held.likely(nearest(&code, self.roster.subjects.keys().map(String::as_str)))))
+        match self.roster.subjects.get(&code) {
+            Some(entry) if fits => Ok(Listed { code, enrolled: entry.enrolled, withdrawn: entry.withdrawn }),
+            _ => {
+                let why = if fits { "is not on the roster" } else { "does not fit the plan's pattern" };
+                let held = Held::row(Reason::UnknownSubject, format!("\"{code}\" {why}"));
+                Err(Box::new(held.likely(nearest(&code, self.roster.subjects.keys().map(String::as_str)))))
+            }
+        }
     }
 
     fn taken(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<(Taken, String), Box<Held>> {
@@ -447,11 +483,11 @@ impl<'p> Resolver<'p> {
             Some(Ok(text)) => self.decided_moment(&text)?,
             None => self.stamped(row, rows, &written)?,
         };
-        let (future, what) = match taken {
-            Taken::Moment(moment, ..) => (moment > self.now, written.clone()),
-            Taken::Day(day) => (day > self.today(), day.to_string()),
+        let future = match taken {
+            Taken::Moment(moment, ..) => (moment > self.now).then(|| written.clone()),
+            Taken::Day(day) => (day > self.today()).then(|| day.to_string()),
         };
-        if future {
+        if let Some(what) = future {
             return Err(Box::new(Held::row(Reason::FutureStamp, format!("\"{what}\" lies in the future"))));
         }
         Ok((taken, written))
@@ -520,31 +556,6 @@ impl<'p> Resolver<'p> {
         Ok(Taken::Moment(moment, true, moment.with_timezone(&zone).date_naive()))
     }
 
-    fn check_enrolment(&self, subject: &str, day: NaiveDate, decided: &Decided) -> Result<(), Box<Held>> {
-        let Some(entry) = self.roster.subjects.get(subject) else { return Ok(()) };
-        // A person who names the subject has seen the dates; the answer to these two reasons is the subject.
-        let confirmed = |wanted: Reason| {
-            decided
-                .find("", |reason, answer| {
-                    (reason == wanted && matches!(answer, Answer::Subject(code) if code == subject)).then_some(())
-                })
-                .is_some()
-        };
-        if let Some(enrolled) = entry.enrolled.filter(|enrolled| day < *enrolled)
-            && !confirmed(Reason::BeforeEnrolment)
-        {
-            let wrong = format!("{day} lies before {subject}'s enrolment on {enrolled}");
-            return Err(Box::new(Held::row(Reason::BeforeEnrolment, wrong)));
-        }
-        if let Some(withdrawn) = entry.withdrawn.filter(|withdrawn| day > *withdrawn)
-            && !confirmed(Reason::AfterWithdrawal)
-        {
-            let wrong = format!("{day} lies after {subject}'s withdrawal on {withdrawn}");
-            return Err(Box::new(Held::row(Reason::AfterWithdrawal, wrong)));
-        }
-        Ok(())
-    }
-
     fn label(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<(Option<String>, bool), Box<Held>> {
         let said = decided.find("", |_, answer| match answer {
             Answer::Visit(code) => Some(code.clone()),
@@ -558,7 +569,7 @@ impl<'p> Resolver<'p> {
         let text = found.trim();
         if text.is_empty() {
             Ok((None, false))
-        } else if text == UNSCHEDULED || self.plan.visit(text).is_some() {
+        } else if self.labels.contains(text) {
             Ok((Some(text.to_owned()), false))
         } else {
             let codes = self.plan.visits.iter().map(|visit| visit.code.as_str());
@@ -691,6 +702,9 @@ impl<'p> Resolver<'p> {
             Answer::Condition(levels) => Some(levels.clone()),
             _ => None,
         });
+        if let (None, Some(condition)) = (&said, &value.condition) {
+            return Ok(condition.clone());
+        }
         let mut condition = Condition::default();
         for factor in &self.plan.measures[measure].conditions {
             let decided_level = said.as_ref().and_then(|levels| levels.get(&factor.code));
@@ -824,10 +838,11 @@ struct Number {
 }
 
 impl<'p> ValueFinder<'p> {
-    fn new(rule: &'p ValueRule, wanted: &[String], whereabouts: Whereabouts<'_>) -> Self {
+    fn new(plan: &'p Plan, rule: &'p ValueRule, wanted: &[String], whereabouts: Whereabouts<'_>) -> Self {
         let finder = |place: &'p Place| Finder::new(place, wanted, whereabouts);
         Self {
             rule,
+            condition: fixed_condition(plan, rule),
             slot: wanted.iter().position(|name| *name == rule.column).unwrap_or(usize::MAX),
             measure: match &rule.measure {
                 MeasureRule::Fixed(_) => None,
@@ -870,6 +885,18 @@ impl<'p> ValueFinder<'p> {
     }
 }
 
+/// The condition of a value, where the plan alone says it.
+fn fixed_condition(plan: &Plan, rule: &ValueRule) -> Option<String> {
+    let MeasureRule::Fixed(measure) = rule.measure else { return None };
+    let level = |factor: &ConditionFactor| {
+        let (_, level) = rule.condition.iter().find(|(code, _)| *code == factor.code)?;
+        let LevelRule::Fixed(level) = level else { return None };
+        factor.levels.contains(level).then(|| (factor.code.clone(), level.clone()))
+    };
+    let levels = plan.measures.get(measure)?.conditions.iter().map(level).collect::<Option<_>>()?;
+    Some(Condition(levels).to_string())
+}
+
 fn row_fault(row: &Row, decided: &Decided) -> Result<(), Box<Held>> {
     let held = match &row.fault {
         None => return Ok(()),
@@ -881,6 +908,31 @@ fn row_fault(row: &Row, decided: &Decided) -> Result<(), Box<Held>> {
         }
     };
     Err(Box::new(held))
+}
+
+fn check_enrolment(listed: &Listed, day: NaiveDate, decided: &Decided) -> Result<(), Box<Held>> {
+    let subject = &listed.code;
+    // A person who names the subject has seen the dates; the answer to these two reasons is the subject.
+    let confirmed = |wanted: Reason| {
+        decided
+            .find("", |reason, answer| {
+                (reason == wanted && matches!(answer, Answer::Subject(code) if code == subject)).then_some(())
+            })
+            .is_some()
+    };
+    if let Some(enrolled) = listed.enrolled.filter(|enrolled| day < *enrolled)
+        && !confirmed(Reason::BeforeEnrolment)
+    {
+        let wrong = format!("{day} lies before {subject}'s enrolment on {enrolled}");
+        return Err(Box::new(Held::row(Reason::BeforeEnrolment, wrong)));
+    }
+    if let Some(withdrawn) = listed.withdrawn.filter(|withdrawn| day > *withdrawn)
+        && !confirmed(Reason::AfterWithdrawal)
+    {
+        let wrong = format!("{day} lies after {subject}'s withdrawal on {withdrawn}");
+        return Err(Box::new(Held::row(Reason::AfterWithdrawal, wrong)));
+    }
+    Ok(())
 }
 
 fn doubled(written: &str, early: DateTime<Utc>, late: DateTime<Utc>) -> Held {
