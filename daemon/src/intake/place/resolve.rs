@@ -7,6 +7,7 @@
 use std::borrow::Cow;
 use std::cell::RefCell;
 use std::collections::{BTreeMap, HashMap, HashSet};
+use std::sync::Arc;
 
 use chrono::{DateTime, NaiveDate, Utc};
 use regex::Regex;
@@ -112,14 +113,14 @@ pub enum ValueOutcome {
     /// Held.
     Held(Held),
     /// A number in the measure's unit.
-    Number(Box<PlacedValue>),
+    Number(PlacedValue),
 }
 
 /// A value that may be filed.
 #[derive(Debug, Clone, PartialEq)]
 pub struct PlacedValue {
     /// Its column.
-    pub column: String,
+    pub column: Arc<str>,
     /// Its measure.
     pub measure: MeasureIx,
     /// Its condition's text.
@@ -158,6 +159,9 @@ impl Decided {
     }
 
     fn find<T>(&self, column: &str, pick: impl Fn(Reason, &Answer) -> Option<T>) -> Option<T> {
+        if self.answers.is_empty() {
+            return None;
+        }
         // The newest answer wins.
         self.answers.get(column)?.iter().rev().find_map(|(reason, answer)| pick(*reason, answer))
     }
@@ -204,9 +208,9 @@ impl<'p> Finder<'p> {
 
     fn find<'r>(&'r self, row: &'r Row, rows: &'r dyn Rows) -> Cow<'r, str> {
         match self {
-            Self::Column(slot, map) => mapped_cow(map, row.cell(*slot).trim()),
+            Self::Column(slot, map) => mapped_cow(map, trim(row.cell(*slot))),
             Self::Columns(slots, map) => {
-                let texts: Vec<&str> = slots.iter().map(|slot| row.cell(*slot).trim()).collect();
+                let texts: Vec<&str> = slots.iter().map(|slot| trim(row.cell(*slot))).collect();
                 Cow::Owned(mapped(map, texts.join(" ").trim()))
             }
             Self::Preamble(key, map) => mapped_cow(map, rows.preamble(key).unwrap_or_default().trim()),
@@ -253,6 +257,14 @@ fn collect_path_facts(place: &Place, file_name: &str, folder: &str, facts: &mut 
         Source::Folder(regex) => facts.push(group(regex, folder)),
         Source::Parts(parts) => parts.iter().for_each(|part| collect_path_facts(part, file_name, folder, facts)),
         Source::Column(_) | Source::Columns(_) | Source::Preamble(_) | Source::Fixed(_) => {}
+    }
+}
+
+/// [`str::trim`], at once where no blank stands around a text, as hardly ever one does behind a reader.
+fn trim(text: &str) -> &str {
+    match text.as_bytes() {
+        [first, .., last] if first.is_ascii_graphic() && last.is_ascii_graphic() => text,
+        _ => text.trim(),
     }
 }
 
@@ -304,6 +316,8 @@ const MOST_MET: usize = 4096;
 struct ValueFinder<'p> {
     rule: &'p ValueRule,
     slot: usize,
+    /// The rule's column, to be shared by the values found in it.
+    column: Arc<str>,
     /// The condition, where it is the same in every row.
     condition: Option<String>,
     measure: Option<Finder<'p>>,
@@ -354,7 +368,7 @@ impl<'p> Resolver<'p> {
     }
 
     fn is_missing(&self, value: &ValueFinder<'_>, row: &Row, rows: &dyn Rows) -> bool {
-        let text = row.cell(value.slot).trim();
+        let text = trim(row.cell(value.slot));
         if self.instrument.reader.missing.iter().any(|word| word == text) {
             return true;
         }
@@ -400,12 +414,12 @@ impl<'p> Resolver<'p> {
             return RowOutcome::NoValue;
         }
         match self.resolve_row(row, rows, decided) {
-            Ok(resolved) => RowOutcome::Ready(Box::new(resolved)),
+            Ok(resolved) => RowOutcome::Ready(resolved),
             Err(held) => RowOutcome::Held(*held),
         }
     }
 
-    fn resolve_row(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<Resolved, Box<Held>> {
+    fn resolve_row(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<Box<Resolved>, Box<Held>> {
         row_fault(row, decided)?;
         let subject = self.subject_of(row, rows, decided)?;
         let (taken, written) = self.taken(row, rows, decided)?;
@@ -421,7 +435,7 @@ impl<'p> Resolver<'p> {
         let outside = outside.map(|held| *held);
         let values = self.values.iter().map(|value| self.value(value, row, rows, day, decided)).collect();
         let operator = self.operator.as_ref().map(|finder| finder.find(row, rows).into_owned()).unwrap_or_default();
-        Ok(Resolved {
+        Ok(Box::new(Resolved {
             subject: subject.code,
             day,
             moment,
@@ -433,7 +447,7 @@ impl<'p> Resolver<'p> {
             operator,
             values,
             outside,
-        })
+        }))
     }
 
     fn subject_of(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<Listed, Box<Held>> {
@@ -472,7 +486,7 @@ impl<'p> Resolver<'p> {
     }
 
     fn taken(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<(Taken, String), Box<Held>> {
-        let written = self.taken_at.find(row, rows).trim().to_owned();
+        let written = trim(&self.taken_at.find(row, rows)).to_owned();
         let said = decided.find("", |_, answer| match answer {
             Answer::Moment(text) => Some(Ok(text.clone())),
             Answer::Date(day) => Some(Err(*day)),
@@ -521,9 +535,18 @@ impl<'p> Resolver<'p> {
                         return Err(Box::new(Held::row(Reason::ClockGap, wrong)));
                     }
                 };
-                Ok(self.at(moment, local.date(), read.finer))
+                Ok(self.at_local(moment, local.date(), read.finer))
             }
         }
+    }
+
+    /// A moment that was written as a local time, on a day of the instrument's clock.
+    fn at_local(&self, moment: DateTime<Utc>, day: NaiveDate, finer: bool) -> Taken {
+        // A right clock that keeps the study centre's own time shows the study centre's day.
+        if self.instrument.clock.is_empty() && self.instrument.time_zone == self.plan.study.time_zone {
+            return Taken::Moment(moment, finer, day);
+        }
+        self.at(moment, day, finer)
     }
 
     /// A moment with the clock's error added, and its local day at the study centre.
@@ -566,7 +589,7 @@ impl<'p> Resolver<'p> {
         }
         let Some(finder) = &self.visit else { return Ok((None, false)) };
         let found = finder.find(row, rows);
-        let text = found.trim();
+        let text = trim(&found);
         if text.is_empty() {
             Ok((None, false))
         } else if self.labels.contains(text) {
@@ -581,7 +604,7 @@ impl<'p> Resolver<'p> {
     fn replicate_of(&self, row: &Row, rows: &dyn Rows) -> Result<Option<u32>, Box<Held>> {
         let Some(finder) = &self.replicate else { return Ok(None) };
         let found = finder.find(row, rows);
-        let text = found.trim();
+        let text = trim(&found);
         if text.is_empty() {
             return Ok(None);
         }
@@ -606,7 +629,7 @@ impl<'p> Resolver<'p> {
             return ValueOutcome::Missing;
         }
         match self.place_value(value, row, rows, day, decided) {
-            Ok(Some(placed)) => ValueOutcome::Number(Box::new(placed)),
+            Ok(Some(placed)) => ValueOutcome::Number(placed),
             Ok(None) => ValueOutcome::Missing,
             Err(held) => ValueOutcome::Held(held.on(&value.rule.column)),
         }
@@ -643,10 +666,10 @@ impl<'p> Resolver<'p> {
             matches!(answer, Answer::Replicate(_) | Answer::InsteadOf(_)).then(|| answer.clone())
         });
         Ok(Some(PlacedValue {
-            column: column.to_owned(),
+            column: value.column.clone(),
             measure: measure_ix,
             condition,
-            text: row.cell(value.slot).trim().to_owned(),
+            text: trim(row.cell(value.slot)).to_owned(),
             exported: Some(number.exported),
             unit,
             number: corrected,
@@ -794,7 +817,7 @@ impl<'p> Resolver<'p> {
                 return Ok(Some(Number { exported: number, used: number, mark: None }));
             }
         }
-        let text = row.cell(value.slot).trim();
+        let text = trim(row.cell(value.slot));
         let as_it_stands = if row.is_number(value.slot) { number::parse(text, '.', None) } else { parse(text) };
         if let Some(number) = as_it_stands {
             return Ok(Some(Number { exported: number, used: number, mark: None }));
@@ -842,6 +865,7 @@ impl<'p> ValueFinder<'p> {
         let finder = |place: &'p Place| Finder::new(place, wanted, whereabouts);
         Self {
             rule,
+            column: rule.column.as_str().into(),
             condition: fixed_condition(plan, rule),
             slot: wanted.iter().position(|name| *name == rule.column).unwrap_or(usize::MAX),
             measure: match &rule.measure {
