@@ -6,7 +6,7 @@
 use std::collections::HashMap;
 
 use chrono::{DateTime, NaiveDate, NaiveDateTime, TimeDelta, Utc};
-use chrono::{MappedLocalTime, TimeZone};
+use chrono::{MappedLocalTime, Offset, TimeZone};
 use chrono_tz::Tz;
 use revisant_schema::plan::{ClockError, Instrument};
 
@@ -25,12 +25,13 @@ pub enum Local {
 
 /// What a local time is in a zone.
 pub fn in_zone(zone: Tz, local: NaiveDateTime) -> Local {
-    match zone.from_local_datetime(&local) {
-        MappedLocalTime::Single(moment) => Local::Once(moment.to_utc()),
-        MappedLocalTime::Ambiguous(one, other) => {
-            let (one, other) = (one.to_utc(), other.to_utc());
-            Local::Twice(one.min(other), one.max(other))
-        }
+    let moment = |offset: <Tz as TimeZone>::Offset| local.checked_sub_offset(offset.fix()).map(|utc| utc.and_utc());
+    match zone.offset_from_local_datetime(&local) {
+        MappedLocalTime::Single(offset) => moment(offset).map_or(Local::Never, Local::Once),
+        MappedLocalTime::Ambiguous(one, other) => match (moment(one), moment(other)) {
+            (Some(one), Some(other)) => Local::Twice(one.min(other), one.max(other)),
+            _ => Local::Never,
+        },
         MappedLocalTime::None => Local::Never,
     }
 }
@@ -126,6 +127,22 @@ mod tests {
 
     fn at(minute: i64) -> DateTime<Utc> {
         DateTime::from_timestamp(minute * 60, 0).unwrap()
+    }
+
+    proptest::proptest! {
+        /// A local time's day is the day of each of its moments in the same zone, however clocks change.
+        #[test]
+        fn a_moment_is_on_the_day_it_was_written_on(minute in 0_i64..80_000_000, which in 0..chrono_tz::TZ_VARIANTS.len()) {
+            let (zone, local) = (chrono_tz::TZ_VARIANTS[which], at(minute).naive_utc());
+            let moments = match in_zone(zone, local) {
+                Local::Once(moment) => vec![moment],
+                Local::Twice(early, late) => vec![early, late],
+                Local::Never => vec![],
+            };
+            for moment in moments {
+                proptest::prop_assert_eq!(moment.with_timezone(&zone).naive_local(), local);
+            }
+        }
     }
 
     /// Rows as (early, late), equal when there is one moment only; every good choice by trying all.

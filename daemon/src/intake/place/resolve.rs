@@ -5,8 +5,8 @@
 //! collection alone, never on other rows (but for doubled local times, which the export's order may settle).
 
 use std::borrow::Cow;
-use std::cell::RefCell;
-use std::collections::{BTreeMap, HashMap, HashSet};
+use std::cell::{Cell, RefCell};
+use std::collections::{BTreeMap, HashMap};
 use std::sync::Arc;
 
 use chrono::{DateTime, NaiveDate, Utc};
@@ -15,7 +15,7 @@ use revisant_schema::hold::{Answer, Reason};
 use revisant_schema::plan::stamp::{CompiledStamp, Written};
 use revisant_schema::plan::{
     Affine, ConditionFactor, Instrument, LevelRule, LimitRule, MeasureIx, MeasureRule, Place, Plan, Reader, Source,
-    UnitRule, ValueRule, units,
+    UnitRule, ValueRule, VisitIx, units,
 };
 use revisant_schema::reading::Condition;
 use revisant_schema::roster::{Roster, tidy};
@@ -294,8 +294,8 @@ pub struct Resolver<'p> {
     replicate: Option<Finder<'p>>,
     operator: Option<Finder<'p>>,
     values: Vec<ValueFinder<'p>>,
-    /// The visits' codes, and `unscheduled`.
-    labels: HashSet<&'p str>,
+    /// The visit that a label named last: rows of one visit stand together.
+    visit_before: Cell<VisitIx>,
     /// Subjects met, by the text that names them.
     subjects: RefCell<HashMap<String, Listed>>,
     /// Settled moments of doubled local times, by row.
@@ -356,7 +356,7 @@ impl<'p> Resolver<'p> {
             replicate: reader.replicate.as_ref().map(finder),
             operator: reader.operator.as_ref().map(finder),
             values: reader.values.iter().map(|rule| ValueFinder::new(plan, rule, wanted, whereabouts)).collect(),
-            labels: plan.visits.iter().map(|visit| visit.code.as_str()).chain([UNSCHEDULED]).collect(),
+            visit_before: Cell::new(0),
             subjects: Default::default(),
             settled: HashMap::new(),
         })
@@ -602,13 +602,22 @@ impl<'p> Resolver<'p> {
         let text = trim(&found);
         if text.is_empty() {
             Ok((None, false))
-        } else if self.labels.contains(text) {
+        } else if text == UNSCHEDULED || self.is_visit(text) {
             Ok((Some(text.to_owned()), false))
         } else {
             let codes = self.plan.visits.iter().map(|visit| visit.code.as_str());
             let held = Held::row(Reason::UnknownVisit, format!("\"{text}\" is no visit of the plan"));
             Err(Box::new(held.likely(nearest(text, codes))))
         }
+    }
+
+    fn is_visit(&self, code: &str) -> bool {
+        if self.plan.visits.get(self.visit_before.get()).is_some_and(|visit| visit.code == code) {
+            return true;
+        }
+        let Some((visit, _)) = self.plan.visit(code) else { return false };
+        self.visit_before.set(visit);
+        true
     }
 
     fn replicate_of(&self, row: &Row, rows: &dyn Rows) -> Result<Option<u32>, Box<Held>> {
