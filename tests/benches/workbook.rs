@@ -156,9 +156,15 @@ fn sheet_and_texts() -> (String, String) {
     for label in COLUMNS {
         let _ = write!(texts, "<si><t>{label}</t></si>");
     }
-    (0..500).for_each(|subject| drop(write!(texts, "<si><t>S-{subject:03}</t></si>")));
-    (0..20).for_each(|visit| drop(write!(texts, "<si><t>week-{visit}</t></si>")));
-    (0..1000).for_each(|note| drop(write!(texts, "<si><t xml:space=\"preserve\">note number {note} </t></si>")));
+    (0..500).for_each(|subject| {
+        let _ = write!(texts, "<si><t>S-{subject:03}</t></si>");
+    });
+    (0..20).for_each(|visit| {
+        let _ = write!(texts, "<si><t>week-{visit}</t></si>");
+    });
+    (0..1000).for_each(|note| {
+        let _ = write!(texts, "<si><t xml:space=\"preserve\">note number {note} </t></si>");
+    });
     sheet.push_str("<row r=\"1\">");
     for (text, letter) in ('A'..='H').enumerate() {
         let _ = write!(sheet, "<c r=\"{letter}1\" t=\"s\"><v>{text}</v></c>");
