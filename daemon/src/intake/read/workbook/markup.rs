@@ -76,6 +76,7 @@ impl Wrong {
 }
 
 /// How many elements lie around what an event is about, when `depth` are open.
+#[inline]
 fn around(event: &Event<'_>, depth: usize) -> Result<usize, Wrong> {
     match event {
         Event::Start(_) if depth == DEEPEST => Err(Wrong::TooDeep),
@@ -117,20 +118,22 @@ pub fn attribute_where<'t>(
 }
 
 /// Calls `take` for each attribute, by its whole name and its value as written, which are plain wherever this is used.
+#[inline]
 pub fn plain_attributes(
     tag: &BytesStart<'_>,
     mut take: impl FnMut(&str, &str) -> Result<(), String>,
 ) -> Result<(), String> {
+    const UNQUOTED: &str = "an attribute has no value in quotes";
     let mut rest = tag.attributes_raw().trim_ascii_start();
     while !rest.is_empty() {
-        let named = rest.split_once('=').map(|(name, value)| (name.trim_ascii_end(), value.trim_ascii_start()));
-        let quoted = named.and_then(|(name, value)| {
-            let quote = value.chars().next().filter(|quote| matches!(quote, '"' | '\''))?;
-            value[1..].split_once(quote).map(|(value, after)| (name, value, after))
-        });
-        let (name, value, after) = quoted.ok_or("an attribute has no value in quotes")?;
-        take(name, value)?;
-        rest = after.trim_ascii_start();
+        // Bytes, because names and values are a few characters each and this is done for every cell.
+        let equals = rest.bytes().position(|byte| byte == b'=').ok_or(UNQUOTED)?;
+        let (name, value) = (rest[..equals].trim_ascii_end(), rest[equals + 1..].trim_ascii_start());
+        let quote = value.bytes().next().filter(|quote| matches!(quote, b'"' | b'\'')).ok_or(UNQUOTED)?;
+        let value = &value[1..];
+        let end = value.bytes().position(|byte| byte == quote).ok_or(UNQUOTED)?;
+        take(name, &value[..end])?;
+        rest = value[end + 1..].trim_ascii_start();
     }
     Ok(())
 }

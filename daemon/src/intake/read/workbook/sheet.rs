@@ -151,6 +151,8 @@ struct At {
     passed: usize,
     had_rows: bool,
     row: u64,
+    /// The row's number as the sheet writes it.
+    written: String,
     /// The column after the last cell.
     column: u32,
     cell: Open,
@@ -168,6 +170,7 @@ impl Sheet {
             passed: 0,
             had_rows: false,
             row: 0,
+            written: String::new(),
             column: 0,
             cell,
             rich: Rich::default(),
@@ -271,9 +274,16 @@ impl At {
 
     fn start_row(&mut self, tag: &BytesStart<'_>, row: &mut SheetRow) -> Result<(), String> {
         let mut number = None;
-        plain_attributes(tag, |name, value| match name {
-            "r" if number.replace(row_number(value)?).is_some() => Err("a row has two numbers".to_owned()),
-            _ => Ok(()),
+        self.written.clear();
+        plain_attributes(tag, |name, value| {
+            if name != "r" {
+                return Ok(());
+            }
+            self.written.push_str(value);
+            match number.replace(row_number(value)?) {
+                Some(_) => Err("a row has two numbers".to_owned()),
+                None => Ok(()),
+            }
         })?;
         let number = number.unwrap_or(self.row + 1);
         if number <= self.row || number > MOST_ROWS {
@@ -315,7 +325,9 @@ impl At {
         let wrong = || format!("a cell names itself \"{}\"", excerpt(name));
         let letters = name.bytes().take_while(u8::is_ascii_alphabetic).count();
         let (letters, digits) = name.split_at(letters);
-        if letters.is_empty() || letters.len() > 3 || row_number(digits) != Ok(self.row) {
+        // Nearly always it is written as the row has it.
+        let here = !digits.is_empty() && digits == self.written || row_number(digits) == Ok(self.row);
+        if letters.is_empty() || letters.len() > 3 || !here {
             return Err(wrong());
         }
         let value = |letter: u8| u32::from(letter.to_ascii_uppercase() - b'A') + 1;
