@@ -282,6 +282,7 @@ pub struct Stream {
 }
 
 impl BufRead for Stream {
+    #[inline]
     fn fill_buf(&mut self) -> io::Result<&[u8]> {
         if self.at == self.block.len() && !self.ended {
             // A thread that went without a last block has failed: that is no end.
@@ -292,6 +293,7 @@ impl BufRead for Stream {
         Ok(&self.block[self.at..])
     }
 
+    #[inline]
     fn consume(&mut self, count: usize) {
         self.at = self.block.len().min(self.at + count);
     }
