@@ -283,8 +283,10 @@ fn hold_text(hold: &HoldRow, width: usize) -> String {
     let row = hold.row.as_deref().map(str::trim_end).filter(|row| !row.is_empty());
     lines.extend(row.map(|row| format!("  as exported: {}", clip(row, ROW))));
     let options = options(hold.reason, &hold.likely);
-    let answers = if options.is_empty() { hold.reason.answers().to_owned() } else { options.join(", or ") };
-    lines.push(format!("  answers: {answers}"));
+    lines.push(match options.as_slice() {
+        [] => "  settled by a mended plan, or by exporting the file again".to_owned(),
+        options => format!("  answers: {}", options.join(", or ")),
+    });
     let wrapped: Vec<String> = lines.iter().map(|line| wrap(line, width, "    ")).collect();
     wrapped.join("\n")
 }
