@@ -540,12 +540,12 @@ impl<'r> View<'r> {
         Ok(values)
     }
 
-    /// All terms by their number.
+    /// All terms by their number; the empty text is number 0.
     pub fn terms(&self) -> Result<HashMap<i64, String>> {
         let rows = self.records.query_all("SELECT id, text FROM term", [], "reading terms", |row| {
             Ok((row.get::<_, i64>(0)?, row.get::<_, String>(1)?))
         })?;
-        Ok(rows.into_iter().collect())
+        Ok(std::iter::once((0, String::new())).chain(rows).collect())
     }
 
     /// Readings, all or those of one subject, measure or session, in the order of filing.

@@ -361,7 +361,11 @@ impl<'a> Lines<'a> {
 /// The part of a line that is read: without a form feed (or a mark left over from joining files) at its beginning
 /// and, on the last line, without the end marks of old disk formats (Ctrl-Z).
 pub fn readable(text: &str, ending: LineEnd) -> (usize, usize) {
-    let start = text.len() - text.trim_start_matches(['\u{c}', '\u{feff}']).len();
+    let start = match text.as_bytes().first() {
+        Some(b'\x0c' | 0xEF) => text.len() - text.trim_start_matches(['\u{c}', '\u{feff}']).len(),
+        // No other character is meant.
+        _ => 0,
+    };
     let end = match ending {
         LineEnd::Missing => text.trim_end_matches('\u{1a}').len(),
         _ => text.len(),
@@ -453,7 +457,7 @@ fn settle(encoding: Encoding, bytes: &dyn Bytes) -> Result<Settled, FileFault> {
 }
 
 /// The encoding that a byte-order mark names, and the mark's length.
-fn byte_order_mark(bytes: &dyn Bytes) -> Result<Option<(&'static encoding_rs::Encoding, usize)>, FileFault> {
+pub fn byte_order_mark(bytes: &dyn Bytes) -> Result<Option<(&'static encoding_rs::Encoding, usize)>, FileFault> {
     let mut head = Vec::with_capacity(3);
     bytes.open()?.take(3).read_to_end(&mut head)?;
     Ok(encoding_rs::Encoding::for_bom(&head))
@@ -526,7 +530,7 @@ fn line_of(bytes: &dyn Bytes, offset: u64) -> Result<u64, FileFault> {
 }
 
 /// Reads what there is; 0 at the end.
-fn read_some(stream: &mut dyn Read, into: &mut [u8]) -> io::Result<usize> {
+pub fn read_some(stream: &mut dyn Read, into: &mut [u8]) -> io::Result<usize> {
     loop {
         match stream.read(into) {
             Err(fault) if fault.kind() == io::ErrorKind::Interrupted => {}

@@ -115,10 +115,12 @@ impl<F: Feed> Scan<F> {
         }
     }
 
-    /// Stands before the first character of a text of its own, on the line `line` and at the byte `offset`.
+    /// Stands before the first character of a text of its own, on the line `line` and at the byte `offset`. Such a text
+    /// is all there is, and none of it is forgotten.
     pub fn set(&mut self, text: &str, line: u64, offset: u64) {
         self.text.clear();
         self.text.push_str(text);
+        self.drained = true;
         self.begins = (line, offset);
         self.rewind();
     }
@@ -179,7 +181,7 @@ impl<F: Feed> Scan<F> {
 
     fn too_large(&self) -> FileFault {
         FileFault::TooLarge(format!(
-            "what ends on line {} or later is one row, key or text of more than {} MiB",
+            "near line {}: one row, key or text takes more than {} MiB; does \"rows\" in the plan name the right place?",
             self.place.line,
             LARGEST >> 20
         ))
