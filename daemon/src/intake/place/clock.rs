@@ -36,6 +36,19 @@ pub fn in_zone(zone: Tz, local: NaiveDateTime) -> Local {
     }
 }
 
+/// What a local time that does not exist may have been: by a clock that was not put forward yet, and by one that had
+/// been put forward before its time.
+pub fn around_gap(zone: Tz, local: NaiveDateTime) -> [Option<DateTime<Utc>>; 2] {
+    let day = TimeDelta::days(1);
+    // The offsets of the day before and of the day after are those on both sides of the gap.
+    let offset = |aside: Option<NaiveDateTime>| {
+        let there = zone.from_local_datetime(&aside?).earliest()?;
+        Some(there.naive_local() - there.naive_utc())
+    };
+    let by = |offset: Option<TimeDelta>| Some(local.checked_sub_signed(offset?)?.and_utc());
+    [by(offset(local.checked_sub_signed(day))), by(offset(local.checked_add_signed(day)))]
+}
+
 /// The error of the instrument's clock on a day of that clock: the last entry not after it.
 pub fn error_on(instrument: &Instrument, day: NaiveDate) -> TimeDelta {
     let entry = instrument.clock.iter().rev().find(|ClockError { from, .. }| *from <= day);

@@ -114,10 +114,10 @@ impl Package {
         // The archive begins where the file does: else the end of another archive, stored inside one that was cut
         // off there, would be read in its place.
         let config = Config { archive_offset: ArchiveOffset::Known(0) };
-        let archive = ZipArchive::with_config(config, Cursor::new(Shared(Arc::new(file)))).map_err(|error| {
-            FileFault::Unreadable(format!(
-                "the workbook is damaged or was cut off: it has no sound directory ({error})"
-            ))
+        let archive = ZipArchive::with_config(config, Cursor::new(Shared(Arc::new(file)))).map_err(|_| {
+            FileFault::Unreadable(
+                "the workbook is damaged or was cut off: its end is not that of a workbook".to_owned(),
+            )
         })?;
         let parts = names(&archive)?;
         Ok(Self { archive, parts, limits, left: limits.inflated })
