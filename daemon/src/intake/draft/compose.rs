@@ -1,0 +1,460 @@
+//! Composing: the questions asked in their order, and the lines written in theirs.
+
+use std::collections::BTreeSet;
+
+use revisant_schema::plan::{Encoding, Format, Header, Measure, Plan, Sheet};
+
+use super::grid::{self, Grid, Layout};
+use super::labels;
+use super::lines::{BLANK, Line, Mark, Notes, literal, quote, some};
+use super::numbers::{self, Marks, Settled};
+use super::place::{self, Against, Taken};
+use super::rest::{self, Keys};
+use super::values::{self, Entry, Hints, Numeric};
+use super::words;
+use super::{Asked, Draft, DraftFault, Misfit, Remark, preview, text, units};
+
+/// The samples under one layout.
+struct Laid {
+    layout: Layout,
+    grid: Grid,
+    misfits: Vec<Misfit>,
+    notes: Vec<Line>,
+}
+
+/// Drafts an instrument.
+pub fn compose(asked: &Asked<'_>) -> Result<Draft, DraftFault> {
+    let laid = lay_out(asked)?;
+    let found = Found::look(asked, &laid.grid);
+    let lines = Written::of(asked, &laid, &found);
+    Ok(lines.finish(asked, laid, &found))
+}
+
+fn lay_out(asked: &Asked<'_>) -> Result<Laid, DraftFault> {
+    let unreadable = |refused: &[(usize, String)]| {
+        let why = refused.first().map_or("no table is found in them".to_owned(), |(_, why)| why.clone());
+        DraftFault::Unreadable(why)
+    };
+    let found = text::delimited(asked.samples).ok_or_else(|| unreadable(&[]))?;
+    let (grid, refused) = grid::read_all(&found.layout, asked.samples, &found.columns);
+    let all: Vec<(usize, String)> = found.refused.into_iter().chain(refused).collect();
+    if grid.samples.is_empty() {
+        return Err(unreadable(&all));
+    }
+    let misfit = |(at, why): (usize, String)| {
+        Some(Misfit { sample: asked.samples.get(at)?.shown.clone(), why })
+    };
+    let mut notes = vec![];
+    if found.supposed {
+        notes.push(Line::remark("encoding", "the bytes are no UTF-8; Windows-1252 is the commonest other encoding"));
+    }
+    if !found.other_delimiter.is_empty() {
+        let names = found.other_delimiter.iter().filter_map(|at| asked.samples.get(*at)).map(|it| it.shown.as_str());
+        notes.push(Line::remark("delimiter", format!("another one seems likelier in {}", some(names))));
+    }
+    Ok(Laid { layout: found.layout, grid, misfits: all.into_iter().filter_map(misfit).collect(), notes })
+}
+
+/// What each question came to.
+struct Found {
+    subject: Taken,
+    taken_at: Taken,
+    visit: Option<Line>,
+    replicate: Option<Line>,
+    operator: Option<Line>,
+    entries: Vec<Entry>,
+    marks: Settled,
+    ignore: Vec<(String, Mark)>,
+    left: Vec<String>,
+    missing: (Vec<String>, Vec<String>, Vec<String>),
+    grows: Option<(String, String)>,
+    visit_column: Option<usize>,
+}
+
+impl Found {
+    fn look(asked: &Asked<'_>, all: &Grid) -> Self {
+        let against = Against { plan: asked.plan, roster: asked.roster, now: asked.now };
+        let subject = place::subject(all, asked.samples, against);
+        // Rows of controls and totals say nothing about where a subject's readings stand.
+        let of_subjects = |row: &grid::GridRow| against.plan.is_none() || against.is_subject(&subject.spot.text(row));
+        let subjects = all.only(of_subjects);
+        let rows = if subjects.rows.is_empty() { all } else { &subjects };
+        let mut used: BTreeSet<usize> = subject.spot.columns().iter().copied().collect();
+        let taken_at = place::taken_at(rows, &|at| !used.contains(&at), against);
+        used.extend(taken_at.spot.columns());
+        let marks = marks(rows, &used);
+        let mut found = Self {
+            subject,
+            taken_at,
+            visit: None,
+            replicate: None,
+            operator: None,
+            entries: vec![],
+            marks,
+            ignore: vec![],
+            left: vec![],
+            missing: Default::default(),
+            grows: rest::grows(all, asked.samples),
+            visit_column: None,
+        };
+        match asked.plan {
+            Some(plan) => found.with_plan(asked, all, rows, plan, &mut used),
+            None => found.without_plan(rows, &mut used),
+        }
+        let columns: Vec<usize> = found.entries.iter().map(|it| it.column).collect();
+        found.missing = rest::missing(rows, &columns);
+        found
+    }
+
+    fn with_plan(&mut self, asked: &Asked<'_>, all: &Grid, rows: &Grid, plan: &Plan, used: &mut BTreeSet<usize>) {
+        let long = long_column(rows, plan, used);
+        used.extend(long.as_ref().map(|(column, _)| *column));
+        let unit = unit_column(rows, used);
+        used.extend(unit.as_ref().map(|it| it.column));
+        let levels = values::level_columns(rows, plan, &|at| !used.contains(&at));
+        used.extend(levels.iter().map(|it| it.column));
+        let visit = rest::visit(rows, &|at| !used.contains(&at), plan);
+        if let Some(visit) = visit {
+            used.extend(visit.column);
+            self.visit_column = visit.column;
+            self.visit = Some(visit.line);
+        } else {
+            self.visit = rest::visit_elsewhere(rows, asked.samples, plan);
+        }
+        let telling: Vec<usize> =
+            long.iter().map(|(column, _)| *column).chain(levels.iter().map(|it| it.column)).chain(self.visit_column).collect();
+        let expected = plan.measures.iter().map(|it| it.replicates).max().unwrap_or(1);
+        let (subject, taken_at) = (self.subject.spot.clone(), self.taken_at.spot.clone());
+        let session = move |row: &grid::GridRow| rest::session_key(row, &subject, &taken_at);
+        let keys = Keys { session: &session, columns: &telling, expected };
+        if let Some(replicate) = rest::replicate(rows, &|at| !used.contains(&at), &keys) {
+            used.extend(replicate.column);
+            self.replicate = Some(replicate.line);
+        }
+        let numeric = values::numeric(rows, &|at| !used.contains(&at), self.marks.marks);
+        let surroundings = surroundings(asked);
+        self.entries = match &long {
+            Some((column, meeting)) => long_entries(rows, plan, (*column, meeting), &numeric, unit.as_ref(), &levels),
+            None => wide_entries(rows, plan, &numeric, unit.as_ref(), &levels, &surroundings),
+        };
+        used.extend(self.entries.iter().map(|it| it.column));
+        if let Some(operator) = rest::operator(rows, &|at| !used.contains(&at)) {
+            used.extend(operator.column);
+            self.operator = Some(operator.line);
+        }
+        // Here all rows count: a control's rows are told by what they hold.
+        let last = rest::unaccounted(all, &|at| !used.contains(&at), &keys, self.visit.is_some());
+        (self.ignore, self.left) = (last.ignore, last.left);
+    }
+
+    fn without_plan(&mut self, rows: &Grid, used: &mut BTreeSet<usize>) {
+        let numeric = values::numeric(rows, &|at| !used.contains(&at), self.marks.marks);
+        self.entries =
+            numeric.iter().filter(|it| !it.is_small).map(|it| values::unknown_entry(rows, it)).collect();
+        used.extend(self.entries.iter().map(|it| it.column));
+        if self.entries.is_empty() {
+            self.entries = numeric.iter().map(|it| values::unknown_entry(rows, it)).collect();
+        }
+        if let Some(operator) = rest::operator(rows, &|at| !used.contains(&at)) {
+            used.extend(operator.column);
+            self.operator = Some(operator.line);
+        }
+        let rest = (0..rows.columns.len()).filter(|at| !used.contains(at) && !rows.distinct(*at).is_empty());
+        self.left = rest.filter_map(|at| rows.columns.get(at)).cloned().collect();
+    }
+}
+
+/// The marks of all texts that are like numbers and no part of a stamp or code.
+fn marks(rows: &Grid, used: &BTreeSet<usize>) -> Settled {
+    let free = (0..rows.columns.len()).filter(|at| !used.contains(at));
+    let columns: Vec<usize> = free
+        .filter(|at| {
+            let texts = rows.distinct(*at);
+            let like = texts.iter().filter(|(text, _)| numbers::is_like_a_number(text)).count();
+            like * 2 > texts.len()
+        })
+        .collect();
+    let texts = rows.rows.iter().flat_map(|row| columns.iter().filter_map(|at| row.cells.get(*at)));
+    numbers::settle(
+        texts.filter(|cell| !cell.number && numbers::is_like_a_number(&cell.text)).map(|cell| cell.text.as_str()),
+    )
+}
+
+/// The column that names each row's measure.
+fn long_column(rows: &Grid, plan: &Plan, used: &BTreeSet<usize>) -> Option<(usize, labels::Meeting)> {
+    let known = values::known_measures(plan);
+    let free = |at: usize| !used.contains(&at);
+    let mut met = labels::meeting_columns(rows, &free, &known, 0.3);
+    if met.len() == 1 {
+        return met.pop();
+    }
+    None
+}
+
+fn unit_column(rows: &Grid, used: &BTreeSet<usize>) -> Option<values::UnitColumn> {
+    let mut found = (0..rows.columns.len()).filter(|at| !used.contains(at)).filter(|at| {
+        rows.columns.get(*at).is_some_and(|name| units::are_units(&rows.distinct(*at), name))
+    });
+    match (found.next(), found.next()) {
+        (Some(one), None) => Some(values::unit_column(rows, one)),
+        _ => None,
+    }
+}
+
+/// Words of file names, folders and the instrument's own name.
+fn surroundings(asked: &Asked<'_>) -> Vec<String> {
+    let names = asked.samples.iter().flat_map(|it| [it.file_name.as_str(), it.folder.as_str()]);
+    names.chain([asked.code, asked.folder]).flat_map(words::words).collect()
+}
+
+fn long_entries(
+    rows: &Grid,
+    plan: &Plan,
+    named: (usize, &labels::Meeting),
+    numeric: &[Numeric],
+    unit: Option<&values::UnitColumn>,
+    levels: &[values::LevelColumn],
+) -> Vec<Entry> {
+    let called: Vec<&Numeric> = numeric
+        .iter()
+        .filter(|it| rows.columns.get(it.column).is_some_and(|name| words::VALUE.names(name)))
+        .collect();
+    let able: Vec<&Numeric> = numeric.iter().filter(|it| !it.is_small).collect();
+    let one = match (called.as_slice(), able.as_slice(), numeric) {
+        ([one], _, _) | ([], [one], _) => Some(*one),
+        ([], [], [one]) => Some(one),
+        _ => None,
+    };
+    match one {
+        Some(one) => vec![values::long_entry(rows, plan, named, one, unit, levels)],
+        None => vec![no_value("which column holds the values of the measures that stand in a column?")],
+    }
+}
+
+/// An entry that a person must write.
+fn no_value(what: &str) -> Entry {
+    let lines = vec![Line::gap("measure", &quote(BLANK), what), Line::sure("column", &quote(BLANK))];
+    Entry { lines, column: usize::MAX, measure: None }
+}
+
+fn wide_entries(
+    rows: &Grid,
+    plan: &Plan,
+    numeric: &[Numeric],
+    unit: Option<&values::UnitColumn>,
+    levels: &[values::LevelColumn],
+    surroundings: &[String],
+) -> Vec<Entry> {
+    let conditions_found = |at: usize| {
+        plan.measures.get(at).is_some_and(|measure| {
+            !measure.conditions.is_empty()
+                && measure.conditions.iter().all(|factor| levels.iter().any(|it| it.factor == factor.code))
+        })
+    };
+    let hints = Hints { conditions_found: &conditions_found, surroundings };
+    let matched = values::match_columns(rows, plan, numeric, &hints);
+    // One column of units beside several values says of which of them only when there is one.
+    let unit = unit.filter(|_| matched.len() == 1);
+    let mut entries: Vec<Entry> = matched
+        .iter()
+        .filter_map(|it| Some(values::wide_entry(rows, plan, numeric.get(it.index)?, it, unit, levels)))
+        .collect();
+    if entries.is_empty() {
+        return vec![no_value("no column is told to hold a measure of the plan")];
+    }
+    same_place(plan, &mut entries);
+    entries
+}
+
+/// Several columns of one measure and condition are replicates, when the plan expects so many.
+fn same_place(plan: &Plan, entries: &mut [Entry]) {
+    let key = |entry: &Entry| {
+        let condition = entry.lines.iter().find(|line| line.key == "condition").map(|line| line.text.clone());
+        entry.measure.map(|measure| (measure, condition))
+    };
+    let keys: Vec<_> = entries.iter().map(key).collect();
+    for (index, entry) in entries.iter_mut().enumerate() {
+        let Some(Some((measure, _))) = keys.get(index) else { continue };
+        let count = keys.iter().filter(|other| Some(*other) == keys.get(index)).count();
+        let expected = plan.measures.get(*measure).map_or(1, |it: &Measure| it.replicates as usize);
+        let Some(line) = entry.lines.first_mut() else { continue };
+        if count > expected {
+            line.mark = Mark::Gap(format!(
+                "{count} columns are taken for this measure, the plan expects {expected}: take out those that are not meant"
+            ));
+        } else if count > 1 && line.mark == Mark::Sure {
+            line.mark = Mark::Unsure(format!("{count} columns are replicates in this order"));
+        }
+    }
+}
+
+/// The lines of the draft, table by table.
+struct Written {
+    instrument: Vec<Line>,
+    reader: Vec<Line>,
+    ignore: Vec<(String, Mark)>,
+}
+
+impl Written {
+    fn of(asked: &Asked<'_>, laid: &Laid, found: &Found) -> Self {
+        let mut reader = format_lines(laid);
+        reader.extend(mark_lines(&laid.layout, &found.marks));
+        reader.extend(layout_lines(&laid.layout));
+        reader.push(missing_line(found));
+        reader.push(found.subject.line.clone());
+        reader.push(found.taken_at.line.clone());
+        match &found.visit {
+            Some(line) => reader.push(line.clone()),
+            None => reader.push(Line::remark("visit", "no labels of visits are found; the date decides")),
+        }
+        reader.extend(found.replicate.clone());
+        reader.extend(found.operator.clone());
+        if !found.left.is_empty() {
+            let names = found.left.iter().map(|name| quote(name)).collect::<Vec<_>>().join(", ");
+            reader.push(Line::remark("columns", format!("these columns are not read: {names}")));
+        }
+        Self { instrument: instrument_lines(asked, found), reader, ignore: found.ignore.clone() }
+    }
+
+    fn finish(self, asked: &Asked<'_>, laid: Laid, found: &Found) -> Draft {
+        let mut toml = String::from("[[instrument]]\n");
+        self.instrument.iter().for_each(|line| line.write(&mut toml));
+        toml.push_str("\n[instrument.reader]\n");
+        self.reader.iter().for_each(|line| line.write(&mut toml));
+        write_ignore(&self.ignore, &mut toml);
+        for entry in &found.entries {
+            toml.push_str("\n[[instrument.reader.value]]\n");
+            entry.lines.iter().for_each(|line| line.write(&mut toml));
+        }
+        let rules: Vec<Line> = self
+            .ignore
+            .iter()
+            .map(|(rule, mark)| Line { key: "ignore".into(), text: rule.clone(), mark: mark.clone() })
+            .collect();
+        let lines = || self.instrument.iter().chain(&self.reader).chain(&rules).chain(found.entries.iter().flat_map(|it| &it.lines));
+        let remark = |line: &Line, text: &str| Remark { key: line.key.clone(), text: text.to_owned() };
+        let gaps: Vec<Remark> = lines()
+            .filter_map(|line| if let Mark::Gap(text) = &line.mark { Some(remark(line, text)) } else { None })
+            .collect();
+        let unsure = lines()
+            .filter_map(|line| if let Mark::Unsure(text) = &line.mark { Some(remark(line, text)) } else { None })
+            .collect();
+        let spots = preview::Spots {
+            subject: &found.subject.spot,
+            taken_at: &found.taken_at.spot,
+            visit: found.visit_column,
+            values: found.entries.iter().map(|it| (it.column, it.measure)).collect(),
+        };
+        let preview = preview::preview(asked, &toml, gaps.is_empty(), &laid.grid, &spots);
+        Draft { toml, gaps, unsure, misfits: laid.misfits, preview }
+    }
+}
+
+fn write_ignore(rules: &[(String, Mark)], toml: &mut String) {
+    if rules.is_empty() {
+        return;
+    }
+    toml.push_str("ignore = [\n");
+    for (rule, mark) in rules {
+        Line { key: "ignore".into(), text: format!("    {rule},"), mark: mark.clone() }.write(toml);
+    }
+    toml.push_str("]\n");
+}
+
+fn instrument_lines(asked: &Asked<'_>, found: &Found) -> Vec<Line> {
+    let mut lines = vec![Line::sure("code", &quote(asked.code)), Line::sure("folder", &quote(asked.folder))];
+    let mut endings: Vec<&str> = asked
+        .samples
+        .iter()
+        .map(|it| it.file_name.rsplit_once('.').map_or("", |(_, ending)| ending))
+        .collect();
+    endings.sort_unstable();
+    endings.dedup();
+    match endings.as_slice() {
+        [one] if !one.is_empty() => lines.push(Line::sure("files", &quote(&format!("*.{one}")))),
+        _ => {}
+    }
+    if let Some((small, large)) = &found.grows {
+        let why = format!("{large} holds the rows of {small} again, and more");
+        lines.push(Line::unsure("re_export", "\"grows\"", why));
+    }
+    lines
+}
+
+fn format_lines(laid: &Laid) -> Vec<Line> {
+    let layout = &laid.layout;
+    let mut lines = vec![Line::sure("format", &quote(layout.format.name()))];
+    let noted = |key: &str, value: String| {
+        let note = laid.notes.iter().find(|line| line.key == key);
+        match note.map(|line| line.mark.clone()) {
+            Some(mark) => Line { mark, ..Line::sure(key, &value) },
+            None => Line::sure(key, &value),
+        }
+    };
+    if let Encoding::Label(encoding) = layout.encoding {
+        lines.push(noted("encoding", quote(&encoding.name().to_lowercase())));
+    }
+    match &layout.format {
+        Format::Delimited { delimiter: Some(delimiter) } => {
+            lines.push(noted("delimiter", quote(&char::from(*delimiter).to_string())));
+        }
+        Format::Workbook { sheet: Sheet::Named(name) } => lines.push(noted("sheet", quote(name))),
+        Format::Workbook { sheet: Sheet::Number(number) } => lines.push(noted("sheet", number.to_string())),
+        Format::Json { rows } | Format::Xml { rows } => lines.push(noted("rows", quote(rows))),
+        Format::JsonLines { rows } if !rows.is_empty() => lines.push(noted("rows", quote(rows))),
+        _ => {}
+    }
+    lines
+}
+
+fn mark_lines(layout: &Layout, settled: &Settled) -> Vec<Line> {
+    if matches!(layout.format, Format::Json { .. } | Format::JsonLines { .. } | Format::Workbook { .. }) && settled.open.is_none() && settled.marks.decimal == '.' {
+        return vec![];
+    }
+    let Marks { decimal, group } = settled.marks;
+    let mut notes = Notes::default();
+    if let Some((text, count)) = &settled.against {
+        notes.doubt(format!("{count} numbers such as \"{text}\" do not fit, and will be held"));
+    }
+    let mut lines = vec![];
+    if let Some(open) = &settled.open {
+        notes.gap(format!("\".\" or \",\": \"{open}\" may be about one or about a thousand; name the other as group_mark if it is one"));
+        lines.push(Line::with("decimal_mark", &quote(BLANK), &notes));
+        return lines;
+    }
+    if decimal != '.' || !notes.doubts.is_empty() {
+        lines.push(Line::with("decimal_mark", &quote(&decimal.to_string()), &notes));
+    }
+    lines.extend(group.map(|group| Line::sure("group_mark", &quote(&group.to_string()))));
+    lines
+}
+
+fn layout_lines(layout: &Layout) -> Vec<Line> {
+    let mut lines = vec![];
+    match &layout.header {
+        _ if matches!(layout.format, Format::Json { .. } | Format::JsonLines { .. } | Format::Xml { .. }) => {}
+        Header::Row { row, .. } => lines.push(Line::sure("header", &format!("{{ row = {row} }}"))),
+        Header::StartsWith(start) => lines.push(Line::sure("header", &format!("{{ starts_with = {} }}", quote(start)))),
+        Header::None => lines.push(Line::unsure("header", "{ none = true }", "the first line looks like data")),
+    }
+    if layout.units_row {
+        lines.push(Line::sure("units_row", "true"));
+    }
+    if let Some(stop) = &layout.stop_at {
+        lines.push(Line::unsure("stop_at", &literal(stop), "the samples that end so end with it"));
+    }
+    lines
+}
+
+fn missing_line(found: &Found) -> Line {
+    let (known, supposed, held) = &found.missing;
+    let texts: Vec<String> = std::iter::once("").chain(known.iter().chain(supposed).map(String::as_str)).map(quote).collect();
+    let mut notes = Notes::default();
+    if !supposed.is_empty() {
+        notes.doubt(format!("{} taken for no value", some(supposed.iter().map(String::as_str))));
+    }
+    if !held.is_empty() {
+        notes.doubt(format!("{} will be held as unreadable-value", some(held.iter().map(String::as_str))));
+    }
+    Line::with("missing", &format!("[{}]", texts.join(", ")), &notes)
+}
