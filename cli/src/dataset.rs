@@ -6,12 +6,12 @@
 
 use std::collections::{BTreeMap, HashMap};
 
-use chrono::{DateTime, NaiveDate, Utc};
+use chrono::NaiveDate;
 use revisant_schema::completeness::chosen_session;
 use revisant_schema::plan::{Analysis, Measure, OffWindow, Summary, VisitIx};
-use revisant_schema::reading::{Condition, ReadingState};
+use revisant_schema::reading::Condition;
 use revisant_schema::records::View;
-use revisant_schema::records::view::{AccountedRow, ReadingFilter, ReadingRow};
+use revisant_schema::records::view::{AccountedRow, ValueRow};
 use revisant_schema::session::Course;
 use serde::Serialize;
 
@@ -186,19 +186,12 @@ impl Dataset {
     /// that standing.
     pub fn build(view: &View<'_>, basis: &Basis, analysis: &Analysis, today: NaiveDate) -> Result<Self, Failure> {
         let measure = &basis.plan.measures[analysis.measure];
-        let filter = ReadingFilter { measure: Some(measure.code.clone()), ..ReadingFilter::default() };
-        let readings = by_session(basis, view.readings(&filter)?);
+        let readings = Readings::of(view.values(&measure.code)?);
         let accounted = view.accounted()?;
-        let mut builder = Builder {
-            basis,
-            analysis,
-            measure,
-            readings,
-            accounted,
-            today,
-            factor: factor(basis, analysis),
-            care: Care::default(),
-        };
+        let factor = factor(basis, analysis);
+        let conditions = conditions(view, measure, &factor)?;
+        let mut builder =
+            Builder { basis, analysis, measure, readings, accounted, today, factor, conditions, care: Care::default() };
         let subjects: Vec<&String> = basis.roster.subjects.keys().collect();
         let rows = subjects.into_iter().map(|subject| builder.row(subject)).collect();
         let positions = (builder.factor.code == VISIT).then(|| positions(basis, &analysis.visits));
@@ -256,34 +249,56 @@ fn positions(basis: &Basis, visits: &[VisitIx]) -> Vec<f64> {
     visits.iter().filter_map(|visit| days.get(*visit)).map(|day| *day as f64).collect()
 }
 
-/// A reading as far as a cell needs it.
-#[derive(Debug, Clone)]
-struct Value {
-    number: f64,
-    moment: Option<DateTime<Utc>>,
-    replicate: u32,
-    instrument: String,
-    limit: bool,
+/// Current readings, those of one session and condition side by side.
+struct Readings {
+    values: Vec<ValueRow>,
+    /// Where each session's begin and end.
+    sessions: HashMap<i64, (usize, usize)>,
 }
 
-/// Current readings by session (the number that a visit's sessions of one day share), then by condition.
-type Readings = HashMap<i64, BTreeMap<Condition, Vec<Value>>>;
-
-fn by_session(basis: &Basis, rows: Vec<ReadingRow>) -> Readings {
-    let mut readings = Readings::new();
-    for row in rows {
-        let (Some(number), ReadingState::Current) = (row.number, row.state) else { continue };
-        let session = basis.place(&row.session).session;
-        let value = Value {
-            number,
-            moment: row.moment,
-            replicate: row.replicate,
-            instrument: row.instrument,
-            limit: row.mark.is_some(),
-        };
-        readings.entry(session).or_default().entry(row.condition).or_default().push(value);
+impl Readings {
+    /// From values ordered by session and condition.
+    fn of(values: Vec<ValueRow>) -> Self {
+        let mut sessions = HashMap::new();
+        let mut from = 0;
+        for same in values.chunk_by(|one, other| one.session == other.session) {
+            sessions.extend(same.first().map(|value| (value.session, (from, from + same.len()))));
+            from += same.len();
+        }
+        Self { values, sessions }
     }
-    readings
+
+    /// Those of one session of the records and one condition.
+    fn of_cell(&self, session: i64, condition: i64) -> impl Iterator<Item = ValueRow> {
+        let (from, to) = self.sessions.get(&session).copied().unwrap_or_default();
+        let held = self.values.get(from..to).unwrap_or_default();
+        held.iter().filter(move |value| value.condition == condition).copied()
+    }
+}
+
+/// One condition that takes part in a level: itself, and the term that it is in the records (`None`: it has never been
+/// filed).
+struct Part {
+    condition: Condition,
+    term: Option<i64>,
+}
+
+/// By level of the factor: the conditions that make it up. For visits there is one entry for all.
+fn conditions(view: &View<'_>, measure: &Measure, factor: &Factor) -> Result<Vec<Vec<Part>>, Failure> {
+    let terms: HashMap<String, i64> = view.terms()?.into_iter().map(|(term, text)| (text, term)).collect();
+    let all: Vec<Condition> = measure.cells().into_iter().map(|cell| Condition::of_cell(measure, &cell)).collect();
+    let of_level = |level: Option<&String>| {
+        let holds = |condition: &&Condition| level.is_none_or(|level| condition.0.get(&factor.code) == Some(level));
+        let part = |condition: &Condition| Part {
+            condition: condition.clone(),
+            term: terms.get(&condition.to_string()).copied(),
+        };
+        all.iter().filter(holds).map(part).collect()
+    };
+    Ok(match factor.code.as_str() {
+        VISIT => vec![of_level(None)],
+        _ => factor.levels.iter().map(|level| of_level(Some(level))).collect(),
+    })
 }
 
 struct Builder<'b> {
@@ -294,6 +309,7 @@ struct Builder<'b> {
     accounted: Vec<AccountedRow>,
     today: NaiveDate,
     factor: Factor,
+    conditions: Vec<Vec<Part>>,
     care: Care,
 }
 
@@ -302,12 +318,11 @@ impl Builder<'_> {
         let nobody = Course::default();
         let basis = self.basis;
         let course = basis.courses.by_subject.get(subject).unwrap_or(&nobody);
-        let visits: Vec<(VisitIx, Option<String>)> = match self.factor.code.as_str() {
-            VISIT => self.analysis.visits.iter().map(|visit| (*visit, None)).collect(),
+        let visits: Vec<(VisitIx, usize)> = match self.factor.code.as_str() {
+            VISIT => self.analysis.visits.iter().map(|visit| (*visit, 0)).collect(),
             _ => {
-                let levels = self.factor.levels.iter().cloned().map(Some);
                 let visit = self.analysis.visits.first().copied().unwrap_or(0);
-                levels.map(|level| (visit, level)).collect()
+                (0..self.factor.levels.len()).map(|level| (visit, level)).collect()
             }
         };
         let mut any = false;
@@ -320,7 +335,7 @@ impl Builder<'_> {
                 self.note_session(subject, course, visit, session);
                 seen = Some(visit);
             }
-            cells.push(self.cell(subject, course, visit, level.as_deref(), session));
+            cells.push(self.cell(subject, course, visit, level, session));
         }
         Row { subject: subject.to_owned(), cells, any }
     }
@@ -337,7 +352,7 @@ impl Builder<'_> {
         let code = &self.basis.plan.visits[visit].code;
         let holding = course.sessions.iter().filter(|session| session.visit == Some(visit));
         let mut days: Vec<NaiveDate> = holding
-            .filter(|session| session.facts.measures.contains(&self.measure.code))
+            .filter(|session| session.facts.measures.iter().any(|code| **code == *self.measure.code))
             .map(|session| session.facts.day)
             .collect();
         days.dedup();
@@ -357,44 +372,38 @@ impl Builder<'_> {
         subject: &str,
         course: &Course,
         visit: VisitIx,
-        level: Option<&str>,
+        level: usize,
         session: Option<(NaiveDate, i64, bool)>,
     ) -> Result<f64, Empty> {
         let Some((_, session, off_window)) = session else { return Err(self.absent(subject, course, visit)) };
         if off_window && self.analysis.off_window == OffWindow::Leave {
             return Err(Empty::OffWindow);
         }
-        let conditions = self.conditions(level);
-        let mut numbers = Vec::with_capacity(conditions.len());
-        for condition in conditions {
-            numbers.push(self.one_condition(subject, visit, session, condition)?);
+        // A visit's sessions of one day share their number; each has its own in the records.
+        let same = course.sessions.iter().filter(|other| other.session == session);
+        let sessions: Vec<i64> = same.map(|other| other.facts.session).collect();
+        let mut numbers = Vec::new();
+        for part in 0..self.conditions.get(level).map_or(0, Vec::len) {
+            numbers.push(self.one_condition(subject, visit, &sessions, (level, part))?);
         }
         Ok(mean(&numbers))
-    }
-
-    /// The conditions that make up a level: all of them, or those with that level of the factor.
-    fn conditions(&self, level: Option<&str>) -> Vec<Condition> {
-        let all = self.measure.cells().into_iter().map(|cell| Condition::of_cell(self.measure, &cell));
-        let wanted = |condition: &Condition| {
-            level.is_none_or(|level| condition.0.get(&self.factor.code).is_some_and(|there| there == level))
-        };
-        all.filter(wanted).collect()
     }
 
     fn one_condition(
         &mut self,
         subject: &str,
         visit: VisitIx,
-        session: i64,
-        condition: Condition,
+        sessions: &[i64],
+        (level, part): (usize, usize),
     ) -> Result<f64, Empty> {
-        let none = vec![];
-        let values = self.readings.get(&session).and_then(|cells| cells.get(&condition)).unwrap_or(&none);
+        let Part { condition, term } = &self.conditions[level][part];
+        let held = sessions.iter().flat_map(|session| term.iter().map(move |term| (*session, *term)));
+        let values: Vec<ValueRow> = held.flat_map(|(session, term)| self.readings.of_cell(session, term)).collect();
         let planned = self.measure.replicates;
         let enough = values.len() >= self.measure.at_least.max(1) as usize;
         let (current, limits) = (values.len(), values.iter().filter(|value| value.limit).count());
         let several = values.iter().any(|value| value.instrument != values[0].instrument);
-        let number = if enough { Ok(summarise(self.measure.summary, values)) } else { Err(()) };
+        let number = if enough { Ok(summarise(self.measure.summary, &values)) } else { Err(()) };
         if current < planned as usize && current > 0 {
             let (subject, visit) = (subject.to_owned(), self.basis.plan.visits[visit].code.clone());
             let few = FewReplicates { subject, visit, condition: condition.clone(), current, planned };
@@ -439,9 +448,9 @@ impl Builder<'_> {
 }
 
 /// The one number of a cell's replicates; there is at least one.
-fn summarise(summary: Summary, values: &[Value]) -> f64 {
+fn summarise(summary: Summary, values: &[ValueRow]) -> f64 {
     let numbers: Vec<f64> = values.iter().map(|value| value.number).collect();
-    let in_order = |value: &&Value| (value.moment, value.replicate);
+    let in_order = |value: &&ValueRow| (value.moment, value.replicate);
     match summary {
         Summary::Mean => mean(&numbers),
         Summary::Median => median(numbers),
@@ -471,9 +480,9 @@ fn median(mut numbers: Vec<f64>) -> f64 {
 mod tests {
     use super::*;
 
-    fn value(number: f64, minute: Option<i64>, replicate: u32) -> Value {
-        let moment = minute.and_then(|minute| DateTime::from_timestamp(minute * 60, 0));
-        Value { number, moment, replicate, instrument: "dyn".to_owned(), limit: false }
+    fn value(number: f64, minute: Option<i64>, replicate: u32) -> ValueRow {
+        let moment = minute.map(|minute| minute * 60_000);
+        ValueRow { reading: 1, session: 1, condition: 1, instrument: 1, replicate, number, moment, limit: false }
     }
 
     #[test]

@@ -160,7 +160,7 @@ impl Basis {
     }
 
     fn place_bare(&self, session: &SessionRow) -> Option<(VisitIx, bool)> {
-        let course = self.courses.by_subject.get(&session.subject)?;
+        let course = self.courses.by_subject.get(session.subject.as_str())?;
         match session.label.as_deref() {
             Some(UNSCHEDULED) => None,
             Some(label) => {

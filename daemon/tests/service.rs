@@ -18,6 +18,9 @@ use revisant_schema::records::{ActKind, Doer, Records};
 use revisant_schema::roster;
 use revisant_schema::world::RealWorld;
 
+/// Few enough to come again soon, many enough for 300,000 rows within the replicates that a plan may allow.
+const SUBJECTS: usize = 40;
+
 const PLAN: &str = r#"
 [study]
 code = "SV-1"
@@ -63,7 +66,7 @@ impl Site {
         let mut records = Records::open_or_create(site.path(), Arc::new(RealWorld)).unwrap();
         let doer = Doer { who: "tester".into(), program: "test 0".into(), why: None };
         let rules = plan::bring_into_force(&mut records, site.path(), &doer, false).unwrap();
-        let lines: Vec<String> = (0..20).map(|at| format!("SV{at:04},2025-01-01,")).collect();
+        let lines: Vec<String> = (0..SUBJECTS).map(|at| format!("SV{at:04},2025-01-01,")).collect();
         let text = format!("subject,enrolled,withdrawn\n{}\n", lines.join("\n"));
         let changes = rules.roster.changes(&rules.plan, &text).unwrap();
         records.act(ActKind::Roster, &doer, |act| roster::write(act, &changes)).unwrap();
@@ -182,10 +185,10 @@ impl Drop for Service {
 
 fn rows(from: usize, count: usize) -> String {
     let row = |at: usize| {
-        let seconds = at / 20;
+        let seconds = at / SUBJECTS;
         let (minute, second) = (seconds / 60, seconds % 60);
         let (day, hour, minute) = (1 + minute / 1440, minute / 60 % 24, minute % 60);
-        format!("SV{:04},2025-01-{day:02}T{hour:02}:{minute:02}:{second:02},{}\n", at % 20, 50 + at % 60)
+        format!("SV{:04},2025-01-{day:02}T{hour:02}:{minute:02}:{second:02},{}\n", at % SUBJECTS, 50 + at % 60)
     };
     (from..from + count).map(row).collect()
 }
@@ -608,4 +611,61 @@ fn a_stop_is_quick_while_somebody_else_writes_and_a_second_signal_quicker() {
     site.start().stop();
     site.filed_once(10);
     site.sound();
+}
+
+/// Milliseconds from the last byte of each of `count` single files to its act on the trail, in order.
+fn latencies(site: &Site, name: &str, from: usize, count: usize) -> Vec<i64> {
+    let before = site.readings();
+    for at in 0..count {
+        fs::write(site.belt("next.part"), format!("who,at,pulse\n{}", rows(from + at, 1))).unwrap();
+        fs::rename(site.belt("next.part"), site.belt(&format!("{name}-{at}.csv"))).unwrap();
+        // Past the walk that follows every event, so that each file comes to a service at rest.
+        std::thread::sleep(Duration::from_millis(1800));
+        site.until_readings(before + at + 1);
+    }
+    let records = site.records();
+    let acts = records.view().unwrap().acts_on(ActKind::File, &format!("{name}-")).unwrap();
+    let files = (0..count).map(|at| fs::metadata(site.belt(&format!("{name}-{at}.csv"))).unwrap().modified().unwrap());
+    let mut took: Vec<i64> = files
+        .zip(&acts)
+        .map(|(written, act)| {
+            let filed = chrono::DateTime::parse_from_rfc3339(&act.1).unwrap().to_utc();
+            (filed - chrono::DateTime::<chrono::Utc>::from(written)).num_milliseconds()
+        })
+        .collect();
+    took.sort_unstable();
+    took
+}
+
+/// Processor time of a process, in hundredths of a second.
+fn ticks(service: &Service) -> u64 {
+    let stat = fs::read_to_string(format!("/proc/{}/stat", service.0.id())).unwrap();
+    stat.rsplit(')').next().unwrap().split_whitespace().skip(11).take(2).map(|it| it.parse::<u64>().unwrap()).sum()
+}
+
+#[test]
+#[ignore = "a measurement, not a check"]
+fn arrival_and_idleness() {
+    let site = Site::new();
+    let service = site.start();
+    let show = |what: &str, took: &[i64]| {
+        println!("{what}: median {} ms, worst {} ms", took[took.len() / 2], took[took.len() - 1]);
+    };
+    show("arrival to trail, few files", &latencies(&site, "few", 0, 30));
+    for folder in 0..20 {
+        fs::create_dir(site.belt(&format!("{folder}"))).unwrap();
+        for at in 0..1000 {
+            let name = site.belt(&format!("{folder}/{at}.csv"));
+            fs::write(name, format!("who,at,pulse\n{}", rows(1000 + folder * 1000 + at, 1))).unwrap();
+        }
+    }
+    let start = Instant::now();
+    site.until_readings(20_030);
+    println!("20,000 small files are filed {:?} after the last was written", start.elapsed());
+    std::thread::sleep(Duration::from_secs(5));
+    let before = ticks(&service);
+    std::thread::sleep(Duration::from_secs(120));
+    println!("idle with 20,030 files in 20 folders: {:.3} % of a processor", (ticks(&service) - before) as f64 / 120.0);
+    show("arrival to trail, 20,000 old files", &latencies(&site, "many", 50_000, 20));
+    service.stop();
 }

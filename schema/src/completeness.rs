@@ -159,7 +159,7 @@ pub fn judge(
         .iter()
         .map(|(subject, entry)| {
             let none = Course::default();
-            let course = courses.by_subject.get(subject).unwrap_or(&none);
+            let course = courses.by_subject.get(subject.as_str()).unwrap_or(&none);
             let said: Vec<&AccountedRow> = accounted.iter().filter(|row| row.subject == *subject).collect();
             judge_subject(plan, subject, entry, course, &counts, &said, today)
         })
@@ -275,7 +275,7 @@ pub fn chosen_session(plan: &Plan, course: &Course, visit: VisitIx, measure: &st
     let with_measure = course
         .sessions
         .iter()
-        .filter(|session| session.visit == Some(visit) && session.facts.measures.iter().any(|code| code == measure));
+        .filter(|session| session.visit == Some(visit) && session.facts.measures.iter().any(|code| &**code == measure));
     let day = course.choose(plan, visit, with_measure.clone().map(|session| session.facts.day))?;
     with_measure
         .into_iter()

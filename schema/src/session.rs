@@ -8,6 +8,7 @@
 //! it is the day of enrolment.
 
 use std::collections::{BTreeMap, HashMap};
+use std::sync::Arc;
 
 use chrono::NaiveDate;
 
@@ -24,13 +25,13 @@ pub struct SessionFacts {
     /// Its number in the records.
     pub session: i64,
     /// Whose.
-    pub subject: String,
+    pub subject: Arc<str>,
     /// Local day of the study centre.
     pub day: NaiveDate,
     /// The visit's label, if there was one.
-    pub label: Option<String>,
+    pub label: Option<Arc<str>>,
     /// Codes of the measures of which it holds a current reading.
-    pub measures: Vec<String>,
+    pub measures: Vec<Arc<str>>,
 }
 
 /// What a session is to the plan.
@@ -61,8 +62,8 @@ pub struct Course {
 #[derive(Debug, Clone, Default)]
 pub struct Courses {
     /// By the subject's code.
-    pub by_subject: BTreeMap<String, Course>,
-    places: HashMap<i64, (String, usize)>,
+    pub by_subject: BTreeMap<Arc<str>, Course>,
+    places: HashMap<i64, (Arc<str>, usize)>,
 }
 
 /// The earliest days that may become a subject's day 0.
@@ -208,19 +209,22 @@ impl Course {
 impl Courses {
     /// Derives every subject's course.
     pub fn derive(plan: &Plan, roster: &Roster, facts: impl IntoIterator<Item = SessionFacts>) -> Self {
-        let mut by_subject: BTreeMap<String, Vec<SessionFacts>> = BTreeMap::new();
+        let mut by_subject: HashMap<Arc<str>, Vec<SessionFacts>> = HashMap::new();
         for session in facts {
-            by_subject.entry(session.subject.clone()).or_default().push(session);
+            by_subject.entry(Arc::clone(&session.subject)).or_default().push(session);
         }
         for subject in roster.subjects.keys() {
-            by_subject.entry(subject.clone()).or_default();
+            if !by_subject.contains_key(subject.as_str()) {
+                by_subject.insert(subject.as_str().into(), vec![]);
+            }
         }
         let mut courses = Self::default();
+        courses.places.reserve(by_subject.values().map(Vec::len).sum());
         for (subject, facts) in by_subject {
-            let enrolled = roster.subjects.get(&subject).and_then(|entry| entry.enrolled);
+            let enrolled = roster.subjects.get(&*subject).and_then(|entry| entry.enrolled);
             let course = Course::derive(plan, enrolled, facts);
             for (at, session) in course.sessions.iter().enumerate() {
-                courses.places.insert(session.facts.session, (subject.clone(), at));
+                courses.places.insert(session.facts.session, (Arc::clone(&subject), at));
             }
             courses.by_subject.insert(subject, course);
         }

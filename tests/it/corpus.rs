@@ -1,4 +1,4 @@
-//! Thirteen invented studies whose truth is known: every reading, hold, state and line of completeness is compared.
+//! Twenty-one invented studies whose truth is known: every reading, hold, state and line of completeness is compared.
 
 use revisant_tests::corpus::{ask, lay_out, run, truth};
 use revisant_tests::judge::{Answers, judge};
@@ -24,6 +24,7 @@ macro_rules! studies {
 
 studies! {
     pellwarth tarrow brackwell wexlow caldrick nightjar lindrow marlecott dovermoss ostrey keldrum rivenfold thornmoss
+    oakmarl hendrake fernstow silvermeer mirefield scrapside undermill quillmere
 }
 
 /// A judge that cannot fail proves nothing: each of these falsifications of a right answer has to be noticed.

@@ -7,6 +7,7 @@
 )]
 
 mod corpus;
+mod cuts;
 mod errors;
 mod house;
 mod kills;

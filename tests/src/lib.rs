@@ -13,6 +13,7 @@ pub mod bench;
 pub mod chance;
 pub mod corpus;
 pub mod judge;
+pub mod reading;
 pub mod reference;
 pub mod site;
 pub mod small;

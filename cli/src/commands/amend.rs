@@ -110,7 +110,7 @@ fn moved(basis: &Basis, rows: &[ReadingRow], change: Change<'_>) -> Result<Vec<W
 
 /// The current readings of a session, by the number that `readings` shows.
 fn of_session(view: &View<'_>, basis: &Basis, session: i64) -> Result<Vec<ReadingRow>, Failure> {
-    let subject = basis.courses.session(session).map(|placed| placed.facts.subject.clone());
+    let subject = basis.courses.session(session).map(|placed| placed.facts.subject.to_string());
     let Some(subject) = subject else {
         let what = format!("there is no session {session} with a reading in use");
         return Err(Failure::refused(what).then("`revisant readings --json` names the session of each reading"));

@@ -22,7 +22,7 @@ use super::file::{Continued, Export, Filer, Outcome, Placing, Scope, add_hold, r
 use super::keep::{Keeping, keep};
 use super::notice::{Found, Walk, walk};
 use super::place::resolve::{Decided, Held, Resolver, RowOutcome, ValueOutcome, Whereabouts, path_facts};
-use super::read::{self, FileFault, Row};
+use super::read::{self, At, FileFault, Row};
 use super::rules::{Gathered, Rules};
 use super::{plan, replace};
 
@@ -559,10 +559,10 @@ fn continued(
         return Ok(None);
     }
     let chain = records.chain_of(last.capture)?;
-    let mut holds: HashMap<Option<i64>, Vec<HoldRow>> = HashMap::new();
+    let mut holds: HashMap<Option<At>, Vec<HoldRow>> = HashMap::new();
     for hold in records.view()?.holds(true)? {
         if chain.contains(&hold.capture) {
-            holds.entry(hold.line).or_default().push(hold);
+            holds.entry(hold.line.map(|line| At::of(line, hold.bytes))).or_default().push(hold);
         }
     }
     Ok(Some(Continued { capture: last.capture, size: last.size, read: last.read, holds }))

@@ -59,7 +59,7 @@ impl HeldBook {
     }
 
     /// Takes in a hold that was just opened, so that later exports of the same collect know it.
-    fn opened(&mut self, instrument: &str, capture: i64, hold: i64, line: u64, held: &Held, key: &RowKey) {
+    fn opened(&mut self, instrument: &str, capture: i64, hold: i64, row: &Row, held: &Held, key: &RowKey) {
         self.add(HoldRow {
             hold,
             act: 0,
@@ -68,9 +68,9 @@ impl HeldBook {
             export: String::new(),
             instrument: instrument.to_owned(),
             reason: held.reason,
-            line: Some(line as i64),
+            line: Some(row.line as i64),
             cell: None,
-            bytes: None,
+            bytes: bytes_of(row),
             column: held.column.clone(),
             row_key: key.to_vec(),
             row: None,
@@ -156,8 +156,8 @@ pub struct Continued {
     pub size: i64,
     /// Its rows were read.
     pub read: bool,
-    /// Open holds of that capture and those it continues, by line; those on the file under `None`.
-    pub holds: HashMap<Option<i64>, Vec<HoldRow>>,
+    /// Open holds of that capture and those it continues, by row; those on the file under `None`.
+    pub holds: HashMap<Option<At>, Vec<HoldRow>>,
 }
 
 /// What one export came to.
@@ -198,8 +198,8 @@ pub enum Scope<'s> {
     Whole,
     /// Those lines alone, with their holds: open ones that are tried again, or such as a person has just decided.
     Lines {
-        /// By line.
-        lines: &'s HashMap<i64, Vec<HoldRow>>,
+        /// By row.
+        lines: &'s HashMap<At, Vec<HoldRow>>,
         /// A person has just decided them: what is wrong still is a hold of its own.
         decided: bool,
     },
@@ -426,7 +426,7 @@ impl<'a> Filer<'a> {
         let mut turn = match scope {
             Scope::Whole if run.covered(here.row) => return self.stays(filing, here, run),
             Scope::Whole => self.turn_of_new(here, run),
-            Scope::Lines { lines, .. } => match lines.get(&(here.row.line as i64)) {
+            Scope::Lines { lines, .. } => match lines.get(&here.row.at()) {
                 Some(tried) => self.turn_of_tried(tried, run),
                 None => return Ok(()),
             },
@@ -473,7 +473,7 @@ impl<'a> Filer<'a> {
 
     /// A row that stands where it stood in the path's older bytes.
     fn stays(&mut self, filing: &mut Filing, here: &Here<'_>, run: &mut Run<'_>) -> Result<()> {
-        let open = run.open_holds(here.row.line as i64);
+        let open = run.open_holds(here.row.at());
         let class = if !open.is_empty() {
             for hold in open {
                 self.records.add_sighting(filing, hold, Some(here.row.line as i64))?;
@@ -604,7 +604,8 @@ impl<'a> Filer<'a> {
     ) -> Result<()> {
         match run.judge.judge(self.records, case)? {
             Verdict::File(slot) => {
-                let new = new_reading(self.rules, run.instrument, here.row, case, slot);
+                let cell = here.cell(&case.value.column);
+                let new = new_reading(self.rules, run.instrument, (here.row, cell.as_deref()), case, slot);
                 let reading = self.records.add_reading(filing, &new)?;
                 run.judge.filed(reading, slot);
                 run.placing.outcome.filed += 1;
@@ -642,9 +643,10 @@ impl<'a> Filer<'a> {
             }
         };
         turn.key = Some(key);
-        let hold = add_hold(self.records, filing, Some(here.row), held, &key)?;
+        let cell = here.cell(&held.column);
+        let hold = add_hold(self.records, filing, Some((here.row, cell.as_deref())), held, &key)?;
         if run.instrument.re_export != ReExport::New {
-            self.held.opened(&run.instrument.code, run.judge.capture(), hold, here.row.line, held, &key);
+            self.held.opened(&run.instrument.code, run.judge.capture(), hold, here.row, held, &key);
         }
         run.placing.outcome.held += 1;
         Ok(())
@@ -678,10 +680,17 @@ impl<'a> Filer<'a> {
 }
 
 /// Where a run stands.
-struct Here<'h> {
-    resolver: &'h Resolver<'h>,
-    row: &'h Row,
-    rows: &'h dyn Rows,
+pub(super) struct Here<'h> {
+    pub(super) resolver: &'h Resolver<'h>,
+    pub(super) row: &'h Row,
+    pub(super) rows: &'h dyn Rows,
+}
+
+impl Here<'_> {
+    /// The workbook's cell of a value's column, or of the row's first column that the plan names.
+    pub(super) fn cell(&self, column: &str) -> Option<String> {
+        self.rows.cell_name(self.row.line, self.resolver.slot_of(column))
+    }
 }
 
 /// One row's turn: what is known of it from holds on its like, and what it comes to.
@@ -772,8 +781,8 @@ impl<'r> Run<'r> {
         (end as i64) < before.size
     }
 
-    fn open_holds(&self, line: i64) -> Vec<i64> {
-        let holds = self.continues.and_then(|before| before.holds.get(&Some(line)));
+    fn open_holds(&self, at: At) -> Vec<i64> {
+        let holds = self.continues.and_then(|before| before.holds.get(&Some(at)));
         holds.into_iter().flatten().map(|hold| hold.hold).collect()
     }
 
@@ -790,7 +799,7 @@ impl<'r> Run<'r> {
                 self.count(turn.class, row.lines);
                 // The row that older bytes of the path broke off in reads well now.
                 if row.fault.is_none() {
-                    let finished = self.open_holds(row.line as i64);
+                    let finished = self.open_holds(row.at());
                     self.placing.settle.extend(finished);
                 }
             }
@@ -874,15 +883,15 @@ pub fn settle_folds(
 pub fn new_reading<'n>(
     rules: &'n Rules,
     instrument: &'n Instrument,
-    row: &'n Row,
+    (row, cell): (&'n Row, Option<&'n str>),
     case: &Case<'n>,
     slot: Slotted,
 ) -> NewReading<'n> {
     let (resolved, value) = (case.row, case.value);
     NewReading {
         line: Some(row.line as i64),
-        bytes: row.bytes.map(|(from, to)| (from as i64, to as i64)),
-        cell: None,
+        bytes: bytes_of(row),
+        cell,
         instrument: &instrument.code,
         measure: &rules.plan.measures[value.measure].code,
         condition: &value.condition,
@@ -907,20 +916,26 @@ pub fn new_reading<'n>(
     }
 }
 
+/// A row's bytes as the records keep them.
+fn bytes_of(row: &Row) -> Option<(i64, i64)> {
+    row.bytes.map(|(from, to)| (from as i64, to as i64))
+}
+
 /// Writes a hold, on a row or on the whole file.
 pub fn add_hold(
     records: &mut Records,
     filing: &mut Filing,
-    row: Option<&Row>,
+    place: Option<(&Row, Option<&str>)>,
     held: &Held,
     key: &RowKey,
 ) -> Result<i64> {
     let detail = json!({ "wrong": held.wrong, "likely": held.likely, "about": held.about }).to_string();
+    let row = place.map(|(row, _)| row);
     let new = NewHold {
         reason: held.reason.code(),
         line: row.map(|row| row.line as i64),
-        cell: None,
-        bytes: row.and_then(|row| row.bytes).map(|(from, to)| (from as i64, to as i64)),
+        cell: place.and_then(|(_, cell)| cell),
+        bytes: row.and_then(bytes_of),
         column: &held.column,
         row_key: key,
         row: row.map(|row| row.raw.as_str()).unwrap_or_default(),

@@ -13,10 +13,10 @@ use revisant_schema::records::view::ReadingRow;
 use revisant_schema::records::{Filing, RecordsError, Result};
 
 use super::account::{Account, Class};
-use super::file::{Export, Filer, Placing, add_hold, new_reading, row_key};
+use super::file::{Export, Filer, Here, Placing, add_hold, new_reading, row_key};
 use super::place::identity::{Case, Judge, Slotted, Verdict};
 use super::place::resolve::{Decided, Held, Resolved, Resolver, RowOutcome, ValueOutcome, Whereabouts};
-use super::read::{self, FileFault, Row};
+use super::read::{self, At, FileFault, Row};
 
 /// What placing over gave, and the readings that have no successor.
 pub type Over = std::result::Result<(Placing, Vec<i64>), FileFault>;
@@ -26,7 +26,7 @@ struct Pass<'p> {
     placing: Placing,
     ended: Vec<i64>,
     orders: HashMap<i64, i64>,
-    held_lines: HashSet<u64>,
+    held_rows: HashSet<At>,
     /// Physical lines that are held now and were not.
     moved: u64,
 }
@@ -44,12 +44,12 @@ fn by_hand(reading: &ReadingRow) -> bool {
 }
 
 impl Filer<'_> {
-    /// Places the lines of an export over; `old` are its readings that no other has superseded, by line.
+    /// Places the lines of an export over; `old` are its readings that no other has superseded, by row.
     pub fn place_over(
         &mut self,
         export: &Export,
-        lines: &[u64],
-        mut old: HashMap<i64, Vec<ReadingRow>>,
+        lines: &[At],
+        mut old: HashMap<At, Vec<ReadingRow>>,
     ) -> Result<(Filing, Over)> {
         let mut filing = self.records.new_filing(Some(export.capture))?;
         let rules = self.rules;
@@ -57,18 +57,21 @@ impl Filer<'_> {
         let wanted = read::wanted(&instrument.reader);
         let whereabouts = Whereabouts { file_name: &export.file_name, folder: &export.below };
         let resolver = Resolver::new(&rules.plan, instrument, &rules.roster, self.now, &wanted, whereabouts);
-        let resolver = resolver.map_err(RecordsError::Refused)?;
+        let mut resolver = resolver.map_err(RecordsError::Refused)?;
+        if let Err(fault) = super::plan::settle_doubled(&mut resolver, instrument, &export.source) {
+            return Ok((filing, Err(fault)));
+        }
         let mut rows = match read::open(&instrument.reader, &export.source) {
             Ok(rows) => rows,
             Err(fault) => return Ok((filing, Err(fault))),
         };
-        let wanted_lines: HashSet<u64> = lines.iter().copied().collect();
+        let wanted_rows: HashSet<At> = lines.iter().copied().collect();
         let mut pass = Pass {
             judge: Judge::new(instrument, export.capture),
             placing: Placing::default(),
             ended: vec![],
             orders: HashMap::new(),
-            held_lines: HashSet::new(),
+            held_rows: HashSet::new(),
             moved: 0,
         };
         let mut row = Row::default();
@@ -81,15 +84,15 @@ impl Filer<'_> {
             if resolver.nothing_there(&row, rows.as_ref()) {
                 pass.placing.account.add(Class::NoValue, row.lines);
             }
-            if wanted_lines.contains(&row.line) {
-                let olds = old.remove(&(row.line as i64)).unwrap_or_default();
+            if wanted_rows.contains(&row.at()) {
+                let olds = old.remove(&row.at()).unwrap_or_default();
                 let outcome = resolver.resolve(&row, rows.as_ref(), &Decided::default());
-                let here = (&row, resolver.row_hash(&row, rows.as_ref()));
-                self.row_over(&mut filing, export, here, outcome, olds, &mut pass)?;
+                let here = Here { resolver: &resolver, row: &row, rows: rows.as_ref() };
+                self.row_over(&mut filing, export, &here, outcome, olds, &mut pass)?;
             }
         }
         for line in lines {
-            pass.end(&old.remove(&(*line as i64)).unwrap_or_default());
+            pass.end(&old.remove(line).unwrap_or_default());
         }
         let before = self.records.account_of(export.capture)?;
         let before: Account = before.and_then(|text| serde_json::from_str(&text).ok()).unwrap_or_default();
@@ -103,7 +106,7 @@ impl Filer<'_> {
         &mut self,
         filing: &mut Filing,
         export: &Export,
-        here: (&Row, [u8; 16]),
+        here: &Here<'_>,
         outcome: RowOutcome,
         mut olds: Vec<ReadingRow>,
         pass: &mut Pass<'_>,
@@ -140,7 +143,8 @@ impl Filer<'_> {
             };
             if let Some(slot) = slot {
                 let instrument = &self.rules.plan.instruments[export.instrument];
-                let new = new_reading(self.rules, instrument, here.0, &case, slot);
+                let cell = here.cell(&value.column);
+                let new = new_reading(self.rules, instrument, (here.row, cell.as_deref()), &case, slot);
                 let reading = self.records.add_reading(filing, &new)?;
                 pass.judge.filed(reading, slot);
                 pass.placing.outcome.filed += 1;
@@ -156,7 +160,7 @@ impl Filer<'_> {
     fn hold_over(
         &mut self,
         filing: &mut Filing,
-        (row, hash): (&Row, [u8; 16]),
+        here: &Here<'_>,
         case: &Case<'_>,
         old: &ReadingRow,
         pass: &mut Pass<'_>,
@@ -166,10 +170,12 @@ impl Filer<'_> {
             case.value.number, case.measure.unit, old.reading
         );
         let held = Held::row(Reason::ChangedValue, wrong).on(&case.value.column).about(old.reading);
-        add_hold(self.records, filing, Some(row), &held, &row_key(hash, 1))?;
+        let cell = here.cell(&case.value.column);
+        let key = row_key(here.resolver.row_hash(here.row, here.rows), 1);
+        add_hold(self.records, filing, Some((here.row, cell.as_deref())), &held, &key)?;
         pass.placing.outcome.held += 1;
-        if pass.held_lines.insert(row.line) {
-            pass.moved += row.lines;
+        if pass.held_rows.insert(here.row.at()) {
+            pass.moved += here.row.lines;
         }
         Ok(())
     }

@@ -6,6 +6,7 @@
 use std::collections::HashSet;
 use std::io::Read;
 use std::path::Path;
+use std::sync::Arc;
 
 use chrono::{SecondsFormat, Utc};
 use revisant_schema::plan::meaning::{self, Change};
@@ -23,7 +24,7 @@ use super::error::{IntakeError, Result, WouldChange};
 use super::file;
 use super::place::clock::Local;
 use super::place::resolve::{Decided, PlacedValue, Resolved, Resolver, RowOutcome, ValueOutcome, Whereabouts};
-use super::read::{self, FileFault, Row, Rows};
+use super::read::{self, At, FileFault, Row, Rows};
 use super::rules::Rules;
 
 /// Reads the study's plan through the world's doors.
@@ -82,7 +83,7 @@ fn refuse_other_meaning(records: &Records, old: &Plan, new: &Plan) -> Result<()>
 /// What there are data of.
 struct Data {
     /// (measure, condition, readings)
-    cells: Vec<(String, Condition, u32)>,
+    cells: Vec<(Arc<str>, Arc<Condition>, u32)>,
     /// Visits that have a session, by code.
     visits: HashSet<String>,
     roster: Roster,
@@ -174,17 +175,20 @@ pub fn would_change(records: &Records, rules: &Rules, new: &Plan) -> Result<Vec<
     Ok(changes)
 }
 
+/// The place that stands for the export as a whole.
+const FIRST: At = At { line: 1, from: 0 };
+
 /// An instrument in a plan.
-type At<'p> = (usize, &'p Plan);
+type InPlan<'p> = (usize, &'p Plan);
 
 /// The lines of a capture that two plans read differently where the old one filed something, each with a word on how.
 pub fn differing_lines(
     records: &Records,
     rules: &Rules,
-    old: At<'_>,
-    new: At<'_>,
+    old: InPlan<'_>,
+    new: InPlan<'_>,
     capture: &CaptureRow,
-) -> Result<Vec<(u64, String)>> {
+) -> Result<Vec<(At, String)>> {
     let source = records.raw_source(&capture.sha256)?;
     let name = file_name(&capture.path);
     let folder = below(old.1, old.0, &capture.path);
@@ -197,11 +201,11 @@ pub fn differing_lines(
     let after = Side::open(new, &rules.roster, records.now(), &source, whereabouts);
     let mut after = match after {
         Ok(side) => side,
-        Err(fault) => return Ok(vec![(1, format!("the new plan cannot read it: {fault}"))]),
+        Err(fault) => return Ok(vec![(FIRST, format!("the new plan cannot read it: {fault}"))]),
     };
     match compare(&mut before, &mut after) {
         Ok(lines) => Ok(lines),
-        Err(fault) => Ok(vec![(1, format!("the new plan cannot read it: {fault}"))]),
+        Err(fault) => Ok(vec![(FIRST, format!("the new plan cannot read it: {fault}"))]),
     }
 }
 
@@ -223,7 +227,7 @@ struct Side<'s> {
 
 impl<'s> Side<'s> {
     fn open(
-        (at, plan): At<'s>,
+        (at, plan): InPlan<'s>,
         roster: &'s Roster,
         now: chrono::DateTime<Utc>,
         source: &'s dyn read::Bytes,
@@ -233,9 +237,7 @@ impl<'s> Side<'s> {
         let wanted = read::wanted(&instrument.reader);
         let mut resolver =
             Resolver::new(plan, instrument, roster, now, &wanted, whereabouts).map_err(FileFault::Layout)?;
-        if has_doubled(&resolver, instrument, source)? {
-            resolver.settled = file::settle_folds(&resolver, instrument, source)?;
-        }
+        settle_doubled(&mut resolver, instrument, source)?;
         let rows = read::open(&instrument.reader, source)?;
         let mut side = Self { plan, resolver, rows, row: Row::default(), more: true };
         side.step()?;
@@ -249,8 +251,8 @@ impl<'s> Side<'s> {
         Ok(())
     }
 
-    fn line(&self) -> u64 {
-        if self.more { self.row.line } else { u64::MAX }
+    fn at(&self) -> Option<At> {
+        self.more.then(|| self.row.at())
     }
 
     /// What the row comes to: each value as a text that says everything about it, or nothing where it is held.
@@ -294,6 +296,18 @@ impl<'s> Side<'s> {
     }
 }
 
+/// Settles the local times that exist twice, if the export has one.
+pub fn settle_doubled(
+    resolver: &mut Resolver<'_>,
+    instrument: &revisant_schema::plan::Instrument,
+    source: &dyn read::Bytes,
+) -> std::result::Result<(), FileFault> {
+    if has_doubled(resolver, instrument, source)? {
+        resolver.settled = file::settle_folds(resolver, instrument, source)?;
+    }
+    Ok(())
+}
+
 fn has_doubled(
     resolver: &Resolver<'_>,
     instrument: &revisant_schema::plan::Instrument,
@@ -309,19 +323,21 @@ fn has_doubled(
     Ok(false)
 }
 
-fn compare(before: &mut Side<'_>, after: &mut Side<'_>) -> std::result::Result<Vec<(u64, String)>, FileFault> {
+fn compare(before: &mut Side<'_>, after: &mut Side<'_>) -> std::result::Result<Vec<(At, String)>, FileFault> {
     let mut lines = Vec::new();
-    while before.more || after.more {
-        let line = before.line().min(after.line());
-        let old = (before.line() == line).then(|| before.values());
-        let new = (after.line() == line).then(|| after.values());
+    loop {
+        let (old_at, new_at) = (before.at(), after.at());
+        // No row (`None`) is before every row, so the end of one side must not be taken for the first.
+        let Some(at) = old_at.into_iter().chain(new_at).min() else { break };
+        let old = (old_at == Some(at)).then(|| before.values());
+        let new = (new_at == Some(at)).then(|| after.values());
         if let Some(how) = difference(old, new) {
-            lines.push((line, format!("line {line}: {how}")));
+            lines.push((at, format!("line {}: {how}", at.line)));
         }
-        if before.line() == line {
+        if old_at == Some(at) {
             before.step()?;
         }
-        if after.line() == line {
+        if new_at == Some(at) {
             after.step()?;
         }
     }

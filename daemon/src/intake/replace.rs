@@ -22,7 +22,7 @@ use super::file::{Export, Filer, Moved, Outcome, Placing, Scope, add_hold, reaso
 use super::place::number;
 use super::place::resolve::{Held, nearest};
 use super::plan::{below, differing_lines, in_force};
-use super::read::FileFault;
+use super::read::{At, FileFault};
 use super::rules::{Gathered, Rules};
 
 type Done<T> = revisant_schema::records::Result<T>;
@@ -96,11 +96,11 @@ fn again(records: &Records, rules: &Rules, capture: &CaptureRow) -> Done<Option<
     }))
 }
 
-fn by_line(holds: &[HoldRow]) -> HashMap<i64, Vec<HoldRow>> {
-    let mut lines: HashMap<i64, Vec<HoldRow>> = HashMap::new();
+fn by_row(holds: &[HoldRow]) -> HashMap<At, Vec<HoldRow>> {
+    let mut lines: HashMap<At, Vec<HoldRow>> = HashMap::new();
     for hold in holds {
         if let Some(line) = hold.line {
-            lines.entry(line).or_default().push(hold.clone());
+            lines.entry(At::of(line, hold.bytes)).or_default().push(hold.clone());
         }
     }
     lines
@@ -113,7 +113,7 @@ fn try_again(filer: &mut Filer<'_>, capture: &CaptureRow, holds: &[HoldRow]) -> 
     if let Some(hold) = on_file.first() {
         return whole_again(filer, capture, &export, hold);
     }
-    let lines = by_line(holds);
+    let lines = by_row(holds);
     let (filing, placed) = filer.place(&export, &Scope::Lines { lines: &lines, decided: false })?;
     let Ok(mut placing) = placed else {
         filer.records.clear_filing(filing.id)?;
@@ -122,7 +122,7 @@ fn try_again(filer: &mut Filer<'_>, capture: &CaptureRow, holds: &[HoldRow]) -> 
     // A row that the plan of now does not hand out is none any more.
     let unmet = holds.iter().filter(|hold| !placing.tried.contains(&hold.hold));
     let unmet: Vec<&HoldRow> = unmet.collect();
-    let mut unmet_lines: Vec<i64> = unmet.iter().filter_map(|hold| hold.line).collect();
+    let mut unmet_lines: Vec<At> = unmet.iter().filter_map(|hold| Some(At::of(hold.line?, hold.bytes))).collect();
     unmet_lines.sort_unstable();
     unmet_lines.dedup();
     placing.moved.ignored += unmet_lines.len() as u64;
@@ -304,7 +304,7 @@ fn decide_within(filer: &mut Filer<'_>, capture: &CaptureRow, holds: &[HoldRow],
         let instrument = &capture.instrument;
         return Err(RecordsError::Refused(format!("the instrument {instrument} is no longer in the plan")));
     };
-    let lines = by_line(holds);
+    let lines = by_row(holds);
     let whole = holds.iter().any(|hold| hold.line.is_none());
     export.accept_serial = whole;
     let scope = if whole { Scope::Whole } else { Scope::Lines { lines: &lines, decided: true } };
@@ -424,7 +424,7 @@ pub fn adopt(records: &mut Records, study: &Path, doer: &Doer) -> Result<(Rules,
         let Some(((old_at, _), (new_at, _))) = places else { continue };
         let lines = differing_lines(records, &rules, (old_at, &old.plan), (new_at, &rules.plan), capture)?;
         if !lines.is_empty() {
-            let lines: Vec<u64> = lines.into_iter().map(|(line, _)| line).collect();
+            let lines: Vec<At> = lines.into_iter().map(|(at, _)| at).collect();
             adopt_one(records, &rules, capture, &lines, doer, &mut report)?;
         }
     }
@@ -435,15 +435,15 @@ fn adopt_one(
     records: &mut Records,
     rules: &Rules,
     capture: &CaptureRow,
-    lines: &[u64],
+    lines: &[At],
     doer: &Doer,
     report: &mut Report,
 ) -> Result<()> {
     let filter = ReadingFilter { capture: Some(capture.capture), ..ReadingFilter::default() };
-    let mut old: HashMap<i64, Vec<ReadingRow>> = HashMap::new();
+    let mut old: HashMap<At, Vec<ReadingRow>> = HashMap::new();
     for reading in records.view()?.readings(&filter)? {
         if let (Some(line), true) = (reading.line, reading.state != ReadingState::Superseded) {
-            old.entry(line).or_default().push(reading);
+            old.entry(At::of(line, reading.bytes)).or_default().push(reading);
         }
     }
     let mut filer = Filer::new(records, rules, Gathered::default(), doer)?;
@@ -465,8 +465,8 @@ fn adopt_one(
 fn adopt_within(
     filer: &mut Filer<'_>,
     capture: &CaptureRow,
-    lines: &[u64],
-    old: HashMap<i64, Vec<ReadingRow>>,
+    lines: &[At],
+    old: HashMap<At, Vec<ReadingRow>>,
 ) -> Done<Outcome> {
     filer.begin()?;
     let Some(export) = again(filer.records, filer.rules, capture)? else { return Ok(Outcome::default()) };

@@ -75,12 +75,12 @@ impl Gathered {
         sessions
             .map(|((day, label), measures)| SessionFacts {
                 session: i64::MAX,
-                subject: subject.to_owned(),
+                subject: subject.into(),
                 day: *day,
                 label: match label {
                     Label::None => None,
-                    Label::Unscheduled => Some(UNSCHEDULED.to_owned()),
-                    Label::Visit(visit) => Some(plan.visits[*visit].code.clone()),
+                    Label::Unscheduled => Some(UNSCHEDULED.into()),
+                    Label::Visit(visit) => Some(plan.visits[*visit].code.as_str().into()),
                 },
                 measures: held_measures(plan, *measures),
             })
@@ -88,9 +88,9 @@ impl Gathered {
     }
 }
 
-fn held_measures(plan: &Plan, bits: u128) -> Vec<String> {
+fn held_measures(plan: &Plan, bits: u128) -> Vec<std::sync::Arc<str>> {
     let held = |(at, _): &(usize, &Measure)| bits >> (*at).min(127) & 1 == 1;
-    plan.measures.iter().enumerate().filter(held).map(|(_, measure)| measure.code.clone()).collect()
+    plan.measures.iter().enumerate().filter(held).map(|(_, measure)| measure.code.as_str().into()).collect()
 }
 
 /// Every subject's course, from the records and the exports in hand, each worked out when first asked for.

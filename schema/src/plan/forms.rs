@@ -45,7 +45,7 @@ pub(crate) enum Form {
     Encoding,
     /// One character.
     Mark,
-    /// One character that can part cells, or `auto`.
+    /// One character that can part cells, `tab` or `auto`.
     Delimiter,
     /// A way of writing stamps.
     Stamp,
@@ -81,7 +81,7 @@ impl Form {
             Self::Unit => "a UCUM code in quotes, such as \"kg\" or \"mm[Hg]\"",
             Self::Encoding => "\"auto\" or a WHATWG label in quotes, such as \"windows-1252\"",
             Self::Mark => "one character in quotes, such as \",\"",
-            Self::Delimiter => "\"auto\" or one character in quotes, such as \";\" or \"\\t\"",
+            Self::Delimiter => "\"auto\", \"tab\" or one character in quotes, such as \";\"",
             Self::Stamp => "\"iso\", \"serial\" or a strftime pattern, such as \"%d/%m/%Y %H:%M\"",
             Self::Rows => "a path in quotes, such as \"/results/*\"",
         }
@@ -120,6 +120,7 @@ impl Form {
             Self::Duration => Some(r"^([0-9]+w)?([0-9]+d)?([0-9]+h)?([0-9]+m)?([0-9]+s)?$"),
             Self::Size => Some(r"^[0-9]+ ?([kMGT]?B|[KMGT]iB)$"),
             Self::ClockShift => Some(r"^[+-]?[0-9]+:[0-5][0-9]:[0-5][0-9]$"),
+            Self::Delimiter => Some(r"^(auto|tab|[\t !#-&(-/:-@\[-`{-~])$"),
             Self::Rows => Some("^/"),
             _ => None,
         }
@@ -329,16 +330,17 @@ pub(crate) fn mark(text: &str) -> Result<char, Misfit> {
     }
 }
 
-/// One ASCII character that can part cells, or `None` for `auto`.
+/// One ASCII character that can part cells (a tab may be written as the word, too), or `None` for `auto`.
 pub(crate) fn delimiter(text: &str) -> Result<Option<u8>, Misfit> {
     match text.as_bytes() {
         b"auto" => Ok(None),
+        b"tab" => Ok(Some(b'\t')),
         [byte] if *byte == b'\t' || (byte.is_ascii_punctuation() && !b"\"'".contains(byte)) || *byte == b' ' => {
             Ok(Some(*byte))
         }
         _ => {
             let spoken = match text.to_lowercase().as_str() {
-                "tab" | "\\t" => Some("\\t"),
+                "tab" | "tabulator" | "\\t" => Some("tab"),
                 "comma" => Some(","),
                 "semicolon" => Some(";"),
                 "pipe" => Some("|"),
@@ -411,6 +413,24 @@ mod tests {
     }
 
     #[test]
+    fn delimiters() {
+        let pattern = regex(Form::Delimiter.pattern().unwrap()).unwrap();
+        let known = [("auto", None), ("tab", Some(b'\t')), ("\t", Some(b'\t')), (",", Some(b',')), (" ", Some(b' '))];
+        for (text, byte) in known {
+            assert_eq!(delimiter(text), Ok(byte), "{text}");
+        }
+        for text in ["ab", "TAB", "\\t", "tabtab", "é", "\"", "'", "", "a", "7", "\n"] {
+            assert!(delimiter(text).is_err(), "{text}");
+            assert!(!pattern.is_match(text), "{text}");
+        }
+        for byte in 0..0x80 {
+            let text = char::from(byte).to_string();
+            assert_eq!(pattern.is_match(&text), delimiter(&text).is_ok(), "{text:?}");
+        }
+        assert!(pattern.is_match("auto") && pattern.is_match("tab"));
+    }
+
+    #[test]
     fn other_forms() {
         assert!(code("week-4").is_ok() && code("6mwt").is_ok());
         assert_eq!(code("Week_4").unwrap_err().nearest.as_deref(), Some("week-4"));
@@ -424,9 +444,7 @@ mod tests {
         assert!(one_group("^(a)").is_ok() && one_group("a").is_err() && one_group("(a)(b)").is_err());
         assert!(glob("*.csv").unwrap().is_match("a.csv") && !glob("*.csv").unwrap().is_match("a.CSV"));
         assert!(!glob("*.csv").unwrap().is_match("b/a.csv") && glob("[").is_err());
-        assert_eq!(delimiter("\t"), Ok(Some(b'\t')));
-        assert_eq!(delimiter("tab").unwrap_err().nearest.as_deref(), Some("\\t"));
-        assert!(delimiter("ab").is_err() && delimiter("é").is_err() && delimiter("\"").is_err());
+        assert_eq!(delimiter("Tab").unwrap_err().nearest.as_deref(), Some("tab"));
         assert!(mark(",").is_ok() && mark("\u{a0}").is_ok() && mark("1").is_err() && mark("").is_err());
         assert!(encoding("latin1").is_ok() && encoding("ansi").is_err());
         assert_eq!(unit("mmHg").unwrap_err().nearest.as_deref(), Some("mm[Hg]"));

@@ -40,7 +40,12 @@ pub(crate) static READER: Table = Table {
     keys: &[
         needed("format", Kind::Word(&FORMAT.words), "The kind of file"),
         key("encoding", Kind::Text(Form::Encoding), "\"auto\"", "How bytes become text"),
-        key("delimiter", Kind::Text(Form::Delimiter), "\"auto\"", "What parts the cells of a delimited export"),
+        key(
+            "delimiter",
+            Kind::Text(Form::Delimiter),
+            "\"auto\"",
+            "What parts the cells of a delimited export: one character, or \"tab\"",
+        ),
         key("decimal_mark", Kind::Text(Form::Mark), "\".\"", "The decimal mark of numbers"),
         key("group_mark", Kind::Text(Form::Mark), "none", "The thousands mark of numbers"),
         key("header", Kind::Table(&HEADER), "{ row = 1 }", "Where the header of a table is"),

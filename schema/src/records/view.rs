@@ -2,7 +2,8 @@
 //!
 //! Invariant: an answer depends on rows of acts up to that number alone, so that it is the same for ever.
 
-use std::collections::{BTreeMap, HashMap, HashSet};
+use std::collections::{HashMap, HashSet};
+use std::sync::Arc;
 
 use chrono::{DateTime, NaiveDate, Utc};
 use rusqlite::{OptionalExtension, Row, params};
@@ -16,6 +17,7 @@ use crate::hold::{Answer, HoldState, Reason};
 use crate::plan::PlanFiles;
 use crate::reading::{Condition, ReadingState};
 use crate::roster::Roster;
+use crate::session::SessionFacts;
 
 /// The records as they stood at a trail number.
 #[derive(Clone, Copy)]
@@ -67,13 +69,34 @@ pub struct CellCount {
     /// The session's number.
     pub session: i64,
     /// The measure's code.
-    pub measure: String,
+    pub measure: Arc<str>,
     /// Its condition.
-    pub condition: Condition,
+    pub condition: Arc<Condition>,
     /// The instrument's code.
-    pub instrument: String,
+    pub instrument: Arc<str>,
     /// How many.
     pub current: u32,
+}
+
+/// One current reading as far as a cell of an analysis needs it.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct ValueRow {
+    /// Its number.
+    pub reading: i64,
+    /// The session's number.
+    pub session: i64,
+    /// The term that is its condition.
+    pub condition: i64,
+    /// The term that is its instrument's code.
+    pub instrument: i64,
+    /// The replicate's number.
+    pub replicate: u32,
+    /// In the measure's unit.
+    pub number: f64,
+    /// In milliseconds since 1970 in UTC; `None`: only the day is known.
+    pub moment: Option<i64>,
+    /// It lies at a limit of detection.
+    pub limit: bool,
 }
 
 /// One reading, with texts in place of numbers.
@@ -446,46 +469,73 @@ impl<'r> View<'r> {
     /// How many current readings each instrument gave to each cell of each session.
     pub fn cells(&self) -> Result<Vec<CellCount>> {
         let states = self.reading_states()?;
-        let mut counts: BTreeMap<(i64, i64, i64, i64), i64> = BTreeMap::new();
-        let groups = self.records.query_all(
-            "SELECT r.session, r.measure, r.condition, r.instrument, count(*) FROM reading r
-             JOIN filing f ON f.id = r.filing WHERE f.act <= ?1
-             GROUP BY r.session, r.measure, r.condition, r.instrument",
-            [self.upto],
-            "counting readings",
-            |row| Ok(((row.get(0)?, row.get(1)?, row.get(2)?, row.get(3)?), row.get(4)?)),
-        )?;
-        counts.extend(groups);
-        for reading in states.keys() {
-            if let Some(key) = self.cell_of(*reading)?
-                && let Some(count) = counts.get_mut(&key)
-            {
-                *count -= 1;
-            }
-        }
-        let terms = self.terms()?;
-        let text = |id: i64| terms.get(&id).cloned().unwrap_or_default();
-        let live = counts.into_iter().filter(|(_, count)| *count > 0);
-        Ok(live
-            .map(|((session, measure, condition, instrument), count)| CellCount {
+        let published = self.published()?;
+        // Counted here and not by the database: sorting a hundred thousand groups there costs more than reading them.
+        let mut keys: Vec<[i64; 4]> = self
+            .records
+            .query_all(
+                "SELECT id, filing, session, measure, condition, instrument FROM reading",
+                [],
+                "counting readings",
+                |row| {
+                    let live = published.contains(&row.get(1)?) && !states.contains_key(&row.get(0)?);
+                    Ok(if live { Some([row.get(2)?, row.get(3)?, row.get(4)?, row.get(5)?]) } else { None })
+                },
+            )?
+            .into_iter()
+            .flatten()
+            .collect();
+        keys.sort_unstable();
+        let texts = self.texts("SELECT id, text FROM term")?;
+        let mut conditions: HashMap<i64, Arc<Condition>> = HashMap::new();
+        let text = |id: i64| texts.get(&id).cloned().unwrap_or_default();
+        let counts = keys.chunk_by(|one, other| one == other).map(|same| {
+            let [session, measure, condition, instrument] = same[0];
+            let parse = || Arc::new(Condition::parse(&text(condition)));
+            CellCount {
                 session,
                 measure: text(measure),
-                condition: Condition::parse(&text(condition)),
+                condition: Arc::clone(conditions.entry(condition).or_insert_with(parse)),
                 instrument: text(instrument),
-                current: u32::try_from(count).unwrap_or(u32::MAX),
-            })
-            .collect())
+                current: u32::try_from(same.len()).unwrap_or(u32::MAX),
+            }
+        });
+        Ok(counts.collect())
     }
 
-    fn cell_of(&self, reading: i64) -> Result<Option<(i64, i64, i64, i64)>> {
-        let rows = self.records.query_all(
-            "SELECT r.session, r.measure, r.condition, r.instrument FROM reading r JOIN filing f ON f.id = r.filing
-             WHERE r.id = ?1 AND f.act <= ?2",
-            params![reading, self.upto],
-            "reading a reading",
-            |row| Ok((row.get(0)?, row.get(1)?, row.get(2)?, row.get(3)?)),
+    /// The filings that acts up to this one have published.
+    fn published(&self) -> Result<HashSet<i64>> {
+        let filings = self.records.query_all(
+            "SELECT id FROM filing WHERE act <= ?1",
+            [self.upto],
+            "reading the filings",
+            |row| row.get(0),
         )?;
-        Ok(rows.into_iter().next())
+        Ok(filings.into_iter().collect())
+    }
+
+    /// The current readings of a measure that have a number, as far as a cell of an analysis needs them, by session,
+    /// condition, and the order of filing.
+    pub fn values(&self, measure: &str) -> Result<Vec<ValueRow>> {
+        let states = self.reading_states()?;
+        let published = self.published()?;
+        let mut values: Vec<ValueRow> = self
+            .records
+            .query_all(
+                "SELECT id, filing, session, condition, instrument, replicate, number, moment, mark IS NOT NULL
+             FROM reading WHERE measure = (SELECT id FROM term WHERE text = ?1) AND number IS NOT NULL",
+                [measure],
+                "reading the values of a measure",
+                |row| {
+                    let live = published.contains(&row.get(1)?) && !states.contains_key(&row.get(0)?);
+                    live.then(|| read_value(row)).transpose()
+                },
+            )?
+            .into_iter()
+            .flatten()
+            .collect();
+        values.sort_unstable_by_key(|value| (value.session, value.condition, value.reading));
+        Ok(values)
     }
 
     /// All terms by their number.
@@ -705,6 +755,19 @@ impl ReadingFilter {
     }
 }
 
+fn read_value(row: &Row<'_>) -> rusqlite::Result<ValueRow> {
+    Ok(ValueRow {
+        reading: row.get(0)?,
+        session: row.get(2)?,
+        condition: row.get(3)?,
+        instrument: row.get(4)?,
+        replicate: row.get(5)?,
+        number: row.get(6)?,
+        moment: row.get(7)?,
+        limit: row.get(8)?,
+    })
+}
+
 fn read_reading(
     row: &Row<'_>,
     terms: &HashMap<i64, String>,
@@ -785,12 +848,12 @@ fn read_hold(row: &Row<'_>, ends: &HashMap<i64, (HoldState, Option<Answer>, ActN
 
 impl View<'_> {
     /// Every session that holds a current reading, with the measures it holds.
-    pub fn session_facts(&self) -> Result<Vec<crate::session::SessionFacts>> {
+    pub fn session_facts(&self) -> Result<Vec<SessionFacts>> {
         self.facts_of(&self.cells()?)
     }
 
     /// The same, of one subject alone.
-    pub fn facts_of_subject(&self, subject: &str) -> Result<Vec<crate::session::SessionFacts>> {
+    pub fn facts_of_subject(&self, subject: &str) -> Result<Vec<SessionFacts>> {
         let rows = self.records.query_all(
             "SELECT s.id, s.day, l.text, m.text FROM session s JOIN subject u ON u.id = s.subject
              LEFT JOIN term l ON l.id = s.label JOIN reading r ON r.session = s.id
@@ -802,17 +865,20 @@ impl View<'_> {
              GROUP BY s.id, r.measure ORDER BY s.id, r.measure",
             params![subject, self.upto],
             "reading a subject's sessions",
-            |row| Ok((row.get::<_, i64>(0)?, row.get::<_, i64>(1)?, row.get::<_, Option<String>>(2)?, row.get(3)?)),
+            |row| {
+                let measure: Arc<str> = row.get_ref(3)?.as_str()?.into();
+                Ok((row.get::<_, i64>(0)?, row.get::<_, i64>(1)?, row.get::<_, Option<String>>(2)?, measure))
+            },
         )?;
-        let mut facts: Vec<crate::session::SessionFacts> = Vec::new();
+        let mut facts: Vec<SessionFacts> = Vec::new();
         for (session, day, label, measure) in rows {
             match facts.last_mut() {
                 Some(last) if last.session == session => last.measures.push(measure),
-                _ => facts.push(crate::session::SessionFacts {
+                _ => facts.push(SessionFacts {
                     session,
-                    subject: subject.to_owned(),
+                    subject: subject.into(),
                     day: day_of_number(day),
-                    label,
+                    label: label.map(Into::into),
                     measures: vec![measure],
                 }),
             }
@@ -821,21 +887,41 @@ impl View<'_> {
     }
 
     /// The same, from counts already at hand.
-    pub fn facts_of(&self, cells: &[CellCount]) -> Result<Vec<crate::session::SessionFacts>> {
-        let mut measures: HashMap<i64, Vec<String>> = HashMap::new();
-        for cell in cells {
-            let held = measures.entry(cell.session).or_default();
-            if !held.contains(&cell.measure) {
-                held.push(cell.measure.clone());
-            }
-        }
-        let sessions = self.all_sessions()?.into_iter();
-        Ok(sessions
-            .filter_map(|row| {
-                let measures = measures.remove(&row.session)?;
-                let SessionRow { session, subject, day, label } = row;
-                Some(crate::session::SessionFacts { session, subject, day, label, measures })
-            })
-            .collect())
+    pub fn facts_of(&self, cells: &[CellCount]) -> Result<Vec<SessionFacts>> {
+        // The counts come by session, so that a session's measures stand side by side.
+        let by_session: HashMap<i64, &[CellCount]> = cells
+            .chunk_by(|one, other| one.session == other.session)
+            .filter_map(|same| Some((same.first()?.session, same)))
+            .collect();
+        let subjects = self.texts("SELECT id, code FROM subject")?;
+        let labels = self.texts("SELECT id, text FROM term")?;
+        let facts = self.records.query_all(
+            "SELECT id, subject, day, label FROM session",
+            [],
+            "reading the sessions",
+            |row| {
+                let session: i64 = row.get(0)?;
+                let Some(held) = by_session.get(&session) else { return Ok(None) };
+                let mut measures: Vec<Arc<str>> = held.iter().map(|cell| Arc::clone(&cell.measure)).collect();
+                measures.dedup();
+                let label: Option<i64> = row.get(3)?;
+                Ok(Some(SessionFacts {
+                    session,
+                    subject: subjects.get(&row.get(1)?).cloned().unwrap_or_default(),
+                    day: day_of_number(row.get(2)?),
+                    label: label.and_then(|label| labels.get(&label).cloned()),
+                    measures,
+                }))
+            },
+        )?;
+        Ok(facts.into_iter().flatten().collect())
+    }
+
+    /// Texts by their number.
+    fn texts(&self, sql: &str) -> Result<HashMap<i64, Arc<str>>> {
+        let rows = self
+            .records
+            .query_all(sql, [], "reading texts", |row| Ok((row.get::<_, i64>(0)?, row.get_ref(1)?.as_str()?.into())))?;
+        Ok(rows.into_iter().collect())
     }
 }

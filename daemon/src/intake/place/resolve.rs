@@ -328,6 +328,11 @@ impl<'p> Resolver<'p> {
         })
     }
 
+    /// The slot of a value's column; of anything else, that of the first column that the plan names.
+    pub fn slot_of(&self, column: &str) -> usize {
+        self.values.iter().find(|value| value.rule.column == column).map_or(0, |value| value.slot)
+    }
+
     /// Whether every value of the row is missing by the plan.
     pub fn nothing_there(&self, row: &Row, rows: &dyn Rows) -> bool {
         row.fault.is_none() && self.values.iter().all(|value| self.is_missing(value, row, rows))

@@ -5,12 +5,12 @@
 //! could not have made it another row (see `Doubt` for the one place where that rests on a likelihood); every
 //! physical line is counted once, whatever the bytes are.
 
-use regex::Regex;
-use revisant_schema::plan::{Header, Ignore, LastLine, Reader};
+use revisant_schema::plan::{Header, Reader};
 
 use super::cells::{Cells, Split, literal_cells};
 use super::heading::{self, Above, Preamble, excerpt, find_columns, join_labels};
-use super::text::{Line, LineEnd, Lines, nul_in, readable};
+use super::sieve::{Parts, Sieve, Taken, decode_row};
+use super::text::{Line, LineEnd, Lines, readable};
 use super::{Bytes, FileFault, LineCounts, Row, RowFault, Rows, wanted};
 
 /// The delimiters among which the header decides when the plan names none.
@@ -25,16 +25,11 @@ const SHORT_CELL: usize = 2 * 1024;
 
 /// The rows of a delimited export.
 pub struct Delimited<'a> {
-    reader: &'a Reader,
-    lines: Lines<'a>,
+    sieve: Sieve<'a>,
     splitter: Splitter,
     preamble: Preamble,
     table: Table,
-    rules: Vec<ColumnRule<'a>>,
-    counts: LineCounts,
     doubt: Option<Doubt>,
-    /// The row before was a repeated header, so that this one may be its row of units.
-    after_header: bool,
 }
 
 /// What is known of the table before its first row.
@@ -50,15 +45,31 @@ struct Table {
     units: Option<Vec<String>>,
 }
 
-/// A rule for rows to be ignored by what a column holds.
-struct ColumnRule<'a> {
-    column: usize,
-    holds: Holds<'a>,
+/// A row's cells, beside what they may be equal to.
+struct CellsOf<'r> {
+    cells: &'r Cells,
+    raw: &'r str,
+    table: &'r Table,
+    /// Its quotes make sense; else it has no cells.
+    whole: bool,
 }
 
-enum Holds<'a> {
-    Text(&'a str),
-    Match(&'a Regex),
+impl Parts for CellsOf<'_> {
+    fn are_blank(&self) -> bool {
+        self.whole && self.cells.filled() == 0
+    }
+
+    fn are_header(&self) -> bool {
+        self.whole && self.table.header.iter().any(|header| self.cells.are(self.raw, header))
+    }
+
+    fn are_units(&self) -> bool {
+        self.whole && self.table.units.as_ref().is_some_and(|units| self.cells.are(self.raw, units))
+    }
+
+    fn known(&self, column: usize) -> Option<&str> {
+        self.whole.then(|| self.cells.get(self.raw, column))
+    }
 }
 
 /// After a quote that had not closed when the bytes ended.
@@ -101,8 +112,8 @@ impl<'a> Delimited<'a> {
         read_header(reader, &mut lines, &first, delimiter)?;
         let mut opened = Self::new(reader, lines, delimiter, table);
         opened.preamble = Preamble::new(&above, delimiter);
-        opened.counts.preamble = above.count();
-        opened.counts.header = opened.lines.count() - above.count();
+        opened.sieve.counts.preamble = above.count();
+        opened.sieve.counts.header = opened.sieve.lines.count() - above.count();
         if reader.units_row {
             opened.read_units()?;
         }
@@ -134,70 +145,39 @@ impl<'a> Delimited<'a> {
     }
 
     fn new(reader: &'a Reader, lines: Lines<'a>, delimiter: u8, table: Table) -> Self {
-        let names = wanted(reader);
-        let mut rules = Vec::new();
-        for rule in &reader.ignore {
-            let (name, holds) = match rule {
-                Ignore::Line(_) => continue,
-                Ignore::Equals { column, text } => (column, Holds::Text(text.trim())),
-                Ignore::Matches { column, regex } => (column, Holds::Match(regex)),
-            };
-            let slot = names.iter().position(|known| known == name);
-            if let Some(&column) = slot.and_then(|slot| table.columns.get(slot)) {
-                rules.push(ColumnRule { column, holds });
-            }
-        }
         Self {
-            reader,
-            lines,
+            sieve: Sieve::new(reader, lines, &table.columns),
             splitter: Splitter::new(delimiter),
             preamble: Preamble::default(),
             table,
-            rules,
-            counts: LineCounts::default(),
             doubt: None,
-            after_header: false,
         }
     }
 
     fn read_units(&mut self) -> Result<(), FileFault> {
-        self.lines.release();
-        let Some(first) = self.lines.advance()? else {
+        self.sieve.lines.release();
+        let Some(first) = self.sieve.lines.advance()? else {
             self.table.units = Some(vec![]);
             return Ok(());
         };
         let mut text = String::new();
-        let last = heading_row(&mut self.lines, &mut self.splitter, &first, &mut text)?;
+        let last = heading_row(&mut self.sieve.lines, &mut self.splitter, &first, &mut text)?;
         self.table.units = Some(self.splitter.cells.texts(&text));
-        self.counts.units = 1 + last.number - first.number;
+        self.sieve.counts.units = 1 + last.number - first.number;
         Ok(())
     }
 
     /// Reads the row that begins with `first` into `row`; `false` when it is not one to be handed out.
     fn read_row(&mut self, first: &Line, row: &mut Row) -> Result<bool, FileFault> {
-        let after_header = std::mem::take(&mut self.after_header);
-        row.clear();
-        row.line = first.number;
-        row.lines = 1;
-        row.bytes = Some((first.start, first.end));
-        if let Some(fault) = decode_row(&self.lines, first, &mut row.raw) {
-            row.fault = Some(RowFault::Unreadable(fault));
-            return Ok(true);
-        }
-        if self.ends_table(first, &row.raw) {
-            self.pass_footer()?;
-            return Ok(false);
-        }
-        let gathered = self.splitter.gather(&mut self.lines, first, &mut row.raw)?;
-        let last = gathered.last;
+        let Gathered { last, stray } = self.splitter.gather(&mut self.sieve.lines, first, &mut row.raw)?;
         row.lines = 1 + last.number - first.number;
         row.bytes = Some((first.start, last.end));
         let (start, end) = readable(&row.raw, last.ending);
-        if let Some(count) = self.no_row(&row.raw[start..end], &row.raw, gathered.stray.is_none(), after_header) {
-            *count += row.lines;
+        let parts = CellsOf { cells: &self.splitter.cells, raw: &row.raw, table: &self.table, whole: stray.is_none() };
+        if self.sieve.sift(&row.raw[start..end], row.lines, &parts) {
             return Ok(false);
         }
-        row.fault = match gathered.stray {
+        row.fault = match stray {
             Some(stray) => Some(self.stray_quote(first, &row.raw, stray)),
             None => {
                 self.settle_width(first)?;
@@ -206,40 +186,6 @@ impl<'a> Delimited<'a> {
             }
         };
         Ok(true)
-    }
-
-    fn ends_table(&self, line: &Line, raw: &str) -> bool {
-        let (start, end) = readable(raw, line.ending);
-        self.reader.stop_at.as_ref().is_some_and(|stop| stop.is_match(&raw[start..end]))
-    }
-
-    /// Counts the line just read and all after it as the footer.
-    fn pass_footer(&mut self) -> Result<(), FileFault> {
-        self.counts.footer += 1;
-        self.lines.release();
-        while self.lines.advance()?.is_some() {
-            self.counts.footer += 1;
-        }
-        Ok(())
-    }
-
-    /// The count to which the lines of what was read belong if it is no row.
-    fn no_row(&mut self, text: &str, raw: &str, whole: bool, after_header: bool) -> Option<&mut u64> {
-        let cells = &self.splitter.cells;
-        if whole && (cells.filled() == 0 || text.bytes().all(|byte| byte == 0x1A)) {
-            self.after_header = after_header;
-            return Some(&mut self.counts.blank);
-        }
-        if whole && self.table.header.iter().any(|header| cells.are(raw, header)) {
-            self.after_header = true;
-            return Some(&mut self.counts.repeated_header);
-        }
-        if whole && after_header && self.table.units.as_ref().is_some_and(|units| cells.are(raw, units)) {
-            return Some(&mut self.counts.units);
-        }
-        let ignored = self.reader.ignore.iter().any(|rule| matches!(rule, Ignore::Line(line) if line.is_match(text)))
-            || whole && self.rules.iter().any(|rule| rule.holds.is(cells.get(raw, rule.column)));
-        ignored.then_some(&mut self.counts.ignored)
     }
 
     /// Without a header, the first row says how many columns there are.
@@ -286,8 +232,7 @@ impl<'a> Delimited<'a> {
             let what = "each of its lines looks like a row of its own, so the quote that joins them may be a stray one";
             return Some(RowFault::Unreadable(what.to_owned()));
         }
-        let unfinished = last.ending == LineEnd::Missing && self.reader.last_line == LastLine::Finished;
-        unfinished.then_some(RowFault::Unfinished)
+        self.sieve.unfinished(last)
     }
 
     /// The fault of a line on which a quote went astray.
@@ -313,29 +258,21 @@ impl Rows for Delimited<'_> {
 
     fn next_row(&mut self, row: &mut Row) -> Result<bool, FileFault> {
         loop {
-            self.lines.release();
-            let Some(first) = self.lines.advance()? else { return Ok(false) };
-            if self.read_row(&first, row)? {
-                return Ok(true);
+            match self.sieve.take(row)? {
+                Taken::End => return Ok(false),
+                Taken::Spoiled => return Ok(true),
+                Taken::Line(first) if self.read_row(&first, row)? => return Ok(true),
+                Taken::Line(_) => {}
             }
         }
     }
 
     fn counts(&self) -> LineCounts {
-        self.counts
+        self.sieve.counts
     }
 
     fn lines(&self) -> u64 {
-        self.lines.count()
-    }
-}
-
-impl Holds<'_> {
-    fn is(&self, cell: &str) -> bool {
-        match self {
-            Self::Text(text) => cell == *text,
-            Self::Match(regex) => regex.is_match(cell),
-        }
+        self.sieve.lines.count()
     }
 }
 
@@ -441,18 +378,6 @@ fn looks_like_rows(raw: &str, delimiter: u8, width: usize) -> bool {
     raw.split(['\r', '\n']).filter(|line| !line.is_empty()).all(|line| literal_cells(line, delimiter) == width)
 }
 
-/// Adds a line's text to `raw`; says what is wrong with it if it cannot be a row's.
-fn decode_row(lines: &Lines, line: &Line, raw: &mut String) -> Option<String> {
-    if line.too_long {
-        return Some(format!("the line has {} bytes, more than any table's", line.end - line.start));
-    }
-    let from = raw.len();
-    match lines.decode(line, raw) {
-        Err(fault) => Some(fault.what),
-        Ok(()) => nul_in(line, &raw[from..]),
-    }
-}
-
 /// Reads a row that stands above the table's rows, whose faults are the whole export's; returns its last line.
 fn heading_row(lines: &mut Lines, splitter: &mut Splitter, first: &Line, text: &mut String) -> Result<Line, FileFault> {
     heading::decode(lines, first, text)?;
@@ -474,10 +399,7 @@ fn read_header(reader: &Reader, lines: &mut Lines, first: &Line, delimiter: u8) 
         line = heading_row(lines, &mut splitter, &line, &mut text)?;
         header.push(splitter.cells.texts(&text));
         if done < count {
-            let next = lines.advance_within(super::text::LONGEST_LINE)?.flatten();
-            line = next.ok_or_else(|| {
-                FileFault::Layout(format!("the header should take {count} lines; line {} is the last", line.number))
-            })?;
+            line = heading::following(lines, &line, count)?;
         }
     }
     let labels = join_labels(&header);

@@ -10,7 +10,7 @@ use unicode_normalization::UnicodeNormalization;
 
 use super::FileFault;
 use super::cells::{Cells, Split};
-use super::text::{Line, Lines, holds_nul, nul_in, readable};
+use super::text::{LONGEST_LINE, Line, Lines, holds_nul, nul_in, readable};
 
 /// How much text above the header is remembered: more is no preamble.
 const LONGEST_PREAMBLE: usize = 256 * 1024;
@@ -35,7 +35,8 @@ pub struct Above {
 }
 
 impl Above {
-    fn add(&mut self, line: &str) {
+    /// Adds a line, as long as there is room.
+    pub fn add(&mut self, line: &str) {
         self.count += 1;
         if self.size + line.len() <= LONGEST_PREAMBLE {
             self.size += line.len() + 1;
@@ -98,6 +99,13 @@ pub fn seek(lines: &mut Lines, header: &Header, above: &mut Above) -> Result<Lin
     }
     // The header may well be on the line that could not be decoded.
     Err(spoiled.unwrap_or_else(|| not_found(header, above)))
+}
+
+/// The line after `line` in a header that takes `count` lines.
+pub fn following(lines: &mut Lines, line: &Line, count: u64) -> Result<Line, FileFault> {
+    let next = lines.advance_within(LONGEST_LINE)?.flatten();
+    let what = || format!("the header should take {count} lines; line {} is the last", line.number);
+    next.ok_or_else(|| FileFault::Layout(what()))
 }
 
 fn not_found(header: &Header, above: &Above) -> FileFault {

@@ -10,6 +10,7 @@ pub mod heading;
 pub mod json;
 pub mod json_lines;
 pub mod paths;
+pub mod sieve;
 pub mod text;
 pub mod workbook;
 pub mod xml;
@@ -230,6 +231,10 @@ pub fn wanted(reader: &Reader) -> Vec<String> {
 pub fn open<'a>(reader: &'a Reader, bytes: &'a dyn Bytes) -> Result<Box<dyn Rows + 'a>, FileFault> {
     match &reader.format {
         Format::Delimited { delimiter } => Ok(Box::new(delimited::Delimited::open(reader, *delimiter, bytes)?)),
+        Format::FixedWidth { columns } => Ok(Box::new(fixed_width::FixedWidth::open(reader, columns, bytes)?)),
+        Format::Json { rows } => Ok(Box::new(json::Json::open(reader, rows, bytes)?)),
+        Format::JsonLines { rows } => Ok(Box::new(json_lines::JsonLines::open(reader, rows, bytes)?)),
+        Format::Workbook { sheet } => Ok(Box::new(workbook::Workbook::open(reader, sheet, bytes)?)),
         other => Err(FileFault::Layout(format!(
             "exports of the format \"{}\" cannot be read by this version; \"delimited\" can",
             other.name()

@@ -4,6 +4,8 @@
 //! every byte belongs to exactly one line (or to the byte-order mark); the buffer is bounded whatever the export
 //! holds; text is either what the bytes say in the stated encoding, or a fault.
 
+pub mod decoded;
+
 use std::io::{self, Read};
 
 use encoding_rs::{DecoderResult, UTF_8, UTF_16BE, UTF_16LE};
@@ -70,7 +72,7 @@ pub struct Undecodable {
 
 /// How bytes become text, once that is settled.
 #[derive(Debug, Clone, Copy)]
-enum Coding {
+pub(super) enum Coding {
     Utf8,
     /// Nobody said what it is, and it is not UTF-8: only ASCII is the same in all that it may be.
     Ascii,
@@ -88,6 +90,18 @@ impl Coding {
         } else {
             Self::Other(encoding)
         }
+    }
+
+    /// How many bytes a decoded text takes in the export. In encodings of several bytes, which can say one thing in two
+    /// ways, it is what encoding it again takes.
+    pub(super) fn bytes_of(self, text: &str) -> u64 {
+        let count = match self {
+            Self::Utf8 | Self::Ascii => text.len(),
+            Self::Utf16(_) => 2 * text.encode_utf16().count(),
+            Self::Other(encoding) if encoding.is_single_byte() => text.chars().count(),
+            Self::Other(encoding) => encoding.encode(text).0.len(),
+        };
+        count as u64
     }
 
     /// Bytes of one code unit.
@@ -166,6 +180,11 @@ impl<'a> Lines<'a> {
         while lines.filled < mark && lines.fill()? {}
         lines.at = mark.min(lines.filled);
         Ok(lines)
+    }
+
+    /// How its bytes become text.
+    pub(super) fn coding(&self) -> Coding {
+        self.coding
     }
 
     /// Lines handed out so far.

@@ -1,0 +1,457 @@
+//! The rows of a worksheet, one after the other.
+//!
+//! Invariants: a cell's text is what the workbook holds and nothing is calculated; rows and cells stand where the
+//! sheet says and in its order, else nothing of it is read; at most one row is held in memory, and of that no more
+//! than [`LONGEST_LINE`] bytes; the end is handed out only when the whole part was read and was sound.
+
+use quick_xml::events::{BytesStart, Event};
+
+use super::super::FileFault;
+use super::super::heading::excerpt;
+use super::super::text::LONGEST_LINE;
+use super::markup::{Markup, referred};
+use super::number::add_number;
+use super::package::Stream;
+use super::texts::{Rich, Texts, unescape};
+
+/// The bounds of every sheet of this format.
+const MOST_ROWS: u64 = 1_048_576;
+const MOST_COLUMNS: u32 = 16_384;
+/// What stands for a formula that no program has calculated.
+const NOT_CALCULATED: &str = "(formula without a value)";
+
+/// A cell that is not empty.
+#[derive(Debug, Clone, Copy)]
+pub struct Cell {
+    /// Its column, from 0.
+    pub column: usize,
+    /// Whether it is a number, and no text.
+    pub number: bool,
+    /// Where its text stands in the row's, blanks around it excluded.
+    start: usize,
+    end: usize,
+}
+
+/// A row with a cell that is not empty.
+#[derive(Debug, Default)]
+pub struct SheetRow {
+    /// The sheet's row, from 1.
+    pub number: u64,
+    /// Its cells that are not empty, by column.
+    pub cells: Vec<Cell>,
+    /// The cells' texts as exported, in the order of their columns and with a tab between two columns.
+    pub raw: String,
+    /// It holds more text than any table's row, and only the beginning is here.
+    pub too_long: bool,
+}
+
+impl SheetRow {
+    /// The text of a cell of this row.
+    pub fn text(&self, cell: &Cell) -> &str {
+        &self.raw[cell.start..cell.end]
+    }
+
+    /// The cell in a column, if it is not empty.
+    pub fn at(&self, column: usize) -> Option<&Cell> {
+        self.cells.binary_search_by_key(&column, |cell| cell.column).ok().map(|index| &self.cells[index])
+    }
+
+    /// The text in a column; empty when there is none.
+    pub fn text_at(&self, column: usize) -> &str {
+        self.at(column).map_or("", |cell| self.text(cell))
+    }
+
+    /// The texts of all columns up to the last that is not empty.
+    pub fn texts(&self) -> Vec<String> {
+        let width = self.cells.last().map_or(0, |cell| cell.column + 1);
+        let mut texts = vec![String::new(); width];
+        self.cells.iter().for_each(|cell| self.text(cell).clone_into(&mut texts[cell.column]));
+        texts
+    }
+
+    fn clear(&mut self, number: u64) {
+        self.number = number;
+        self.cells.clear();
+        self.raw.clear();
+        self.too_long = false;
+    }
+
+    /// Adds the text that was just put at the end of the row's as a cell; blanks alone are none.
+    fn add(&mut self, column: usize, from: usize, number: bool) {
+        let written = &self.raw[from..];
+        let text = written.trim();
+        if text.is_empty() {
+            self.raw.truncate(from);
+            return;
+        }
+        let start = from + written.len() - written.trim_start().len();
+        self.cells.push(Cell { column, number, start, end: start + text.len() });
+    }
+}
+
+/// Which element one stands in.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+enum Inside {
+    Part,
+    Worksheet,
+    Rows,
+    Row,
+    Cell,
+    Value,
+    Formula,
+    /// A cell's own text.
+    Text,
+}
+
+/// What a cell says it holds.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+enum Kind {
+    Number,
+    SharedText,
+    OwnText,
+    /// A formula's text, or a moment in ISO 8601.
+    Written,
+    Truth,
+    Error,
+}
+
+/// A cell that is being read.
+#[derive(Debug)]
+struct Open {
+    column: u32,
+    kind: Kind,
+    formula: bool,
+    /// It has an element for a value, be it empty.
+    valued: bool,
+    value: String,
+}
+
+/// The rows of a worksheet.
+pub struct Sheet {
+    markup: Markup<Stream>,
+    texts: Texts,
+    at: At,
+    done: bool,
+}
+
+/// Where in the sheet one stands.
+struct At {
+    inside: Inside,
+    /// So deep in an element that is passed over.
+    passed: usize,
+    had_rows: bool,
+    row: u64,
+    /// The column after the last cell.
+    column: u32,
+    cell: Open,
+    rich: Rich,
+    /// How deep in the cell's own text.
+    rich_depth: usize,
+}
+
+impl Sheet {
+    /// Stands before the first row.
+    pub fn new(part: &str, bytes: Stream, texts: Texts) -> Self {
+        let cell = Open { column: 0, kind: Kind::Number, formula: false, valued: false, value: String::new() };
+        let at = At {
+            inside: Inside::Part,
+            passed: 0,
+            had_rows: false,
+            row: 0,
+            column: 0,
+            cell,
+            rich: Rich::default(),
+            rich_depth: 0,
+        };
+        Self { markup: Markup::new(part, bytes), texts, at, done: false }
+    }
+
+    /// Fills `row` with the next one that has a cell that is not empty; `false` at the end.
+    pub fn next_row(&mut self, row: &mut SheetRow) -> Result<bool, FileFault> {
+        while !self.done {
+            let Self { markup, texts, at, done } = self;
+            let outcome = match markup.advance()? {
+                Event::Start(tag) => at.start(&tag, row),
+                Event::End(_) => match at.end(texts, row) {
+                    Ok(true) if !row.cells.is_empty() || row.too_long => return Ok(true),
+                    outcome => outcome.map(drop),
+                },
+                Event::Text(text) => {
+                    at.add(&text.xml10_content());
+                    Ok(())
+                }
+                Event::CData(text) => {
+                    at.add(&text.xml10_content());
+                    Ok(())
+                }
+                Event::GeneralRef(reference) => {
+                    referred(&reference).map(|character| at.add(character.encode_utf8(&mut [0; 4])))
+                }
+                Event::Eof if at.had_rows => {
+                    *done = true;
+                    Ok(())
+                }
+                Event::Eof => Err("it holds no rows".to_owned()),
+                _ => Ok(()),
+            };
+            outcome.map_err(|what| self.fault(&what))?;
+        }
+        Ok(false)
+    }
+
+    fn fault(&self, what: &str) -> FileFault {
+        match self.at.row {
+            0 => self.markup.fault(what),
+            row => self.markup.fault(&format!("row {row}: {what}")),
+        }
+    }
+}
+
+impl At {
+    /// An element begins.
+    fn start(&mut self, tag: &BytesStart<'_>, row: &mut SheetRow) -> Result<(), String> {
+        if self.passed > 0 {
+            self.passed += 1;
+            return Ok(());
+        }
+        let name = tag.local_name();
+        match (self.inside, name.as_ref()) {
+            (Inside::Row, "c") => self.start_cell(tag)?,
+            (Inside::Cell, "v") if self.cell.valued => return Err("a cell has two values".to_owned()),
+            (Inside::Cell, "v") => {
+                self.cell.valued = true;
+                self.inside = Inside::Value;
+            }
+            (Inside::Cell, "f") => {
+                self.cell.formula = true;
+                self.inside = Inside::Formula;
+            }
+            (Inside::Cell, "is") => {
+                self.rich.begin();
+                self.rich_depth = 0;
+                self.cell.kind = Kind::OwnText;
+                self.cell.valued = true;
+                self.cell.value.clear();
+                self.inside = Inside::Text;
+            }
+            (Inside::Text, _) => {
+                self.rich_depth += 1;
+                self.rich.start(tag)?;
+            }
+            (Inside::Rows, "row") => self.start_row(tag, row)?,
+            (Inside::Part, "worksheet") => self.inside = Inside::Worksheet,
+            (Inside::Worksheet, "sheetData") if self.had_rows => return Err("it holds two tables".to_owned()),
+            (Inside::Worksheet, "sheetData") => {
+                self.had_rows = true;
+                self.inside = Inside::Rows;
+            }
+            (Inside::Worksheet, _) | (Inside::Row | Inside::Cell, "extLst") => self.passed = 1,
+            (_, other) => return Err(format!("\"{}\" stands where it should not", excerpt(other))),
+        }
+        Ok(())
+    }
+
+    fn start_row(&mut self, tag: &BytesStart<'_>, row: &mut SheetRow) -> Result<(), String> {
+        let mut number = None;
+        for attribute in tag.attributes().with_checks(false) {
+            let attribute = attribute.map_err(|error| error.to_string())?;
+            if attribute.key.as_ref() == "r" && number.replace(row_number(&attribute.value)?).is_some() {
+                return Err("a row has two numbers".to_owned());
+            }
+        }
+        let number = number.unwrap_or(self.row + 1);
+        if number <= self.row || number > MOST_ROWS {
+            return Err(format!("row {number} follows it"));
+        }
+        self.row = number;
+        self.column = 0;
+        self.inside = Inside::Row;
+        row.clear(number);
+        Ok(())
+    }
+
+    fn start_cell(&mut self, tag: &BytesStart<'_>) -> Result<(), String> {
+        let (mut column, mut kind) = (None, None);
+        for attribute in tag.attributes().with_checks(false) {
+            let attribute = attribute.map_err(|error| error.to_string())?;
+            let again = match attribute.key.as_ref() {
+                "r" => column.replace(self.column_of(&attribute.value)?).is_some(),
+                "t" => kind.replace(kind_of(&attribute.value)?).is_some(),
+                _ => false,
+            };
+            if again {
+                return Err("a cell says twice where it is or what it holds".to_owned());
+            }
+        }
+        let column = column.unwrap_or(self.column);
+        if column < self.column || column >= MOST_COLUMNS {
+            return Err(format!("cell {} does not stand in the order of the columns", letters(column as usize)));
+        }
+        self.column = column + 1;
+        self.cell.column = column;
+        self.cell.kind = kind.unwrap_or(Kind::Number);
+        self.cell.formula = false;
+        self.cell.valued = false;
+        self.cell.value.clear();
+        self.inside = Inside::Cell;
+        Ok(())
+    }
+
+    /// The column (from 0) of a cell's name, which must be of this row.
+    fn column_of(&self, name: &str) -> Result<u32, String> {
+        let wrong = || format!("a cell names itself \"{}\"", excerpt(name));
+        let letters = name.bytes().take_while(u8::is_ascii_alphabetic).count();
+        let (letters, digits) = name.split_at(letters);
+        if letters.is_empty() || letters.len() > 3 || row_number(digits) != Ok(self.row) {
+            return Err(wrong());
+        }
+        let value = |letter: u8| u32::from(letter.to_ascii_uppercase() - b'A') + 1;
+        Ok(letters.bytes().fold(0, |column, letter| column * 26 + value(letter)) - 1)
+    }
+
+    /// Characters.
+    fn add(&mut self, characters: &str) {
+        // What is longer than a row may be spoils the row when the cell ends.
+        if self.cell.value.len() <= LONGEST_LINE && self.passed == 0 {
+            match self.inside {
+                // Beside a text of its own a cell's value says nothing.
+                Inside::Value if self.cell.kind != Kind::OwnText => self.cell.value.push_str(characters),
+                Inside::Text => self.rich.add(characters, &mut self.cell.value),
+                _ => {}
+            }
+        }
+    }
+
+    /// An element ends; `true` when it was a row.
+    fn end(&mut self, texts: &Texts, row: &mut SheetRow) -> Result<bool, String> {
+        if self.passed > 0 {
+            self.passed -= 1;
+            return Ok(false);
+        }
+        self.inside = match self.inside {
+            Inside::Cell => {
+                self.end_cell(texts, row)?;
+                Inside::Row
+            }
+            Inside::Value | Inside::Formula => Inside::Cell,
+            Inside::Text if self.rich_depth > 0 => {
+                self.rich_depth -= 1;
+                self.rich.end(&mut self.cell.value);
+                Inside::Text
+            }
+            Inside::Text => Inside::Cell,
+            Inside::Row => {
+                self.inside = Inside::Rows;
+                return Ok(true);
+            }
+            Inside::Rows => Inside::Worksheet,
+            Inside::Worksheet | Inside::Part => Inside::Part,
+        };
+        Ok(false)
+    }
+
+    /// Adds the cell to the row, unless it is empty.
+    fn end_cell(&mut self, texts: &Texts, row: &mut SheetRow) -> Result<(), String> {
+        if row.too_long {
+            return Ok(());
+        }
+        let column = self.cell.column as usize;
+        let before = row.raw.len();
+        let last = row.cells.last().map_or(0, |cell| cell.column);
+        row.raw.extend(std::iter::repeat_n('\t', column - last));
+        let from = row.raw.len();
+        let number = self.cell.add_text(texts, &mut row.raw)?;
+        row.add(column, from, number);
+        if row.raw.len() == from {
+            row.raw.truncate(before);
+        }
+        if row.raw.len() > LONGEST_LINE {
+            row.too_long = true;
+            row.cells.clear();
+            row.raw.clear();
+        }
+        Ok(())
+    }
+}
+
+impl Open {
+    /// Adds the cell's text to `text`; whether it is a number.
+    fn add_text(&mut self, texts: &Texts, text: &mut String) -> Result<bool, String> {
+        let value = self.value.as_str();
+        let nothing = value.trim_ascii().is_empty();
+        // An empty value of a formula was calculated only if it says that it is a text.
+        let is_text = matches!(self.kind, Kind::Written | Kind::OwnText);
+        if self.formula && (!self.valued || nothing && !is_text) {
+            text.push_str(NOT_CALCULATED);
+        }
+        if nothing {
+            return Ok(false);
+        }
+        match self.kind {
+            Kind::Number if add_number(value, text) => return Ok(true),
+            Kind::Number | Kind::OwnText | Kind::Error => text.push_str(value),
+            Kind::Written => {
+                let from = text.len();
+                text.push_str(value);
+                unescape(text, from);
+            }
+            Kind::Truth => text.push_str(truth(value)),
+            Kind::SharedText => {
+                let shared = value.trim().parse().ok().and_then(|index| texts.get(index));
+                text.push_str(shared.ok_or_else(|| format!("there is no shared text \"{}\"", excerpt(value)))?);
+            }
+        }
+        Ok(false)
+    }
+}
+
+/// A truth value as it is shown; what is none stays as it is written.
+fn truth(value: &str) -> &str {
+    match value.trim() {
+        "1" | "true" => "TRUE",
+        "0" | "false" => "FALSE",
+        other => other,
+    }
+}
+
+fn kind_of(word: &str) -> Result<Kind, String> {
+    Ok(match word {
+        "n" => Kind::Number,
+        "s" => Kind::SharedText,
+        "inlineStr" => Kind::OwnText,
+        "str" | "d" => Kind::Written,
+        "b" => Kind::Truth,
+        "e" => Kind::Error,
+        other => return Err(format!("a cell is of the unknown kind \"{}\"", excerpt(other))),
+    })
+}
+
+fn row_number(digits: &str) -> Result<u64, String> {
+    let number = Some(digits).filter(|digits| digits.bytes().all(|byte| byte.is_ascii_digit()));
+    let number = number.and_then(|digits| digits.parse().ok()).filter(|number| (1..=MOST_ROWS).contains(number));
+    number.ok_or_else(|| format!("\"{}\" is no row's number", excerpt(digits)))
+}
+
+/// A column's letters, from its number, from 0.
+pub fn letters(column: usize) -> String {
+    let mut letters = Vec::new();
+    let mut rest = column + 1;
+    while rest > 0 {
+        rest -= 1;
+        letters.push(b'A' + (rest % 26) as u8);
+        rest /= 26;
+    }
+    letters.iter().rev().map(|&letter| char::from(letter)).collect()
+}
+
+#[cfg(test)]
+mod tests {
+    use super::letters;
+
+    #[test]
+    fn columns_have_their_letters() {
+        for (column, name) in [(0, "A"), (25, "Z"), (26, "AA"), (701, "ZZ"), (702, "AAA"), (16_383, "XFD")] {
+            assert_eq!(letters(column), name);
+        }
+    }
+}
