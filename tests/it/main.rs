@@ -11,6 +11,7 @@ mod cuts;
 mod errors;
 mod house;
 mod kills;
+mod probe;
 mod properties;
 mod readings;
 mod reference;

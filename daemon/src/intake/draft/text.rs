@@ -81,8 +81,53 @@ pub fn sniff(text: &str) -> Option<u8> {
     }
     let mut sniffer = Sniffer::new();
     sniffer.sample_size(SampleSize::Bytes(SNIFFED));
-    let found = sniffer.sniff_bytes(text.get(..end)?.as_bytes()).ok()?.dialect.delimiter;
-    found.is_ascii().then_some(found)
+    let text = text.get(..end)?;
+    let found = sniffer.sniff_bytes(text.as_bytes()).ok()?.dialect.delimiter;
+    found.is_ascii().then(|| overruled(text, found).unwrap_or(found))
+}
+
+/// The delimiters that instruments use.
+const USUAL: [u8; 4] = [b';', b'\t', b',', b'|'];
+
+/// Another delimiter than the one found, when a header of labels and nearly all lines under it have the same, larger
+/// number of cells by it, while by the one found the header has not as many cells as its rows. The method of table
+/// uniformity looks at rows alone, and so takes the decimal commas of a table parted by semicolons for its delimiter.
+fn overruled(text: &str, found: u8) -> Option<u8> {
+    let lines: Vec<&str> = physical(text).filter(|line| !line.trim().is_empty()).collect();
+    let by_found = cell_counts(&lines, found);
+    let usual = |counts: &[usize]| {
+        let mut tally: BTreeMap<usize, usize> = BTreeMap::new();
+        counts.iter().filter(|count| **count > 1).for_each(|count| *tally.entry(*count).or_default() += 1);
+        tally.into_iter().max_by_key(|(_, lines)| *lines).map_or(0, |(width, _)| width)
+    };
+    let found_width = usual(&by_found);
+    USUAL.into_iter().filter(|other| *other != found).find(|other| {
+        let counts = cell_counts(&lines, *other);
+        let width = usual(&counts);
+        let Some(first) = counts.iter().position(|count| *count == width) else { return false };
+        let below = counts.get(first..).unwrap_or_default();
+        let alike = below.iter().filter(|count| **count == width).count();
+        let labels = split(lines.get(first).copied().unwrap_or_default(), *other).concat();
+        let is_header = labels.len() >= 2 && labels.iter().all(|label| !is_datum(label));
+        width >= 3
+            && width > found_width
+            && alike >= 3
+            && alike * 10 >= below.len() * 8
+            && is_header
+            && by_found.get(first).is_some_and(|count| *count != found_width)
+    })
+}
+
+/// How many cells each line has, empty ones too.
+fn cell_counts(lines: &[&str], delimiter: u8) -> Vec<usize> {
+    let mut cells = Cells::new(delimiter);
+    lines
+        .iter()
+        .map(|line| {
+            cells.split(line, 0);
+            cells.count()
+        })
+        .collect()
 }
 
 /// The physical lines.
@@ -365,6 +410,15 @@ mod tests {
         assert!(is_units_row(&rows(",kg,cm")[0], &below));
         assert!(!is_units_row(&rows("A0,3.3,4")[0], &below));
         assert!(!is_units_row(&rows("left,right,left")[0], &below));
+    }
+
+    #[test]
+    fn decimal_commas_part_no_cells() {
+        let rows = "PW-007;T1;26.02.2025;links;1;31,8;\nPW-002;T1;27.02.2025;rechts;2;35,1;\n".repeat(20);
+        let text = format!("Tester: B\n\nCode;Termin;Datum;Seite;Versuch;Kraft (kg);Bemerkung\n{rows}");
+        assert_eq!(sniff(&text), Some(b';'));
+        assert_eq!(overruled(&text, b','), Some(b';'));
+        assert_eq!(overruled("a,b,c\n1,2,3\n1,2,3\n", b','), None);
     }
 
     #[test]
