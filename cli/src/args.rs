@@ -68,9 +68,12 @@ JSON: {\"code\", \"toml\", \"gaps\": [{\"key\", \"text\"}], \"unsure\", \"misfit
     #[command(after_help = "\
 Example:
   revisant check --study grip
+  revisant check --study grip --sample exports/dyn-1/today.csv
 
-Exit status 2 when the plan is unsound, 3 when it is sound and would change what is filed.
-JSON: {\"sound\", \"sha256\", \"warnings\": [fault], \"would_change\": [text]}")]
+Exit status 2 when the plan is unsound, 3 when it is sound and would change what is filed, or would hold
+something of the sample.
+JSON: {\"sound\", \"sha256\", \"warnings\": [fault], \"would_change\": [text]}; of a sample {\"export\", \"instrument\",
+\"state\", \"lines\", \"readings\", \"first\": [reading], \"holds\": [hold], \"held_before\": [hold], …}")]
     Check(Check),
     /// Who is enrolled
     #[command(
@@ -270,9 +273,12 @@ pub struct Check {
     /// Print a JSON Schema of the plan, for editors
     #[arg(long)]
     pub schema: bool,
-    /// Show what the plan would do with a sample export
-    #[arg(long, value_name = "FILE")]
+    /// Show what the plan would do with this export, with nothing filed
+    #[arg(long, value_name = "FILE", conflicts_with = "schema")]
     pub sample: Option<PathBuf>,
+    /// Whose export the sample is, where its folder and its layout do not tell
+    #[arg(long, value_name = "CODE", requires = "sample")]
+    pub instrument: Option<String>,
 }
 
 /// `roster`

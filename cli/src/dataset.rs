@@ -8,7 +8,7 @@ use std::collections::{BTreeMap, HashMap};
 
 use chrono::NaiveDate;
 use revisant_schema::completeness::chosen_session;
-use revisant_schema::plan::{Analysis, Measure, OffWindow, Summary, VisitIx};
+use revisant_schema::plan::{Analysis, Measure, OffWindow, Plan, Summary, VisitIx};
 use revisant_schema::reading::Condition;
 use revisant_schema::records::View;
 use revisant_schema::records::view::{AccountedRow, ValueRow};
@@ -18,6 +18,7 @@ use serde::Serialize;
 use crate::error::Failure;
 use crate::report::text::list;
 use crate::study::Basis;
+use crate::took_part::{Corrections, TookPart, outside_use};
 
 /// The within factor that an analysis has.
 #[derive(Debug, Clone, PartialEq, Eq)]
@@ -164,8 +165,10 @@ pub struct Care {
     pub accounted: Vec<AccountedCell>,
     /// Readings at a limit of detection.
     pub at_limit: usize,
-    /// Cells with readings of several instruments.
+    /// Cells with readings of several instruments, all of which make up the cell's number.
     pub several_instruments: usize,
+    /// Which instruments gave the readings.
+    pub took_part: TookPart,
 }
 
 /// The data of one analysis.
@@ -190,8 +193,19 @@ impl Dataset {
         let accounted = view.accounted()?;
         let factor = factor(basis, analysis);
         let conditions = conditions(view, measure, &factor)?;
-        let mut builder =
-            Builder { basis, analysis, measure, readings, accounted, today, factor, conditions, care: Care::default() };
+        let corrections = Corrections::of(view, readings.values.iter().filter_map(|value| value.placed_by))?;
+        let mut builder = Builder {
+            basis,
+            analysis,
+            measure,
+            readings,
+            accounted,
+            today,
+            factor,
+            conditions,
+            instruments: Instruments { codes: view.terms()?, corrections },
+            care: Care::default(),
+        };
         let subjects: Vec<&String> = basis.roster.subjects.keys().collect();
         let rows = subjects.into_iter().map(|subject| builder.row(subject)).collect();
         let positions = (builder.factor.code == VISIT).then(|| positions(basis, &analysis.visits));
@@ -289,16 +303,43 @@ fn conditions(view: &View<'_>, measure: &Measure, factor: &Factor) -> Result<Vec
     let all: Vec<Condition> = measure.cells().into_iter().map(|cell| Condition::of_cell(measure, &cell)).collect();
     let of_level = |level: Option<&String>| {
         let holds = |condition: &&Condition| level.is_none_or(|level| condition.0.get(&factor.code) == Some(level));
-        let part = |condition: &Condition| Part {
-            condition: condition.clone(),
-            term: terms.get(&condition.to_string()).copied(),
-        };
+        // The empty text has no row of its own.
+        let term = |text: String| if text.is_empty() { Some(0) } else { terms.get(&text).copied() };
+        let part = |condition: &Condition| Part { condition: condition.clone(), term: term(condition.to_string()) };
         all.iter().filter(holds).map(part).collect()
     };
     Ok(match factor.code.as_str() {
         VISIT => vec![of_level(None)],
         _ => factor.levels.iter().map(|level| of_level(Some(level))).collect(),
     })
+}
+
+/// What is known of the instruments that gave values.
+struct Instruments {
+    /// Every term; that of an instrument is its code, empty for readings by hand.
+    codes: HashMap<i64, String>,
+    corrections: Corrections,
+}
+
+impl Instruments {
+    fn code(&self, value: &ValueRow) -> &str {
+        self.codes.get(&value.instrument).map_or("", String::as_str)
+    }
+
+    /// How many the instrument gave that gave most, with those by hand.
+    fn most_of_one(&self, values: &[ValueRow]) -> usize {
+        let (by_hand, exported): (Vec<&ValueRow>, Vec<&ValueRow>) =
+            values.iter().partition(|value| self.code(value).is_empty());
+        let of = |instrument: i64| exported.iter().filter(|value| value.instrument == instrument).count();
+        exported.iter().map(|value| of(value.instrument)).max().unwrap_or(0) + by_hand.len()
+    }
+
+    fn note(&self, took_part: &mut TookPart, value: &ValueRow, seen: (&Plan, &str, VisitIx, NaiveDate)) {
+        let (plan, measure, visit, day) = seen;
+        let code = self.code(value);
+        let corrected = value.placed_by.and_then(|plan| self.corrections.find(plan, code, measure, day));
+        took_part.see(code, visit, corrected.is_some(), outside_use(plan, code, day));
+    }
 }
 
 struct Builder<'b> {
@@ -310,6 +351,7 @@ struct Builder<'b> {
     today: NaiveDate,
     factor: Factor,
     conditions: Vec<Vec<Part>>,
+    instruments: Instruments,
     care: Care,
 }
 
@@ -375,7 +417,7 @@ impl Builder<'_> {
         level: usize,
         session: Option<(NaiveDate, i64, bool)>,
     ) -> Result<f64, Empty> {
-        let Some((_, session, off_window)) = session else { return Err(self.absent(subject, course, visit)) };
+        let Some((day, session, off_window)) = session else { return Err(self.absent(subject, course, visit)) };
         if off_window && self.analysis.off_window == OffWindow::Leave {
             return Err(Empty::OffWindow);
         }
@@ -384,7 +426,7 @@ impl Builder<'_> {
         let sessions: Vec<i64> = same.map(|other| other.facts.session).collect();
         let mut numbers = Vec::new();
         for part in 0..self.conditions.get(level).map_or(0, Vec::len) {
-            numbers.push(self.one_condition(subject, visit, &sessions, (level, part))?);
+            numbers.push(self.one_condition(subject, (visit, day), &sessions, (level, part))?);
         }
         Ok(mean(&numbers))
     }
@@ -392,7 +434,7 @@ impl Builder<'_> {
     fn one_condition(
         &mut self,
         subject: &str,
-        visit: VisitIx,
+        (visit, day): (VisitIx, NaiveDate),
         sessions: &[i64],
         (level, part): (usize, usize),
     ) -> Result<f64, Empty> {
@@ -404,14 +446,18 @@ impl Builder<'_> {
         let (current, limits) = (values.len(), values.iter().filter(|value| value.limit).count());
         let several = values.iter().any(|value| value.instrument != values[0].instrument);
         let number = if enough { Ok(summarise(self.measure.summary, &values)) } else { Err(()) };
-        if current < planned as usize && current > 0 {
+        // Replicates are planned for each instrument; those entered by hand stand in for one that could not export.
+        let of_one = self.instruments.most_of_one(&values);
+        if of_one < planned as usize && current > 0 {
             let (subject, visit) = (subject.to_owned(), self.basis.plan.visits[visit].code.clone());
-            let few = FewReplicates { subject, visit, condition: condition.clone(), current, planned };
+            let few = FewReplicates { subject, visit, condition: condition.clone(), current: of_one, planned };
             self.care.fewer_replicates.push(few);
         }
         if number.is_ok() {
             self.care.at_limit += limits;
             self.care.several_instruments += usize::from(several);
+            let seen = (&self.basis.plan, self.measure.code.as_str(), visit, day);
+            values.iter().for_each(|value| self.instruments.note(&mut self.care.took_part, value, seen));
         }
         number.map_err(|()| match current {
             0 if condition.0.is_empty() => Empty::NoReading,
@@ -447,7 +493,7 @@ impl Builder<'_> {
     }
 }
 
-/// The one number of a cell's replicates; there is at least one.
+/// The one number of a cell's replicates, of all instruments that gave some; there is at least one.
 fn summarise(summary: Summary, values: &[ValueRow]) -> f64 {
     let numbers: Vec<f64> = values.iter().map(|value| value.number).collect();
     let in_order = |value: &&ValueRow| (value.moment, value.replicate);
@@ -482,7 +528,17 @@ mod tests {
 
     fn value(number: f64, minute: Option<i64>, replicate: u32) -> ValueRow {
         let moment = minute.map(|minute| minute * 60_000);
-        ValueRow { reading: 1, session: 1, condition: 1, instrument: 1, replicate, number, moment, limit: false }
+        ValueRow {
+            reading: 1,
+            session: 1,
+            condition: 1,
+            instrument: 1,
+            replicate,
+            number,
+            moment,
+            limit: false,
+            placed_by: None,
+        }
     }
 
     #[test]

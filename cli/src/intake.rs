@@ -3,16 +3,18 @@
 //! Invariant: no other module of this crate names the intake, so that what it needs and gives stands here.
 
 use std::path::Path;
+use std::sync::Arc;
 
 use revisant_daemon::intake::collect::{self, IntakeLock, Progress, Report};
 use revisant_daemon::intake::error::{IntakeError, WouldChange};
 use revisant_daemon::intake::rules::Rules;
-use revisant_daemon::intake::{draft, plan as force, replace};
+use revisant_daemon::intake::{draft, plan as force, replace, sample};
 use revisant_schema::hold::Answer;
 use revisant_schema::plan::{Loaded, Plan};
 use revisant_schema::records::exports::ExportState;
 use revisant_schema::records::view::HoldRow;
 use revisant_schema::records::{Doer, Records};
+use revisant_schema::world::World;
 use serde::Serialize;
 use serde_json::{Map, Value as Json, json};
 
@@ -45,7 +47,7 @@ pub struct PlanInForce {
 }
 
 /// Reads the plan of a study's folder.
-pub fn load(world: &dyn revisant_schema::world::World, study: &Path) -> Result<Loaded, Failure> {
+pub fn load(world: &dyn World, study: &Path) -> Result<Loaded, Failure> {
     Ok(force::load_plan(world, study)?)
 }
 
@@ -82,6 +84,34 @@ impl From<IntakeError> for Failure {
             IntakeError::Locked(_) => Self::new(kind, error.to_string()),
         }
     }
+}
+
+pub use sample::{Sample, Standing, Undecided};
+
+/// Finds whose export a file is.
+pub fn standing(
+    world: &dyn World,
+    study: &Path,
+    plan: &Plan,
+    file: &Path,
+    named: Option<&str>,
+) -> Result<Result<Standing, Undecided>, Failure> {
+    Ok(sample::standing(world, study, plan, file, named)?)
+}
+
+/// What the plan would do with a file, with nothing filed; so many of the readings are given. `progress` is told how
+/// many rows have been placed.
+pub fn sample(
+    records: Option<&Records>,
+    world: &Arc<dyn World>,
+    plan: &Loaded,
+    standing: &Standing,
+    doer: &Doer,
+    readings: u64,
+    progress: &dyn Fn(u64),
+) -> Result<Sample, Failure> {
+    let how = sample::How { world: world.clone(), plan, doer, readings, progress };
+    Ok(sample::sample(records, standing, &how)?)
 }
 
 /// What one collect did.

@@ -16,6 +16,7 @@ pub mod moment;
 pub mod output;
 pub mod report;
 pub mod study;
+pub mod took_part;
 
 use std::ffi::OsString;
 use std::io::IsTerminal;

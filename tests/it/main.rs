@@ -10,11 +10,13 @@ mod corpus;
 mod cuts;
 mod errors;
 mod house;
+mod instruments;
 mod kills;
 mod probe;
 mod properties;
 mod readings;
 mod reference;
+mod sample;
 
 use revisant_tests::site::{Programs, Site};
 

@@ -144,6 +144,7 @@ fn analyse<'a>(
         unit: &measure.unit,
         standing,
         plan: PlanUsed { version: basis.version, sha256: basis.sha256 },
+        placed_by: &basis.plan,
         analysis_plan: planned.other,
         enrolled: basis.roster.subjects.len(),
         open_holds: holds.iter().filter(|hold| measuring.contains(&hold.instrument.as_str())).count(),

@@ -4,7 +4,7 @@ use revisant_schema::plan::{Fault, Plan};
 use revisant_schema::records::Records;
 use serde_json::json;
 
-use super::Done;
+use super::{Done, sample};
 use crate::args::Check;
 use crate::error::{Exit, Failure};
 use crate::intake;
@@ -13,16 +13,15 @@ use crate::study::Context;
 
 /// Runs it.
 pub fn run(context: &mut Context<'_, '_>, args: &Check) -> Done {
-    if args.sample.is_some() {
-        let what = "showing what the plan would do with a sample export comes with a later version";
-        return Err(Failure::not_yet(what).then("leave --sample out; `revisant collect` holds what does not fit"));
-    }
     if args.schema {
         context.out.json(&revisant_schema::plan::schema())?;
         return Ok(Exit::Done);
     }
     let study = context.folder()?.to_path_buf();
     let loaded = intake::load(context.world.as_ref(), &study)?;
+    if let Some(file) = &args.sample {
+        return sample::run(context, &loaded, file, args.instrument.as_deref());
+    }
     let would_change = match Records::folder_of(&study).join("records.sqlite").exists() {
         true => intake::would_change(&context.records()?, &loaded.plan)?,
         false => vec![],

@@ -40,6 +40,15 @@ pub fn progress_bar(context: &Context<'_, '_>, what: &str) -> ProgressBar {
     bar
 }
 
+/// A count that goes on, where it is not known how far, in the same place.
+pub fn counter(context: &Context<'_, '_>, what: &str) -> ProgressBar {
+    let bar = progress_bar(context, what);
+    if let Ok(style) = ProgressStyle::with_template(&format!("{{spinner}} {{pos}} {what}, {{elapsed}}")) {
+        bar.set_style(style);
+    }
+    bar
+}
+
 fn text(context: &mut Context<'_, '_>, collected: &Collected) -> Result<(), Failure> {
     let states = collected.exports.iter().filter_map(|(state, number)| {
         let number = number.as_u64().filter(|number| *number > 0)?;

@@ -142,7 +142,8 @@ fn commands(context: &Context<'_, '_>, hold: &HoldRow) -> Vec<String> {
     lines
 }
 
-fn options(reason: Reason, likely: &[String]) -> Vec<String> {
+/// The options of `decide` that answer a hold: one for each likely answer, or one for each kind of answer.
+pub(super) fn options(reason: Reason, likely: &[String]) -> Vec<String> {
     let kinds = reason.answers().split(" or ").filter(|kind| kind.starts_with("--"));
     let mut options = Vec::new();
     for kind in kinds {

@@ -16,6 +16,7 @@ mod probe;
 mod provenance;
 mod readings;
 mod roster;
+mod sample;
 mod status;
 mod strike;
 mod trail;

@@ -2,7 +2,7 @@
 
 use std::io::Read;
 
-use revisant_schema::plan::{self, Encoding};
+use revisant_schema::plan::{self, Correction, Encoding};
 use revisant_schema::records::codec::hex;
 use revisant_schema::records::view::{ReadingFilter, ReadingRow};
 use revisant_schema::records::{ActKind, ActNumber, Records, RecordsError, TrailRow, View};
@@ -13,11 +13,12 @@ use super::Done;
 use crate::args::Provenance;
 use crate::error::{Exit, Failure};
 use crate::report::json;
-use crate::report::number::plain_or_dash;
+use crate::report::number::{plain, plain_or_dash};
 use crate::report::table::{Left, Right, Table, Whole};
 use crate::report::text::clean;
 use crate::report::when;
 use crate::study::{Basis, Context};
+use crate::took_part::Corrections;
 
 /// A row as exported is shown up to so many bytes.
 const MOST: u64 = 64 * 1024;
@@ -49,9 +50,13 @@ pub fn run(context: &mut Context<'_, '_>, args: &Provenance) -> Done {
     let row = view.reading(args.reading)?;
     let source = source(&records, &view, &row)?;
     let history = history(&records, &view, &row)?;
+    let corrections = Corrections::of(&view, std::iter::once(row.plan))?;
+    let correction = corrections.find(row.plan, &row.instrument, &row.measure, row.session.day);
+    // One that a person has amended or entered is as that person said.
+    let correction = correction.filter(|_| row.source == 0);
     match context.out.json {
-        true => context.out.json(&whole_json(&basis, &row, &source, &history))?,
-        false => text(context, &basis, &row, &source, &history)?,
+        true => context.out.json(&whole_json(&basis, &row, &source, correction, &history))?,
+        false => text(context, &basis, &row, &source, correction, &history)?,
     }
     Ok(Exit::Done)
 }
@@ -167,7 +172,13 @@ fn touched_by(act: TrailRow, reading: i64) -> Touched {
     Touched { trail: act.number, at: act.at, who: act.who, act: act.act, why: act.reason, reading }
 }
 
-fn whole_json(basis: &Basis, row: &ReadingRow, source: &Source, history: &[Touched]) -> Json {
+fn whole_json(
+    basis: &Basis,
+    row: &ReadingRow,
+    source: &Source,
+    correction: Option<&Correction>,
+    history: &[Touched],
+) -> Json {
     let mut whole = json!(json::Reading::new(basis, row));
     if let Some(fields) = whole.as_object_mut() {
         let more = [
@@ -177,6 +188,9 @@ fn whole_json(basis: &Basis, row: &ReadingRow, source: &Source, history: &[Touch
             ("text", json!(source.text)),
             ("written", json!(row.written)),
             ("plan", json!(row.plan)),
+            ("exported", json!(row.exported)),
+            ("exported_unit", json!((!row.unit.is_empty()).then_some(&row.unit))),
+            ("correction", json!(correction.map(|it| json!({ "from": it.from, "times": it.times, "plus": it.plus })))),
             ("history", json!(history)),
         ];
         fields.extend(more.map(|(name, value)| (name.to_owned(), value)));
@@ -189,6 +203,7 @@ fn text(
     basis: &Basis,
     row: &ReadingRow,
     source: &Source,
+    correction: Option<&Correction>,
     history: &[Touched],
 ) -> Result<(), Failure> {
     let unit = basis.plan.measure(&row.measure).map_or("", |(_, measure)| measure.unit.as_str());
@@ -206,6 +221,7 @@ fn text(
         )),
         Some(format!("Taken:     {}", when::taken(row.moment, row.session.day, basis.zone()))),
         row.text.as_ref().map(|text| format!("Written:   {text} {}", row.unit)),
+        correction.map(|it| corrected(it, unit)),
         Some(format!("Source:    {}", json::source(row.source))),
         row.export.as_ref().map(|export| format!("Export:    {export}, {}", row.place().unwrap_or_default())),
         source.sha256.as_ref().map(|hash| format!("SHA-256:   {hash}")),
@@ -229,6 +245,13 @@ fn text(
         table.row([act.trail.to_string(), at, act.who.clone(), act.act.clone(), act.reading.to_string(), why]);
     }
     context.out.text("").and_then(|()| context.out.table(&table))
+}
+
+/// `Corrected: × 1.002, + 0.5 kg (the plan's correction from 2026-03-01)`
+fn corrected(correction: &Correction, unit: &str) -> String {
+    let Correction { from, times, plus, .. } = correction;
+    let plus = if *plus == 0.0 { String::new() } else { format!(", + {} {unit}", plain(*plus)) };
+    format!("Corrected: × {}{plus} (the plan's correction from {from} on)", plain(*times))
 }
 
 #[cfg(test)]

@@ -1,8 +1,9 @@
 //! `status`: what became of every export, and which instrument is quiet.
 
-use std::collections::BTreeMap;
+use std::collections::{BTreeMap, HashMap};
 
 use chrono::{DateTime, NaiveDate, SecondsFormat, Utc};
+use chrono_tz::Tz;
 use revisant_schema::plan::Instrument;
 use revisant_schema::records::codec::hex;
 use revisant_schema::records::exports::{ExportRow, ExportState};
@@ -18,6 +19,7 @@ use crate::report::table::{Left, Table, Whole};
 use crate::report::text::count;
 use crate::report::when;
 use crate::study::{Basis, Context};
+use crate::took_part;
 
 /// An instrument, and whether it is heard of.
 #[derive(Debug, Clone, Serialize)]
@@ -30,6 +32,8 @@ pub struct InstrumentLine {
     pub silent: bool,
     /// Its folder, or an export in it, cannot be read now.
     pub unreachable: bool,
+    /// Current readings taken outside the dates between which the plan has it in use.
+    pub outside_use: u64,
 }
 
 /// Runs it.
@@ -51,7 +55,7 @@ pub fn run(context: &mut Context<'_, '_>, args: &Status) -> Done {
     });
     match context.out.json {
         true => context.out.json(&result)?,
-        false => text(context, &result, &exports, &instruments)?,
+        false => text(context, &result, &exports, &instruments, basis.zone())?,
     }
     let quiet = instruments.iter().any(|line| line.silent || line.unreachable);
     Ok(if args.strict && (!running || quiet) { Exit::Found } else { Exit::Done })
@@ -121,6 +125,7 @@ pub fn instruments(
     let courses = basis.courses.by_subject.values();
     let days: Vec<NaiveDate> =
         courses.flat_map(|course| course.sessions.iter().map(|session| session.facts.day)).collect();
+    let outside = outside_use(view, basis)?;
     let line = |instrument: &Instrument| {
         let last = newest.get(&instrument.code).map(|nanos| when::of_nanos(*nanos));
         let lost = !context.study.join(&instrument.folder).is_dir();
@@ -131,17 +136,34 @@ pub fn instruments(
             last_export: last.map(|at| at.to_rfc3339_opts(SecondsFormat::Secs, true)),
             silent: silent(instrument, last, &days, context.world.now()),
             unreachable: lost || exports.iter().any(unreadable),
+            outside_use: outside.get(&instrument.code).copied().unwrap_or(0),
         }
     };
     Ok(basis.plan.instruments.iter().map(line).collect())
+}
+
+/// Current readings by instrument that were taken outside its use.
+fn outside_use(view: &View<'_>, basis: &Basis) -> Result<BTreeMap<String, u64>, Failure> {
+    let mut outside = BTreeMap::new();
+    if basis.plan.instruments.iter().all(|instrument| instrument.used.is_none()) {
+        return Ok(outside);
+    }
+    let days: HashMap<i64, NaiveDate> = view.all_sessions()?.into_iter().map(|row| (row.session, row.day)).collect();
+    for cell in view.cells()? {
+        let day = days.get(&cell.session);
+        if day.is_some_and(|day| took_part::outside_use(&basis.plan, &cell.instrument, *day)) {
+            *outside.entry(cell.instrument.to_string()).or_default() += u64::from(cell.current);
+        }
+    }
+    Ok(outside)
 }
 
 /// Nothing for longer than allowed, while it is in use and sessions took place since.
 fn silent(instrument: &Instrument, last: Option<DateTime<Utc>>, days: &[NaiveDate], now: DateTime<Utc>) -> bool {
     let Some(allowed) = instrument.silent else { return false };
     let day = |moment: DateTime<Utc>| moment.with_timezone(&instrument.time_zone).date_naive();
-    let (from, until) = instrument.used.unwrap_or_default();
-    let in_use = from.is_none_or(|from| from <= day(now)) && until.is_none_or(|until| day(now) <= until);
+    let (from, _) = instrument.used.unwrap_or_default();
+    let in_use = instrument.in_use_on(day(now));
     let since = last.map(day).or(from).or_else(|| days.iter().min().copied());
     let overdue = since.is_some_and(|since| (day(now) - since) > allowed);
     in_use && overdue && days.iter().any(|session| since.is_some_and(|since| *session > since))
@@ -152,6 +174,7 @@ fn text(
     result: &Json,
     exports: &[ExportRow],
     instruments: &[InstrumentLine],
+    zone: Tz,
 ) -> Result<(), Failure> {
     let running = result["service"]["running"].as_bool() == Some(true);
     let service = if running { "The service is running." } else { "No service is running." };
@@ -166,8 +189,10 @@ fn text(
     let mut table = Table::new(&[("instrument", Whole), ("last export", Whole), ("", Left)]);
     for line in instruments {
         let flags = [(line.silent, "quiet"), (line.unreachable, "unreachable")];
-        let flags: Vec<&str> = flags.iter().filter(|(flag, _)| *flag).map(|(_, word)| *word).collect();
-        let last = line.last_export.clone().unwrap_or_else(|| "none".to_owned());
+        let mut flags: Vec<String> =
+            flags.iter().filter(|(flag, _)| *flag).map(|(_, word)| (*word).to_owned()).collect();
+        flags.extend((line.outside_use > 0).then(|| format!("{} outside its use", count(line.outside_use, "reading"))));
+        let last = line.last_export.as_deref().map_or_else(|| "none".to_owned(), |at| when::written(at, zone));
         table.row([line.instrument.clone(), last, flags.join(", ")]);
     }
     context.out.text("").and_then(|()| context.out.table(&table))?;

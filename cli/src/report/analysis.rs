@@ -6,7 +6,7 @@
 use revisant_analysis::anova::{CorrectedTest, Effect, RepeatedMeasures};
 use revisant_analysis::contrasts::{Contrast, ContrastKind};
 use revisant_analysis::{Interval, Note};
-use revisant_schema::plan::{Analysis, Multiplicity};
+use revisant_schema::plan::{Analysis, Multiplicity, Plan};
 use revisant_schema::records::codec::{Hash, hex};
 use revisant_schema::records::view::Standing;
 use serde_json::{Map, Value as Json, json};
@@ -35,6 +35,8 @@ pub struct Analysed<'a> {
     pub standing: Standing,
     /// The plan under which the readings were placed.
     pub plan: PlanUsed,
+    /// That plan itself.
+    pub placed_by: &'a Plan,
     /// The plan from which the analysis comes, where that is another.
     pub analysis_plan: Option<PlanUsed>,
     /// How many subjects are on the roster.
@@ -192,6 +194,7 @@ impl Analysed<'_> {
             "accounted": care.accounted,
             "at_limit": care.at_limit,
             "several_instruments": care.several_instruments,
+            "took_part": care.took_part.json(self.placed_by),
         })
     }
 
@@ -246,9 +249,10 @@ impl Analysed<'_> {
         if care.at_limit > 0 {
             notes.push(format!("{} lie at a limit of detection.", count(care.at_limit as u64, "reading")));
         }
+        notes.extend(care.took_part.sentences(self.placed_by));
         if care.several_instruments > 0 {
             let cells = count(care.several_instruments as u64, "cell");
-            notes.push(format!("In {cells} several instruments gave readings; all of them are used."));
+            notes.push(format!("In {cells} several instruments gave readings; all of them make up the cell's number."));
         }
         if let Some(plan) = self.analysis_plan {
             notes.push(format!(

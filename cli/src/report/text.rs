@@ -34,25 +34,27 @@ pub fn clip(text: &str, most: usize) -> String {
     short
 }
 
-/// Wraps each line of a text at blanks; lines after the first are led by `indent`.
+/// Wraps each line of a text at blanks; what goes over is led by `indent`.
 pub fn wrap(text: &str, width: usize, indent: &str) -> String {
     let lines: Vec<String> = text.lines().map(|line| wrap_line(line, width, indent)).collect();
     lines.join("\n")
 }
 
 fn wrap_line(line: &str, width: usize, indent: &str) -> String {
-    let mut wrapped = String::new();
-    let mut used = 0;
-    for word in line.split(' ') {
+    let rest = line.trim_start_matches(' ');
+    let mut used = line.len() - rest.len();
+    let mut wrapped = line.get(..used).unwrap_or_default().to_owned();
+    let mut first = true;
+    for word in rest.split(' ') {
         let length = word.chars().count();
-        if used > 0 && used + 1 + length > width {
+        if !first && used + 1 + length > width {
             wrapped.push('\n');
             wrapped.push_str(indent);
             wrapped.push_str(word);
             used = indent.chars().count() + length;
             continue;
         }
-        if used > 0 || !wrapped.is_empty() {
+        if !std::mem::take(&mut first) {
             wrapped.push(' ');
             used += 1;
         }
@@ -94,6 +96,7 @@ mod tests {
         let wrapped = wrap("one two three four\nfive", 9, "  ");
         assert_eq!(wrapped, "one two\n  three\n  four\nfive");
         assert_eq!(wrap("", 9, ""), "");
+        assert_eq!(wrap("  a: one two", 9, "    "), "  a: one\n    two");
     }
 
     #[test]

@@ -148,8 +148,8 @@ fn lock_patiently(file: &File) -> std::result::Result<(), std::fs::TryLockError>
 const IN_HAND: u64 = 24 * 1024 * 1024;
 
 /// An export at rest.
-struct Ready {
-    found: Found,
+pub(super) struct Ready {
+    pub(super) found: Found,
     /// Of its bytes when it was surveyed.
     sha256: [u8; 32],
     hand: Option<Hand>,
@@ -334,7 +334,7 @@ fn file_all(
 }
 
 /// Looks through all exports in hand: their hashes, and what they say about day 0.
-fn survey(
+pub(super) fn survey(
     records: &Records,
     rules: &Rules,
     found: Vec<Found>,
@@ -468,7 +468,7 @@ fn file_portion(
 }
 
 /// Files one export; nothing when its bytes are those that its path held already.
-fn file_one(
+pub(super) fn file_one(
     filer: &mut Filer<'_>,
     ready: &mut Ready,
     report: &mut Report,

@@ -27,7 +27,7 @@ use super::rules::{CourseBook, Gathered, Rules};
 /// Rows after which an unpublished part is committed, so that others may write in between.
 const STAGE: i64 = 10_000;
 /// Rows after which it is asked whether to stop.
-const ASK: u64 = 1_000;
+pub(super) const ASK: u64 = 1_000;
 /// Exports, and time, after which finished exports are committed together.
 const GROUP: u32 = 256;
 const GROUP_TIME: Duration = Duration::from_millis(250);

@@ -13,3 +13,4 @@ pub mod plan;
 pub mod read;
 pub mod replace;
 pub mod rules;
+pub mod sample;

@@ -151,7 +151,8 @@ fn sort_out(
     }
 }
 
-fn fits(instrument: &Instrument, name: &str, below: &str) -> bool {
+/// Whether an instrument's `files` takes a file of this name, in this folder below the instrument's.
+pub fn fits(instrument: &Instrument, name: &str, below: &str) -> bool {
     let whole = if below.is_empty() { name.to_owned() } else { format!("{below}/{name}") };
     match instrument.files.contains('/') {
         true => instrument.files_glob.is_match(whole),
@@ -197,7 +198,7 @@ pub fn is_passing(name: &str) -> bool {
 }
 
 /// A path as the records name it. Bytes that are no UTF-8 are written as `\xff`, so that two such names stay two.
-fn name_of(study: &Path, path: &Path) -> String {
+pub(super) fn name_of(study: &Path, path: &Path) -> String {
     let path = path.strip_prefix(study).unwrap_or(path);
     let mut name = String::new();
     for chunk in path.as_os_str().as_bytes().utf8_chunks() {

@@ -66,7 +66,8 @@ pub fn bring_into_force(records: &mut Records, study: &Path, doer: &Doer, adopt:
     Ok(Rules::load(records)?.ok_or_else(lost)?)
 }
 
-fn from_hex(digits: &str) -> Vec<u8> {
+/// Bytes that are written as hexadecimal digits.
+pub(super) fn from_hex(digits: &str) -> Vec<u8> {
     let pairs = digits.as_bytes().chunks(2);
     pairs.filter_map(|pair| u8::from_str_radix(std::str::from_utf8(pair).ok()?, 16).ok()).collect()
 }

@@ -302,7 +302,7 @@ pub(crate) fn unit(text: &str) -> Result<(), Misfit> {
     Err(Misfit {
         wrong: format!("\"{}\" is no UCUM code (upper and lower case differ).", clip(text)),
         right: Form::Unit.called().into(),
-        nearest: units::meant(text).map(str::to_owned),
+        nearest: units::meant(text),
     })
 }
 

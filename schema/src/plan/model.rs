@@ -300,6 +300,20 @@ pub struct Instrument {
     pub reader: Reader,
 }
 
+impl Instrument {
+    /// The correction of a measure's numbers that holds on a local day.
+    pub fn correction(&self, measure: MeasureIx, day: NaiveDate) -> Option<&Correction> {
+        let holds = |entry: &&Correction| entry.from <= day && entry.measure.is_none_or(|only| only == measure);
+        self.correct.iter().filter(holds).max_by_key(|entry| entry.from)
+    }
+
+    /// Whether the plan has it in use on a day.
+    pub fn in_use_on(&self, day: NaiveDate) -> bool {
+        let (from, until) = self.used.unwrap_or_default();
+        from.is_none_or(|from| from <= day) && until.is_none_or(|until| day <= until)
+    }
+}
+
 /// `serial = { preamble, is }`
 #[derive(Debug, Clone, PartialEq, Eq)]
 pub struct Serial {

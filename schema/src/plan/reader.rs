@@ -162,7 +162,7 @@ pub(crate) fn reader(check: &mut Check<'_>, tab: &Tab<'_>, known: &Known<'_>) ->
         decimal_mark,
         group_mark,
         header,
-        last_line: tab.word("last_line", &LAST_LINE).unwrap_or(LastLine::Finished),
+        last_line: last_line(check, tab),
         units_row: tab.truth("units_row").unwrap_or(false),
         stop_at: tab.formed("stop_at", forms::regex),
         missing: missing(tab),
@@ -274,6 +274,16 @@ fn header(check: &mut Check<'_>, tab: &Tab<'_>, name: Option<FormatName>, given:
         return Header::StartsWith(start.to_owned());
     }
     if tab.has("row") { Header::Row { row: count("row"), lines: count("lines") } } else { Header::None }
+}
+
+fn last_line(check: &mut Check<'_>, tab: &Tab<'_>) -> LastLine {
+    let said = tab.word("last_line", &LAST_LINE).unwrap_or(LastLine::Finished);
+    if said == LastLine::Whole {
+        let wrong = "A file cut inside its last row would be read as it stands: 12.5 may have been 12.57.";
+        let right = "\"finished\", unless the instrument never ends its last line";
+        check.warn(&tab.spot_of("last_line"), &tab.path_of("last_line"), wrong, right);
+    }
+    said
 }
 
 fn missing(tab: &Tab<'_>) -> Vec<String> {

@@ -4,9 +4,9 @@
 //! units of different names, never convert; a factor is kept as an exact fraction and divided once, so that the
 //! number handed out is the nearest one that a double holds.
 //!
-//! Codes, prefixes and definitions follow "The Unified Code for Units of Measure" (Schadow & McDonald, version 2.1);
-//! each customary unit is written here in the terms in which that table defines it, so that it can be compared line by
-//! line. The factors that follow from them are tested against NIST Special Publication 811 (2008), Appendix B.
+//! Codes, prefixes and definitions follow "The Unified Code for Units of Measure" (Schadow & McDonald), compared line
+//! by line with its machine-readable table, `ucum-essence.xml`, version 2.2 of 2024-06-17; each customary unit is
+//! written here in the terms in which that table defines it. The factors that follow from them are tested against NIST Special Publication 811 (2008), Appendix B.
 //! Two deviations: the mole is a dimension of its own here, as in the SI, and not the number 6.02e23, so that an
 //! amount of substance never turns into a count; and constants of nature are those of the SI, exact since 2019, and of
 //! CODATA 2022.
@@ -70,10 +70,173 @@ impl Conversions {
     }
 }
 
-/// The UCUM code that was probably meant by a unit as people write it.
-pub fn meant(text: &str) -> Option<&'static str> {
-    SPOKEN.iter().find(|(spoken, _)| *spoken == text.trim().to_lowercase()).map(|(_, code)| *code)
+/// The UCUM code that was probably meant by a unit as people write it; `None` for what is a code already, and for what
+/// no guess comes near.
+pub fn meant(text: &str) -> Option<String> {
+    let text = text.trim();
+    if is_ucum(text) {
+        return None;
+    }
+    let plain: String = text.chars().filter_map(plainer).collect();
+    let spoken = |text: &str| {
+        let lower = text.to_lowercase();
+        SPOKEN.iter().find(|(spoken, _)| *spoken == lower).map(|(_, code)| (*code).to_owned())
+    };
+    let common = |text: &str| COMMON.iter().find(|code| code.eq_ignore_ascii_case(text)).map(|code| (*code).to_owned());
+    // By its parts: "lbs/day" is what "lbs" and "day" are.
+    let known = |part: &str| if is_ucum(part) { Some(part.to_owned()) } else { spoken(part).or_else(|| common(part)) };
+    let parts = || {
+        let parts: Option<Vec<String>> = plain.split('/').map(known).collect();
+        parts.map(|parts| parts.join("/")).filter(|code| is_ucum(code))
+    };
+    spoken(text).or_else(|| common(&plain)).or_else(parts)
 }
+
+/// A character as UCUM writes it, where people use another.
+fn plainer(c: char) -> Option<char> {
+    match c {
+        '·' | '⋅' | '*' => Some('.'),
+        '²' => Some('2'),
+        '³' => Some('3'),
+        'µ' | 'μ' => Some('u'),
+        ' ' | '^' => None,
+        other => Some(other),
+    }
+}
+
+/// Codes whose case people get wrong.
+const COMMON: &[&str] = &[
+    "kg",
+    "g",
+    "mg",
+    "ug",
+    "ng",
+    "m",
+    "cm",
+    "mm",
+    "km",
+    "um",
+    "s",
+    "ms",
+    "min",
+    "h",
+    "d",
+    "L",
+    "mL",
+    "uL",
+    "dL",
+    "N",
+    "kN",
+    "kgf",
+    "Pa",
+    "hPa",
+    "kPa",
+    "MPa",
+    "bar",
+    "mbar",
+    "J",
+    "kJ",
+    "cal",
+    "kcal",
+    "W",
+    "kW",
+    "V",
+    "mV",
+    "uV",
+    "A",
+    "mA",
+    "Hz",
+    "kHz",
+    "Ohm",
+    "K",
+    "Cel",
+    "m/s",
+    "km/h",
+    "mol",
+    "mmol",
+    "umol",
+    "mol/L",
+    "mmol/L",
+    "umol/L",
+    "nmol/L",
+    "pmol/L",
+    "g/L",
+    "g/dL",
+    "mg/dL",
+    "mg/L",
+    "ug/L",
+    "ng/mL",
+    "pg/mL",
+    "U/L",
+    "mm[Hg]",
+    "cm[H2O]",
+    "[degF]",
+    "[lb_av]",
+    "[oz_av]",
+    "[in_i]",
+    "[ft_i]",
+    "[mi_i]",
+    "[psi]",
+    "[lbf_av]",
+    "N.m",
+    "L/min",
+    "mL/min",
+    "mL/min/kg",
+    "dB",
+    "deg",
+];
+
+/// Why a unit does not convert to another, in words: what each of them is. `None` when it does, or when one of them is
+/// no code.
+pub fn apart(from: &str, to: &str) -> Option<String> {
+    if convert(from, to).is_some() {
+        return None;
+    }
+    let (one, other) = (parse(from)?, parse(to)?);
+    let (one, other) = (one.kind(), other.kind());
+    let words = match (one.as_str(), other.as_str()) {
+        (MASS_IN, AMOUNT_IN) | (AMOUNT_IN, MASS_IN) => {
+            format!("one is {one}, the other {other}, and the factor depends on the substance")
+        }
+        (MASS, FORCE) => format!("one is {one}, the other {other}; a device that shows force in kilograms means kgf"),
+        _ if one == other => format!("both are {one}, but not of the same kind"),
+        _ => format!("one is {one}, the other {other}"),
+    };
+    Some(words)
+}
+
+const MASS: &str = "a mass";
+const FORCE: &str = "a force";
+const MASS_IN: &str = "a mass in a volume";
+const AMOUNT_IN: &str = "an amount of substance in a volume";
+
+/// What people call a quantity: powers of base units, by their codes.
+const KINDS: &[(&[(&str, i32)], &str)] = &[
+    (&[], "a plain number"),
+    (&[("g", 1)], MASS),
+    (&[("m", 1)], "a length"),
+    (&[("s", 1)], "a time"),
+    (&[("K", 1)], "a temperature"),
+    (&[("mol", 1)], "an amount of substance"),
+    (&[("A", 1)], "a current"),
+    (&[("rad", 1)], "an angle"),
+    (&[("m", 2)], "an area"),
+    (&[("m", 3)], "a volume"),
+    (&[("s", -1)], "a rate"),
+    (&[("m", 1), ("s", -1)], "a speed"),
+    (&[("m", 1), ("s", -2)], "an acceleration"),
+    (&[("m", 3), ("s", -1)], "a flow"),
+    (&[("g", 1), ("m", 1), ("s", -2)], FORCE),
+    (&[("g", 1), ("m", -1), ("s", -2)], "a pressure"),
+    (&[("g", 1), ("m", 2), ("s", -2)], "an energy"),
+    (&[("g", 1), ("m", 2), ("s", -3)], "a power"),
+    (&[("A", -1), ("g", 1), ("m", 2), ("s", -3)], "a voltage"),
+    (&[("A", -2), ("g", 1), ("m", 2), ("s", -3)], "a resistance"),
+    (&[("g", 1), ("m", -3)], MASS_IN),
+    (&[("m", -3), ("mol", 1)], AMOUNT_IN),
+    (&[("m", -3)], "a count in a volume"),
+    (&[("g", 1), ("m", -2)], "a mass on an area"),
+];
 
 /// Common ways of writing units that are no UCUM codes, in lower case, and the codes.
 const SPOKEN: &[(&str, &str)] = &[
@@ -99,6 +262,21 @@ const SPOKEN: &[(&str, &str)] = &[
     ("years", "a"),
     ("months", "mo"),
     ("kgs", "kg"),
+    ("kilogram", "kg"),
+    ("kilograms", "kg"),
+    ("newton", "N"),
+    ("newtons", "N"),
+    ("day", "d"),
+    ("hour", "h"),
+    ("minute", "min"),
+    ("second", "s"),
+    ("week", "wk"),
+    ("month", "mo"),
+    ("year", "a"),
+    ("feet", "[ft_i]"),
+    ("inches", "[in_i]"),
+    ("pounds", "[lb_av]"),
+    ("kg-force", "kgf"),
     ("lb", "[lb_av]"),
     ("lbs", "[lb_av]"),
     ("oz", "[oz_av]"),
@@ -280,6 +458,23 @@ impl Unit {
 
     fn scale(&self) -> Option<Fraction> {
         self.zero
+    }
+
+    /// What people call it.
+    fn kind(&self) -> String {
+        let powers: Vec<(&str, i32)> = self.dimension.iter().map(|(base, power)| (*base, *power)).collect();
+        let known = KINDS.iter().find(|(kind, _)| *kind == powers.as_slice()).map(|(_, name)| (*name).to_owned());
+        let arbitrary = || {
+            let base = |code: &str| matches!(code, "m" | "s" | "g" | "A" | "K" | "cd" | "mol" | "rad");
+            powers
+                .iter()
+                .find(|(code, _)| !base(code))
+                .map(|(code, _)| format!("in {code}, which converts to nothing else"))
+        };
+        known.or_else(arbitrary).unwrap_or_else(|| {
+            let parts: Vec<String> = powers.iter().map(|(base, power)| format!("{base}{power}")).collect();
+            format!("{} in base units", parts.join("."))
+        })
     }
 
     fn is_temperature(&self) -> bool {
@@ -498,7 +693,7 @@ const fn of(code: &'static str, metric: bool, number: &'static str, unit: &'stat
     Atom { code, metric, definition: Definition::Of(number, unit) }
 }
 
-/// Longer prefixes first: `da` before `d`, and the binary ones before all. UCUM 2.1, tables 1 and 28.
+/// Longer prefixes first: `da` before `d`. UCUM 2.2, without the binary ones.
 const PREFIXES: &[(&str, i32)] = &[
     ("da", 1),
     ("Q", 30),
@@ -526,7 +721,7 @@ const PREFIXES: &[(&str, i32)] = &[
     ("q", -30),
 ];
 
-/// Atoms with their definitions as in UCUM 2.1.
+/// Atoms with their definitions as in UCUM 2.2.
 const ATOMS: &[Atom] = &[
     // base units
     own("m", true),
@@ -594,7 +789,7 @@ const ATOMS: &[Atom] = &[
     of("AU", false, "149597.870691", "Mm"),
     of("pc", true, "3.085678e16", "m"),
     Atom { code: "deg", metric: false, definition: Definition::PiOf("2", "rad/360") },
-    of("gon", true, "0.9", "deg"),
+    of("gon", false, "0.9", "deg"),
     of("'", false, "1", "deg/60"),
     of("''", false, "1", "'/60"),
     Atom { code: "circ", metric: false, definition: Definition::PiOf("2", "rad") },
@@ -800,6 +995,8 @@ const ATOMS: &[Atom] = &[
     of("[Ch]", false, "1", "mm/3"),
     own("[hnsf'U]", false),
     own("[hp_X]", false),
+    own("[NTU]", false),
+    own("[FNU]", false),
     own("[hp_C]", false),
     own("[m/s2/Hz^0.5]", false),
     // levels
@@ -887,6 +1084,64 @@ mod tests {
     #[test]
     fn published_factors_are_exact() {
         for (from, to, factor) in PUBLISHED {
+            assert_eq!(convert(from, to), Some(Affine { times: *factor, plus: 0.0 }), "{from} -> {to}");
+        }
+    }
+
+    /// UCUM 2.2, `ucum-essence.xml` of 2024-06-17, by the class that it gives each unit; beside each the chain of its
+    /// definitions there, worked out by hand.
+    const DEFINED: &[(&str, &str, f64)] = &[
+        // avoirdupois: [gr] = 64.79891 mg, [lb_av] = 7000 [gr], [oz_av] = [lb_av]/16, [stone_av] = 14 [lb_av]
+        ("[lb_av]", "g", 453.592_37),
+        ("[oz_av]", "[lb_av]", 0.0625),
+        ("[stone_av]", "kg", 6.350_293_18),
+        // intcust: [in_i] = 2.54 cm, [ft_i] = 12 [in_i], [mi_i] = 5280 [ft_i]
+        ("[in_i]", "mm", 25.4),
+        ("[ft_i]", "cm", 30.48),
+        ("[mi_i]", "m", 1609.344),
+        // iso1000: min = 60 s, h = 60 min, d = 24 h, wk = 7 d, a_j = 365.25 d, a = a_j
+        ("min", "s", 60.0),
+        ("d", "h", 24.0),
+        ("a", "d", 365.25),
+        // clinical: m[Hg] = 133.3220 kPa, m[H2O] = 9.80665 kPa; iso1000: bar = 1e5 Pa; misc: [psi] = [lbf_av]/[in_i]2
+        ("mm[Hg]", "kPa", 0.133_322),
+        ("bar", "Pa", 100_000.0),
+        ("mbar", "hPa", 1.0),
+        ("kPa", "bar", 0.01),
+        ("[psi]", "Pa", 6_894.757_293_168_362),
+        // const: [g] = 9.80665 m/s2, gf = g.[g], [lbf_av] = [lb_av].[g]
+        ("kgf", "N", 9.806_65),
+        ("[lbf_av]", "N", 4.448_221_615_260_5),
+        ("N", "[lbf_av]", 0.224_808_943_099_710_48),
+        // speed, from the above
+        ("km/h", "m/s", 0.277_777_777_777_777_8),
+        ("m/s", "km/h", 3.6),
+        ("[mi_i]/h", "km/h", 1.609_344),
+        // heat: cal = cal_th, cal_th = 4.184 J, [Cal] = kcal_th; si: W = J/s
+        ("cal", "J", 4.184),
+        ("kcal", "kJ", 4.184),
+        ("J", "cal", 0.239_005_736_137_667_3),
+        ("kcal/d", "W", 0.048_425_925_925_925_93),
+        ("W", "J/s", 1.0),
+        // dimless: % = 10*-2, [ppth] = 10*-3
+        ("%", "{fraction}", 0.01),
+        ("1", "%", 100.0),
+        ("/min", "/h", 60.0),
+        ("Hz", "/s", 1.0),
+        ("{beats}/min", "Hz", 0.016_666_666_666_666_666),
+        // concentration within one kind
+        ("mg/dL", "g/L", 0.01),
+        ("umol/L", "mmol/L", 0.001),
+        // annotations and the unity mean nothing
+        ("{steps}", "1", 1.0),
+        ("{count}", "{steps}", 1.0),
+        ("{steps}/d", "/d", 1.0),
+        ("kg{dry}", "kg", 1.0),
+    ];
+
+    #[test]
+    fn the_definitions_of_ucum_give_the_factors() {
+        for (from, to, factor) in DEFINED {
             assert_eq!(convert(from, to), Some(Affine { times: *factor, plus: 0.0 }), "{from} -> {to}");
         }
     }
@@ -1092,8 +1347,44 @@ mod tests {
 
     #[test]
     fn meant_units() {
-        assert_eq!(meant("mmHg"), Some("mm[Hg]"));
-        assert_eq!(meant("°C"), Some("Cel"));
-        assert_eq!(meant("quux"), None);
+        for (written, code) in [
+            ("mmHg", "mm[Hg]"),
+            ("°C", "Cel"),
+            ("KG", "kg"),
+            ("CM", "cm"),
+            ("mmol/l", ""),
+            ("MMOL/L", "mmol/L"),
+            ("lbs", "[lb_av]"),
+            ("Newton", "N"),
+            ("N·m", "N.m"),
+            ("kg/m²", "kg/m2"),
+            ("kg / m^2", "kg/m2"),
+            ("lbs/day", "[lb_av]/d"),
+            ("µmol/L", "umol/L"),
+            ("hpa", "hPa"),
+            ("m/sec", "m/s"),
+            ("quux", ""),
+            ("kg", ""),
+        ] {
+            assert_eq!(meant(written).unwrap_or_default(), code, "{written}");
+        }
+    }
+
+    #[test]
+    fn why_two_units_are_apart() {
+        let apart = |from, to| apart(from, to).unwrap_or_default();
+        assert_eq!(
+            apart("mg/dL", "mmol/L"),
+            "one is a mass in a volume, the other an amount of substance in a volume, and the factor depends on the substance"
+        );
+        assert_eq!(
+            apart("kg", "N"),
+            "one is a mass, the other a force; a device that shows force in kilograms means kgf"
+        );
+        assert_eq!(apart("s", "m/s"), "one is a time, the other a speed");
+        assert_eq!(apart("[IU]/L", "U/L").split(',').next(), Some("one is in [IU]"));
+        assert_eq!(apart("{steps}", "kg"), "one is a plain number, the other a mass");
+        assert_eq!(apart("lux", "kg"), "", "no code: that is said by others");
+        assert_eq!(apart("g", "kg"), "");
     }
 }

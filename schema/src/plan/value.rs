@@ -145,8 +145,11 @@ fn reaches(check: &mut Check<'_>, spot: &Spot, path: &str, code: &str, measures:
     let converts = |it: &&Measure| !units::is_ucum(&it.unit) || units::convert(code, &it.unit).is_some();
     let Some(measure) = measures.iter().find(|it| !converts(it)).filter(|_| units::is_ucum(code)) else { return };
     if is_fixed || !measures.iter().any(converts) {
-        let wrong = format!("\"{code}\" does not convert to \"{}\", the unit of \"{}\".", measure.unit, measure.code);
-        check.error(spot, path, wrong, "a unit of the same kind, or times = … (the factor)");
+        let unit = &measure.unit;
+        let why = units::apart(code, unit).map(|why| format!(": {why}")).unwrap_or_default();
+        let wrong = format!("\"{code}\" does not convert to \"{unit}\", the unit of \"{}\"{why}.", measure.code);
+        let right = format!("times = … beside it: a number in \"{code}\" times this is one in \"{unit}\"");
+        check.error(spot, path, wrong, right);
     }
 }
 

@@ -97,6 +97,8 @@ pub struct ValueRow {
     pub moment: Option<i64>,
     /// It lies at a limit of detection.
     pub limit: bool,
+    /// The plan version that placed it; `None`: its number is not one that an export gave.
+    pub placed_by: Option<i64>,
 }
 
 /// One reading, with texts in place of numbers.
@@ -522,8 +524,8 @@ impl<'r> View<'r> {
         let mut values: Vec<ValueRow> = self
             .records
             .query_all(
-                "SELECT id, filing, session, condition, instrument, replicate, number, moment, mark IS NOT NULL
-             FROM reading WHERE measure = (SELECT id FROM term WHERE text = ?1) AND number IS NOT NULL",
+                "SELECT id, filing, session, condition, instrument, replicate, number, moment, mark IS NOT NULL,
+             iif(source = 0, plan, NULL) FROM reading WHERE measure = (SELECT id FROM term WHERE text = ?1) AND number IS NOT NULL",
                 [measure],
                 "reading the values of a measure",
                 |row| {
@@ -538,12 +540,12 @@ impl<'r> View<'r> {
         Ok(values)
     }
 
-    /// All terms by their number.
+    /// All terms by their number; the empty text is number 0.
     pub fn terms(&self) -> Result<HashMap<i64, String>> {
         let rows = self.records.query_all("SELECT id, text FROM term", [], "reading terms", |row| {
             Ok((row.get::<_, i64>(0)?, row.get::<_, String>(1)?))
         })?;
-        Ok(rows.into_iter().collect())
+        Ok(std::iter::once((0, String::new())).chain(rows).collect())
     }
 
     /// Readings, all or those of one subject, measure or session, in the order of filing.
@@ -552,12 +554,13 @@ impl<'r> View<'r> {
         let terms = self.terms()?;
         let paths = self.paths()?;
         let (condition, values) = filter.sql();
+        let most = filter.most.and_then(|most| i64::try_from(most).ok()).unwrap_or(i64::MAX);
         let sql = format!(
             "SELECT r.id, f.act, r.capture, r.line, r.byte_from, r.byte_to, r.cell, r.instrument, r.measure, r.condition,
              r.replicate, r.labelled, r.session, s.day, s.label, u.code, r.text, r.exported, r.unit, r.number, r.mark,
              r.written, r.moment, r.operator, r.plan, r.supersedes, r.source
              FROM reading r JOIN filing f ON f.id = r.filing AND f.act <= ?1
-             JOIN session s ON s.id = r.session JOIN subject u ON u.id = s.subject {condition} ORDER BY r.id"
+             JOIN session s ON s.id = r.session JOIN subject u ON u.id = s.subject {condition} ORDER BY r.id LIMIT {most}"
         );
         let mut values = values;
         values.insert(0, rusqlite::types::Value::Integer(self.upto));
@@ -733,6 +736,8 @@ pub struct ReadingFilter {
     pub capture: Option<i64>,
     /// This one.
     pub reading: Option<i64>,
+    /// No more than so many, the first.
+    pub most: Option<u64>,
 }
 
 impl ReadingFilter {
@@ -765,6 +770,7 @@ fn read_value(row: &Row<'_>) -> rusqlite::Result<ValueRow> {
         number: row.get(6)?,
         moment: row.get(7)?,
         limit: row.get(8)?,
+        placed_by: row.get(9)?,
     })
 }
 

@@ -379,6 +379,11 @@ impl<'p> Resolver<'p> {
         digest.first_chunk().copied().unwrap_or_default()
     }
 
+    /// The subject's code that a row names, tidied as the plan says; empty where it names none.
+    pub fn subject_code(&self, row: &Row, rows: &dyn Rows) -> String {
+        tidy(&self.subject.find(row, rows), &self.plan.subject.normalise)
+    }
+
     /// Resolves one row, with what people have decided about it.
     pub fn resolve(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> RowOutcome {
         if self.nothing_there(row, rows) {
@@ -651,13 +656,7 @@ impl<'p> Resolver<'p> {
     }
 
     fn corrected(&self, measure: MeasureIx, number: f64, day: NaiveDate) -> f64 {
-        let entry = self
-            .instrument
-            .correct
-            .iter()
-            .filter(|entry| entry.from <= day && entry.measure.is_none_or(|only| only == measure))
-            .max_by_key(|entry| entry.from);
-        entry.map_or(number, |entry| number * entry.times + entry.plus)
+        self.instrument.correction(measure, day).map_or(number, |entry| number * entry.times + entry.plus)
     }
 
     fn measure_of(
@@ -757,9 +756,9 @@ impl<'p> Resolver<'p> {
         match known {
             Some(conversion) => Ok((code, *conversion)),
             None => {
-                let meant = units::meant(&code).map(str::to_owned).into_iter().collect();
-                let wrong = format!("\"{code}\" does not convert to {target}");
-                Err(Held::row(Reason::UnknownUnit, wrong).likely(meant))
+                let converts = |meant: &String| units::convert(meant, target).is_some();
+                let meant = units::meant(&code).filter(converts).into_iter().collect();
+                Err(Held::row(Reason::UnknownUnit, unit_fault(&code, target)).likely(meant))
             }
         }
     }
@@ -872,6 +871,15 @@ impl<'p> ValueFinder<'p> {
             Some((_, Err(finder))) => finder.find(row, rows),
             None => Cow::Borrowed(""),
         }
+    }
+}
+
+fn unit_fault(code: &str, target: &str) -> String {
+    match units::apart(code, target) {
+        Some(why) => format!(
+            "the unit \"{code}\" does not convert to {target}: {why}. If it is right, the plan needs `times` for it"
+        ),
+        None => format!("the unit \"{code}\" is no UCUM code, and the plan's unit is {target}"),
     }
 }
 

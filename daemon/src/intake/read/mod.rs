@@ -235,9 +235,6 @@ pub fn open<'a>(reader: &'a Reader, bytes: &'a dyn Bytes) -> Result<Box<dyn Rows
         Format::Json { rows } => Ok(Box::new(json::Json::open(reader, rows, bytes)?)),
         Format::JsonLines { rows } => Ok(Box::new(json_lines::JsonLines::open(reader, rows, bytes)?)),
         Format::Workbook { sheet } => Ok(Box::new(workbook::Workbook::open(reader, sheet, bytes)?)),
-        other => Err(FileFault::Layout(format!(
-            "exports of the format \"{}\" cannot be read by this version; \"delimited\" can",
-            other.name()
-        ))),
+        Format::Xml { rows } => Ok(Box::new(xml::Xml::open(reader, rows, bytes)?)),
     }
 }

@@ -453,7 +453,7 @@ fn settle(encoding: Encoding, bytes: &dyn Bytes) -> Result<Settled, FileFault> {
 }
 
 /// The encoding that a byte-order mark names, and the mark's length.
-fn byte_order_mark(bytes: &dyn Bytes) -> Result<Option<(&'static encoding_rs::Encoding, usize)>, FileFault> {
+pub fn byte_order_mark(bytes: &dyn Bytes) -> Result<Option<(&'static encoding_rs::Encoding, usize)>, FileFault> {
     let mut head = Vec::with_capacity(3);
     bytes.open()?.take(3).read_to_end(&mut head)?;
     Ok(encoding_rs::Encoding::for_bom(&head))
@@ -526,7 +526,7 @@ fn line_of(bytes: &dyn Bytes, offset: u64) -> Result<u64, FileFault> {
 }
 
 /// Reads what there is; 0 at the end.
-fn read_some(stream: &mut dyn Read, into: &mut [u8]) -> io::Result<usize> {
+pub fn read_some(stream: &mut dyn Read, into: &mut [u8]) -> io::Result<usize> {
     loop {
         match stream.read(into) {
             Err(fault) if fault.kind() == io::ErrorKind::Interrupted => {}

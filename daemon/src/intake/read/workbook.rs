@@ -247,7 +247,9 @@ impl<'a> Workbook<'a> {
         }
         let taken = &mut self.sheet.row;
         let by_line = |rule: &Ignore| matches!(rule, Ignore::Line(line) if line.is_match(&taken.raw));
-        if self.reader.ignore.iter().any(by_line) || self.rules.iter().any(|rule| rule.holds.is(taken.text_at(rule.column))) {
+        if self.reader.ignore.iter().any(by_line)
+            || self.rules.iter().any(|rule| rule.holds.is(taken.text_at(rule.column)))
+        {
             self.counts.ignored += 1;
             return Ok(false);
         }

@@ -115,10 +115,12 @@ impl<F: Feed> Scan<F> {
         }
     }
 
-    /// Stands before the first character of a text of its own, on the line `line` and at the byte `offset`.
+    /// Stands before the first character of a text of its own, on the line `line` and at the byte `offset`. Such a text
+    /// is all there is, and none of it is forgotten.
     pub fn set(&mut self, text: &str, line: u64, offset: u64) {
         self.text.clear();
         self.text.push_str(text);
+        self.drained = true;
         self.begins = (line, offset);
         self.rewind();
     }

@@ -17,8 +17,8 @@ use zip::ZipArchive;
 use zip::read::{ArchiveOffset, Config, ZipFile};
 use zip::result::ZipError;
 
-use super::super::{Bytes, FileFault};
 use super::super::heading::excerpt;
+use super::super::{Bytes, FileFault};
 
 /// Every entry of an archive's directory begins so.
 const ENTRY: &[u8] = b"PK\x01\x02";
@@ -110,7 +110,9 @@ impl Package {
         // off there, would be read in its place.
         let config = Config { archive_offset: ArchiveOffset::Known(0) };
         let archive = ZipArchive::with_config(config, Cursor::new(Shared(Arc::new(file)))).map_err(|error| {
-            FileFault::Unreadable(format!("the workbook is damaged or was cut off: it has no sound directory ({error})"))
+            FileFault::Unreadable(format!(
+                "the workbook is damaged or was cut off: it has no sound directory ({error})"
+            ))
         })?;
         let parts = names(&archive)?;
         Ok(Self { archive, parts, limits, left: limits.inflated })
