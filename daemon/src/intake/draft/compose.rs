@@ -7,12 +7,14 @@ use revisant_schema::plan::{Encoding, Format, Header, Measure, Plan, Sheet};
 use super::grid::{self, Grid, Layout};
 use super::labels;
 use super::lines::{BLANK, Line, Mark, Notes, literal, quote, some};
+use super::nested::{self, Nested};
 use super::numbers::{self, Marks, Settled};
 use super::place::{self, Against, Taken};
 use super::rest::{self, Keys};
 use super::values::{self, Entry, Hints, Numeric};
+use super::when;
 use super::words;
-use super::{Asked, Draft, DraftFault, Misfit, Remark, preview, text, units};
+use super::{Asked, Draft, DraftFault, Misfit, Remark, book, preview, text, units};
 
 /// The samples under one layout.
 struct Laid {
@@ -30,29 +32,105 @@ pub fn compose(asked: &Asked<'_>) -> Result<Draft, DraftFault> {
     Ok(lines.finish(asked, laid, &found))
 }
 
+/// What kind of file a sample is.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, PartialOrd, Ord)]
+enum Kind {
+    Text,
+    Workbook,
+    Nested(Nested),
+}
+
+impl Kind {
+    fn of(bytes: &[u8]) -> Self {
+        if bytes.starts_with(b"PK\x03\x04") || bytes.starts_with(&[0xD0, 0xCF, 0x11, 0xE0]) {
+            return Self::Workbook;
+        }
+        text::decode(bytes).and_then(|it| nested::kind(&it.text)).map_or(Self::Text, Self::Nested)
+    }
+
+    fn called(self) -> &'static str {
+        match self {
+            Self::Text => "text",
+            Self::Workbook => "a workbook",
+            Self::Nested(Nested::Json) => "JSON",
+            Self::Nested(Nested::Lines) => "JSON lines",
+            Self::Nested(Nested::Xml) => "XML",
+        }
+    }
+}
+
+/// The layout that most samples have, with the columns of each.
+struct Proposed {
+    layout: Layout,
+    columns: Vec<Vec<String>>,
+    refused: Vec<(usize, String)>,
+    notes: Vec<Line>,
+}
+
 fn lay_out(asked: &Asked<'_>) -> Result<Laid, DraftFault> {
-    let unreadable = |refused: &[(usize, String)]| {
-        let why = refused.first().map_or("no table is found in them".to_owned(), |(_, why)| why.clone());
-        DraftFault::Unreadable(why)
-    };
-    let found = text::delimited(asked.samples).ok_or_else(|| unreadable(&[]))?;
-    let (grid, refused) = grid::read_all(&found.layout, asked.samples, &found.columns);
-    let all: Vec<(usize, String)> = found.refused.into_iter().chain(refused).collect();
+    let kinds: Vec<Kind> = asked.samples.iter().map(|it| Kind::of(&it.bytes)).collect();
+    let count = |kind: &Kind| kinds.iter().filter(|other| *other == kind).count();
+    // Of kinds that stand equally often, the first sample's.
+    let most = kinds.iter().map(count).max().unwrap_or(0);
+    let kind = kinds.iter().find(|kind| count(kind) == most).copied().unwrap_or(Kind::Text);
+    let which: Vec<usize> = (0..kinds.len()).filter(|at| kinds.get(*at) == Some(&kind)).collect();
+    let mut refused: Vec<(usize, String)> = kinds
+        .iter()
+        .enumerate()
+        .filter(|(_, other)| **other != kind)
+        .map(|(at, other)| (at, format!("it is {}, the others are {}", other.called(), kind.called())))
+        .collect();
+    let none = |why: String| DraftFault::Unreadable(why);
+    let proposed = propose(asked, kind, &which).ok_or_else(|| none(why_none(asked, kind)))?;
+    let (grid, more) = grid::read_all(&proposed.layout, asked.samples, &proposed.columns);
+    refused.extend(proposed.refused.into_iter().chain(more));
+    refused.sort();
     if grid.samples.is_empty() {
-        return Err(unreadable(&all));
+        return Err(none(refused.first().map_or("no table is found in them".to_owned(), |(_, why)| why.clone())));
     }
-    let misfit = |(at, why): (usize, String)| {
-        Some(Misfit { sample: asked.samples.get(at)?.shown.clone(), why })
-    };
+    let misfit = |(at, why): (usize, String)| Some(Misfit { sample: asked.samples.get(at)?.shown.clone(), why });
+    Ok(Laid { layout: proposed.layout, grid, misfits: refused.into_iter().filter_map(misfit).collect(), notes: proposed.notes })
+}
+
+/// Why nothing is proposed, where a module can say no more than that it finds nothing.
+fn why_none(asked: &Asked<'_>, kind: Kind) -> String {
+    let first = asked.samples.first();
+    let fault = first.filter(|_| kind == Kind::Workbook).and_then(|it| {
+        crate::intake::read::workbook::glance(&it.bytes, 1).err().map(|fault| fault.to_string())
+    });
+    fault.unwrap_or_else(|| "no table is found in them".to_owned())
+}
+
+fn propose(asked: &Asked<'_>, kind: Kind, which: &[usize]) -> Option<Proposed> {
+    let against = Against { plan: asked.plan, roster: asked.roster, now: asked.now };
+    let shown = |at: &usize| asked.samples.get(*at).map(|it| it.shown.as_str());
     let mut notes = vec![];
-    if found.supposed {
-        notes.push(Line::remark("encoding", "the bytes are no UTF-8; Windows-1252 is the commonest other encoding"));
+    match kind {
+        Kind::Text => {
+            let found = text::delimited(asked.samples, which)?;
+            if found.supposed {
+                let why = "the bytes are no UTF-8; this is the commonest other encoding";
+                notes.push(Line::remark("encoding", why));
+            }
+            if !found.other_delimiter.is_empty() {
+                let names = some(found.other_delimiter.iter().filter_map(shown));
+                notes.push(Line::remark("delimiter", format!("another one seems likelier in {names}")));
+            }
+            Some(Proposed { layout: found.layout, columns: found.columns, refused: found.refused, notes })
+        }
+        Kind::Workbook => {
+            let found = book::workbooks(asked.samples, which, against)?;
+            Some(Proposed { layout: found.layout, columns: found.columns, refused: found.refused, notes })
+        }
+        Kind::Nested(kind) => {
+            let found = nested::nested(asked.samples, which, kind, against)?;
+            if !found.rivals.is_empty() {
+                let paths = some(found.rivals.iter().map(String::as_str));
+                notes.push(Line::remark("rows", format!("rows may also be at {paths}")));
+            }
+            Some(Proposed { layout: found.layout, columns: found.columns, refused: found.refused, notes })
+        }
     }
-    if !found.other_delimiter.is_empty() {
-        let names = found.other_delimiter.iter().filter_map(|at| asked.samples.get(*at)).map(|it| it.shown.as_str());
-        notes.push(Line::remark("delimiter", format!("another one seems likelier in {}", some(names))));
-    }
-    Ok(Laid { layout: found.layout, grid, misfits: all.into_iter().filter_map(misfit).collect(), notes })
 }
 
 /// What each question came to.
@@ -119,8 +197,15 @@ impl Found {
             self.visit_column = visit.column;
             self.visit = Some(visit.line);
         } else {
-            self.visit = rest::visit_elsewhere(rows, asked.samples, plan);
+            let against = Against { plan: Some(plan), roster: asked.roster, now: asked.now };
+            let format = self.taken_at.formats.first().filter(|_| self.taken_at.formats.len() == 1);
+            let agree = |label: &dyn Fn(&grid::GridRow) -> Option<usize>| {
+                let (subject, taken_at) = (&self.subject.spot, &self.taken_at.spot);
+                format.is_some_and(|it| when::dates_agree(rows, plan, against, (subject, taken_at, it.as_str()), label))
+            };
+            self.visit = rest::visit_elsewhere(rows, asked.samples, plan, &agree);
         }
+        self.settle_days(asked, rows, plan);
         let telling: Vec<usize> =
             long.iter().map(|(column, _)| *column).chain(levels.iter().map(|it| it.column)).chain(self.visit_column).collect();
         let expected = plan.measures.iter().map(|it| it.replicates).max().unwrap_or(1);
@@ -145,6 +230,18 @@ impl Found {
         // Here all rows count: a control's rows are told by what they hold.
         let last = rest::unaccounted(all, &|at| !used.contains(&at), &keys, self.visit.is_some());
         (self.ignore, self.left) = (last.ignore, last.left);
+    }
+
+    /// Where the texts leave open how days are written, the visits' windows may say.
+    fn settle_days(&mut self, asked: &Asked<'_>, rows: &Grid, plan: &Plan) {
+        let (Some(visit), true) = (self.visit_column, self.taken_at.formats.len() > 1) else { return };
+        let against = Against { plan: Some(plan), roster: asked.roster, now: asked.now };
+        let spots = when::Spots { subject: &self.subject.spot, taken_at: &self.taken_at.spot, visit };
+        let formats = self.taken_at.formats.clone();
+        if let Some((format, subjects)) = when::settled_by_windows(rows, plan, against, &spots, &formats) {
+            let why = format!("only so do the labelled sessions of {subjects} subjects lie in their visits' windows");
+            self.taken_at.settle(format, why);
+        }
     }
 
     fn without_plan(&mut self, rows: &Grid, used: &mut BTreeSet<usize>) {

@@ -10,11 +10,13 @@
 // In tests a panic is how a failure is said.
 #![cfg_attr(test, allow(clippy::unwrap_used, clippy::expect_used, clippy::panic, clippy::indexing_slicing))]
 
+mod book;
 mod compose;
 mod grid;
 pub mod into;
 mod labels;
 mod lines;
+mod nested;
 mod numbers;
 mod place;
 mod preview;
@@ -23,6 +25,7 @@ mod stamps;
 mod text;
 mod units;
 mod values;
+mod when;
 mod words;
 
 use chrono::{DateTime, Utc};

@@ -4,14 +4,14 @@
 
 use chrono::{DateTime, NaiveDate, Utc};
 use regex::Regex;
-use revisant_schema::plan::stamp::{CompiledStamp, Written};
-use revisant_schema::plan::{Plan, Stamp};
+use revisant_schema::plan::Plan;
 use revisant_schema::roster::{Roster, tidy};
 
 use super::Sample;
 use super::grid::{Grid, GridRow};
 use super::lines::{BLANK, Line, Notes, literal, quote, rows, some};
 use super::stamps::{self, Found};
+use super::when::Days;
 use super::words;
 
 /// Where the text of a row is taken from, for what is concluded from it here.
@@ -81,6 +81,25 @@ pub struct Taken {
     pub line: Line,
     /// Where the text is.
     pub spot: Spot,
+    /// Of a moment: the ways in which it may be written.
+    pub formats: Vec<String>,
+    /// Of a moment: the place as TOML, without the format.
+    pub place: String,
+}
+
+impl Taken {
+    fn new(line: Line, spot: Spot) -> Self {
+        Self { line, spot, formats: vec![], place: String::new() }
+    }
+
+    /// Decides between ways of writing that the texts leave open.
+    pub fn settle(&mut self, format: &str, why: impl Into<String>) {
+        let value = format!("{{ {}, format = {} }}", self.place, quote(format));
+        let rest = self.formats.iter().filter(|it| *it != format).map(|it| quote(it)).collect::<Vec<_>>().join(", ");
+        let why = format!("the texts alone may also be {rest}; {}", why.into());
+        self.line = Line::unsure("taken_at", &value, why);
+        self.formats = vec![format.to_owned()];
+    }
 }
 
 /// A place that is one column, as TOML.
@@ -118,12 +137,12 @@ pub fn subject(grid: &Grid, samples: &[Sample], against: Against<'_>) -> Taken {
             if fit < all {
                 notes.doubt(format!("{} of {} hold no code of the plan's pattern", all - fit, rows(all)));
             }
-            Taken { line: Line::with("subject", &column(grid, *one), &notes), spot: Spot::Columns(vec![*one]) }
+            Taken::new(Line::with("subject", &column(grid, *one), &notes), Spot::Columns(vec![*one]))
         }
         several => {
             let names = some(several.iter().filter_map(|at| grid.columns.get(*at)).map(String::as_str));
             let what = format!("which column is the subject? The plan's pattern fits {names}: {{ column = \"…\" }}");
-            Taken { line: Line::gap("subject", "{}", what), spot: Spot::Unknown }
+            Taken::new(Line::gap("subject", "{}", what), Spot::Unknown)
         }
     }
 }
@@ -131,14 +150,14 @@ pub fn subject(grid: &Grid, samples: &[Sample], against: Against<'_>) -> Taken {
 fn subject_by_name(grid: &Grid) -> Taken {
     let mut named = (0..grid.columns.len()).filter(|at| grid.columns.get(*at).is_some_and(|it| words::SUBJECT.names(it)));
     match (named.next(), named.next()) {
-        (Some(one), None) => Taken {
-            line: Line::unsure("subject", &column(grid, one), "by its name alone; there is no plan to hold it against"),
-            spot: Spot::Columns(vec![one]),
-        },
-        _ => Taken {
-            line: Line::gap("subject", "{}", "which column is the subject? { column = \"…\" }"),
-            spot: Spot::Unknown,
-        },
+        (Some(one), None) => Taken::new(
+            Line::unsure("subject", &column(grid, one), "by its name alone; there is no plan to hold it against"),
+            Spot::Columns(vec![one]),
+        ),
+        _ => Taken::new(
+            Line::gap("subject", "{}", "which column is the subject? { column = \"…\" }"),
+            Spot::Unknown,
+        ),
     }
 }
 
@@ -148,7 +167,7 @@ fn subject_elsewhere(grid: &Grid, samples: &[Sample], against: Against<'_>) -> T
         if values.len() == grid.samples.len() && values.iter().all(|value| against.is_subject(value)) {
             let place = format!("{{ preamble = {} }}", quote(key));
             let spot = by_sample(grid, values, samples.len());
-            return Taken { line: Line::unsure("subject", &place, "above the header of every sample"), spot };
+            return Taken::new(Line::unsure("subject", &place, "above the header of every sample"), spot);
         }
     }
     for (key, part) in [("file_name", Part::Name), ("folder", Part::Folder)] {
@@ -156,12 +175,12 @@ fn subject_elsewhere(grid: &Grid, samples: &[Sample], against: Against<'_>) -> T
             let place = format!("{{ {key} = {} }}", literal(&pattern));
             let why = "no column holds codes of the plan's pattern; every sample's name does here";
             let spot = by_sample(grid, &codes, samples.len());
-            return Taken { line: Line::unsure("subject", &place, why), spot };
+            return Taken::new(Line::unsure("subject", &place, why), spot);
         }
     }
     let what = "where is the subject? No column, preamble or file name holds codes of the plan's pattern: \
                 { column = \"…\" }, { preamble = \"…\" } or { file_name = '…(…)…' }";
-    Taken { line: Line::gap("subject", "{}", what), spot: Spot::Unknown }
+    Taken::new(Line::gap("subject", "{}", what), Spot::Unknown)
 }
 
 fn by_sample(grid: &Grid, values: &[String], count: usize) -> Spot {
@@ -298,7 +317,7 @@ pub fn taken_at(grid: &Grid, free: &dyn Fn(usize) -> bool, against: Against<'_>)
                 "which of {names} says when it was measured? {{ column = \"…\", format = \"…\" }} or \
                  {{ columns = [\"day\", \"time\"], format = \"…\" }}"
             );
-            Taken { line: Line::gap("taken_at", &format!("{{ format = {} }}", quote(BLANK)), what), spot: Spot::Unknown }
+            Taken::new(Line::gap("taken_at", &format!("{{ format = {} }}", quote(BLANK)), what), Spot::Unknown)
         }
     }
 }
@@ -329,20 +348,8 @@ fn is_time_column(grid: &Grid, column: usize) -> bool {
 /// The days of a column, by row.
 fn days_of(grid: &Grid, candidate: &Candidate) -> Vec<Option<NaiveDate>> {
     let format = candidate.found.formats.first().map(String::as_str).unwrap_or_default();
-    let stamp = match format {
-        "iso" => Stamp::Iso,
-        "serial" => Stamp::Serial,
-        pattern => Stamp::Pattern(pattern.to_owned()),
-    };
-    let Ok(stamp) = CompiledStamp::new(&stamp) else { return vec![] };
-    let day = |text: &str| {
-        Some(match stamp.read(text)?.written {
-            Written::Date(day) => day,
-            Written::Local(local) => local.date(),
-            Written::Moment(moment) => moment.date_naive(),
-        })
-    };
-    grid.texts(candidate.column).map(day).collect()
+    let Some(days) = Days::new(format) else { return vec![] };
+    grid.texts(candidate.column).map(|text| days.read(text)).collect()
 }
 
 /// Whether two columns always say the same day, so that one of them says nothing new.
@@ -378,7 +385,8 @@ fn stamped(grid: &Grid, columns: Vec<usize>, found: &Found) -> Taken {
         several => format!("columns = [{}]", several.join(", ")),
     };
     let example = grid.rows.iter().map(|row| Spot::Columns(columns.clone()).text(row)).find(|text| !text.is_empty());
-    Taken { line: stamp_line(&place, found, &example.unwrap_or_default()), spot: Spot::Columns(columns) }
+    let line = stamp_line(&place, found, &example.unwrap_or_default());
+    Taken { line, spot: Spot::Columns(columns), formats: found.formats.clone(), place }
 }
 
 fn stamp_line(place: &str, found: &Found, example: &str) -> Line {
@@ -407,12 +415,12 @@ fn stamp_elsewhere(grid: &Grid, against: Against<'_>) -> Taken {
         let found = stamps::find(values.iter().map(String::as_str), false, against.now).filter(|it| it.unread == 0);
         if let (true, Some(found)) = (all, found) {
             let line = stamp_line(&format!("preamble = {}", quote(key)), &found, values.first().map_or("", |it| it));
-            return Taken { line, spot: Spot::Unknown };
+            return Taken::new(line, Spot::Unknown);
         }
     }
     let what = "when was it measured? No column or preamble holds dates: \
                 { column = \"…\", format = \"…\" } or { file_name = '…(…)…', format = \"…\" }";
-    Taken { line: Line::gap("taken_at", &format!("{{ format = {} }}", quote(BLANK)), what), spot: Spot::Unknown }
+    Taken::new(Line::gap("taken_at", &format!("{{ format = {} }}", quote(BLANK)), what), Spot::Unknown)
 }
 
 /// The day above the header, the time in a column.
@@ -430,7 +438,7 @@ fn date_above(grid: &Grid, time: usize, against: Against<'_>) -> Taken {
         if let Some(found) = stamps::find(texts.iter().map(String::as_str), false, against.now).filter(|it| it.timed) {
             let place = format!("parts = [{{ preamble = {} }}, {}]", quote(key), column(grid, time));
             let line = stamp_line(&place, &found, texts.first().map_or("", |it| it));
-            return Taken { line, spot: Spot::Columns(vec![time]) };
+            return Taken::new(line, Spot::Columns(vec![time]));
         }
     }
     let name = grid.columns.get(time).map_or("", String::as_str);
@@ -440,5 +448,5 @@ fn date_above(grid: &Grid, time: usize, against: Against<'_>) -> Taken {
         quote(name)
     );
     let value = format!("{{ format = {} }}", quote(BLANK));
-    Taken { line: Line::gap("taken_at", &value, what), spot: Spot::Columns(vec![time]) }
+    Taken::new(Line::gap("taken_at", &value, what), Spot::Columns(vec![time]))
 }

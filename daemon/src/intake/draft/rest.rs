@@ -67,7 +67,13 @@ pub fn visit(grid: &Grid, free: &dyn Fn(usize) -> bool, plan: &Plan) -> Option<D
 }
 
 /// Labels of visits outside the rows. Whether they are meant is for a person to say: the date may be what decides.
-pub fn visit_elsewhere(grid: &Grid, samples: &[Sample], plan: &Plan) -> Option<Line> {
+/// `agree` says whether the dates of all rows say the same as the labels of their samples.
+pub fn visit_elsewhere(
+    grid: &Grid,
+    samples: &[Sample],
+    plan: &Plan,
+    agree: &dyn Fn(&dyn Fn(&GridRow) -> Option<usize>) -> bool,
+) -> Option<Line> {
     let known = known_visits(plan);
     for (key, values) in &grid.preamble {
         let texts = super::grid::tally(values.iter().map(String::as_str));
@@ -85,6 +91,15 @@ pub fn visit_elsewhere(grid: &Grid, samples: &[Sample], plan: &Plan) -> Option<L
         if found.is_empty() {
             continue;
         }
+        let visit_of = |row: &GridRow| {
+            let words = visit_words(part.of(samples.get(row.sample)?), &known);
+            let word = words.first()?;
+            plan.visits.iter().position(|it| fold(&it.code) == fold(word) || fold(&it.label) == fold(word))
+        };
+        let names = some(found.iter().map(String::as_str));
+        if agree(&visit_of) {
+            return Some(Line::remark("visit", format!("the date decides; {names} in the names of exports say the same")));
+        }
         let alternatives: Vec<String> = found.iter().map(|word| regex::escape(word)).collect();
         let pattern = format!("(?:^|[^A-Za-z0-9])({})(?:[^A-Za-z0-9]|$)", alternatives.join("|"));
         let texts: Vec<(&str, usize)> = found.iter().map(|word| (word.as_str(), 1)).collect();
@@ -95,7 +110,7 @@ pub fn visit_elsewhere(grid: &Grid, samples: &[Sample], plan: &Plan) -> Option<L
         };
         let ask = format!(
             "{what} hold {}: {place}, or take this line out where the date alone decides",
-            some(found.iter().map(String::as_str))
+            names
         );
         return Some(Line::gap("visit", "{}", ask));
     }
@@ -189,7 +204,9 @@ fn counts(grid: &Grid, at: usize, keys: &Keys<'_>) -> Option<Counts> {
         numbers += 1;
         largest = largest.max(number);
         let others = keys.columns.iter().filter_map(|column| row.cells.get(*column)).map(|cell| cell.text.as_str());
-        let key = std::iter::once((keys.session)(row)).chain(others.map(str::to_owned)).collect::<Vec<_>>().join("\u{1f}");
+        // The same rows may stand in several exports.
+        let session = format!("{}\u{1f}{}", row.sample, (keys.session)(row));
+        let key = std::iter::once(session).chain(others.map(str::to_owned)).collect::<Vec<_>>().join("\u{1f}");
         groups.entry(key).or_default().push(number);
     }
     if filled == 0 || numbers * 10 < filled * 9 {
@@ -205,7 +222,7 @@ fn counts(grid: &Grid, at: usize, keys: &Keys<'_>) -> Option<Counts> {
         twice += usize::from(group.len() < whole);
         counting += usize::from(is_counting);
     }
-    let tells_apart = twice * 10 <= all;
+    let tells_apart = twice * 4 <= all;
     Some(Counts { largest, tells_apart, is_counting: tells_apart && all > 0 && counting * 2 >= all })
 }
 

@@ -256,11 +256,11 @@ struct Parsed {
     head: Head,
 }
 
-/// Finds the layout of delimited samples; `None` when no sample is a table.
-pub fn delimited(samples: &[Sample]) -> Option<Delimited> {
+/// Finds the layout of those samples that `which` names; `None` when none of them is a table.
+pub fn delimited(samples: &[Sample], which: &[usize]) -> Option<Delimited> {
     let mut refused = vec![];
     let mut texts = vec![];
-    for (index, sample) in samples.iter().enumerate() {
+    for (index, sample) in which.iter().filter_map(|at| Some((*at, samples.get(*at)?))) {
         match decode(&sample.bytes) {
             Some(decoded) if !decoded.text.trim().is_empty() => texts.push((index, decoded)),
             Some(_) => refused.push((index, "it is empty".to_owned())),
@@ -269,6 +269,9 @@ pub fn delimited(samples: &[Sample]) -> Option<Delimited> {
     }
     let named = texts.iter().find(|(_, decoded)| decoded.encoding != Encoding::Auto);
     let (encoding, supposed) = named.map_or((Encoding::Auto, false), |(_, it)| (it.encoding, it.supposed));
+    if texts.iter().filter(|(_, it)| is_fixed_width(&it.text)).count() * 2 > texts.len() {
+        return fixed_width(samples, &texts, encoding, supposed, refused);
+    }
     let votes: Vec<(usize, Option<u8>)> = texts.iter().map(|(index, it)| (*index, sniff(&it.text))).collect();
     let delimiter = elect(&votes, &texts)?;
     let mut parsed = vec![];
@@ -295,6 +298,59 @@ pub fn delimited(samples: &[Sample]) -> Option<Delimited> {
     let other_delimiter =
         votes.iter().filter(|(_, vote)| vote.is_some_and(|vote| vote != delimiter)).map(|(index, _)| *index).collect();
     Some(Delimited { layout, columns, refused, supposed, other_delimiter })
+}
+
+/// The texts of a line that are parted by two or more blanks.
+fn parted(line: &str) -> Vec<String> {
+    line.split("  ").map(str::trim).filter(|part| !part.is_empty()).map(str::to_owned).collect()
+}
+
+/// Whether most lines are texts in columns that blanks part, and no delimiter parts more.
+fn is_fixed_width(text: &str) -> bool {
+    let lines: Vec<&str> = physical(text).filter(|line| !line.trim().is_empty()).take(400).collect();
+    let columns = lines.iter().filter(|line| parted(line).len() >= 3).count();
+    let by_mark = |mark: u8| {
+        let counts = cell_counts(&lines, mark);
+        counts.iter().filter(|count| **count >= 3).count()
+    };
+    columns * 10 >= lines.len() * 5 && USUAL.iter().all(|mark| by_mark(*mark) * 2 < columns)
+}
+
+/// Finds the layout of text in columns: the header is the line with most labels.
+fn fixed_width(
+    samples: &[Sample],
+    texts: &[(usize, Decoded)],
+    encoding: Encoding,
+    supposed: bool,
+    mut refused: Vec<(usize, String)>,
+) -> Option<Delimited> {
+    let mut parsed = vec![];
+    for (index, decoded) in texts {
+        let lines: Vec<String> = physical(&decoded.text).map(str::to_owned).collect();
+        let rows: Vec<Vec<String>> = lines.iter().map(|line| parted(line)).collect();
+        match head(&rows) {
+            Some(head) => parsed.push(Parsed { sample: *index, rows, lines, head }),
+            None => refused.push((*index, "no table is found in it".to_owned())),
+        }
+    }
+    let common = common_labels(&parsed)?;
+    let alike: Vec<&Parsed> = parsed.iter().filter(|it| it.head.labels == common && it.head.line.is_some()).collect();
+    if alike.is_empty() {
+        return None;
+    }
+    let layout = Layout {
+        format: Format::FixedWidth { columns: vec![] },
+        units_row: false,
+        ..layout(b' ', encoding, &alike, &common)
+    };
+    let mut columns = vec![vec![]; samples.len()];
+    for it in &parsed {
+        match columns.get_mut(it.sample) {
+            Some(place) if it.head.labels == common => *place = nameable(&it.head.labels),
+            _ => refused.push((it.sample, "its header is another one".to_owned())),
+        }
+    }
+    Some(Delimited { layout, columns, refused, supposed, other_delimiter: vec![] })
 }
 
 /// The delimiter that most samples have; among equals the one under which more lines have the same number of cells.

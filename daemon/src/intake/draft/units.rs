@@ -9,26 +9,12 @@ use super::words;
 /// The UCUM code that a text means as a unit; `None` when it is none.
 pub fn unit_code(text: &str) -> Option<String> {
     let bare = text.trim().trim_start_matches(['(', '[']).trim_end_matches([')', ']']).trim();
-    if let Some(code) = units::meant(bare) {
-        return Some(code.to_owned());
+    let bare = if units::is_ucum(text.trim()) { text.trim() } else { bare };
+    let is_number = bare.is_empty() || bare.chars().all(|c| c.is_ascii_digit());
+    if is_number {
+        return None;
     }
-    if units::is_ucum(bare) && !bare.chars().all(|c| c.is_ascii_digit()) {
-        return Some(bare.to_owned());
-    }
-    let plain: String = bare
-        .chars()
-        .filter(|c| *c != '^')
-        .map(|c| match c {
-            '²' => '2',
-            '³' => '3',
-            'µ' | 'μ' => 'u',
-            '·' | '*' => '.',
-            other => other,
-        })
-        .collect();
-    units::meant(&plain).map(str::to_owned).or_else(|| {
-        (plain != bare && units::is_ucum(&plain) && !plain.chars().all(|c| c.is_ascii_digit())).then_some(plain)
-    })
+    if units::is_ucum(bare) { Some(bare.to_owned()) } else { units::meant(bare) }
 }
 
 /// A label, and the unit that it states.
