@@ -21,7 +21,7 @@ use serde_json::{Map, Value as Json, json};
 use crate::error::{Exit, Failure};
 use crate::study::PROGRAM;
 
-pub use revisant_daemon::intake::draft::{Asked, Draft, PreviewRow, Sample};
+pub use revisant_daemon::intake::draft::{Asked, Draft, PreviewRow, Sample as SampleExport};
 
 /// Drafts an instrument from its sample exports.
 pub fn draft(asked: &Asked<'_>) -> Result<Draft, Failure> {

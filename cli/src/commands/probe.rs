@@ -16,7 +16,7 @@ use serde_json::json;
 use super::Done;
 use crate::args::Probe;
 use crate::error::{Exit, Failure, unsound};
-use crate::intake::{self, Asked, Draft, Sample};
+use crate::intake::{self, Asked, Draft, SampleExport};
 use crate::report::table::{Left, Table, Whole};
 use crate::report::text::{clean, count, wrap};
 use crate::study::Context;
@@ -29,7 +29,7 @@ pub fn run(context: &mut Context<'_, '_>, args: &Probe) -> Done {
     let base = base(context, args);
     let folder = folder(args);
     let code = code(args, &folder)?;
-    let samples: Vec<Sample> = args.files.iter().map(|file| sample(context, file, &folder)).collect::<Result<_, _>>()?;
+    let samples: Vec<SampleExport> = args.files.iter().map(|file| sample(context, file, &folder)).collect::<Result<_, _>>()?;
     let known = Known::load(context, args, &base)?;
     let named = named_folder(args, &folder, &base);
     let asked = Asked {
@@ -140,7 +140,7 @@ fn code(args: &Probe, folder: &Path) -> Result<String, Failure> {
     }
 }
 
-fn sample(context: &Context<'_, '_>, file: &Path, folder: &Path) -> Result<Sample, Failure> {
+fn sample(context: &Context<'_, '_>, file: &Path, folder: &Path) -> Result<SampleExport, Failure> {
     let mut bytes = vec![];
     let opened = context.world.open(file).map_err(|error| unreadable(file, &error))?;
     opened.take(LARGEST + 1).read_to_end(&mut bytes).map_err(|error| unreadable(file, &error))?;
@@ -153,7 +153,7 @@ fn sample(context: &Context<'_, '_>, file: &Path, folder: &Path) -> Result<Sampl
     let whole = absolute(file);
     let below = whole.parent().and_then(|parent| parent.strip_prefix(folder).ok()).map_or(String::new(), slashed);
     let file_name = file.file_name().map(OsStr::to_string_lossy).unwrap_or_default().into_owned();
-    Ok(Sample { shown, file_name, folder: below, bytes })
+    Ok(SampleExport { shown, file_name, folder: below, bytes })
 }
 
 fn slashed(path: &Path) -> String {
