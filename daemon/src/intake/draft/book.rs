@@ -58,7 +58,9 @@ pub fn workbooks(samples: &[Sample], which: &[usize], against: Against<'_>) -> O
     for it in &chosen {
         let fits = it.head.labels.iter().any(|label| !label.is_empty() && labels.contains(label));
         match columns.get_mut(it.sample) {
-            Some(place) if fits => *place = text::nameable(&it.head.labels),
+            Some(place) if fits => {
+                *place = text::nameable(&it.head.labels).into_iter().filter(|label| labels.contains(label)).collect();
+            }
             _ => refused.push((it.sample, "its header is another one".to_owned())),
         }
     }

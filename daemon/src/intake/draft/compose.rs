@@ -147,6 +147,10 @@ struct Found {
     missing: (Vec<String>, Vec<String>, Vec<String>),
     grows: Option<(String, String)>,
     visit_column: Option<usize>,
+    /// The plan's measures that no column is taken for.
+    unmatched: Vec<String>,
+    /// The columns that the draft names.
+    needed: Vec<String>,
 }
 
 impl Found {
@@ -174,6 +178,8 @@ impl Found {
             missing: Default::default(),
             grows: rest::grows(all, asked.samples),
             visit_column: None,
+            unmatched: vec![],
+            needed: vec![],
         };
         match asked.plan {
             Some(plan) => found.with_plan(asked, all, rows, plan, &mut used),
@@ -216,17 +222,20 @@ impl Found {
             used.extend(replicate.column);
             self.replicate = Some(replicate.line);
         }
-        let numeric = values::numeric(rows, &|at| !used.contains(&at), self.marks.marks);
+        let mut numeric = values::numeric(rows, &|at| !used.contains(&at), self.marks.marks);
+        values::name_before_unit(&mut numeric, rows, plan);
         let surroundings = surroundings(asked);
         self.entries = match &long {
             Some((column, meeting)) => long_entries(rows, plan, (*column, meeting), &numeric, unit.as_ref(), &levels),
             None => wide_entries(rows, plan, &numeric, unit.as_ref(), &levels, &surroundings),
         };
         used.extend(self.entries.iter().map(|it| it.column));
+        self.unmatched = unmatched(plan, rows, long.as_ref(), &self.entries);
         if let Some(operator) = rest::operator(rows, &|at| !used.contains(&at)) {
             used.extend(operator.column);
             self.operator = Some(operator.line);
         }
+        self.needed = used.iter().filter_map(|at| all.columns.get(*at)).cloned().collect();
         // Here all rows count: a control's rows are told by what they hold.
         let last = rest::unaccounted(all, &|at| !used.contains(&at), &keys, self.visit.is_some());
         (self.ignore, self.left) = (last.ignore, last.left);
@@ -286,6 +295,13 @@ fn long_column(rows: &Grid, plan: &Plan, used: &BTreeSet<usize>) -> Option<(usiz
         return met.pop();
     }
     None
+}
+
+/// The plan's measures that no entry is for.
+fn unmatched(plan: &Plan, rows: &Grid, long: Option<&(usize, labels::Meeting)>, entries: &[Entry]) -> Vec<String> {
+    let present = long.map_or(vec![], |(column, meeting)| values::measures_present(plan, rows, *column, meeting));
+    let is_there = |at: usize| present.contains(&at) || entries.iter().any(|it| it.measure == Some(at));
+    plan.measures.iter().enumerate().filter(|(at, _)| !is_there(*at)).map(|(_, it)| it.code.clone()).collect()
 }
 
 fn unit_column(rows: &Grid, used: &BTreeSet<usize>) -> Option<values::UnitColumn> {
@@ -408,7 +424,11 @@ impl Written {
         reader.extend(found.operator.clone());
         if !found.left.is_empty() {
             let names = found.left.iter().map(|name| quote(name)).collect::<Vec<_>>().join(", ");
-            reader.push(Line::remark("columns", format!("these columns are not read: {names}")));
+            let more = match found.unmatched.as_slice() {
+                [] => String::new(),
+                codes => format!("; no column is taken for {}", some(codes.iter().map(String::as_str))),
+            };
+            reader.push(Line::remark("columns", format!("these columns are not read: {names}{more}")));
         }
         Self { instrument: instrument_lines(asked, found), reader, ignore: found.ignore.clone() }
     }
@@ -443,8 +463,23 @@ impl Written {
             values: found.entries.iter().map(|it| (it.column, it.measure)).collect(),
         };
         let preview = preview::preview(asked, &toml, gaps.is_empty(), &laid.grid, &spots);
-        Draft { toml, gaps, unsure, misfits: laid.misfits, preview }
+        Draft { toml, gaps, unsure, misfits: misfits(asked, laid, &found.needed), preview }
     }
+}
+
+/// The samples that were refused, and those that lack a column that the draft names. A nested document may leave out
+/// what a row does not have.
+fn misfits(asked: &Asked<'_>, laid: Laid, needed: &[String]) -> Vec<Misfit> {
+    let mut misfits = laid.misfits;
+    if matches!(laid.layout.format, Format::Json { .. } | Format::JsonLines { .. } | Format::Xml { .. }) {
+        return misfits;
+    }
+    for sample in laid.grid.samples.iter().filter_map(|at| asked.samples.get(*at)) {
+        if let Err(why) = grid::has_columns(&laid.layout, needed, sample) {
+            misfits.push(Misfit { sample: sample.shown.clone(), why });
+        }
+    }
+    misfits
 }
 
 fn write_ignore(rules: &[(String, Mark)], toml: &mut String) {

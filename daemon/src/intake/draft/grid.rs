@@ -198,3 +198,10 @@ impl Grid {
         self.samples.push(sample);
     }
 }
+
+/// Whether a sample has these columns: the reader's own word where it has not.
+pub fn has_columns(layout: &Layout, columns: &[String], sample: &Sample) -> Result<(), String> {
+    let reader = trial_reader(layout, columns);
+    let opened = read::open(&reader, &sample.bytes).map(drop);
+    opened.map_err(|fault| fault.to_string())
+}

@@ -185,31 +185,36 @@ fn visit<'n>(
 /// The texts of a row, by their paths.
 fn texts(row: &Node, above: &[&Node]) -> Vec<(String, String)> {
     let mut all = vec![];
-    inside(row, "", 4, &mut all);
+    inside(row, "", 4, "", &mut all);
     let mut up = String::new();
-    // Lists do not count.
-    for outer in above.iter().rev().filter(|node| !node.is_list) {
-        up.push_str("../");
-        inside(outer, &up, 2, &mut all);
+    let mut below = row.name.as_str();
+    for outer in above.iter().rev() {
+        // Lists do not count.
+        if !outer.is_list {
+            up.push_str("../");
+            inside(outer, &up, 2, below, &mut all);
+        }
+        below = outer.name.as_str();
     }
     all
 }
 
-fn inside(node: &Node, prefix: &str, depth: usize, all: &mut Vec<(String, String)>) {
+/// The texts of a node; those of the child called `but`, in which the row lies, are the row's own.
+fn inside(node: &Node, prefix: &str, depth: usize, but: &str, all: &mut Vec<(String, String)>) {
     for (name, text) in &node.attributes {
         all.push((format!("{prefix}@{name}"), text.clone()));
     }
     for child in &node.children {
         let once = node.children.iter().filter(|other| other.name == child.name).count() == 1;
         let nameable = !child.name.is_empty() && !child.name.contains('/') && !child.name.starts_with(['@', '.']);
-        if !once || !nameable || child.is_list || all.len() >= MOST_TEXTS {
+        if child.name == but || !once || !nameable || child.is_list || all.len() >= MOST_TEXTS {
             continue;
         }
         if let Some(text) = &child.leaf {
             all.push((format!("{prefix}{}", child.name), text.trim().to_owned()));
         }
         if depth > 0 {
-            inside(child, &format!("{prefix}{}/", child.name), depth - 1, all);
+            inside(child, &format!("{prefix}{}/", child.name), depth - 1, "", all);
         }
     }
 }

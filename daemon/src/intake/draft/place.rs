@@ -325,14 +325,13 @@ pub fn taken_at(grid: &Grid, free: &dyn Fn(usize) -> bool, against: Against<'_>)
 /// How the texts of columns, joined, are written as stamps.
 fn stamp_of(grid: &Grid, columns: &[usize], now: DateTime<Utc>) -> Option<Found> {
     let spot = Spot::Columns(columns.to_vec());
-    let serial = columns.iter().all(|column| grid.is_number(*column));
-    if serial {
+    let numbers = columns.iter().all(|column| grid.is_number(*column));
+    if let (true, [one]) = (numbers, columns) {
         let days = |text: &str| text.parse::<f64>().is_ok_and(|number| (20_000.0..80_000.0).contains(&number));
-        let (first, workbook) = (columns.first()?, columns.len() == 1);
-        let fits = grid.texts(*first).filter(|text| !text.is_empty()).all(days);
-        // A number in a document that is no workbook may be seconds since 1970, which is a way of writing of its own.
-        if workbook && fits && grid.texts(*first).any(|text| !text.is_empty()) {
-            return stamps::find(grid.texts(*first), true, now);
+        let filled = grid.texts(*one).filter(|text| !text.is_empty()).count();
+        // Another number in a document may be seconds since 1970, which is a way of writing of its own.
+        if filled > 0 && grid.texts(*one).filter(|text| days(text)).count() * 10 >= filled * 6 {
+            return stamps::find(grid.texts(*one), true, now);
         }
     }
     let texts: Vec<String> = grid.rows.iter().map(|row| spot.text(row)).collect();

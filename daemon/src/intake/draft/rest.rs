@@ -45,7 +45,8 @@ pub fn visit(grid: &Grid, free: &dyn Fn(usize) -> bool, plan: &Plan) -> Option<D
         let texts = grid.distinct(*at);
         let name = grid.columns.get(*at).map_or("", String::as_str);
         let few = !texts.is_empty() && texts.len() <= FEW.max(plan.visits.len() * 2);
-        few && words::VISIT.names(name.rsplit('/').next().unwrap_or(name))
+        let last = name.rsplit('/').next().unwrap_or(name);
+        few && words::VISIT.names(last) && !words::HARMLESS.names(name)
     };
     let candidates: Vec<usize> = if by_content.is_empty() {
         (0..grid.columns.len()).filter(|at| free(*at)).filter(named).collect()

@@ -290,7 +290,8 @@ pub fn delimited(samples: &[Sample], which: &[usize]) -> Option<Delimited> {
     let mut columns = vec![vec![]; samples.len()];
     for it in parsed.iter().filter(|it| fits(it)) {
         if let Some(place) = columns.get_mut(it.sample) {
-            *place = nameable(&it.head.labels);
+            // A column that only an odd one out has is no column of the instrument.
+            *place = nameable(&it.head.labels).into_iter().filter(|label| common.contains(label)).collect();
         }
     }
     let laid_out_otherwise = parsed.iter().filter(|it| !fits(it));

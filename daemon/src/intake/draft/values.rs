@@ -120,6 +120,10 @@ fn named(label: &str, whole: &str, measure: &Measure) -> Named {
     }
     let initials: String = code.iter().filter_map(|word| word.chars().next()).collect();
     let long = |word: &str| word.chars().count() >= 3;
+    // A label that is nothing but a level: "Left (N)" of a grip that is measured left and right.
+    if mine.is_empty() && split_words(label).iter().any(is_level) {
+        return Named::Perhaps;
+    }
     let shares = mine.iter().any(|word| {
         long(word) && code.iter().chain(&called).any(|other| {
             long(other) && (other.starts_with(word.as_str()) || word.starts_with(other.as_str()))
@@ -150,7 +154,7 @@ fn speaks(it: &Numeric, whole: &str, measure: &Measure) -> Speaks {
 /// Whether a stated unit rules a measure out that the label does not name.
 fn is_ruled_out(it: &Numeric, speaks: Speaks, measure: &Measure) -> bool {
     let foreign = matches!(it.unit(), Unit::Stated(code) if units::convert(&code, &measure.unit).is_none());
-    foreign && speaks.named != Named::Certainly
+    foreign && speaks.named == Named::Not
 }
 
 /// The columns' measures, by column; several where it cannot be told.
@@ -169,6 +173,17 @@ pub struct Hints<'a> {
     pub conditions_found: &'a dyn Fn(usize) -> bool,
     /// Words of file names, folders, preambles and the instrument's name.
     pub surroundings: &'a [String],
+}
+
+/// A label that is a unit as a whole and a measure's name as well is taken for the name: "hr" for a heart rate.
+pub fn name_before_unit(numeric: &mut [Numeric], grid: &Grid, plan: &Plan) {
+    for it in numeric.iter_mut().filter(|it| it.label.name.is_empty()) {
+        let whole = grid.columns.get(it.column).map_or("", String::as_str);
+        let last = whole.rsplit('/').next().unwrap_or(whole);
+        if plan.measures.iter().any(|measure| named(last, last, measure) > Named::Not) {
+            it.label = Labelled { name: last.to_owned(), unit: None, stated: false, unknown: None };
+        }
+    }
 }
 
 /// Matches columns of numbers with measures.
