@@ -61,16 +61,47 @@ impl Line {
         Self { mark, ..Self::sure(key, value) }
     }
 
-    /// As it stands in the file.
+    /// As it stands in the file: the comment behind the line, or above it where both together are too long to be read
+    /// at a sight.
     pub fn write(&self, into: &mut String) {
         let comment = match &self.mark {
             Mark::Sure => String::new(),
             Mark::Unsure(why) => format!("# unsure: {}", clean(why)),
             Mark::Gap(what) => format!("# {BLANK}: {}", clean(what)),
         };
-        let part = if self.text.is_empty() || comment.is_empty() { "" } else { "     " };
-        let _ = writeln!(into, "{}{part}{comment}", self.text);
+        let behind = format!("{}     {comment}", self.text);
+        if comment.is_empty() {
+            let _ = writeln!(into, "{}", self.text);
+        } else if !self.text.is_empty() && behind.chars().count() <= WIDTH {
+            let _ = writeln!(into, "{behind}");
+        } else {
+            let indent = self.text.len() - self.text.trim_start().len();
+            write_above(&comment, indent, into);
+            if !self.text.is_empty() {
+                let _ = writeln!(into, "{}", self.text);
+            }
+        }
     }
+}
+
+/// Columns that a drafted line takes with its comment.
+const WIDTH: usize = 80;
+
+/// Writes a comment over as many lines as it needs.
+fn write_above(comment: &str, indent: usize, into: &mut String) {
+    let mut line = " ".repeat(indent);
+    let start = line.len();
+    for word in comment.split(' ') {
+        if line.len() > start && line.chars().count() + 1 + word.chars().count() > WIDTH {
+            let _ = writeln!(into, "{}", line.trim_end());
+            line = format!("{}#  ", " ".repeat(indent));
+        }
+        if line.len() > start {
+            line.push(' ');
+        }
+        line.push_str(word);
+    }
+    let _ = writeln!(into, "{}", line.trim_end());
 }
 
 /// Reasons gathered for one line.
@@ -134,4 +165,30 @@ pub fn clip(text: &str) -> String {
 /// A count with its noun.
 pub fn rows(count: usize) -> String {
     if count == 1 { "1 row".to_owned() } else { format!("{count} rows") }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    fn written(line: &Line) -> String {
+        let mut text = String::new();
+        line.write(&mut text);
+        text
+    }
+
+    #[test]
+    fn comments_stand_behind_or_above() {
+        assert_eq!(written(&Line::unsure("a", "1", "why")), "a = 1     # unsure: why\n");
+        let long = written(&Line::gap("a", "1", "word ".repeat(40)));
+        assert!(long.starts_with("# FILL IN: word word") && long.ends_with("\na = 1\n"), "{long}");
+        assert!(long.lines().all(|line| line.chars().count() <= 80 && (line.starts_with('#') || line == "a = 1")));
+    }
+
+    #[test]
+    fn nothing_that_a_sample_holds_ends_a_comment_or_a_text() {
+        assert_eq!(written(&Line::unsure("a", &quote("x\"\ny"), "p\nq")).lines().count(), 1);
+        let text = written(&Line::sure("a", &map(&[("k\"\n".into(), "v\\".into())])));
+        assert!(text.parse::<toml_edit::DocumentMut>().is_ok(), "{text}");
+    }
 }

@@ -97,7 +97,7 @@ pub fn settled_by_windows<'f>(
         formats.iter().map(|format| fits(grid, plan, against, spots, format)).collect();
     let counted = counted?;
     let good = |(fit, not): &(usize, usize)| *fit >= ENOUGH && *fit >= *not * 4;
-    let bad = |(fit, not): &(usize, usize)| *fit * 10 <= *not;
+    let bad = |(fit, not): &(usize, usize)| *fit * 4 <= *not;
     let mut fitting = counted.iter().enumerate().filter(|(_, counts)| good(counts));
     let (Some((at, (fit, _))), None) = (fitting.next(), fitting.next()) else { return None };
     let rest_bad = counted.iter().enumerate().all(|(other, counts)| other == at || bad(counts));
