@@ -54,15 +54,16 @@ JSON: {\"plan\": path, \"folders\": [path]}")]
     /// Draft an instrument's reader from sample exports
     #[command(after_help = "\
 Example:
-  revisant probe exports/dyn-1/monday.csv exports/dyn-1/tuesday.csv --into study.toml
+  revisant probe exports/dyn-1/*.csv --into study.toml
 
-The columns are held against the plan: its subjects' pattern, visits, measures and units. A line that
-is not certain says why after `# unsure:`, a line that a person must complete says what after
-`# FILL IN:`. Until all those are filled in, `revisant check` refuses the plan and nothing is filed by
-it; a service that is running goes on with the last sound plan. The more exports, the more is certain.
+The columns are held against the plan: its subjects' pattern, visits, measures
+and units. A line that is not certain says why after `# unsure:`; a line that a
+person must complete says what after `# FILL IN:`. Until all of those are filled
+in, `revisant check` refuses the plan and nothing is filed by it; a service that
+is running goes on with the last sound plan. More exports make more certain.
 Exit status 3 when something must be filled in, or a sample does not fit.
-JSON: {\"code\", \"toml\", \"gaps\": [{\"key\", \"text\"}], \"unsure\", \"misfits\": [{\"sample\", \"why\"}], \"preview\",
-\"into\"}")]
+JSON: {\"code\", \"toml\", \"gaps\": [{\"key\", \"text\"}], \"unsure\",
+\"misfits\": [{\"sample\", \"why\"}], \"preview\", \"into\"}")]
     Probe(Probe),
     /// Say what is wrong with the plan, and what a changed plan would change
     #[command(after_help = "\

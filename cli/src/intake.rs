@@ -30,7 +30,8 @@ pub fn draft(asked: &Asked<'_>) -> Result<Draft, Failure> {
 
 /// A plan's text with the drafted instrument in it; all else stays byte for byte.
 pub fn draft_into(text: &str, draft: &Draft, code: &str) -> Result<String, Failure> {
-    draft::into::insert(text, &draft.toml, code).map_err(|fault| Failure::refused(format!("the plan is as before: {fault}")))
+    draft::into::insert(text, &draft.toml, code)
+        .map_err(|fault| Failure::refused(format!("the plan is as before: {fault}")))
 }
 
 /// What a plan says besides its instruments, which need not be sound for drafting one more.

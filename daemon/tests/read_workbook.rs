@@ -59,15 +59,20 @@ impl Book {
     fn parts(&self) -> Vec<(String, Vec<u8>)> {
         let head = "<?xml version=\"1.0\" encoding=\"UTF-8\" standalone=\"yes\"?>\n";
         let relations = |of: &str| {
-            format!("{head}<Relationships xmlns=\"http://schemas.openxmlformats.org/package/2006/relationships\">{of}</Relationships>")
+            format!(
+                "{head}<Relationships xmlns=\"http://schemas.openxmlformats.org/package/2006/relationships\">{of}</Relationships>"
+            )
         };
         let mut list = String::new();
-        let mut related = format!("<Relationship Id=\"rIdT\" Type=\"{KIND}/sharedStrings\" Target=\"sharedStrings.xml\"/>");
+        let mut related =
+            format!("<Relationship Id=\"rIdT\" Type=\"{KIND}/sharedStrings\" Target=\"sharedStrings.xml\"/>");
         let mut parts = Vec::new();
         for (index, (name, kind, rows)) in self.sheets.iter().enumerate() {
             let id = index + 1;
             list.push_str(&format!("<sheet name=\"{name}\" sheetId=\"{id}\" r:id=\"rId{id}\"/>"));
-            related.push_str(&format!("<Relationship Id=\"rId{id}\" Type=\"{KIND}/{kind}\" Target=\"{kind}s/sheet{id}.xml\"/>"));
+            related.push_str(&format!(
+                "<Relationship Id=\"rId{id}\" Type=\"{KIND}/{kind}\" Target=\"{kind}s/sheet{id}.xml\"/>"
+            ));
             let sheet = format!(
                 "{head}<{kind} xmlns=\"{MAIN}\"><dimension ref=\"A1\"/><sheetData>{rows}</sheetData><pageMargins left=\"0.7\"/></{kind}>"
             );
@@ -226,8 +231,17 @@ fn texts_stand_as_they_are() {
     ];
     let written: Vec<&str> = written.iter().map(String::as_str).collect();
     let expected = [
-        "12,5", "007", "a", "bold er", "東京", "a <&> \"b' µµ", "<x> & y", "one\ntwo_x000A_", "x&y",
-        "2025-03-01T10:00:00", "yes",
+        "12,5",
+        "007",
+        "a",
+        "bold er",
+        "東京",
+        "a <&> \"b' µµ",
+        "<x> & y",
+        "one\ntwo_x000A_",
+        "x&y",
+        "2025-03-01T10:00:00",
+        "yes",
     ];
     assert_eq!(values(&written), expected);
     let rows = table(&[&COLUMNS, &["S", " two words ", "1"]]);
@@ -406,7 +420,8 @@ fn a_header_alone_is_no_fault() {
 #[test]
 fn the_sheet_is_the_one_that_the_plan_names() {
     let rows = |id| table(&[&COLUMNS, &[id, "1", "2"]]);
-    let mut book = Book::of("").sheet("Diagram", "chartsheet", "").sheet("Pru\u{308}fung &amp; mehr", "worksheet", &rows("P"));
+    let mut book =
+        Book::of("").sheet("Diagram", "chartsheet", "").sheet("Pru\u{308}fung &amp; mehr", "worksheet", &rows("P"));
     book.sheets[0].2 = rows("R");
     for (sheet, id) in [
         (Sheet::Number(1), "R"),
@@ -493,7 +508,9 @@ fn what_is_no_such_workbook_is_said_in_plain_words() {
     let other = ("readme.txt".to_owned(), b"x".to_vec());
     assert!(unreadable(&archive(&[other], CompressionMethod::Stored)).contains("no workbook in it"));
     let main = |target: &str| {
-        let relation = format!("<Relationships><Relationship Id=\"r\" Type=\"{KIND}/officeDocument\" Target=\"{target}\"/></Relationships>");
+        let relation = format!(
+            "<Relationships><Relationship Id=\"r\" Type=\"{KIND}/officeDocument\" Target=\"{target}\"/></Relationships>"
+        );
         let document = ("word/document.xml".to_owned(), b"<w:document xmlns:w=\"w\"/>".to_vec());
         archive(&[("_rels/.rels".to_owned(), relation.into_bytes()), document], CompressionMethod::Stored)
     };
@@ -560,7 +577,9 @@ fn xml_that_is_not_whole_or_not_plain_is_a_fault() {
     unreadable(&with(sheet.replace("UTF-8", "windows-1252").into()));
     unreadable(&with(sheet.replace("<worksheet", "<!DOCTYPE a [<!ENTITY b \"c\">]><worksheet").into()));
     unreadable(&with([sheet.as_bytes(), b"<worksheet/>"].concat()));
-    unreadable(&with(sheet.replace("S1", "\u{1}").into_bytes().iter().map(|&byte| if byte == 1 { 0xFF } else { byte }).collect()));
+    unreadable(&with(
+        sheet.replace("S1", "\u{1}").into_bytes().iter().map(|&byte| if byte == 1 { 0xFF } else { byte }).collect(),
+    ));
     let wide: Vec<u8> = format!("\u{feff}{sheet}").encode_utf16().flat_map(u16::to_le_bytes).collect();
     unreadable(&with(wide));
 }
@@ -638,7 +657,8 @@ mod bounds {
     #[test]
     fn ten_thousand_sheets_of_one_part_are_no_matter() {
         let mut book = good();
-        let rows: String = (1..=10_000).map(|id| format!("<sheet name=\"s{id}\" sheetId=\"{id}\" r:id=\"rId1\"/>")).collect();
+        let rows: String =
+            (1..=10_000).map(|id| format!("<sheet name=\"s{id}\" sheetId=\"{id}\" r:id=\"rId1\"/>")).collect();
         let main = format!("<workbook xmlns:r=\"r\"><sheets>{rows}</sheets></workbook>");
         book.more = vec![("xl/workbook.xml".into(), main.into_bytes())];
         assert_eq!(read_within(&book.bytes(), Limits::default()).unwrap(), 1);
@@ -845,7 +865,8 @@ mod properties {
     fn cell() -> impl Strategy<Value = String> {
         prop_oneof![
             Just(String::new()),
-            (-1000..1000_i32, 0..4_u32).prop_map(|(number, places)| format!("{}", f64::from(number) / 10_f64.powi(places as i32))),
+            (-1000..1000_i32, 0..4_u32)
+                .prop_map(|(number, places)| format!("{}", f64::from(number) / 10_f64.powi(places as i32))),
             any::<f64>().prop_filter("finite", |number| number.is_finite()).prop_map(|number| format!("{number:e}")),
             "[a-zä µ]{1,8}",
             (0..3_u32).prop_map(|index| format!("<c r=\"@\" t=\"s\"><v>{index}</v></c>")),

@@ -98,7 +98,8 @@ fn site(study: &str, plan: &str) -> Site {
 /// The readings of an instrument's exports, each as what must not be wrong, and how often it is there.
 fn readings(site: &Site, exports: &str) -> BTreeMap<String, usize> {
     let mut all = BTreeMap::new();
-    let fields = ["subject", "visit", "measure", "condition", "replicate", "value", "limit", "taken_at", "export", "where"];
+    let fields =
+        ["subject", "visit", "measure", "condition", "replicate", "value", "limit", "taken_at", "export", "where"];
     for reading in site.readings() {
         let export = reading["export"].as_str().unwrap_or_default().to_owned();
         if !export.starts_with(&format!("{exports}/")) {
@@ -227,4 +228,120 @@ fn drafts_from_all_exports_file_nothing_wrongly() {
 #[test]
 fn drafts_from_two_exports_file_nothing_wrongly() {
     judge_all(2);
+}
+
+// ---- the command ----
+
+const PLAN: &str = "\
+# Kept by hand; comments and order matter.
+[study]
+code = \"P-1\"          # our code
+time_zone = \"Europe/London\"
+[subject]
+pattern = 'P-\\d{3}'
+normalise = [\"trim\", \"upper\"]
+anchor = \"first\"
+[[measure]]
+code = \"grip\"
+unit = \"kg\"
+plausible = [2, 95]
+conditions = { hand = [\"left\", \"right\"] }
+[[visit]]
+code = \"first\"
+day = 0
+[[visit]]
+code = \"second\"
+day = 28
+window = [-3, 3]
+
+# Last of all, the analyses.
+[[analysis]]
+code = \"grip-over-visits\"
+measure = \"grip\"
+method = \"repeated-measures\"
+average = [\"hand\"]
+";
+
+const ROSTER: &str = "subject,enrolled,withdrawn\nP-001,2025-03-03,\nP-002,2025-03-03,\n";
+
+const EXPORT: &str = "\
+Tester: A. B.
+Subject;Visit;Time;Left (kg);Right (kg);Note
+P-001;first;2025-03-03 09:10;31,5;30,0;
+P-002;first;2025-03-14 09:40;27,0;26,5;slipped
+P-001;second;2025-03-31 09:05;32,0;NA;
+";
+
+fn small_site() -> Site {
+    let site = Site::with(PROGRAMS, PLAN, ROSTER);
+    site.write("exports/dyn/march.csv", EXPORT);
+    site.age("exports/dyn/march.csv");
+    site
+}
+
+#[test]
+fn a_draft_is_toml_and_shows_what_would_be_filed() {
+    let site = small_site();
+    let ran = site.run(&["probe", "exports/dyn/march.csv"]);
+    site.check_snapshot("probe/sound", &ran);
+    assert_eq!(ran.code, Some(0), "{}", ran.shown());
+    for line in ran.stdout.lines() {
+        assert!(line.chars().count() <= 80, "{line}");
+    }
+    // All of it, the look ahead too, may stand in a plan.
+    site.write("study.toml", format!("{PLAN}\n{}", ran.stdout));
+    site.ok(&["check"]);
+    assert_eq!(site.collect()["readings"]["filed"], 5);
+}
+
+#[test]
+fn a_draft_is_added_to_the_plan_and_all_else_stays() {
+    let site = small_site();
+    let ran = site.run(&["probe", "exports/dyn/march.csv", "--into", "study.toml"]);
+    site.check_snapshot("probe/into", &ran);
+    assert_eq!(ran.code, Some(0), "{}", ran.shown());
+    let text = fs::read_to_string(site.path("study.toml")).unwrap();
+    let (before, after) = PLAN.split_once("\n# Last of all").unwrap();
+    assert!(text.starts_with(before) && text.ends_with(&format!("\n# Last of all{after}")), "{text}");
+    site.ok(&["check"]);
+    // Once more it is refused, and nothing is written.
+    let again = site.run(&["probe", "exports/dyn/march.csv", "--into", "study.toml", "--json"]);
+    assert_eq!((again.code, again.error()["kind"].clone()), (Some(1), "refused".into()));
+    assert_eq!(fs::read_to_string(site.path("study.toml")).unwrap(), text);
+}
+
+#[test]
+fn what_is_ambiguous_is_said_and_not_decided() {
+    let site = small_site();
+    site.write(
+        "exports/scale/one.csv",
+        "Subject,Visit,When,Side,Grip,Type\nP-001,V1,03/04/2025 10:00,L,\"1,234\",S\nP-002,V1,04/04/2025 10:00,R,\"1,500\",S\n",
+    );
+    site.write("exports/scale/other.csv", "nothing\n");
+    let ran = site.run(&["probe", "exports/scale/one.csv", "exports/scale/other.csv"]);
+    site.check_snapshot("probe/gaps", &ran);
+    assert_eq!(ran.code, Some(3));
+    let json = site.run(&["probe", "exports/scale/one.csv", "--json"]).json();
+    let keys: Vec<&str> = json["gaps"].as_array().unwrap().iter().map(|gap| gap["key"].as_str().unwrap()).collect();
+    for key in ["decimal_mark", "taken_at", "visit", "ignore", "condition"] {
+        assert!(keys.contains(&key), "{key}: {json}");
+    }
+    // In the plan, `check` names each of them, and a second instrument can be drafted nevertheless.
+    assert_eq!(site.run(&["probe", "exports/scale/one.csv", "--into", "study.toml"]).code, Some(3));
+    let check = site.run(&["check"]);
+    assert_eq!(check.code, Some(2));
+    assert!(check.stderr.contains("FILL IN"), "{}", check.stderr);
+    assert_eq!(site.run(&["probe", "exports/dyn/march.csv", "--into", "study.toml"]).code, Some(0));
+}
+
+#[test]
+fn without_a_plan_what_the_plan_would_say_is_left_open() {
+    let site = Site::new(PROGRAMS);
+    site.write("march.csv", EXPORT);
+    let ran = site.run(&["probe", "march.csv", "--code", "dyn", "--json"]);
+    assert_eq!(ran.code, Some(3), "{}", ran.shown());
+    let toml = ran.json()["toml"].as_str().unwrap().to_owned();
+    assert!(toml.contains("subject = { column = \"Subject\" }") && toml.contains("measure = \"FILL IN\""), "{toml}");
+    let bad = site.run(&["probe", "absent.csv", "--json"]);
+    assert_eq!((bad.code, bad.error()["kind"].clone()), (Some(1), "file".into()));
 }

@@ -21,15 +21,20 @@ use crate::report::table::{Left, Table, Whole};
 use crate::report::text::{clean, count, wrap};
 use crate::study::Context;
 
-/// A larger sample is not read: the beginning of an export says as much.
-const LARGEST: u64 = 64 << 20;
+/// A larger sample is not read, nor more in all: a smaller export says as much, and drafting looks at all at once.
+const LARGEST: u64 = 16 << 20;
+const LARGEST_TOGETHER: usize = 64 << 20;
 
 /// Runs it.
 pub fn run(context: &mut Context<'_, '_>, args: &Probe) -> Done {
     let base = base(context, args);
     let folder = folder(args);
     let code = code(args, &folder)?;
-    let samples: Vec<SampleExport> = args.files.iter().map(|file| sample(context, file, &folder)).collect::<Result<_, _>>()?;
+    let samples: Vec<SampleExport> =
+        args.files.iter().map(|file| sample(context, file, &folder)).collect::<Result<_, _>>()?;
+    if samples.iter().map(|it| it.bytes.len()).sum::<usize>() > LARGEST_TOGETHER {
+        return Err(Failure::refused("the samples are larger than 64 MiB together").then("give fewer of them"));
+    }
     let known = Known::load(context, args, &base)?;
     let named = named_folder(args, &folder, &base);
     let asked = Asked {
@@ -96,7 +101,8 @@ fn base(context: &Context<'_, '_>, args: &Probe) -> PathBuf {
 
 /// The folder that holds all samples.
 fn folder(args: &Probe) -> PathBuf {
-    let parents: Vec<PathBuf> = args.files.iter().map(|file| absolute(file)).filter_map(|file| file.parent().map(Path::to_path_buf)).collect();
+    let parents: Vec<PathBuf> =
+        args.files.iter().map(|file| absolute(file)).filter_map(|file| file.parent().map(Path::to_path_buf)).collect();
     if let Some(folder) = &args.folder {
         // A sample may have been copied from elsewhere; then its own folder says nothing.
         let named = parents.iter().find_map(|parent| parent.ancestors().find(|above| above.ends_with(folder)));
@@ -146,7 +152,7 @@ fn sample(context: &Context<'_, '_>, file: &Path, folder: &Path) -> Result<Sampl
     opened.take(LARGEST + 1).read_to_end(&mut bytes).map_err(|error| unreadable(file, &error))?;
     let shown = file.display().to_string();
     if bytes.len() as u64 > LARGEST {
-        return Err(Failure::refused(format!("{shown} is larger than 64 MiB"))
+        return Err(Failure::refused(format!("{shown} is larger than 16 MiB"))
             .at(shown)
             .then("give a smaller export of the same instrument"));
     }
@@ -167,9 +173,8 @@ fn slashed(path: &Path) -> String {
 /// Adds the draft to a plan's file.
 fn put(context: &Context<'_, '_>, file: &Path, draft: &Draft, code: &str) -> Result<PathBuf, Failure> {
     let shown = file.display().to_string();
-    let failed = |error: std::io::Error| {
-        Failure::new("file", format!("{shown} cannot be written ({error})")).at(shown.clone())
-    };
+    let failed =
+        |error: std::io::Error| Failure::new("file", format!("{shown} cannot be written ({error})")).at(shown.clone());
     let before = fs::read_to_string(file).map_err(|error| unreadable(file, &error))?;
     let after = intake::draft_into(&before, draft, code).map_err(|failure| failure.at(shown.clone()))?;
     // A link stays a link: what it leads to is written.
@@ -191,7 +196,8 @@ fn text(context: &mut Context<'_, '_>, draft: &Draft, into: Option<&Path>, code:
     context.out.say(&format!("Added the instrument {code} to {}; all else in it is as before.", file.display()))?;
     let width = context.out.width;
     let list = |title: &str, remarks: Vec<String>| {
-        let items: Vec<String> = remarks.iter().map(|remark| wrap(&format!("- {}", clean(remark)), width, "  ")).collect();
+        let items: Vec<String> =
+            remarks.iter().map(|remark| wrap(&format!("- {}", clean(remark)), width, "  ")).collect();
         format!("\n{title}\n{}", items.join("\n"))
     };
     let keyed = |remarks: &[(&str, &str)]| remarks.iter().map(|(key, text)| format!("{key}: {text}")).collect();

@@ -89,15 +89,20 @@ fn lay_out(asked: &Asked<'_>) -> Result<Laid, DraftFault> {
         return Err(none(refused.first().map_or("no table is found in them".to_owned(), |(_, why)| why.clone())));
     }
     let misfit = |(at, why): (usize, String)| Some(Misfit { sample: asked.samples.get(at)?.shown.clone(), why });
-    Ok(Laid { layout: proposed.layout, grid, misfits: refused.into_iter().filter_map(misfit).collect(), notes: proposed.notes })
+    Ok(Laid {
+        layout: proposed.layout,
+        grid,
+        misfits: refused.into_iter().filter_map(misfit).collect(),
+        notes: proposed.notes,
+    })
 }
 
 /// Why nothing is proposed, where a module can say no more than that it finds nothing.
 fn why_none(asked: &Asked<'_>, kind: Kind) -> String {
     let first = asked.samples.first();
-    let fault = first.filter(|_| kind == Kind::Workbook).and_then(|it| {
-        crate::intake::read::workbook::glance(&it.bytes, 1).err().map(|fault| fault.to_string())
-    });
+    let fault = first
+        .filter(|_| kind == Kind::Workbook)
+        .and_then(|it| crate::intake::read::workbook::glance(&it.bytes, 1).err().map(|fault| fault.to_string()));
     fault.unwrap_or_else(|| "no table is found in them".to_owned())
 }
 
@@ -193,7 +198,7 @@ impl Found {
     fn with_plan(&mut self, asked: &Asked<'_>, all: &Grid, rows: &Grid, plan: &Plan, used: &mut BTreeSet<usize>) {
         let long = long_column(rows, plan, used);
         used.extend(long.as_ref().map(|(column, _)| *column));
-        let unit = unit_column(rows, used);
+        let unit = unit_column(rows, plan, used);
         used.extend(unit.as_ref().map(|it| it.column));
         let levels = values::level_columns(rows, plan, &|at| !used.contains(&at));
         used.extend(levels.iter().map(|it| it.column));
@@ -212,8 +217,12 @@ impl Found {
             self.visit = rest::visit_elsewhere(rows, asked.samples, plan, &agree);
         }
         self.settle_days(asked, rows, plan);
-        let telling: Vec<usize> =
-            long.iter().map(|(column, _)| *column).chain(levels.iter().map(|it| it.column)).chain(self.visit_column).collect();
+        let telling: Vec<usize> = long
+            .iter()
+            .map(|(column, _)| *column)
+            .chain(levels.iter().map(|it| it.column))
+            .chain(self.visit_column)
+            .collect();
         let expected = plan.measures.iter().map(|it| it.replicates).max().unwrap_or(1);
         let (subject, taken_at) = (self.subject.spot.clone(), self.taken_at.spot.clone());
         let session = move |row: &grid::GridRow| rest::session_key(row, &subject, &taken_at);
@@ -255,8 +264,7 @@ impl Found {
 
     fn without_plan(&mut self, rows: &Grid, used: &mut BTreeSet<usize>) {
         let numeric = values::numeric(rows, &|at| !used.contains(&at), self.marks.marks);
-        self.entries =
-            numeric.iter().filter(|it| !it.is_small).map(|it| values::unknown_entry(rows, it)).collect();
+        self.entries = numeric.iter().filter(|it| !it.is_small).map(|it| values::unknown_entry(rows, it)).collect();
         used.extend(self.entries.iter().map(|it| it.column));
         if self.entries.is_empty() {
             self.entries = numeric.iter().map(|it| values::unknown_entry(rows, it)).collect();
@@ -304,9 +312,24 @@ fn unmatched(plan: &Plan, rows: &Grid, long: Option<&(usize, labels::Meeting)>, 
     plan.measures.iter().enumerate().filter(|(at, _)| !is_there(*at)).map(|(_, it)| it.code.clone()).collect()
 }
 
-fn unit_column(rows: &Grid, used: &BTreeSet<usize>) -> Option<values::UnitColumn> {
+/// The column of units. One that is not called so must hold units of the plan's measures, and no code of the plan: a
+/// visit may be called "in".
+fn unit_column(rows: &Grid, plan: &Plan, used: &BTreeSet<usize>) -> Option<values::UnitColumn> {
+    let all: Vec<&Measure> = plan.measures.iter().collect();
+    let factors = plan.measures.iter().flat_map(|it| &it.conditions).map(|it| it.code.as_str());
+    let mut codes = rest::known_visits(plan);
+    codes.extend(factors.flat_map(|factor| values::levels(&all, factor)));
+    let is_plain = |texts: &[(&str, usize)]| labels::Meeting::of(texts, &codes).met() == 0;
+    let converts = |texts: &[(&str, usize)]| {
+        let unit = texts.first().and_then(|(text, _)| units::unit_code(text));
+        unit.is_some_and(|code| all.iter().any(|it| revisant_schema::plan::units::convert(&code, &it.unit).is_some()))
+    };
     let mut found = (0..rows.columns.len()).filter(|at| !used.contains(at)).filter(|at| {
-        rows.columns.get(*at).is_some_and(|name| units::are_units(&rows.distinct(*at), name))
+        let texts = rows.distinct(*at);
+        rows.columns.get(*at).is_some_and(|name| {
+            let called = words::UNIT.names(name.rsplit('/').next().unwrap_or(name));
+            units::are_units(&texts, called) && (called || is_plain(&texts) && converts(&texts))
+        })
     });
     match (found.next(), found.next()) {
         (Some(one), None) => Some(values::unit_column(rows, one)),
@@ -328,10 +351,8 @@ fn long_entries(
     unit: Option<&values::UnitColumn>,
     levels: &[values::LevelColumn],
 ) -> Vec<Entry> {
-    let called: Vec<&Numeric> = numeric
-        .iter()
-        .filter(|it| rows.columns.get(it.column).is_some_and(|name| words::VALUE.names(name)))
-        .collect();
+    let called: Vec<&Numeric> =
+        numeric.iter().filter(|it| rows.columns.get(it.column).is_some_and(|name| words::VALUE.names(name))).collect();
     let able: Vec<&Numeric> = numeric.iter().filter(|it| !it.is_small).collect();
     let one = match (called.as_slice(), able.as_slice(), numeric) {
         ([one], _, _) | ([], [one], _) => Some(*one),
@@ -375,25 +396,41 @@ fn wide_entries(
     if entries.is_empty() {
         return vec![no_value("no column is told to hold a measure of the plan")];
     }
-    same_place(plan, &mut entries);
+    same_place(rows, plan, &mut entries);
     entries
 }
 
+/// A label without what may number replicates: digits and single letters.
+fn unnumbered(label: &str) -> String {
+    let words =
+        words::words(label).into_iter().map(|word| word.trim_end_matches(|c: char| c.is_ascii_digit()).to_owned());
+    words.filter(|word| word.chars().count() > 1).collect::<Vec<_>>().join(" ")
+}
+
 /// Several columns of one measure and condition are replicates, when the plan expects so many.
-fn same_place(plan: &Plan, entries: &mut [Entry]) {
+fn same_place(rows: &Grid, plan: &Plan, entries: &mut [Entry]) {
     let key = |entry: &Entry| {
         let condition = entry.lines.iter().find(|line| line.key == "condition").map(|line| line.text.clone());
         entry.measure.map(|measure| (measure, condition))
     };
     let keys: Vec<_> = entries.iter().map(key).collect();
+    let labels: Vec<String> =
+        entries.iter().map(|it| unnumbered(rows.columns.get(it.column).map_or("", String::as_str))).collect();
     for (index, entry) in entries.iter_mut().enumerate() {
         let Some(Some((measure, _))) = keys.get(index) else { continue };
         let count = keys.iter().filter(|other| Some(*other) == keys.get(index)).count();
+        let alike = keys.iter().zip(&labels).filter(|(other, _)| Some(*other) == keys.get(index));
+        let alike = alike.filter(|(_, label)| Some(*label) == labels.get(index)).count();
         let expected = plan.measures.get(*measure).map_or(1, |it: &Measure| it.replicates as usize);
         let Some(line) = entry.lines.first_mut() else { continue };
         if count > expected {
             line.mark = Mark::Gap(format!(
                 "{count} columns are taken for this measure, the plan expects {expected}: take out those that are not meant"
+            ));
+        } else if count > alike {
+            // "Max force" and "Mean force" are no replicates of a force.
+            line.mark = Mark::Gap(format!(
+                "{count} columns are taken for this measure, but their labels differ: take out those that are not meant"
             ));
         } else if count > 1 && line.mark == Mark::Sure {
             line.mark = Mark::Unsure(format!("{count} columns are replicates in this order"));
@@ -448,7 +485,13 @@ impl Written {
             .iter()
             .map(|(rule, mark)| Line { key: "ignore".into(), text: rule.clone(), mark: mark.clone() })
             .collect();
-        let lines = || self.instrument.iter().chain(&self.reader).chain(&rules).chain(found.entries.iter().flat_map(|it| &it.lines));
+        let lines = || {
+            self.instrument
+                .iter()
+                .chain(&self.reader)
+                .chain(&rules)
+                .chain(found.entries.iter().flat_map(|it| &it.lines))
+        };
         let remark = |line: &Line, text: &str| Remark { key: line.key.clone(), text: text.to_owned() };
         let gaps: Vec<Remark> = lines()
             .filter_map(|line| if let Mark::Gap(text) = &line.mark { Some(remark(line, text)) } else { None })
@@ -495,11 +538,8 @@ fn write_ignore(rules: &[(String, Mark)], toml: &mut String) {
 
 fn instrument_lines(asked: &Asked<'_>, found: &Found) -> Vec<Line> {
     let mut lines = vec![Line::sure("code", &quote(asked.code)), Line::sure("folder", &quote(asked.folder))];
-    let mut endings: Vec<&str> = asked
-        .samples
-        .iter()
-        .map(|it| it.file_name.rsplit_once('.').map_or("", |(_, ending)| ending))
-        .collect();
+    let mut endings: Vec<&str> =
+        asked.samples.iter().map(|it| it.file_name.rsplit_once('.').map_or("", |(_, ending)| ending)).collect();
     endings.sort_unstable();
     endings.dedup();
     match endings.as_slice() {
@@ -540,7 +580,10 @@ fn format_lines(laid: &Laid) -> Vec<Line> {
 }
 
 fn mark_lines(layout: &Layout, settled: &Settled) -> Vec<Line> {
-    if matches!(layout.format, Format::Json { .. } | Format::JsonLines { .. } | Format::Workbook { .. }) && settled.open.is_none() && settled.marks.decimal == '.' {
+    if matches!(layout.format, Format::Json { .. } | Format::JsonLines { .. } | Format::Workbook { .. })
+        && settled.open.is_none()
+        && settled.marks.decimal == '.'
+    {
         return vec![];
     }
     let Marks { decimal, group } = settled.marks;
@@ -550,7 +593,9 @@ fn mark_lines(layout: &Layout, settled: &Settled) -> Vec<Line> {
     }
     let mut lines = vec![];
     if let Some(open) = &settled.open {
-        notes.gap(format!("\".\" or \",\": \"{open}\" may be about one or about a thousand; name the other as group_mark if it is one"));
+        notes.gap(format!(
+            "\".\" or \",\": \"{open}\" may be about one or about a thousand; name the other as group_mark if it is one"
+        ));
         lines.push(Line::with("decimal_mark", &quote(BLANK), &notes));
         return lines;
     }
@@ -580,7 +625,8 @@ fn layout_lines(layout: &Layout) -> Vec<Line> {
 
 fn missing_line(found: &Found) -> Line {
     let (known, supposed, held) = &found.missing;
-    let texts: Vec<String> = std::iter::once("").chain(known.iter().chain(supposed).map(String::as_str)).map(quote).collect();
+    let texts: Vec<String> =
+        std::iter::once("").chain(known.iter().chain(supposed).map(String::as_str)).map(quote).collect();
     let mut notes = Notes::default();
     if !supposed.is_empty() {
         notes.doubt(format!("{} taken for no value", some(supposed.iter().map(String::as_str))));

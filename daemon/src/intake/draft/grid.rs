@@ -150,11 +150,7 @@ fn read_one(layout: &Layout, columns: &[String], bytes: &dyn Bytes) -> Result<On
 }
 
 /// Reads the samples, each with the columns that it has; those that cannot be read are returned with the reason.
-pub fn read_all(
-    layout: &Layout,
-    samples: &[Sample],
-    columns_of: &[Vec<String>],
-) -> (Grid, Vec<(usize, String)>) {
+pub fn read_all(layout: &Layout, samples: &[Sample], columns_of: &[Vec<String>]) -> (Grid, Vec<(usize, String)>) {
     let mut grid = Grid::default();
     let mut refused = vec![];
     for (index, sample) in samples.iter().enumerate() {

@@ -66,7 +66,8 @@ pub fn alone(text: &str, toml: &str) -> Option<String> {
 /// The byte at which the instrument's text begins.
 fn place(text: &str, root: &Table) -> usize {
     let end_of = |name: &str| root.get(name).map(|item| end(item));
-    let line_end = |at: usize| text.get(at..).and_then(|rest| rest.find('\n')).map_or(text.len(), |found| at + found + 1);
+    let line_end =
+        |at: usize| text.get(at..).and_then(|rest| rest.find('\n')).map_or(text.len(), |found| at + found + 1);
     if let Some(at) = end_of("instrument").filter(|at| *at > 0) {
         return line_end(at.saturating_sub(1));
     }
@@ -131,7 +132,10 @@ mod tests {
     fn without_instruments_it_stands_before_the_analyses() {
         let plan = "[study]\ncode = \"A\"\n\n# why\n[[analysis]]\ncode = \"b\"\n";
         let text = insert(plan, "[[instrument]]\ncode = \"two\"\n", "two").unwrap();
-        assert_eq!(text, "[study]\ncode = \"A\"\n\n[[instrument]]\ncode = \"two\"\n\n# why\n[[analysis]]\ncode = \"b\"\n");
+        assert_eq!(
+            text,
+            "[study]\ncode = \"A\"\n\n[[instrument]]\ncode = \"two\"\n\n# why\n[[analysis]]\ncode = \"b\"\n"
+        );
         let text = insert("[study]\r\ncode = \"A\"", "[[instrument]]\ncode = \"two\"\n", "two").unwrap();
         assert_eq!(text, "[study]\r\ncode = \"A\"\r\n\r\n[[instrument]]\r\ncode = \"two\"\r\n");
     }

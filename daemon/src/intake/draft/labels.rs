@@ -67,13 +67,17 @@ impl Meeting {
         let mut notes = Notes::default();
         let mut pairs = self.alike.clone();
         if !self.alike.is_empty() {
-            notes.doubt(format!("{} taken for the {what}s of the same name", some(self.alike.iter().map(|it| it.0.as_str()))));
+            notes.doubt(format!(
+                "{} taken for the {what}s of the same name",
+                some(self.alike.iter().map(|it| it.0.as_str()))
+            ));
         }
         let unmet = self.unmet();
         if unmet * 5 > self.met() + unmet {
             pairs.extend(self.other.iter().take(40).map(|(text, _)| (text.clone(), BLANK.to_owned())));
             let codes: Vec<&str> = known.iter().map(|it| it.code.as_str()).collect();
-            let mut ask = format!("for each text the plan's {what} ({}), or take the entry out: {held}", codes.join(", "));
+            let mut ask =
+                format!("for each text the plan's {what} ({}), or take the entry out: {held}", codes.join(", "));
             let likely = suggestions(&self.other, known);
             if !likely.is_empty() {
                 ask = format!("{ask}; likely {likely}");
@@ -90,10 +94,12 @@ impl Meeting {
 
 /// Codes that texts may mean: the same number in both, or a shared word.
 fn suggestions(texts: &[(String, usize)], known: &[Known]) -> String {
-    let numbers = |text: &str| -> Vec<String> { words(text).into_iter().filter(|it| it.parse::<u32>().is_ok()).collect() };
+    let numbers =
+        |text: &str| -> Vec<String> { words(text).into_iter().filter(|it| it.parse::<u32>().is_ok()).collect() };
     let shares = |text: &str, it: &Known| {
         let (mine, theirs) = (words(text), [words(&it.code), words(&it.label)].concat());
-        let worded = mine.iter().any(|word| word.chars().count() >= 3 && theirs.iter().any(|other| other.starts_with(word)));
+        let worded =
+            mine.iter().any(|word| word.chars().count() >= 3 && theirs.iter().any(|other| other.starts_with(word)));
         worded || !numbers(text).is_empty() && numbers(text) == numbers(&it.code)
     };
     let likely = texts.iter().filter_map(|(text, _)| {
@@ -151,7 +157,8 @@ mod tests {
     #[test]
     fn labels_that_are_no_codes_are_left_for_a_person() {
         let visits = known(&["baseline", "week-4"]);
-        let (place, notes) = Meeting::of(&[("0", 5), ("4", 4)], &visits).place("column = \"v\"", "visit", &visits, "held");
+        let (place, notes) =
+            Meeting::of(&[("0", 5), ("4", 4)], &visits).place("column = \"v\"", "visit", &visits, "held");
         assert_eq!(place, "{ column = \"v\", map = { \"0\" = \"FILL IN\", \"4\" = \"FILL IN\" } }");
         assert!(notes.gaps[0].contains("likely \"4\" = \"week-4\""), "{notes:?}");
     }

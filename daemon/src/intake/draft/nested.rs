@@ -50,7 +50,9 @@ pub fn kind(text: &str) -> Option<Nested> {
     if !text.starts_with(['{', '[']) {
         return None;
     }
-    if serde_json::from_str::<serde::de::IgnoredAny>(text).is_ok() && (text.starts_with('[') || text.lines().count() > 1) {
+    if serde_json::from_str::<serde::de::IgnoredAny>(text).is_ok()
+        && (text.starts_with('[') || text.lines().count() > 1)
+    {
         return Some(Nested::Json);
     }
     let first = text.lines().next().unwrap_or_default();
@@ -89,7 +91,8 @@ pub fn nested(samples: &[Sample], which: &[usize], kind: Nested, against: Agains
     scored.sort();
     let (best, path) = scored.pop()?;
     let path = path.clone();
-    let rivals = scored.iter().rev().filter(|(score, _)| score.0 == best.0 && best.0 >= 4).map(|(_, path)| (*path).clone());
+    let rivals =
+        scored.iter().rev().filter(|(score, _)| score.0 == best.0 && best.0 >= 4).map(|(_, path)| (*path).clone());
     let rivals: Vec<String> = rivals.take(3).collect();
     let mut columns = vec![vec![]; samples.len()];
     for (index, roots) in &documents {
@@ -279,9 +282,8 @@ fn xml(text: &str) -> Result<Node, String> {
 
 fn element(tag: &BytesStart<'_>) -> Node {
     let attributes = tag.attributes().flatten().filter(|it| !it.key.as_ref().starts_with("xmlns"));
-    let attributes = attributes
-        .map(|it| (it.key.local_name().as_ref().to_owned(), it.value.trim().to_owned()))
-        .collect();
+    let attributes =
+        attributes.map(|it| (it.key.local_name().as_ref().to_owned(), it.value.trim().to_owned())).collect();
     Node { name: tag.local_name().as_ref().to_owned(), attributes, ..Node::default() }
 }
 
@@ -309,7 +311,12 @@ mod tests {
     use super::*;
 
     fn sample(text: &str) -> Sample {
-        Sample { shown: String::new(), file_name: String::new(), folder: String::new(), bytes: text.as_bytes().to_vec() }
+        Sample {
+            shown: String::new(),
+            file_name: String::new(),
+            folder: String::new(),
+            bytes: text.as_bytes().to_vec(),
+        }
     }
 
     fn found(text: &str, kind: Nested) -> Found {

@@ -79,7 +79,10 @@ pub fn settle<'a>(texts: impl Iterator<Item = &'a str>) -> Settled {
             }
         }
     }
-    let decimal = if comma.len() > point.len() { ',' } else { '.' };
+    // While nothing settles it, the mark that is there is looked at as the decimal one.
+    let shown = open.as_ref().filter(|_| point.is_empty() && comma.is_empty());
+    let is_comma = shown.map_or(comma.len() > point.len(), |text: &String| text.contains(','));
+    let decimal = if is_comma { ',' } else { '.' };
     let (fitting, against) = if decimal == '.' { (point.len(), &comma) } else { (comma.len(), &point) };
     Settled {
         marks: Marks { decimal, group: groups.filter(|group| *group != decimal) },

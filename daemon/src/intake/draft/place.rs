@@ -123,9 +123,8 @@ pub fn subject(grid: &Grid, samples: &[Sample], against: Against<'_>) -> Taken {
         (fit, all)
     };
     let mostly = |(fit, all): (usize, usize)| fit > 0 && fit * 2 >= all;
-    let mut fitting: Vec<usize> = (0..grid.columns.len())
-        .filter(|column| mostly(share(*column, &|text| against.is_subject(text))))
-        .collect();
+    let mut fitting: Vec<usize> =
+        (0..grid.columns.len()).filter(|column| mostly(share(*column, &|text| against.is_subject(text)))).collect();
     if fitting.len() > 1 && against.roster.is_some_and(|roster| !roster.subjects.is_empty()) {
         fitting.retain(|column| mostly(share(*column, &|text| against.is_enrolled(text))));
     }
@@ -148,16 +147,14 @@ pub fn subject(grid: &Grid, samples: &[Sample], against: Against<'_>) -> Taken {
 }
 
 fn subject_by_name(grid: &Grid) -> Taken {
-    let mut named = (0..grid.columns.len()).filter(|at| grid.columns.get(*at).is_some_and(|it| words::SUBJECT.names(it)));
+    let mut named =
+        (0..grid.columns.len()).filter(|at| grid.columns.get(*at).is_some_and(|it| words::SUBJECT.names(it)));
     match (named.next(), named.next()) {
         (Some(one), None) => Taken::new(
             Line::unsure("subject", &column(grid, one), "by its name alone; there is no plan to hold it against"),
             Spot::Columns(vec![one]),
         ),
-        _ => Taken::new(
-            Line::gap("subject", "{}", "which column is the subject? { column = \"…\" }"),
-            Spot::Unknown,
-        ),
+        _ => Taken::new(Line::gap("subject", "{}", "which column is the subject? { column = \"…\" }"), Spot::Unknown),
     }
 }
 
@@ -377,8 +374,7 @@ fn joined(grid: &Grid, day: &Candidate, time: usize, now: DateTime<Utc>) -> Take
 
 /// The line of columns whose way of writing was found.
 fn stamped(grid: &Grid, columns: Vec<usize>, found: &Found) -> Taken {
-    let names: Vec<String> =
-        columns.iter().filter_map(|at| grid.columns.get(*at)).map(|name| quote(name)).collect();
+    let names: Vec<String> = columns.iter().filter_map(|at| grid.columns.get(*at)).map(|name| quote(name)).collect();
     let place = match names.as_slice() {
         [one] => format!("column = {one}"),
         several => format!("columns = [{}]", several.join(", ")),

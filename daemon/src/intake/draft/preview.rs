@@ -12,7 +12,7 @@ use super::into;
 use super::place::Spot;
 use super::{Asked, Sample};
 use crate::intake::place::resolve::{Decided, Held, Resolved, Resolver, RowOutcome, ValueOutcome, Whereabouts};
-use crate::intake::read::{self, Row, Rows};
+use crate::intake::read::{self, Row};
 
 /// How many rows are shown.
 const SHOWN: usize = 8;
@@ -107,7 +107,8 @@ fn everybody(asked: &Asked<'_>, plan: &Plan, instrument: &Instrument, sample: &S
     let mut row = Row::default();
     while roster.subjects.len() < SHOWN && rows.next_row(&mut row).unwrap_or(false) {
         if let RowOutcome::Held(held) = resolver.resolve(&row, rows.as_ref(), &Decided::default())
-            && let Some(code) = held.wrong.strip_prefix('"').and_then(|rest| rest.strip_suffix("\" is not on the roster"))
+            && let Some(code) =
+                held.wrong.strip_prefix('"').and_then(|rest| rest.strip_suffix("\" is not on the roster"))
         {
             roster.subjects.insert(code.to_owned(), Enrolled::default());
         }
@@ -127,17 +128,18 @@ fn sample_rows(
     let mut rows = read::open(&instrument.reader, &sample.bytes).ok()?;
     let mut row = Row::default();
     while shown.len() < SHOWN && rows.next_row(&mut row).ok()? {
-        let place = format!("{} line {}", sample.file_name, row.line);
+        let cell = rows.cell_name(row.line, 0).unwrap_or_else(|| format!("line {}", row.line));
+        let place = format!("{} {cell}", sample.file_name);
         match resolver.resolve(&row, rows.as_ref(), &Decided::default()) {
             RowOutcome::NoValue => {}
-            RowOutcome::Held(held) => shown.push(held_row(place, &held, &row, rows.as_ref())),
+            RowOutcome::Held(held) => shown.push(held_row(place, &held, &row)),
             RowOutcome::Ready(resolved) => shown.extend(values_of(plan, &place, &resolved)),
         }
     }
     Some(())
 }
 
-fn held_row(place: String, held: &Held, row: &Row, _rows: &dyn Rows) -> PreviewRow {
+fn held_row(place: String, held: &Held, row: &Row) -> PreviewRow {
     let held = format!("{}: {}", held.reason.code(), held.wrong);
     PreviewRow { place, value: super::lines::clip(&row.raw), held, ..PreviewRow::default() }
 }

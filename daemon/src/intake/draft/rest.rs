@@ -39,7 +39,10 @@ pub fn visit(grid: &Grid, free: &dyn Fn(usize) -> bool, plan: &Plan) -> Option<D
     let met = labels::meeting_columns(grid, free, &known, 0.5);
     let by_content: Vec<usize> = met.iter().map(|(column, _)| *column).collect();
     if let [(column, meeting)] = met.as_slice() {
-        return Some(Drafted { line: labels::line("visit", grid, *column, meeting, &known, HELD), column: Some(*column) });
+        return Some(Drafted {
+            line: labels::line("visit", grid, *column, meeting, &known, HELD),
+            column: Some(*column),
+        });
     }
     let named = |at: &usize| {
         let texts = grid.distinct(*at);
@@ -99,20 +102,21 @@ pub fn visit_elsewhere(
         };
         let names = some(found.iter().map(String::as_str));
         if agree(&visit_of) {
-            return Some(Line::remark("visit", format!("the date decides; {names} in the names of exports say the same")));
+            return Some(Line::remark(
+                "visit",
+                format!("the date decides; {names} in the names of exports say the same"),
+            ));
         }
         let alternatives: Vec<String> = found.iter().map(|word| regex::escape(word)).collect();
         let pattern = format!("(?:^|[^A-Za-z0-9])({})(?:[^A-Za-z0-9]|$)", alternatives.join("|"));
         let texts: Vec<(&str, usize)> = found.iter().map(|word| (word.as_str(), 1)).collect();
-        let (place, _) = Meeting::of(&texts, &known).place(&format!("{key} = {}", literal(&pattern)), "visit", &known, HELD);
+        let (place, _) =
+            Meeting::of(&texts, &known).place(&format!("{key} = {}", literal(&pattern)), "visit", &known, HELD);
         let what = match part {
             Part::Name => "file names",
             Part::Folder => "folders",
         };
-        let ask = format!(
-            "{what} hold {}: {place}, or take this line out where the date alone decides",
-            names
-        );
+        let ask = format!("{what} hold {}: {place}, or take this line out where the date alone decides", names);
         return Some(Line::gap("visit", "{}", ask));
     }
     None
@@ -120,7 +124,8 @@ pub fn visit_elsewhere(
 
 /// Words of a path that are a visit's code or label.
 fn visit_words(text: &str, known: &[Known]) -> Vec<String> {
-    let parts = text.split(|c: char| !c.is_alphanumeric() && c != '-').chain(text.split(|c: char| !c.is_alphanumeric()));
+    let parts =
+        text.split(|c: char| !c.is_alphanumeric() && c != '-').chain(text.split(|c: char| !c.is_alphanumeric()));
     let is_visit = |part: &str| {
         part.chars().any(char::is_alphabetic)
             && known.iter().any(|it| fold(&it.code) == fold(part) || fold(&it.label) == fold(part))
@@ -155,14 +160,15 @@ pub fn replicate(grid: &Grid, free: &dyn Fn(usize) -> bool, keys: &Keys<'_>) -> 
     }
     match (by_name.as_slice(), by_content.as_slice()) {
         ([], []) => None,
-        ([(one, counts)], []) if counts.tells_apart => {
+        ([(one, counts)], []) if counts.tells_apart && counts.counts_from_one(keys.expected) => {
             let mut notes = Notes::default();
             if counts.largest > keys.expected {
                 notes.doubt(format!("numbers reach {}, the plan expects {}", counts.largest, keys.expected));
             }
             Some(Drafted { line: Line::with("replicate", &column(grid, *one), &notes), column: Some(*one) })
         }
-        // A number that stands twice in a session is none of a replicate; a name alone is no proof of the contrary.
+        // A number that stands twice in a session, or runs on from one session to the next, is none of a replicate,
+        // and a name alone is no proof of the contrary.
         ([(one, _)], []) => {
             let name = grid.columns.get(*one).map_or("", String::as_str);
             let what = format!(
@@ -190,6 +196,15 @@ struct Counts {
     tells_apart: bool,
     /// In most sessions of several rows the numbers are 1, 2, …
     is_counting: bool,
+    /// There are sessions of several rows.
+    several: bool,
+}
+
+impl Counts {
+    /// Whether the numbers begin with 1 in each session, as far as that can be seen.
+    fn counts_from_one(&self, expected: u32) -> bool {
+        self.is_counting || (!self.several && self.largest <= expected)
+    }
 }
 
 fn counts(grid: &Grid, at: usize, keys: &Keys<'_>) -> Option<Counts> {
@@ -224,7 +239,7 @@ fn counts(grid: &Grid, at: usize, keys: &Keys<'_>) -> Option<Counts> {
         counting += usize::from(is_counting);
     }
     let tells_apart = twice * 4 <= all;
-    Some(Counts { largest, tells_apart, is_counting: tells_apart && all > 0 && counting * 2 >= all })
+    Some(Counts { largest, tells_apart, is_counting: tells_apart && all > 0 && counting * 2 >= all, several: all > 0 })
 }
 
 // ---- who measured ----
@@ -265,7 +280,10 @@ pub fn unaccounted(grid: &Grid, free: &dyn Fn(usize) -> bool, keys: &Keys<'_>, h
             Judged::Left => all.left.push(name.to_owned()),
             Judged::NoReadings(found) => all.ignore.extend(found.into_iter().map(|(text, count)| {
                 let rule = format!("{{ column = {}, equals = {} }}", quote(name), quote(&text));
-                (rule, Mark::Unsure(format!("\"{}\" ({}) looks like no reading of a subject", clip(&text), rows(count))))
+                (
+                    rule,
+                    Mark::Unsure(format!("\"{}\" ({}) looks like no reading of a subject", clip(&text), rows(count))),
+                )
             })),
             Judged::Asked(what) => {
                 all.ignore.push((format!("{{ column = {} }}", quote(name)), Mark::Gap(what)));
@@ -286,14 +304,7 @@ enum Judged {
     Asked(String),
 }
 
-fn judge(
-    grid: &Grid,
-    at: usize,
-    name: &str,
-    texts: &[(&str, usize)],
-    keys: &Keys<'_>,
-    has_visit: bool,
-) -> Judged {
+fn judge(grid: &Grid, at: usize, name: &str, texts: &[(&str, usize)], keys: &Keys<'_>, has_visit: bool) -> Judged {
     let last = name.rsplit('/').next().unwrap_or(name);
     if texts.is_empty() {
         return Judged::Nothing;
@@ -326,8 +337,10 @@ fn judge(
     if is_type || (texts.len() == 2 && texts.iter().all(|(text, _)| words::is_answer(text))) {
         return ask();
     }
-    let harmless = words::HARMLESS.names(name) || words::OPERATOR.names(name) || texts.len() == 1;
-    if harmless || texts.len() > FEW.max(grid.rows.len() / 20) { Judged::Left } else { ask() }
+    let harmless = words::HARMLESS.names(name) || words::OPERATOR.names(name);
+    // A text that never changes says nothing, but for the answer to a question that may once be answered otherwise.
+    let constant = texts.len() == 1 && texts.iter().all(|(text, _)| !words::is_answer(text));
+    if harmless || constant || texts.len() > FEW.max(grid.rows.len() / 20) { Judged::Left } else { ask() }
 }
 
 /// Numbers may be another measurement, which is left alone, or say what kind of row it is.
@@ -340,7 +353,8 @@ fn judge_numbers(
     has_visit: bool,
     ask: &dyn Fn() -> Judged,
 ) -> Judged {
-    let small = texts.len() <= FEW && texts.iter().all(|(text, _)| text.parse::<i64>().is_ok_and(|it| (0..=200).contains(&it)));
+    let small =
+        texts.len() <= FEW && texts.iter().all(|(text, _)| text.parse::<i64>().is_ok_and(|it| (0..=200).contains(&it)));
     let two = texts.len() == 2 && texts.iter().all(|(text, _)| words::is_answer(text));
     if two || (is_type && small) {
         return ask();
@@ -373,8 +387,13 @@ pub fn grows(grid: &Grid, samples: &[Sample]) -> Option<(String, String)> {
     let bytes = |at: &usize| samples.get(*at).map(|sample| &sample.bytes);
     for (small, few) in &rows {
         for (large, many) in rows.iter().filter(|(large, _)| *large != small) {
+            // Of what is not there at all, the first rows say so.
+            if few.keys().take(5).all(|cells| !many.contains_key(cells)) {
+                continue;
+            }
             let count: usize = few.values().sum();
-            let again: usize = few.iter().map(|(cells, count)| many.get(cells).map_or(0, |more| *more.min(count))).sum();
+            let again: usize =
+                few.iter().map(|(cells, count)| many.get(cells).map_or(0, |more| *more.min(count))).sum();
             let larger = many.values().sum::<usize>() > count;
             if larger && count >= 2 && again * 10 >= count * 8 && bytes(small) != bytes(large) {
                 let name = |at: &usize| samples.get(*at).map_or(String::new(), |sample| sample.file_name.clone());
@@ -411,7 +430,9 @@ pub fn missing(grid: &Grid, columns: &[usize]) -> (Vec<String>, Vec<String>, Vec
 /// The subject and day of a row as one text, for telling sessions apart.
 pub fn session_key(row: &GridRow, subject: &Spot, taken_at: &Spot) -> String {
     let stamp = match taken_at {
-        Spot::Columns(columns) => columns.first().and_then(|at| row.cells.get(*at)).map_or("", |cell| cell.text.as_str()),
+        Spot::Columns(columns) => {
+            columns.first().and_then(|at| row.cells.get(*at)).map_or("", |cell| cell.text.as_str())
+        }
         _ => "",
     };
     // The day is what stands before the time of day, in every way of writing but the longest.

@@ -52,11 +52,7 @@ pub fn decode(bytes: &[u8]) -> Option<Decoded> {
     if controls * 100 > text.chars().count() {
         return None;
     }
-    Some(Decoded {
-        text: text.into_owned(),
-        encoding: Encoding::Label(encoding_rs::WINDOWS_1252),
-        supposed: true,
-    })
+    Some(Decoded { text: text.into_owned(), encoding: Encoding::Label(encoding_rs::WINDOWS_1252), supposed: true })
 }
 
 /// UTF-16 without a mark: every other byte is mostly zero.
@@ -400,12 +396,12 @@ fn layout(delimiter: u8, encoding: Encoding, alike: &[&Parsed], common: &[String
         it.head.line.is_some() && rest.first().is_some_and(|line| is_units_row(line, rest.get(1..).unwrap_or_default()))
     });
     let units_row = units.by_ref().next().unwrap_or(false) && units.all(|it| it);
-    let bodies: Vec<(&[Vec<String>], &[String])> = alike
+    let bodies: Vec<(&[Vec<String>], &[String])> =
+        alike.iter().filter_map(|it| Some((it.rows.get(below(it)..)?, it.lines.get(below(it)..)?))).collect();
+    let above: Vec<Vec<String>> = alike
         .iter()
-        .filter_map(|it| Some((it.rows.get(below(it)..)?, it.lines.get(below(it)..)?)))
+        .map(|it| keys_above(it.lines.get(..it.head.line.unwrap_or(0)).unwrap_or_default(), delimiter))
         .collect();
-    let above: Vec<Vec<String>> =
-        alike.iter().map(|it| keys_above(it.lines.get(..it.head.line.unwrap_or(0)).unwrap_or_default(), delimiter)).collect();
     let every = |key: &&String| above.iter().all(|keys| keys.contains(key));
     Layout {
         format: Format::Delimited { delimiter: Some(delimiter) },

@@ -4,8 +4,6 @@
 
 use revisant_schema::plan::units;
 
-use super::words;
-
 /// The UCUM code that a text means as a unit; `None` when it is none.
 pub fn unit_code(text: &str) -> Option<String> {
     let bare = text.trim().trim_start_matches(['(', '[']).trim_end_matches([')', ']']).trim();
@@ -51,23 +49,15 @@ pub fn labelled(label: &str) -> Labelled {
     let cut = label.rfind([' ', '_', ',', '.']).filter(|at| *at > 0);
     let trailing = cut.and_then(|at| Some((label.get(..at)?, unit_code(label.get(at + 1..)?)?)));
     match trailing {
-        Some((name, unit)) => {
-            Labelled { name: name.trim().to_owned(), unit: Some(unit), stated: false, unknown: None }
-        }
+        Some((name, unit)) => Labelled { name: name.trim().to_owned(), unit: Some(unit), stated: false, unknown: None },
         None => Labelled { name: label.to_owned(), unit: None, stated: false, unknown: None },
     }
 }
 
-/// Whether these distinct texts are units, most of them at least.
-pub fn are_units(texts: &[(&str, usize)], label: &str) -> bool {
+/// Whether these distinct texts are units: some of them where the column is called so, else all.
+pub fn are_units(texts: &[(&str, usize)], called: bool) -> bool {
     let fit = texts.iter().filter(|(text, _)| unit_code(text).is_some()).count();
-    let named = words::UNIT.names(label);
-    !texts.is_empty() && texts.len() <= 30 && (if named { fit > 0 } else { fit == texts.len() && texts.iter().all(|(text, _)| is_unlike_a_code(text)) })
-}
-
-/// A unit that is not also a plain letter or word.
-fn is_unlike_a_code(text: &str) -> bool {
-    text.contains('/') || units::meant(text).is_some() || matches!(text, "kg" | "mm" | "cm" | "ms" | "kPa" | "mL")
+    !texts.is_empty() && texts.len() <= 30 && if called { fit > 0 } else { fit == texts.len() }
 }
 
 #[cfg(test)]

@@ -106,7 +106,8 @@ enum Named {
 }
 
 fn named(label: &str, whole: &str, measure: &Measure) -> Named {
-    let is_level = |word: &String| measure.conditions.iter().flat_map(|it| &it.levels).any(|level| fold(level) == *word);
+    let is_level =
+        |word: &String| measure.conditions.iter().flat_map(|it| &it.levels).any(|level| fold(level) == *word);
     let plain = |word: String| word.trim_end_matches(|c: char| c.is_ascii_digit()).to_owned();
     let mine: Vec<String> =
         split_words(label).into_iter().filter(|word| !is_level(word)).map(plain).filter(|it| !it.is_empty()).collect();
@@ -125,9 +126,11 @@ fn named(label: &str, whole: &str, measure: &Measure) -> Named {
         return Named::Perhaps;
     }
     let shares = mine.iter().any(|word| {
-        long(word) && code.iter().chain(&called).any(|other| {
-            long(other) && (other.starts_with(word.as_str()) || word.starts_with(other.as_str()))
-        })
+        long(word)
+            && code
+                .iter()
+                .chain(&called)
+                .any(|other| long(other) && (other.starts_with(word.as_str()) || word.starts_with(other.as_str())))
     });
     let initialled = code.len() > 1 && mine.contains(&initials);
     if shares || initialled { Named::Perhaps } else { Named::Not }
@@ -240,7 +243,9 @@ fn narrowed(it: &Numeric, plan: &Plan, mut measures: Vec<usize>, hints: &Hints<'
     keep(&|at| {
         plan.measures.get(at).is_some_and(|it| {
             let words = [split_words(&it.code), split_words(&it.label)].concat();
-            words.iter().any(|word| word.chars().count() >= 4 && hints.surroundings.iter().any(|it| it.starts_with(word)))
+            words
+                .iter()
+                .any(|word| word.chars().count() >= 4 && hints.surroundings.iter().any(|it| it.starts_with(word)))
         })
     });
     measures
@@ -249,7 +254,8 @@ fn narrowed(it: &Numeric, plan: &Plan, mut measures: Vec<usize>, hints: &Hints<'
 /// Where no label and no unit speaks for any measure: the one column of numbers that can be a value, and the measures
 /// that nothing speaks against.
 fn eliminated(grid: &Grid, plan: &Plan, numeric: &[Numeric], hints: &Hints<'_>) -> Vec<Matched> {
-    let mut able: Vec<usize> = (0..numeric.len()).filter(|at| numeric.get(*at).is_some_and(|it| !it.is_small)).collect();
+    let mut able: Vec<usize> =
+        (0..numeric.len()).filter(|at| numeric.get(*at).is_some_and(|it| !it.is_small)).collect();
     let called = |at: &usize| {
         numeric.get(*at).and_then(|it| grid.columns.get(it.column)).is_some_and(|name| words::VALUE.names(name))
     };
@@ -289,7 +295,10 @@ pub fn unit_column(grid: &Grid, at: usize) -> UnitColumn {
             Some(code) if code == text => {}
             Some(code) => pairs.push((text.to_owned(), code)),
             None => {
-                notes.gap(format!("the UCUM code that {} means, or take the entry out: its rows are held", some([text])));
+                notes.gap(format!(
+                    "the UCUM code that {} means, or take the entry out: its rows are held",
+                    some([text])
+                ));
                 pairs.push((text.to_owned(), BLANK.to_owned()));
             }
         }
@@ -314,7 +323,8 @@ pub struct LevelColumn {
 /// The levels of a condition as codes.
 pub fn levels(measures: &[&Measure], factor: &str) -> Vec<Known> {
     let mut known: Vec<Known> = vec![];
-    for level in measures.iter().flat_map(|it| &it.conditions).filter(|it| it.code == factor).flat_map(|it| &it.levels) {
+    for level in measures.iter().flat_map(|it| &it.conditions).filter(|it| it.code == factor).flat_map(|it| &it.levels)
+    {
         if !known.iter().any(|it| it.code == *level) {
             known.push(Known { code: level.clone(), label: level.clone() });
         }
@@ -325,7 +335,8 @@ pub fn levels(measures: &[&Measure], factor: &str) -> Vec<Known> {
 /// The columns in which the levels of the plan's conditions stand; several for one condition where it cannot be told.
 pub fn level_columns(grid: &Grid, plan: &Plan, free: &dyn Fn(usize) -> bool) -> Vec<LevelColumn> {
     let all: Vec<&Measure> = plan.measures.iter().collect();
-    let mut factors: Vec<&str> = plan.measures.iter().flat_map(|it| &it.conditions).map(|it| it.code.as_str()).collect();
+    let mut factors: Vec<&str> =
+        plan.measures.iter().flat_map(|it| &it.conditions).map(|it| it.code.as_str()).collect();
     factors.sort_unstable();
     factors.dedup();
     let mut found = vec![];
@@ -436,19 +447,27 @@ fn unit_line(it: &Numeric, measure: &Measure, column: Option<&UnitColumn>) -> Op
     let share = |code: Option<&str>| it.plausible(measure, code);
     match it.unit() {
         Unit::Stated(code) | Unit::Perhaps(code)
-            if units::convert(&code, &measure.unit).is_none() && is_annotation(&measure.unit) && !code.contains('/') =>
+            if units::convert(&code, &measure.unit).is_none()
+                && is_annotation(&measure.unit)
+                && !code.contains('/') =>
         {
             unsaid(it, measure, share(None))
         }
         Unit::Stated(code) if code == measure.unit && it.units_row.as_deref().is_none_or(|text| text == code) => None,
         Unit::Stated(code) => Some(stated(&code, measure, share(Some(&code)), "")),
-        Unit::Perhaps(code) if units::convert(&code, &measure.unit).is_some() || code.contains('/') || code.contains('[') => {
+        Unit::Perhaps(code)
+            if units::convert(&code, &measure.unit).is_some() || code.contains('/') || code.contains('[') =>
+        {
             Some(stated(&code, measure, share(Some(&code)), "by the last word of the label"))
         }
         Unit::Perhaps(_) | Unit::Unsaid => unsaid(it, measure, share(None)),
         Unit::Unknown(_) if is_annotation(&measure.unit) => unsaid(it, measure, share(None)),
         Unit::Unknown(text) => {
-            let what = format!("the UCUM code of \"{}\", and times = … where it does not convert to {}", clip(&text), measure.unit);
+            let what = format!(
+                "the UCUM code of \"{}\", and times = … where it does not convert to {}",
+                clip(&text),
+                measure.unit
+            );
             Some(Line::gap("unit", &format!("{{ code = {} }}", quote(BLANK)), what))
         }
     }
@@ -486,7 +505,9 @@ fn unsaid(it: &Numeric, measure: &Measure, share: Option<f64>) -> Option<Line> {
         None => Some(Line::gap(
             "unit",
             &format!("{{ code = {} }}", quote(BLANK)),
-            format!("no unit is stated, and the plan has no plausible range to hold the values against; the plan's is {unit}"),
+            format!(
+                "no unit is stated, and the plan has no plausible range to hold the values against; the plan's is {unit}"
+            ),
         )),
         Some(_) => {
             let example = it.numbers.first().copied().unwrap_or_default();
@@ -534,7 +555,8 @@ pub fn long_entry(
 pub fn measures_present(plan: &Plan, grid: &Grid, named_in: usize, meeting: &Meeting) -> Vec<usize> {
     let texts = grid.distinct(named_in);
     let is_there = |measure: &Measure| {
-        texts.iter().any(|(text, _)| *text == measure.code) || meeting.alike.iter().any(|(_, code)| *code == measure.code)
+        texts.iter().any(|(text, _)| *text == measure.code)
+            || meeting.alike.iter().any(|(_, code)| *code == measure.code)
     };
     plan.measures.iter().enumerate().filter(|(_, measure)| is_there(measure)).map(|(at, _)| at).collect()
 }
@@ -563,7 +585,10 @@ fn long_unit(grid: &Grid, named_in: usize, value: &Numeric, meeting: &Meeting, m
     };
     let doubtful: Vec<&str> = measures.iter().filter(supposed).map(|it| it.code.as_str()).collect();
     if doubtful.is_empty() {
-        return Some(Line::remark("unit", "no unit is stated; the plan's are supposed, since the values are plausible so"));
+        return Some(Line::remark(
+            "unit",
+            "no unit is stated; the plan's are supposed, since the values are plausible so",
+        ));
     }
     let what = format!("the unit of {}: none is stated, and the plan's is not borne out by the values", some(doubtful));
     Some(Line::gap("unit", &format!("{{ code = {} }}", quote(BLANK)), what))
@@ -573,8 +598,7 @@ fn long_unit(grid: &Grid, named_in: usize, value: &Numeric, meeting: &Meeting, m
 pub fn unknown_entry(grid: &Grid, it: &Numeric) -> Entry {
     let name = grid.columns.get(it.column).map_or("", String::as_str);
     let what = "which measure of the plan this is, or take this value out";
-    let mut lines =
-        vec![Line::gap("measure", &quote(BLANK), what), Line::sure("column", &quote(name))];
+    let mut lines = vec![Line::gap("measure", &quote(BLANK), what), Line::sure("column", &quote(name))];
     if let Unit::Stated(code) | Unit::Perhaps(code) = it.unit() {
         lines.push(Line::unsure("unit", &format!("{{ code = {} }}", quote(&code)), "by the label or the row of units"));
     }

@@ -64,7 +64,13 @@ fn fits(grid: &Grid, plan: &Plan, against: Against<'_>, spots: &Spots<'_>, forma
     let mut sessions: BTreeMap<(String, usize), NaiveDate> = BTreeMap::new();
     for row in &grid.rows {
         let label = row.cells.get(spots.visit).map_or("", |cell| cell.text.as_str());
-        let found = || Some((against.code(&spots.subject.text(row))?, plan.visit(&code(label))?.0, days.read(&spots.taken_at.text(row))?));
+        let found = || {
+            Some((
+                against.code(&spots.subject.text(row))?,
+                plan.visit(&code(label))?.0,
+                days.read(&spots.taken_at.text(row))?,
+            ))
+        };
         let Some((subject, visit, day)) = found() else { continue };
         sessions.entry((subject, visit)).and_modify(|first| *first = day.min(*first)).or_insert(day);
     }
@@ -119,7 +125,9 @@ pub fn dates_agree(
     let mut any = false;
     for row in &grid.rows {
         let Some(visit) = label(row) else { continue };
-        let (Some(code), Some(day)) = (against.code(&subject.text(row)), days.read(&taken_at.text(row))) else { continue };
+        let (Some(code), Some(day)) = (against.code(&subject.text(row)), days.read(&taken_at.text(row))) else {
+            continue;
+        };
         let Some(enrolled) = roster.subjects.get(&code).and_then(|it| it.enrolled) else { return false };
         if visit_on(plan, day, |_| Some(enrolled)).map(|(found, _)| found) != Some(visit) {
             return false;

@@ -32,23 +32,94 @@ pub struct Kind(&'static [&'static str]);
 
 /// Whose it is.
 pub const SUBJECT: Kind = Kind(&[
-    "subject", "participant", "patient", "person", "id", "code", "pid", "proband", "teilnehmer", "animal", "cage",
-    "athlete", "rider", "walker", "who", "pot", "plant", "sujet", "sujeto", "volunteer", "client", "mouse", "rat",
+    "subject",
+    "participant",
+    "patient",
+    "person",
+    "id",
+    "code",
+    "pid",
+    "proband",
+    "teilnehmer",
+    "animal",
+    "cage",
+    "athlete",
+    "rider",
+    "walker",
+    "who",
+    "pot",
+    "plant",
+    "sujet",
+    "sujeto",
+    "volunteer",
+    "client",
+    "mouse",
+    "rat",
 ]);
 /// Which visit it is.
 pub const VISIT: Kind = Kind(&[
-    "visit", "visite", "visita", "session", "timepoint", "occasion", "phase", "stage", "termin", "besuch", "week",
-    "woche", "wave", "zeitpunkt", "period", "followup", "v", "label", "appointment", "month", "day",
+    "visit",
+    "visite",
+    "visita",
+    "session",
+    "timepoint",
+    "occasion",
+    "phase",
+    "stage",
+    "termin",
+    "besuch",
+    "week",
+    "woche",
+    "wave",
+    "zeitpunkt",
+    "period",
+    "followup",
+    "v",
+    "label",
+    "appointment",
+    "month",
+    "day",
 ]);
 /// Which of several readings of the same it is.
 pub const REPLICATE: Kind = Kind(&[
-    "trial", "try", "rep", "replicate", "repetition", "repeat", "attempt", "versuch", "n", "no", "nr", "night", "jump",
-    "block", "pass", "essai", "wiederholung", "durchgang", "set", "measurement", "messung", "shot",
+    "trial",
+    "try",
+    "rep",
+    "replicate",
+    "repetition",
+    "repeat",
+    "attempt",
+    "versuch",
+    "n",
+    "no",
+    "nr",
+    "night",
+    "jump",
+    "block",
+    "pass",
+    "essai",
+    "wiederholung",
+    "durchgang",
+    "set",
+    "measurement",
+    "messung",
+    "shot",
 ]);
 /// Who measured.
 pub const OPERATOR: Kind = Kind(&[
-    "operator", "tester", "rater", "observer", "examiner", "assessor", "technician", "prüfer", "untersucher", "staff",
-    "nurse", "investigator", "initials",
+    "operator",
+    "tester",
+    "rater",
+    "observer",
+    "examiner",
+    "assessor",
+    "technician",
+    "prüfer",
+    "untersucher",
+    "staff",
+    "nurse",
+    "investigator",
+    "initials",
 ]);
 /// What kind of row it is, or whether it is to be used.
 pub const TYPE: Kind = Kind(&[
@@ -58,8 +129,19 @@ pub const TYPE: Kind = Kind(&[
 ]);
 /// Free remarks.
 pub const REMARK: Kind = Kind(&[
-    "comment", "comments", "remark", "remarks", "note", "notes", "bemerkung", "bemerkungen", "notiz", "kommentar",
-    "observation", "observations", "memo",
+    "comment",
+    "comments",
+    "remark",
+    "remarks",
+    "note",
+    "notes",
+    "bemerkung",
+    "bemerkungen",
+    "notiz",
+    "kommentar",
+    "observation",
+    "observations",
+    "memo",
 ]);
 /// What says nothing about the reading.
 pub const HARMLESS: Kind = Kind(&[
@@ -68,20 +150,71 @@ pub const HARMLESS: Kind = Kind(&[
 ]);
 /// A value, whatever it is of.
 pub const VALUE: Kind = Kind(&[
-    "value", "result", "wert", "messwert", "reading", "valeur", "valor", "resultat", "ergebnis", "measurement",
-    "measured", "res", "val",
+    "value",
+    "result",
+    "wert",
+    "messwert",
+    "reading",
+    "valeur",
+    "valor",
+    "resultat",
+    "ergebnis",
+    "measurement",
+    "measured",
+    "res",
+    "val",
 ]);
 /// The unit of a value.
 pub const UNIT: Kind = Kind(&["unit", "units", "einheit", "unité", "unidad", "uom"]);
 /// Marks a row as no reading of a subject.
 pub const NO_READING: Kind = Kind(&[
-    "qc", "test", "control", "kontrolle", "check", "calibration", "calibrate", "cal", "kalibrierung", "blank",
-    "standard", "demo", "practice", "practise", "training", "dummy", "void", "invalid", "reference", "warmup",
+    "qc",
+    "test",
+    "control",
+    "kontrolle",
+    "check",
+    "calibration",
+    "calibrate",
+    "cal",
+    "kalibrierung",
+    "blank",
+    "standard",
+    "demo",
+    "practice",
+    "practise",
+    "training",
+    "dummy",
+    "void",
+    "invalid",
+    "reference",
+    "warmup",
 ]);
 /// Stands where a value is missing.
 const MISSING: &[&str] = &[
-    "na", "n/a", "nan", "#n/a", "null", "none", "-", "--", "---", "x", "void", "missing", "not done", "nd", "n.d.",
-    "k.a.", ".", "*", "**", "***", "n.a.", "?", "not available", "not measured",
+    "na",
+    "n/a",
+    "nan",
+    "#n/a",
+    "null",
+    "none",
+    "-",
+    "--",
+    "---",
+    "x",
+    "void",
+    "missing",
+    "not done",
+    "nd",
+    "n.d.",
+    "k.a.",
+    ".",
+    "*",
+    "**",
+    "***",
+    "n.a.",
+    "?",
+    "not available",
+    "not measured",
 ];
 
 impl Kind {
@@ -99,7 +232,8 @@ pub fn says_missing(text: &str) -> bool {
 
 /// Whether a text is one of the two answers to a question.
 pub fn is_answer(text: &str) -> bool {
-    const ANSWERS: &[&str] = &["true", "false", "yes", "no", "y", "n", "ja", "nein", "0", "1", "oui", "non", "si", "sí"];
+    const ANSWERS: &[&str] =
+        &["true", "false", "yes", "no", "y", "n", "ja", "nein", "0", "1", "oui", "non", "si", "sí"];
     ANSWERS.contains(&text.trim().to_lowercase().as_str())
 }
 

@@ -121,7 +121,10 @@ pub struct Glance {
 /// The beginning of every sheet, for drafting a reader: no more than `most` rows of each.
 pub fn glance(bytes: &dyn Bytes, most: usize) -> Result<Vec<Glance>, FileFault> {
     let book = Book::read(&mut Package::open(bytes, Limits::default())?)?;
-    book.sheets.iter().map(|sheet| Ok(Glance { name: sheet.name.clone(), rows: beginning(bytes, &book, &sheet.part, most)? })).collect()
+    book.sheets
+        .iter()
+        .map(|sheet| Ok(Glance { name: sheet.name.clone(), rows: beginning(bytes, &book, &sheet.part, most)? }))
+        .collect()
 }
 
 fn beginning(bytes: &dyn Bytes, book: &Book, part: &str, most: usize) -> Result<Vec<Vec<String>>, FileFault> {
