@@ -69,7 +69,7 @@ pub fn workbooks(samples: &[Sample], which: &[usize], against: Against<'_>) -> O
         let first = below.first();
         first.is_some_and(|line| text::is_units_row(line, below.get(1..).unwrap_or_default()))
     };
-    let units_row = alike.iter().any(|it| units(it)) && alike.iter().all(|it| units(it) || it.rows.len() < 3);
+    let units_row = alike.iter().any(&units) && alike.iter().all(|it| units(it) || it.rows.len() < 3);
     let layout = Layout {
         format: Format::Workbook { sheet },
         encoding: Encoding::Auto,
@@ -90,7 +90,7 @@ fn header(alike: &[&Chosen], labels: &[String]) -> Header {
         let above = it.rows.get(..it.head.line.unwrap_or(0)).unwrap_or_default();
         above.iter().any(|row| row.iter().find(|cell| !cell.is_empty()).is_some_and(|cell| cell.starts_with(&start)))
     };
-    if (same && first == 0) || start.is_empty() || alike.iter().any(|it| before(it)) {
+    if (same && first == 0) || start.is_empty() || alike.iter().any(before) {
         return Header::Row { row: first as u64 + 1, lines: 1 };
     }
     Header::StartsWith(start)

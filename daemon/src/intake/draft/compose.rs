@@ -210,7 +210,7 @@ impl Found {
         } else {
             let against = Against { plan: Some(plan), roster: asked.roster, now: asked.now };
             let format = self.taken_at.formats.first().filter(|_| self.taken_at.formats.len() == 1);
-            let agree = |label: &dyn Fn(&grid::GridRow) -> Option<usize>| {
+            let agree = |label: &rest::VisitOf<'_>| {
                 let (subject, taken_at) = (&self.subject.spot, &self.taken_at.spot);
                 format.is_some_and(|it| when::dates_agree(rows, plan, against, (subject, taken_at, it.as_str()), label))
             };

@@ -65,7 +65,7 @@ pub fn alone(text: &str, toml: &str) -> Option<String> {
 
 /// The byte at which the instrument's text begins.
 fn place(text: &str, root: &Table) -> usize {
-    let end_of = |name: &str| root.get(name).map(|item| end(item));
+    let end_of = |name: &str| root.get(name).map(end);
     let line_end =
         |at: usize| text.get(at..).and_then(|rest| rest.find('\n')).map_or(text.len(), |found| at + found + 1);
     if let Some(at) = end_of("instrument").filter(|at| *at > 0) {

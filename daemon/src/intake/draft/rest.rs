@@ -70,13 +70,16 @@ pub fn visit(grid: &Grid, free: &dyn Fn(usize) -> bool, plan: &Plan) -> Option<D
     }
 }
 
+/// The visit that a row's sample names.
+pub type VisitOf<'a> = dyn Fn(&GridRow) -> Option<usize> + 'a;
+
 /// Labels of visits outside the rows. Whether they are meant is for a person to say: the date may be what decides.
 /// `agree` says whether the dates of all rows say the same as the labels of their samples.
 pub fn visit_elsewhere(
     grid: &Grid,
     samples: &[Sample],
     plan: &Plan,
-    agree: &dyn Fn(&dyn Fn(&GridRow) -> Option<usize>) -> bool,
+    agree: &dyn Fn(&VisitOf<'_>) -> bool,
 ) -> Option<Line> {
     let known = known_visits(plan);
     for (key, values) in &grid.preamble {
