@@ -44,6 +44,13 @@ fn ticks() -> Option<u64> {
     Some(fields.get(11)?.parse::<u64>().ok()? + fields.get(12)?.parse::<u64>().ok()?)
 }
 
+/// Seconds that this thread was on a processor so far (schedstats of the kernel's documentation, in nanoseconds);
+/// `None` where the kernel does not say.
+pub fn busy() -> Option<f64> {
+    let stat = fs::read_to_string("/proc/thread-self/schedstat").ok()?;
+    stat.split(' ').next()?.parse::<f64>().ok().map(|nanos| nanos / 1e9)
+}
+
 /// Runs the command line in a process of its own; it must succeed.
 pub fn revisant(study: &Path, args: &[&str]) -> Measured {
     let note = study.join("memory.txt");

@@ -235,8 +235,11 @@ impl Scan<'_> {
     }
 
     fn text(&mut self, wanted: &str) -> Option<()> {
-        self.0 = self.0.strip_prefix(wanted.as_bytes())?;
-        Some(())
+        match wanted.as_bytes() {
+            // Nearly all texts between numbers are one character.
+            [byte] => self.eat(*byte).then_some(()),
+            bytes => self.0.strip_prefix(bytes).map(|rest| self.0 = rest),
+        }
     }
 
     /// At least one blank; the no-break spaces of office programs are blanks too.

@@ -6,6 +6,39 @@
 /// The number that `text` writes with this decimal mark and thousands mark. Thousands stand in whole groups of three or
 /// not at all; a sign and an exponent may stand.
 pub fn parse(text: &str, decimal_mark: char, group_mark: Option<char>) -> Option<f64> {
+    parse_short(text, decimal_mark).or_else(|| parse_any(text, decimal_mark, group_mark))
+}
+
+/// The longest number that is read without being copied to the heap.
+const SHORT: usize = 32;
+
+/// The number of digits with at most a sign and a decimal mark, which is what nearly all are; `None` says nothing.
+fn parse_short(text: &str, decimal_mark: char) -> Option<f64> {
+    let mark = u8::try_from(decimal_mark).ok().filter(u8::is_ascii)?;
+    let mut plain = [0; SHORT];
+    let plain = plain.get_mut(..text.len())?;
+    let (mut marks, mut digits) = (0, 0);
+    for (at, (byte, to)) in text.bytes().zip(plain.iter_mut()).enumerate() {
+        *to = match byte {
+            b'0'..=b'9' => {
+                digits += 1;
+                byte
+            }
+            b'+' | b'-' if at == 0 => byte,
+            _ if byte == mark => {
+                marks += 1;
+                b'.'
+            }
+            _ => return None,
+        };
+    }
+    if marks > 1 || digits == 0 {
+        return None;
+    }
+    std::str::from_utf8(plain).ok()?.parse().ok()
+}
+
+fn parse_any(text: &str, decimal_mark: char, group_mark: Option<char>) -> Option<f64> {
     let mut plain = String::with_capacity(text.len());
     let mut rest = text.char_indices().peekable();
     if let Some(&(_, sign @ ('+' | '-'))) = rest.peek() {
@@ -113,6 +146,19 @@ mod tests {
             ("١٢", '.', None, None),
         ] {
             assert_eq!(parse(text, decimal, group), number, "{text:?} with {decimal:?} and {group:?}");
+        }
+    }
+
+    proptest::proptest! {
+        /// The short way says nothing that the long one does not.
+        #[test]
+        fn both_ways_agree(text in "[-+]?[0-9.,'e٢ ]{0,9}[-+0-9]{0,3}", mark in "[.,'٫]", group in "[.,']") {
+            let group = group.chars().next().filter(|group| !mark.contains(*group));
+            let mark = mark.chars().next().unwrap_or('.');
+            for group in [None, group] {
+                let long = parse_any(&text, mark, group);
+                proptest::prop_assert_eq!(parse(&text, mark, group), long);
+            }
         }
     }
 

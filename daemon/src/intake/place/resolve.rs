@@ -5,15 +5,17 @@
 //! collection alone, never on other rows (but for doubled local times, which the export's order may settle).
 
 use std::borrow::Cow;
-use std::collections::{BTreeMap, HashMap};
+use std::cell::RefCell;
+use std::collections::{BTreeMap, HashMap, HashSet};
+use std::sync::Arc;
 
 use chrono::{DateTime, NaiveDate, Utc};
 use regex::Regex;
 use revisant_schema::hold::{Answer, Reason};
 use revisant_schema::plan::stamp::{CompiledStamp, Written};
 use revisant_schema::plan::{
-    Affine, Instrument, LevelRule, LimitRule, MeasureIx, MeasureRule, Place, Plan, Reader, Source, UnitRule, ValueRule,
-    units,
+    Affine, ConditionFactor, Instrument, LevelRule, LimitRule, MeasureIx, MeasureRule, Place, Plan, Reader, Source,
+    UnitRule, ValueRule, units,
 };
 use revisant_schema::reading::Condition;
 use revisant_schema::roster::{Roster, tidy};
@@ -111,14 +113,14 @@ pub enum ValueOutcome {
     /// Held.
     Held(Held),
     /// A number in the measure's unit.
-    Number(Box<PlacedValue>),
+    Number(PlacedValue),
 }
 
 /// A value that may be filed.
 #[derive(Debug, Clone, PartialEq)]
 pub struct PlacedValue {
     /// Its column.
-    pub column: String,
+    pub column: Arc<str>,
     /// Its measure.
     pub measure: MeasureIx,
     /// Its condition's text.
@@ -157,6 +159,9 @@ impl Decided {
     }
 
     fn find<T>(&self, column: &str, pick: impl Fn(Reason, &Answer) -> Option<T>) -> Option<T> {
+        if self.answers.is_empty() {
+            return None;
+        }
         // The newest answer wins.
         self.answers.get(column)?.iter().rev().find_map(|(reason, answer)| pick(*reason, answer))
     }
@@ -203,9 +208,9 @@ impl<'p> Finder<'p> {
 
     fn find<'r>(&'r self, row: &'r Row, rows: &'r dyn Rows) -> Cow<'r, str> {
         match self {
-            Self::Column(slot, map) => mapped_cow(map, row.cell(*slot).trim()),
+            Self::Column(slot, map) => mapped_cow(map, trim(row.cell(*slot))),
             Self::Columns(slots, map) => {
-                let texts: Vec<&str> = slots.iter().map(|slot| row.cell(*slot).trim()).collect();
+                let texts: Vec<&str> = slots.iter().map(|slot| trim(row.cell(*slot))).collect();
                 Cow::Owned(mapped(map, texts.join(" ").trim()))
             }
             Self::Preamble(key, map) => mapped_cow(map, rows.preamble(key).unwrap_or_default().trim()),
@@ -255,6 +260,14 @@ fn collect_path_facts(place: &Place, file_name: &str, folder: &str, facts: &mut 
     }
 }
 
+/// [`str::trim`], at once where no blank stands around a text, as hardly ever one does behind a reader.
+fn trim(text: &str) -> &str {
+    match text.as_bytes() {
+        [first, .., last] if first.is_ascii_graphic() && last.is_ascii_graphic() => text,
+        _ => text.trim(),
+    }
+}
+
 fn group(regex: &Regex, text: &str) -> String {
     let found = regex.captures(text).and_then(|groups| groups.get(1));
     found.map_or_else(String::new, |group| group.as_str().trim().to_owned())
@@ -281,17 +294,36 @@ pub struct Resolver<'p> {
     replicate: Option<Finder<'p>>,
     operator: Option<Finder<'p>>,
     values: Vec<ValueFinder<'p>>,
+    /// The visits' codes, and `unscheduled`.
+    labels: HashSet<&'p str>,
+    /// Subjects met, by the text that names them.
+    subjects: RefCell<HashMap<String, Listed>>,
     /// Settled moments of doubled local times, by row.
     pub settled: HashMap<At, DateTime<Utc>>,
 }
 
+/// A subject of the roster.
+#[derive(Debug, Clone)]
+struct Listed {
+    code: String,
+    enrolled: Option<NaiveDate>,
+    withdrawn: Option<NaiveDate>,
+}
+
+/// Texts that name subjects remembered at once.
+const MOST_MET: usize = 4096;
+
 struct ValueFinder<'p> {
     rule: &'p ValueRule,
     slot: usize,
+    /// The rule's column, to be shared by the values found in it.
+    column: Arc<str>,
+    /// The condition, where it is the same in every row.
+    condition: Option<String>,
     measure: Option<Finder<'p>>,
     unit: Option<Finder<'p>>,
     levels: Vec<(&'p str, Result<&'p str, Finder<'p>>)>,
-    conversions: std::cell::RefCell<HashMap<(String, MeasureIx), Option<Affine>>>,
+    conversions: RefCell<HashMap<(String, MeasureIx), Option<Affine>>>,
 }
 
 /// What the stamp of a row comes to.
@@ -323,7 +355,9 @@ impl<'p> Resolver<'p> {
             visit: reader.visit.as_ref().map(finder),
             replicate: reader.replicate.as_ref().map(finder),
             operator: reader.operator.as_ref().map(finder),
-            values: reader.values.iter().map(|rule| ValueFinder::new(rule, wanted, whereabouts)).collect(),
+            values: reader.values.iter().map(|rule| ValueFinder::new(plan, rule, wanted, whereabouts)).collect(),
+            labels: plan.visits.iter().map(|visit| visit.code.as_str()).chain([UNSCHEDULED]).collect(),
+            subjects: Default::default(),
             settled: HashMap::new(),
         })
     }
@@ -339,7 +373,7 @@ impl<'p> Resolver<'p> {
     }
 
     fn is_missing(&self, value: &ValueFinder<'_>, row: &Row, rows: &dyn Rows) -> bool {
-        let text = row.cell(value.slot).trim();
+        let text = trim(row.cell(value.slot));
         if self.instrument.reader.missing.iter().any(|word| word == text) {
             return true;
         }
@@ -390,12 +424,12 @@ impl<'p> Resolver<'p> {
             return RowOutcome::NoValue;
         }
         match self.resolve_row(row, rows, decided) {
-            Ok(resolved) => RowOutcome::Ready(Box::new(resolved)),
+            Ok(resolved) => RowOutcome::Ready(resolved),
             Err(held) => RowOutcome::Held(*held),
         }
     }
 
-    fn resolve_row(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<Resolved, Box<Held>> {
+    fn resolve_row(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<Box<Resolved>, Box<Held>> {
         row_fault(row, decided)?;
         let subject = self.subject_of(row, rows, decided)?;
         let (taken, written) = self.taken(row, rows, decided)?;
@@ -403,7 +437,7 @@ impl<'p> Resolver<'p> {
             Taken::Moment(moment, finer, day) => (Some(moment), finer, day),
             Taken::Day(day) => (None, false, day),
         };
-        let outside = self.check_enrolment(&subject, day, decided).err();
+        let outside = check_enrolment(&subject, day, decided).err();
         // Of two faults the one that is looked for first is told.
         let first = |later: Box<Held>| outside.clone().unwrap_or(later);
         let (label, label_decided) = self.label(row, rows, decided).map_err(first)?;
@@ -411,8 +445,8 @@ impl<'p> Resolver<'p> {
         let outside = outside.map(|held| *held);
         let values = self.values.iter().map(|value| self.value(value, row, rows, day, decided)).collect();
         let operator = self.operator.as_ref().map(|finder| finder.find(row, rows).into_owned()).unwrap_or_default();
-        Ok(Resolved {
-            subject,
+        Ok(Box::new(Resolved {
+            subject: subject.code,
             day,
             moment,
             written,
@@ -423,30 +457,46 @@ impl<'p> Resolver<'p> {
             operator,
             values,
             outside,
-        })
+        }))
     }
 
-    fn subject_of(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<String, Box<Held>> {
+    fn subject_of(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<Listed, Box<Held>> {
         let said = decided.find("", |_, answer| match answer {
             Answer::Subject(code) => Some(code.clone()),
             _ => None,
         });
         let found = said.map_or_else(|| self.subject.find(row, rows), Cow::Owned);
-        let code = tidy(&found, &self.plan.subject.normalise);
+        if let Some(met) = self.subjects.borrow().get(found.as_ref()) {
+            return Ok(met.clone());
+        }
+        let listed = self.listed(&found)?;
+        let mut subjects = self.subjects.borrow_mut();
+        if subjects.len() >= MOST_MET {
+            subjects.clear();
+        }
+        subjects.insert(found.into_owned(), listed.clone());
+        Ok(listed)
+    }
+
+    /// The subject that a text names.
+    fn listed(&self, found: &str) -> Result<Listed, Box<Held>> {
+        let code = tidy(found, &self.plan.subject.normalise);
         if code.trim().is_empty() {
             return Err(Box::new(Held::row(Reason::NoSubject, "the row names no subject")));
         }
-        if self.plan.subject.pattern.is_match(&code) && self.roster.subjects.contains_key(&code) {
-            return Ok(code);
-        }
         let fits = self.plan.subject.pattern.is_match(&code);
-        let why = if fits { "is not on the roster" } else { "does not fit the plan's pattern" };
-        let held = Held::row(Reason::UnknownSubject, format!("\"{code}\" {why}"));
-        Err(Box::new(held.likely(nearest(&code, self.roster.subjects.keys().map(String::as_str)))))
+        match self.roster.subjects.get(&code) {
+            Some(entry) if fits => Ok(Listed { code, enrolled: entry.enrolled, withdrawn: entry.withdrawn }),
+            _ => {
+                let why = if fits { "is not on the roster" } else { "does not fit the plan's pattern" };
+                let held = Held::row(Reason::UnknownSubject, format!("\"{code}\" {why}"));
+                Err(Box::new(held.likely(nearest(&code, self.roster.subjects.keys().map(String::as_str)))))
+            }
+        }
     }
 
     fn taken(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<(Taken, String), Box<Held>> {
-        let written = self.taken_at.find(row, rows).trim().to_owned();
+        let written = trim(&self.taken_at.find(row, rows)).to_owned();
         let said = decided.find("", |_, answer| match answer {
             Answer::Moment(text) => Some(Ok(text.clone())),
             Answer::Date(day) => Some(Err(*day)),
@@ -457,11 +507,11 @@ impl<'p> Resolver<'p> {
             Some(Ok(text)) => self.decided_moment(&text)?,
             None => self.stamped(row, rows, &written)?,
         };
-        let (future, what) = match taken {
-            Taken::Moment(moment, ..) => (moment > self.now, written.clone()),
-            Taken::Day(day) => (day > self.today(), day.to_string()),
+        let future = match taken {
+            Taken::Moment(moment, ..) => (moment > self.now).then(|| written.clone()),
+            Taken::Day(day) => (day > self.today()).then(|| day.to_string()),
         };
-        if future {
+        if let Some(what) = future {
             return Err(Box::new(Held::row(Reason::FutureStamp, format!("\"{what}\" lies in the future"))));
         }
         Ok((taken, written))
@@ -495,9 +545,18 @@ impl<'p> Resolver<'p> {
                         return Err(Box::new(Held::row(Reason::ClockGap, wrong)));
                     }
                 };
-                Ok(self.at(moment, local.date(), read.finer))
+                Ok(self.at_local(moment, local.date(), read.finer))
             }
         }
+    }
+
+    /// A moment that was written as a local time, on a day of the instrument's clock.
+    fn at_local(&self, moment: DateTime<Utc>, day: NaiveDate, finer: bool) -> Taken {
+        // A right clock that keeps the study centre's own time shows the study centre's day.
+        if self.instrument.clock.is_empty() && self.instrument.time_zone == self.plan.study.time_zone {
+            return Taken::Moment(moment, finer, day);
+        }
+        self.at(moment, day, finer)
     }
 
     /// A moment with the clock's error added, and its local day at the study centre.
@@ -530,31 +589,6 @@ impl<'p> Resolver<'p> {
         Ok(Taken::Moment(moment, true, moment.with_timezone(&zone).date_naive()))
     }
 
-    fn check_enrolment(&self, subject: &str, day: NaiveDate, decided: &Decided) -> Result<(), Box<Held>> {
-        let Some(entry) = self.roster.subjects.get(subject) else { return Ok(()) };
-        // A person who names the subject has seen the dates; the answer to these two reasons is the subject.
-        let confirmed = |wanted: Reason| {
-            decided
-                .find("", |reason, answer| {
-                    (reason == wanted && matches!(answer, Answer::Subject(code) if code == subject)).then_some(())
-                })
-                .is_some()
-        };
-        if let Some(enrolled) = entry.enrolled.filter(|enrolled| day < *enrolled)
-            && !confirmed(Reason::BeforeEnrolment)
-        {
-            let wrong = format!("{day} lies before {subject}'s enrolment on {enrolled}");
-            return Err(Box::new(Held::row(Reason::BeforeEnrolment, wrong)));
-        }
-        if let Some(withdrawn) = entry.withdrawn.filter(|withdrawn| day > *withdrawn)
-            && !confirmed(Reason::AfterWithdrawal)
-        {
-            let wrong = format!("{day} lies after {subject}'s withdrawal on {withdrawn}");
-            return Err(Box::new(Held::row(Reason::AfterWithdrawal, wrong)));
-        }
-        Ok(())
-    }
-
     fn label(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<(Option<String>, bool), Box<Held>> {
         let said = decided.find("", |_, answer| match answer {
             Answer::Visit(code) => Some(code.clone()),
@@ -565,10 +599,10 @@ impl<'p> Resolver<'p> {
         }
         let Some(finder) = &self.visit else { return Ok((None, false)) };
         let found = finder.find(row, rows);
-        let text = found.trim();
+        let text = trim(&found);
         if text.is_empty() {
             Ok((None, false))
-        } else if text == UNSCHEDULED || self.plan.visit(text).is_some() {
+        } else if self.labels.contains(text) {
             Ok((Some(text.to_owned()), false))
         } else {
             let codes = self.plan.visits.iter().map(|visit| visit.code.as_str());
@@ -580,7 +614,7 @@ impl<'p> Resolver<'p> {
     fn replicate_of(&self, row: &Row, rows: &dyn Rows) -> Result<Option<u32>, Box<Held>> {
         let Some(finder) = &self.replicate else { return Ok(None) };
         let found = finder.find(row, rows);
-        let text = found.trim();
+        let text = trim(&found);
         if text.is_empty() {
             return Ok(None);
         }
@@ -605,7 +639,7 @@ impl<'p> Resolver<'p> {
             return ValueOutcome::Missing;
         }
         match self.place_value(value, row, rows, day, decided) {
-            Ok(Some(placed)) => ValueOutcome::Number(Box::new(placed)),
+            Ok(Some(placed)) => ValueOutcome::Number(placed),
             Ok(None) => ValueOutcome::Missing,
             Err(held) => ValueOutcome::Held(held.on(&value.rule.column)),
         }
@@ -642,10 +676,10 @@ impl<'p> Resolver<'p> {
             matches!(answer, Answer::Replicate(_) | Answer::InsteadOf(_)).then(|| answer.clone())
         });
         Ok(Some(PlacedValue {
-            column: column.to_owned(),
+            column: value.column.clone(),
             measure: measure_ix,
             condition,
-            text: row.cell(value.slot).trim().to_owned(),
+            text: trim(row.cell(value.slot)).to_owned(),
             exported: Some(number.exported),
             unit,
             number: corrected,
@@ -695,6 +729,9 @@ impl<'p> Resolver<'p> {
             Answer::Condition(levels) => Some(levels.clone()),
             _ => None,
         });
+        if let (None, Some(condition)) = (&said, &value.condition) {
+            return Ok(condition.clone());
+        }
         let mut condition = Condition::default();
         for factor in &self.plan.measures[measure].conditions {
             let decided_level = said.as_ref().and_then(|levels| levels.get(&factor.code));
@@ -784,7 +821,7 @@ impl<'p> Resolver<'p> {
                 return Ok(Some(Number { exported: number, used: number, mark: None }));
             }
         }
-        let text = row.cell(value.slot).trim();
+        let text = trim(row.cell(value.slot));
         let as_it_stands = if row.is_number(value.slot) { number::parse(text, '.', None) } else { parse(text) };
         if let Some(number) = as_it_stands {
             return Ok(Some(Number { exported: number, used: number, mark: None }));
@@ -828,10 +865,12 @@ struct Number {
 }
 
 impl<'p> ValueFinder<'p> {
-    fn new(rule: &'p ValueRule, wanted: &[String], whereabouts: Whereabouts<'_>) -> Self {
+    fn new(plan: &'p Plan, rule: &'p ValueRule, wanted: &[String], whereabouts: Whereabouts<'_>) -> Self {
         let finder = |place: &'p Place| Finder::new(place, wanted, whereabouts);
         Self {
             rule,
+            column: rule.column.as_str().into(),
+            condition: fixed_condition(plan, rule),
             slot: wanted.iter().position(|name| *name == rule.column).unwrap_or(usize::MAX),
             measure: match &rule.measure {
                 MeasureRule::Fixed(_) => None,
@@ -883,6 +922,18 @@ fn unit_fault(code: &str, target: &str) -> String {
     }
 }
 
+/// The condition of a value, where the plan alone says it.
+fn fixed_condition(plan: &Plan, rule: &ValueRule) -> Option<String> {
+    let MeasureRule::Fixed(measure) = rule.measure else { return None };
+    let level = |factor: &ConditionFactor| {
+        let (_, level) = rule.condition.iter().find(|(code, _)| *code == factor.code)?;
+        let LevelRule::Fixed(level) = level else { return None };
+        factor.levels.contains(level).then(|| (factor.code.clone(), level.clone()))
+    };
+    let levels = plan.measures.get(measure)?.conditions.iter().map(level).collect::<Option<_>>()?;
+    Some(Condition(levels).to_string())
+}
+
 fn row_fault(row: &Row, decided: &Decided) -> Result<(), Box<Held>> {
     let held = match &row.fault {
         None => return Ok(()),
@@ -894,6 +945,31 @@ fn row_fault(row: &Row, decided: &Decided) -> Result<(), Box<Held>> {
         }
     };
     Err(Box::new(held))
+}
+
+fn check_enrolment(listed: &Listed, day: NaiveDate, decided: &Decided) -> Result<(), Box<Held>> {
+    let subject = &listed.code;
+    // A person who names the subject has seen the dates; the answer to these two reasons is the subject.
+    let confirmed = |wanted: Reason| {
+        decided
+            .find("", |reason, answer| {
+                (reason == wanted && matches!(answer, Answer::Subject(code) if code == subject)).then_some(())
+            })
+            .is_some()
+    };
+    if let Some(enrolled) = listed.enrolled.filter(|enrolled| day < *enrolled)
+        && !confirmed(Reason::BeforeEnrolment)
+    {
+        let wrong = format!("{day} lies before {subject}'s enrolment on {enrolled}");
+        return Err(Box::new(Held::row(Reason::BeforeEnrolment, wrong)));
+    }
+    if let Some(withdrawn) = listed.withdrawn.filter(|withdrawn| day > *withdrawn)
+        && !confirmed(Reason::AfterWithdrawal)
+    {
+        let wrong = format!("{day} lies after {subject}'s withdrawal on {withdrawn}");
+        return Err(Box::new(Held::row(Reason::AfterWithdrawal, wrong)));
+    }
+    Ok(())
 }
 
 fn doubled(written: &str, early: DateTime<Utc>, late: DateTime<Utc>) -> Held {

@@ -4,6 +4,8 @@
 //! does not stand first in its cell is a character like any other; nothing is allocated for a row once the buffers
 //! have grown to the size of the export's rows.
 
+use std::ops::Range;
+
 use memchr::{memchr, memchr_iter};
 
 /// Where a cell's text stands.
@@ -66,6 +68,16 @@ impl Cells {
             Some(span) if span.resolved => &self.resolved[span.start..span.end],
             Some(span) => &text[span.start..span.end],
             None => "",
+        }
+    }
+
+    /// Where a cell's text stands in the row's, or the text itself where it does not stand there as it is.
+    #[inline]
+    pub fn place(&self, index: usize) -> Result<Range<usize>, &str> {
+        match self.spans.get(index) {
+            Some(span) if span.resolved => Err(&self.resolved[span.start..span.end]),
+            Some(span) => Ok(span.start..span.end),
+            None => Err(""),
         }
     }
 

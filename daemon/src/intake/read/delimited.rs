@@ -207,10 +207,11 @@ impl<'a> Delimited<'a> {
 
     /// Gives the row the texts of the wanted columns.
     fn fill(&self, row: &mut Row) {
-        let Row { raw, text, ends, .. } = row;
         for &column in &self.table.columns {
-            text.push_str(self.splitter.cells.get(raw, column));
-            ends.push(text.len());
+            match self.splitter.cells.place(column) {
+                Ok(place) => row.point(place),
+                Err(text) => row.push(text),
+            }
         }
     }
 

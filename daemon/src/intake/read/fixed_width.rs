@@ -4,13 +4,15 @@
 //! character does too; no text is cut silently, so a row in which it cannot be told to which column a text belongs
 //! is held; every physical line is counted once, whatever the bytes are.
 
+use std::ops::Range;
+
 use memchr::memchr;
 use revisant_schema::plan::{FixedColumn, Header, Reader};
 
 use super::heading::{self, Above, Preamble, find_columns};
 use super::sieve::{Parts, Sieve, Taken};
 use super::text::{Line, Lines, readable};
-use super::{Bytes, FileFault, LineCounts, Row, RowFault, Rows, wanted};
+use super::{Bytes, FileFault, LineCounts, Row, RowFault, Rows, Span, wanted};
 
 /// The rows of a fixed-width export.
 pub struct FixedWidth<'a> {
@@ -114,21 +116,19 @@ impl<'a> FixedWidth<'a> {
     /// Reads the row of the line `first` into `row`; `false` when it is not one to be handed out.
     fn read_row(&mut self, first: &Line, row: &mut Row) -> bool {
         let (start, end) = readable(&row.raw, first.ending);
-        let Row { raw, text, ends, .. } = row;
+        let Row { raw, cells, fault, .. } = row;
         let cut = self.ruler.lay(trimmed(&raw[start..end]), &self.table);
         if self.sieve.sift(&raw[start..end], 1, &cut) {
             return false;
         }
-        row.fault = match cut.fault() {
-            Some(fault) => Some(RowFault::Unreadable(fault)),
-            None => {
-                for &column in &self.table.layout.wanted {
-                    text.push_str(cut.cell(column));
-                    ends.push(text.len());
-                }
-                self.sieve.unfinished(first)
+        *fault = cut.fault().map(RowFault::Unreadable);
+        if fault.is_none() {
+            for &column in &self.table.layout.wanted {
+                let place = cut.place(column);
+                cells.push(Span { from: start + place.start, to: start + place.end, own: false });
             }
-        };
+            *fault = self.sieve.unfinished(first);
+        }
         true
     }
 }
@@ -353,8 +353,17 @@ impl CutLine<'_> {
 
     /// A column's text, without the blanks around it.
     fn cell(&self, column: usize) -> &str {
-        let Some(column) = self.table.layout.columns.get(column) else { return "" };
-        self.text[self.byte(column.from)..self.byte(column.to)].trim_matches(is_blank)
+        &self.text[self.place(column)]
+    }
+
+    /// The bytes of the line at which that stands.
+    fn place(&self, column: usize) -> Range<usize> {
+        let Some(column) = self.table.layout.columns.get(column) else { return 0..0 };
+        let (from, to) = (self.byte(column.from), self.byte(column.to));
+        let text = &self.text[from..to];
+        let left = text.len() - text.trim_start_matches(is_blank).len();
+        let start = from + left;
+        start..start + text[left..].trim_end_matches(is_blank).len()
     }
 
     /// What is wrong with it as a row.

@@ -102,10 +102,19 @@ pub struct Row {
     pub raw: String,
     /// What is wrong with it.
     pub fault: Option<RowFault>,
+    /// Texts of cells that do not stand in `raw` as they are.
     text: String,
-    ends: Vec<usize>,
+    cells: Vec<Span>,
     /// The slots of cells that are numbers in the export itself.
     numbers: Vec<usize>,
+}
+
+/// Where a cell's text stands: in the row as exported, or in its own texts.
+#[derive(Debug, Clone, Copy)]
+struct Span {
+    from: usize,
+    to: usize,
+    own: bool,
 }
 
 /// Where a row stands in its export; no two rows of one export stand at the same place.
@@ -132,16 +141,16 @@ impl Row {
 
     /// The text of the wanted column `slot` as exported, without surrounding quotes and blanks; empty when absent.
     pub fn cell(&self, slot: usize) -> &str {
-        let Some(&end) = self.ends.get(slot) else { return "" };
-        let start = if slot == 0 { 0 } else { self.ends[slot - 1] };
-        &self.text[start..end]
+        let Some(&Span { from, to, own }) = self.cells.get(slot) else { return "" };
+        let text = if own { &self.text } else { &self.raw };
+        text.get(from..to).unwrap_or_default()
     }
 
     /// Empties the row for the next one.
     pub fn clear(&mut self) {
         self.raw.clear();
         self.text.clear();
-        self.ends.clear();
+        self.cells.clear();
         self.numbers.clear();
         self.fault = None;
         self.bytes = None;
@@ -149,14 +158,20 @@ impl Row {
 
     /// Adds the next wanted column's text.
     pub fn push(&mut self, cell: &str) {
+        let from = self.text.len();
         self.text.push_str(cell);
-        self.ends.push(self.text.len());
+        self.cells.push(Span { from, to: self.text.len(), own: true });
+    }
+
+    /// Adds the next wanted column's text by where it stands in [`Self::raw`], which then stays as it is.
+    fn point(&mut self, cell: std::ops::Range<usize>) {
+        self.cells.push(Span { from: cell.start, to: cell.end, own: false });
     }
 
     /// Adds the next wanted column's number, for formats whose numbers are no texts: whatever marks the plan states for
     /// texts, its decimal mark is a point and it has no thousands mark.
     pub fn push_number(&mut self, cell: &str) {
-        self.numbers.push(self.ends.len());
+        self.numbers.push(self.cells.len());
         self.push(cell);
     }
 

@@ -361,7 +361,11 @@ impl<'a> Lines<'a> {
 /// The part of a line that is read: without a form feed (or a mark left over from joining files) at its beginning
 /// and, on the last line, without the end marks of old disk formats (Ctrl-Z).
 pub fn readable(text: &str, ending: LineEnd) -> (usize, usize) {
-    let start = text.len() - text.trim_start_matches(['\u{c}', '\u{feff}']).len();
+    let start = match text.as_bytes().first() {
+        Some(b'\x0c' | 0xEF) => text.len() - text.trim_start_matches(['\u{c}', '\u{feff}']).len(),
+        // No other character is meant.
+        _ => 0,
+    };
     let end = match ending {
         LineEnd::Missing => text.trim_end_matches('\u{1a}').len(),
         _ => text.len(),

@@ -321,11 +321,7 @@ impl Rows for Workbook<'_> {
         loop {
             let before = self.lines();
             let Some(taken) = self.sheet.take()? else { return Ok(false) };
-            let between = taken.number.saturating_sub(before + 1);
-            if between > 0 {
-                self.counts.blank += between;
-                // As in a text, units may stand under a repeated header and a blank row.
-            }
+            self.counts.blank += taken.number.saturating_sub(before + 1);
             if self.read_row(row)? {
                 self.given += 1;
                 return Ok(true);

@@ -143,7 +143,8 @@ impl Outer {
     }
 
     fn put(&mut self, object: usize, node: &Node, text: &str) -> Result<(), FileFault> {
-        if node.here.is_empty() {
+        let twice = |place: &usize| self.cells.get(object * self.width + place) == Some(&Cell::Twice);
+        if node.here.iter().all(twice) {
             return Ok(());
         }
         let from = self.texts.len();
@@ -166,8 +167,9 @@ impl Outer {
         for (object, node) in below {
             if seen.iter().any(|(known, other)| known == object && std::ptr::eq(*other, *node)) {
                 self.spoil(*object, node);
+            } else {
+                seen.push((*object, node));
             }
-            seen.push((*object, node));
         }
     }
 

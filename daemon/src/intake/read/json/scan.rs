@@ -181,7 +181,7 @@ impl<F: Feed> Scan<F> {
 
     fn too_large(&self) -> FileFault {
         FileFault::TooLarge(format!(
-            "what ends on line {} or later is one row, key or text of more than {} MiB",
+            "near line {}: one row, key or text takes more than {} MiB; does \"rows\" in the plan name the right place?",
             self.place.line,
             LARGEST >> 20
         ))

@@ -69,35 +69,35 @@ impl Book {
         let Some(part) = package.part(main, most)? else { return Err(no_xml(main, "there is no such part")) };
         let mut markup = Markup::new(main, BufReader::new(part));
         let relations = relations.iter().map(|relation| (relation.id.as_str(), relation)).collect();
-        let (mut depth, mut in_sheets) = (0, false);
+        let mut in_sheets = false;
         loop {
             match markup.advance()? {
-                Event::Start(tag) => {
-                    let name = tag.local_name();
-                    match (depth, name.as_ref()) {
-                        (0, "workbook") => {}
-                        (0, other) => {
-                            let what = format!("it holds no workbook but \"{}\"", excerpt(other));
-                            return Err(FileFault::Unreadable(what));
-                        }
-                        (1, "workbookPr") => self.since_1904 = since_1904(&tag).map_err(|what| no_xml(main, &what))?,
-                        (1, "sheets") => in_sheets = true,
-                        (2, "sheet") if in_sheets => {
-                            let sheet = worksheet(&tag, &relations).map_err(|what| no_xml(main, &what))?;
-                            self.sheets.extend(sheet);
-                        }
-                        _ => {}
-                    }
-                    depth += 1;
+                (depth, Event::Start(tag)) => {
+                    in_sheets = depth > 1 && in_sheets || depth == 1 && tag.local_name().as_ref() == "sheets";
+                    self.take(depth, &tag, in_sheets, &relations).map_err(|what| no_xml(main, &what))?;
                 }
-                Event::End(_) => {
-                    depth -= 1;
-                    in_sheets &= depth > 1;
-                }
-                Event::Eof if depth == 0 => return Ok(()),
+                (_, Event::Eof) => return Ok(()),
                 _ => {}
             }
         }
+    }
+
+    /// Takes what an element of the workbook's main part says.
+    fn take(
+        &mut self,
+        depth: usize,
+        tag: &BytesStart<'_>,
+        in_sheets: bool,
+        relations: &HashMap<&str, &Relation>,
+    ) -> Result<(), String> {
+        match (depth, tag.local_name().as_ref()) {
+            (0, "workbook") => {}
+            (0, other) => return Err(format!("it holds no workbook but \"{}\"", excerpt(other))),
+            (1, "workbookPr") => self.since_1904 = since_1904(tag)?,
+            (2, "sheet") if in_sheets => self.sheets.extend(worksheet(tag, relations)?),
+            _ => {}
+        }
+        Ok(())
     }
 
     /// The sheet that the plan names.
@@ -126,7 +126,7 @@ impl Book {
 fn no_workbook(package: &mut Package) -> FileFault {
     let mut kind = String::new();
     // Workbooks of the other open standard say first what they are.
-    let said = package.part("mimetype", 128).ok().flatten().map(|part| std::io::read_to_string(part));
+    let said = package.part("mimetype", 128).ok().flatten().map(std::io::read_to_string);
     if let Some(Ok(said)) = said {
         kind = said;
     }
@@ -165,11 +165,11 @@ fn relations(package: &mut Package, of: &str) -> Result<Option<Vec<Relation>>, F
     let mut relations = Vec::new();
     loop {
         match markup.advance()? {
-            Event::Start(tag) if tag.local_name().as_ref() == "Relationship" => {
+            (1, Event::Start(tag)) if tag.local_name().as_ref() == "Relationship" => {
                 let relation = relation(&tag, folder).map_err(|what| no_xml(&stated, &what))?;
                 relations.extend(relation);
             }
-            Event::Eof => return Ok(Some(relations)),
+            (_, Event::Eof) => return Ok(Some(relations)),
             _ => {}
         }
     }

@@ -7,7 +7,7 @@ use std::borrow::Cow;
 use std::io::{self, BufRead, Read};
 
 use quick_xml::events::attributes::Attribute;
-use quick_xml::events::{BytesRef, BytesStart, Event};
+use quick_xml::events::{BytesDecl, BytesRef, BytesStart, Event};
 use quick_xml::{Reader, XmlVersion};
 
 use super::super::FileFault;
@@ -37,8 +37,9 @@ impl<R: BufRead> Markup<R> {
         Self { reader, buffer: vec![], depth: 0, part: part.to_owned() }
     }
 
-    /// The next event; an element without content is its start and its end.
-    pub fn advance(&mut self) -> Result<Event<'_>, FileFault> {
+    /// The next event, and how many elements lie around what it is about; an element without content is its start
+    /// and its end.
+    pub fn advance(&mut self) -> Result<(usize, Event<'_>), FileFault> {
         let Self { reader, buffer, depth, part } = self;
         buffer.clear();
         reader.get_mut().left = LONGEST_EVENT;
@@ -47,23 +48,20 @@ impl<R: BufRead> Markup<R> {
             Err(quick_xml::Error::Io(error)) => return Err(fault_of(&error, part)),
             Err(error) => return Err(no_xml(part, &error.to_string())),
         };
-        match &event {
+        let around = match &event {
             Event::Start(_) if *depth == DEEPEST => {
                 let what = format!("the elements of the workbook's part {} lie too deep in each other", excerpt(part));
                 return Err(FileFault::TooLarge(what));
             }
-            Event::Start(_) => *depth += 1,
-            Event::End(_) => *depth = depth.saturating_sub(1),
+            Event::Start(_) => *depth,
+            Event::End(_) => depth.saturating_sub(1),
             Event::Eof if *depth > 0 => return Err(no_xml(part, "it ends inside an element")),
             Event::DocType(_) => return Err(no_xml(part, "it declares a document type, as no workbook does")),
-            Event::Decl(declared) => match declared.encoding() {
-                None => {}
-                Some(Ok(name)) if name.eq_ignore_ascii_case("utf-8") => {}
-                Some(_) => return Err(no_xml(part, "it is not in UTF-8")),
-            },
-            _ => {}
-        }
-        Ok(event)
+            Event::Decl(declared) if !is_utf8(declared) => return Err(no_xml(part, "it is not in UTF-8")),
+            _ => *depth,
+        };
+        *depth = around + usize::from(matches!(event, Event::Start(_)));
+        Ok((around, event))
     }
 
     /// A fault of this part.
@@ -101,8 +99,25 @@ pub fn attribute_where<'t>(
     Ok(None)
 }
 
+fn is_utf8(declared: &BytesDecl<'_>) -> bool {
+    match declared.encoding() {
+        None => true,
+        Some(name) => name.is_ok_and(|name| name.eq_ignore_ascii_case("utf-8")),
+    }
+}
+
+/// The characters that an event stands for; `None` if it stands for none.
+pub fn characters<'e>(event: &'e Event<'_>) -> Result<Option<Cow<'e, str>>, String> {
+    Ok(match event {
+        Event::Text(text) => Some(text.xml10_content()),
+        Event::CData(text) => Some(text.xml10_content()),
+        Event::GeneralRef(reference) => Some(Cow::Owned(referred(reference)?.to_string())),
+        _ => None,
+    })
+}
+
 /// The character that a reference stands for: one of the five of XML itself, or one by its number.
-pub fn referred(reference: &BytesRef<'_>) -> Result<char, String> {
+fn referred(reference: &BytesRef<'_>) -> Result<char, String> {
     match reference.as_ref() {
         "amp" => Ok('&'),
         "lt" => Ok('<'),

@@ -22,6 +22,10 @@ use super::super::{Bytes, FileFault};
 
 /// Every entry of an archive's directory begins so.
 const ENTRY: &[u8] = b"PK\x01\x02";
+/// What says where the directory's end of a very large archive stands begins so.
+const LOCATOR: &[u8] = b"PK\x06\x07";
+/// It stands no further from the file's end: the end of the directory with the longest comment, and its own length.
+const LONGEST_END: usize = (1 << 16) + 22 + 20;
 /// The container of workbooks of before 2007, and of protected ones.
 const OLE: &[u8] = b"\xD0\xCF\x11\xE0\xA1\xB1\x1A\xE1";
 /// How much is inflated at once.
@@ -103,7 +107,8 @@ impl Package {
     pub fn open(bytes: &dyn Bytes, limits: Limits) -> Result<Self, FileFault> {
         let file = load(bytes, limits.file)?;
         told_by_bytes(&file)?;
-        if memmem::find_iter(&file, ENTRY).nth(limits.entries).is_some() {
+        let many = memmem::find_iter(&file, ENTRY).nth(limits.entries).is_some();
+        if many || declares_more(&file, limits.entries as u64) {
             return Err(FileFault::TooLarge(format!("the workbook has more than {} parts", limits.entries)));
         }
         // The archive begins where the file does: else the end of another archive, stored inside one that was cut
@@ -137,10 +142,11 @@ impl Package {
         }
         let (send, blocks) = sync_channel(BLOCKS_AHEAD);
         let part = name.to_owned();
-        let inflate = move || match self.part(&part, most) {
-            Ok(Some(part)) => pump(part, &send),
-            // It was there a moment ago: the reader meets a stream without an end, which is a fault.
-            Ok(None) | Err(_) => {}
+        let inflate = move || {
+            // It was there a moment ago; were it not, the reader would meet a stream without an end, which is a fault.
+            if let Ok(Some(part)) = self.part(&part, most) {
+                pump(part, &send);
+            }
         };
         thread::Builder::new().name("workbook part".to_owned()).spawn(inflate)?;
         Ok(Stream { blocks, block: vec![], at: 0, ended: false })
@@ -179,6 +185,18 @@ fn protected() -> FileFault {
 /// What to say of a workbook of a kind that is not read.
 pub fn other_kind(kind: &str) -> FileFault {
     FileFault::Unreadable(format!("a workbook of this kind ({kind}) is not read; save it as .xlsx"))
+}
+
+/// Whether the directory of a very large archive (4.3.14 and 4.3.15 of the format's description, APPNOTE.TXT 6.3.9)
+/// declares more entries, for which room would be made at once.
+fn declares_more(file: &[u8], most: u64) -> bool {
+    let word = |at: usize| file.get(at..at.checked_add(8)?)?.try_into().ok().map(u64::from_le_bytes);
+    let declared = |locator: usize| {
+        let record = usize::try_from(word(locator.checked_add(8)?)?).ok()?;
+        word(record.checked_add(32)?)
+    };
+    let tail = file.len().saturating_sub(LONGEST_END);
+    memmem::find_iter(&file[tail..], LOCATOR).any(|at| declared(tail + at).is_some_and(|count| count > most))
 }
 
 /// The parts by their names. Two of one name could be read as either, so they are a fault.

@@ -9,7 +9,7 @@ use quick_xml::events::{BytesStart, Event};
 use super::super::FileFault;
 use super::super::heading::excerpt;
 use super::super::text::LONGEST_LINE;
-use super::markup::{Markup, referred};
+use super::markup::{Markup, characters};
 use super::number::add_number;
 use super::package::Stream;
 use super::texts::{Rich, Texts, unescape};
@@ -101,6 +101,8 @@ enum Inside {
     Formula,
     /// A cell's own text.
     Text,
+    /// After all of it.
+    After,
 }
 
 /// What a cell says it holds.
@@ -171,28 +173,17 @@ impl Sheet {
         while !self.done {
             let Self { markup, texts, at, done } = self;
             let outcome = match markup.advance()? {
-                Event::Start(tag) => at.start(&tag, row),
-                Event::End(_) => match at.end(texts, row) {
+                (_, Event::Start(tag)) => at.start(&tag, row),
+                (_, Event::End(_)) => match at.end(texts, row) {
                     Ok(true) if !row.cells.is_empty() || row.too_long => return Ok(true),
                     outcome => outcome.map(drop),
                 },
-                Event::Text(text) => {
-                    at.add(&text.xml10_content());
-                    Ok(())
-                }
-                Event::CData(text) => {
-                    at.add(&text.xml10_content());
-                    Ok(())
-                }
-                Event::GeneralRef(reference) => {
-                    referred(&reference).map(|character| at.add(character.encode_utf8(&mut [0; 4])))
-                }
-                Event::Eof if at.had_rows => {
+                (_, Event::Eof) if at.had_rows => {
                     *done = true;
                     Ok(())
                 }
-                Event::Eof => Err("it holds no rows".to_owned()),
-                _ => Ok(()),
+                (_, Event::Eof) => Err("it holds no rows".to_owned()),
+                (_, other) => at.take(&other),
             };
             outcome.map_err(|what| self.fault(&what))?;
         }
@@ -214,26 +205,9 @@ impl At {
             self.passed += 1;
             return Ok(());
         }
-        let name = tag.local_name();
-        match (self.inside, name.as_ref()) {
+        match (self.inside, tag.local_name().as_ref()) {
             (Inside::Row, "c") => self.start_cell(tag)?,
-            (Inside::Cell, "v") if self.cell.valued => return Err("a cell has two values".to_owned()),
-            (Inside::Cell, "v") => {
-                self.cell.valued = true;
-                self.inside = Inside::Value;
-            }
-            (Inside::Cell, "f") => {
-                self.cell.formula = true;
-                self.inside = Inside::Formula;
-            }
-            (Inside::Cell, "is") => {
-                self.rich.begin();
-                self.rich_depth = 0;
-                self.cell.kind = Kind::OwnText;
-                self.cell.valued = true;
-                self.cell.value.clear();
-                self.inside = Inside::Text;
-            }
+            (Inside::Cell, name @ ("v" | "f" | "is")) => self.start_value(name)?,
             (Inside::Text, _) => {
                 self.rich_depth += 1;
                 self.rich.start(tag)?;
@@ -247,6 +221,32 @@ impl At {
             }
             (Inside::Worksheet, _) | (Inside::Row | Inside::Cell, "extLst") => self.passed = 1,
             (_, other) => return Err(format!("\"{}\" stands where it should not", excerpt(other))),
+        }
+        Ok(())
+    }
+
+    /// What a cell holds begins: a value, a formula or a text of its own.
+    fn start_value(&mut self, name: &str) -> Result<(), String> {
+        match name {
+            "f" => {
+                self.cell.formula = true;
+                self.inside = Inside::Formula;
+            }
+            "v" if self.cell.valued && self.cell.kind != Kind::OwnText => {
+                return Err("a cell has two values".to_owned());
+            }
+            "v" => {
+                self.cell.valued = true;
+                self.inside = Inside::Value;
+            }
+            _ => {
+                self.cell.kind = Kind::OwnText;
+                self.cell.valued = true;
+                self.cell.value.clear();
+                self.rich.begin(true);
+                self.rich_depth = 0;
+                self.inside = Inside::Text;
+            }
         }
         Ok(())
     }
@@ -309,17 +309,21 @@ impl At {
         Ok(letters.bytes().fold(0, |column, letter| column * 26 + value(letter)) - 1)
     }
 
-    /// Characters.
-    fn add(&mut self, characters: &str) {
+    /// What stands between elements.
+    fn take(&mut self, event: &Event<'_>) -> Result<(), String> {
         // What is longer than a row may be spoils the row when the cell ends.
-        if self.cell.value.len() <= LONGEST_LINE && self.passed == 0 {
-            match self.inside {
-                // Beside a text of its own a cell's value says nothing.
-                Inside::Value if self.cell.kind != Kind::OwnText => self.cell.value.push_str(characters),
-                Inside::Text => self.rich.add(characters, &mut self.cell.value),
-                _ => {}
-            }
+        if self.passed > 0 || self.cell.value.len() > LONGEST_LINE {
+            return Ok(());
         }
+        match self.inside {
+            // Beside a text of its own a cell's value says nothing.
+            Inside::Value if self.cell.kind != Kind::OwnText => {
+                self.cell.value.push_str(characters(event)?.as_deref().unwrap_or_default());
+            }
+            Inside::Text => self.rich.take(event, &mut self.cell.value)?,
+            _ => {}
+        }
+        Ok(())
     }
 
     /// An element ends; `true` when it was a row.
@@ -345,7 +349,7 @@ impl At {
                 return Ok(true);
             }
             Inside::Rows => Inside::Worksheet,
-            Inside::Worksheet | Inside::Part => Inside::Part,
+            Inside::Worksheet | Inside::Part | Inside::After => Inside::After,
         };
         Ok(false)
     }

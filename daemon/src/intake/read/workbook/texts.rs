@@ -8,7 +8,8 @@ use std::io::BufReader;
 use quick_xml::events::{BytesStart, Event};
 
 use super::super::FileFault;
-use super::markup::{Markup, attribute, no_xml, referred};
+use super::super::text::LONGEST_LINE;
+use super::markup::{Markup, attribute, characters, no_xml};
 use super::package::Package;
 
 /// The texts that cells share, one after the other in one buffer.
@@ -26,42 +27,39 @@ impl Texts {
         let mut markup = Markup::new(part, BufReader::with_capacity(1 << 16, bytes));
         let mut texts = Self::default();
         let mut rich = Rich::default();
-        let mut depth = 0_usize;
         loop {
-            match markup.advance()? {
-                Event::Start(tag) => {
-                    match depth {
-                        0 if tag.local_name().as_ref() != "sst" => {
-                            return Err(no_xml(part, "it is no list of texts"));
-                        }
-                        0 => {}
-                        1 if tag.local_name().as_ref() == "si" => rich.begin(),
-                        1 => rich.pass(),
-                        _ => rich.start(&tag).map_err(|what| no_xml(part, &what))?,
-                    }
-                    depth += 1;
+            let outcome = match markup.advance()? {
+                (0, Event::Start(tag)) if tag.local_name().as_ref() != "sst" => {
+                    Err("it is no list of texts".to_owned())
                 }
-                Event::End(tag) => {
-                    depth -= 1;
-                    match depth {
-                        1 if tag.local_name().as_ref() == "si" => texts.ends_here(limits.text_count)?,
-                        0 | 1 => {}
-                        _ => rich.end(&mut texts.text),
-                    }
+                (0, Event::Start(_) | Event::End(_)) => Ok(()),
+                (1, Event::Start(tag)) => {
+                    rich.begin(tag.local_name().as_ref() == "si");
+                    Ok(())
                 }
-                Event::Text(text) => rich.add(&text.xml10_content(), &mut texts.text),
-                Event::CData(text) => rich.add(&text.xml10_content(), &mut texts.text),
-                Event::GeneralRef(reference) => {
-                    let character = referred(&reference).map_err(|what| no_xml(part, &what))?;
-                    rich.add(character.encode_utf8(&mut [0; 4]), &mut texts.text);
+                (_, Event::Start(tag)) => rich.start(&tag),
+                (1, Event::End(tag)) if tag.local_name().as_ref() == "si" => {
+                    texts.ends_here(limits.text_count)?;
+                    Ok(())
                 }
-                Event::Eof => return Ok(texts),
-                _ => {}
-            }
+                (_, Event::End(_)) => {
+                    rich.end(&mut texts.text);
+                    Ok(())
+                }
+                (_, Event::Eof) => return Ok(texts),
+                (_, other) => rich.take(&other, &mut texts.text),
+            };
+            outcome.map_err(|what| no_xml(part, &what))?;
         }
     }
 
+    /// The text read last is complete.
     fn ends_here(&mut self, most: usize) -> Result<(), FileFault> {
+        let start = self.ends.last().map_or(0, |&end| end as usize);
+        if self.text.len() - start > LONGEST_LINE {
+            let what = format!("a text that cells share has more than {LONGEST_LINE} bytes");
+            return Err(FileFault::TooLarge(what));
+        }
         let end = u32::try_from(self.text.len()).ok().filter(|_| self.ends.len() < most);
         let end = end.ok_or_else(|| FileFault::TooLarge(format!("the cells share more than {most} texts")))?;
         self.ends.push(end);
@@ -82,7 +80,7 @@ enum Inside {
     /// The text's element itself, or one of its runs.
     #[default]
     Text,
-    /// Characters of the text, which began there.
+    /// Characters of the text, the first of which stands there.
     Characters { from: usize, keep: bool },
     /// So deep in something that is no part of the text.
     Passed(usize),
@@ -95,14 +93,9 @@ pub struct Rich {
 }
 
 impl Rich {
-    /// A text's element begins.
-    pub fn begin(&mut self) {
-        self.inside = Inside::Text;
-    }
-
-    /// Something else begins that is to be passed over.
-    pub fn pass(&mut self) {
-        self.inside = Inside::Passed(1);
+    /// An element begins that is a text, or else is to be passed over.
+    pub fn begin(&mut self, is_text: bool) {
+        self.inside = if is_text { Inside::Text } else { Inside::Passed(1) };
     }
 
     /// An element begins inside it.
@@ -119,6 +112,14 @@ impl Rich {
                 _ => Inside::Passed(1),
             },
         };
+        Ok(())
+    }
+
+    /// What stands between elements; characters of the text are added to `text`.
+    pub fn take(&mut self, event: &Event<'_>, text: &mut String) -> Result<(), String> {
+        if let Some(characters) = characters(event)? {
+            self.add(&characters, text);
+        }
         Ok(())
     }
 

@@ -90,9 +90,12 @@ pub struct Source<'a> {
     passed: u64,
     drained: bool,
     text: String,
+    /// The byte of the export at which `text` begins, if the encoding is UTF-8.
+    text_begins: u64,
     /// How much of `text` has been taken.
     at: usize,
-    /// Pairs of positions in `text` and in the export that belong together; the first is where `text` begins.
+    /// Pairs of positions in `text` and in the export that belong together; the first is where `text` begins. Nothing
+    /// asks for them in UTF-8.
     pairs: Vec<(usize, u64)>,
     place: Place,
     /// The text taken since [`Self::forget`].
@@ -120,6 +123,7 @@ impl<'a> Source<'a> {
             passed,
             drained: false,
             text: String::new(),
+            text_begins: passed,
             at: 0,
             pairs: vec![(0, passed)],
             place: Place::START,
@@ -136,9 +140,12 @@ impl<'a> Source<'a> {
 
     /// The export's byte at which it stands: exact before `<` and behind `>`.
     pub fn offset(&self) -> u64 {
+        if self.coding == UTF_8 {
+            return self.text_begins + self.at as u64;
+        }
         let next = self.pairs.partition_point(|(text, _)| *text <= self.at);
         let (text, byte) = next.checked_sub(1).and_then(|last| self.pairs.get(last)).copied().unwrap_or_default();
-        // Between two pairs UTF-8 has as many bytes as the text. In others that is near enough, and never too far.
+        // Between two pairs this is no more than near.
         let into = byte + (self.at - text) as u64;
         self.pairs.get(next).map_or(into, |(_, end)| into.min(end.saturating_sub(1)))
     }
@@ -178,10 +185,11 @@ impl<'a> Source<'a> {
 
     /// Reads and decodes until there is text, a fault or the end.
     fn refill(&mut self) -> io::Result<()> {
+        self.text_begins += self.text.len() as u64;
         self.text.clear();
         self.at = 0;
         self.pairs.clear();
-        self.pairs.push((0, self.passed));
+        self.pairs.push((0, self.begun(self.passed)));
         while self.text.is_empty() && self.wrong.is_none() && !self.drained {
             let count = read_some(&mut *self.stream, &mut self.raw)?;
             self.drained = count == 0;
@@ -214,7 +222,7 @@ impl<'a> Source<'a> {
                 return;
             }
             from += piece;
-            self.pairs.push((self.text.len(), self.passed + from as u64));
+            self.pairs.push((self.text.len(), self.begun(self.passed + from as u64)));
             if from >= count {
                 break;
             }
@@ -228,11 +236,28 @@ impl<'a> Source<'a> {
         if self.coding == UTF_8 {
             return bytes.len();
         }
-        let unit = if self.coding == UTF_16LE || self.coding == UTF_16BE { 2 } else { 1 };
-        let Some(found) = memchr2(b'<', b'>', bytes) else { return bytes.len() };
-        let into = ((offset + found as u64) % unit as u64) as usize;
-        let end = if found > into { found - into } else { found + unit - into };
+        let unit = self.unit();
+        let into = |at: u64| (at % unit as u64) as usize;
+        let end = match memchr2(b'<', b'>', bytes) {
+            // A code unit that was begun before is ended first, since it may be one of them.
+            _ if into(offset) > 0 => unit - into(offset),
+            None => bytes.len(),
+            Some(found) => match found - into(offset + found as u64) {
+                0 => unit,
+                before => before,
+            },
+        };
         end.min(bytes.len())
+    }
+
+    /// Bytes of one code unit.
+    fn unit(&self) -> usize {
+        if self.coding == UTF_16LE || self.coding == UTF_16BE { 2 } else { 1 }
+    }
+
+    /// Where the text begins whose bytes have been read up to `offset`, perhaps to the middle of a code unit.
+    fn begun(&self, offset: u64) -> u64 {
+        offset - offset % self.unit() as u64
     }
 
     fn undecodable(&self, offset: u64) -> String {
@@ -287,7 +312,7 @@ impl BufRead for Source<'_> {
             {
                 return Err(self.fail(FileFault::Io(fault)));
             }
-            if self.text.is_empty()
+            if self.at >= self.text.len()
                 && let Some(wrong) = self.wrong.take()
             {
                 let fault = self.place.unreadable(wrong);
