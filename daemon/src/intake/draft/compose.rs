@@ -2,7 +2,7 @@
 
 use std::collections::BTreeSet;
 
-use revisant_schema::plan::{Encoding, Format, Header, Measure, Plan, Sheet};
+use revisant_schema::plan::{Encoding, Format, Header, Measure, Plan, PlanFiles, Sheet, parse};
 
 use super::grid::{self, Grid, Layout};
 use super::labels;
@@ -14,7 +14,7 @@ use super::rest::{self, Keys};
 use super::values::{self, Entry, Hints, Numeric};
 use super::when;
 use super::words;
-use super::{Asked, Draft, DraftFault, Misfit, Remark, book, preview, text, units};
+use super::{Asked, Draft, DraftFault, Misfit, Remark, book, into, preview, text, units};
 
 /// The samples under one layout.
 struct Laid {
@@ -269,6 +269,9 @@ impl Found {
         if self.entries.is_empty() {
             self.entries = numeric.iter().map(|it| values::unknown_entry(rows, it)).collect();
         }
+        if self.entries.is_empty() {
+            self.entries.push(no_value("which column holds the values? None of the samples' columns holds numbers"));
+        }
         if let Some(operator) = rest::operator(rows, &|at| !used.contains(&at)) {
             used.extend(operator.column);
             self.operator = Some(operator.line);
@@ -499,6 +502,7 @@ impl Written {
         let unsure = lines()
             .filter_map(|line| if let Mark::Unsure(text) = &line.mark { Some(remark(line, text)) } else { None })
             .collect();
+        let (toml, gaps) = held_together(asked, toml, gaps);
         let spots = preview::Spots {
             subject: &found.subject.spot,
             taken_at: &found.taken_at.spot,
@@ -507,6 +511,27 @@ impl Written {
         };
         let preview = preview::preview(asked, &toml, gaps.is_empty(), &laid.grid, &spots);
         Draft { toml, gaps, unsure, misfits: misfits(asked, laid, &found.needed), preview }
+    }
+}
+
+/// Sees to it that a draft with gaps is no sound plan, and that one without is: whatever an export's labels made of it.
+fn held_together(asked: &Asked<'_>, toml: String, mut gaps: Vec<Remark>) -> (String, Vec<Remark>) {
+    let Some(main) = asked.plan_text.and_then(|text| into::alone(text, &toml)) else { return (toml, gaps) };
+    let faults = parse(&PlanFiles { main, readers: vec![] }).err();
+    let put = |line: Line| {
+        let mut text = String::new();
+        line.write(&mut text);
+        toml.replacen("[[instrument]]\n", &format!("[[instrument]]\n{text}"), 1)
+    };
+    match (faults, gaps.is_empty()) {
+        (None, false) => (put(Line::gap("fill_in", "true", "take this line out when all else is filled in")), gaps),
+        (Some(faults), true) => {
+            let wrong = faults.0.first().map(|fault| format!("{}: {}", fault.key, fault.wrong)).unwrap_or_default();
+            let line = Line { key: String::new(), text: String::new(), mark: Mark::Gap(wrong.clone()) };
+            gaps.push(Remark { key: "reader".to_owned(), text: wrong });
+            (put(line), gaps)
+        }
+        _ => (toml, gaps),
     }
 }
 

@@ -130,9 +130,19 @@ fn clean(text: &str) -> String {
     text.chars().map(|c| if c.is_control() { ' ' } else { c }).collect()
 }
 
-/// A text as TOML writes it.
+/// A text as a basic string of TOML, on one line.
 pub fn quote(text: &str) -> String {
-    toml_edit::Value::from(text).to_string()
+    let mut quoted = String::from("\"");
+    for c in text.chars() {
+        match c {
+            '"' | '\\' => quoted.extend(['\\', c]),
+            '\t' => quoted.push_str("\\t"),
+            c if c.is_control() => quoted.push_str(&format!("\\u{:04X}", u32::from(c))),
+            c => quoted.push(c),
+        }
+    }
+    quoted.push('"');
+    quoted
 }
 
 /// An expression as TOML writes it: literally where that is possible.
