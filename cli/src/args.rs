@@ -52,6 +52,20 @@ On a terminal, what is not given is asked for; elsewhere --code, --zone, --measu
 The plan is never overwritten.
 JSON: {\"plan\": path, \"folders\": [path]}")]
     New(New),
+    /// Draft an instrument's reader from sample exports
+    #[command(after_help = "\
+Example:
+  revisant probe exports/dyn-1/*.csv --into study.toml
+
+The columns are held against the plan: its subjects' pattern, visits, measures
+and units. A line that is not certain says why after `# unsure:`; a line that a
+person must complete says what after `# FILL IN:`. Until all of those are filled
+in, `revisant check` refuses the plan and nothing is filed by it; a service that
+is running goes on with the last sound plan. More exports make more certain.
+Exit status 3 when something must be filled in, or a sample does not fit.
+JSON: {\"code\", \"toml\", \"gaps\": [{\"key\", \"text\"}], \"unsure\",
+\"misfits\": [{\"sample\", \"why\"}], \"preview\", \"into\"}")]
+    Probe(Probe),
     /// Say what is wrong with the plan, and what a changed plan would change
     #[command(after_help = "\
 Example:
@@ -245,6 +259,23 @@ pub struct New {
     /// There are no instruments yet, and none is asked for
     #[arg(long, conflicts_with = "instrument")]
     pub no_instrument: bool,
+}
+
+/// `probe`
+#[derive(Debug, Group)]
+pub struct Probe {
+    /// Sample exports of one instrument
+    #[arg(required = true, value_name = "FILE")]
+    pub files: Vec<PathBuf>,
+    /// The instrument's code; default: from its folder's name
+    #[arg(long)]
+    pub code: Option<String>,
+    /// The instrument's export folder, relative to the plan; default: the folder that holds all samples
+    #[arg(long, value_name = "DIR")]
+    pub folder: Option<PathBuf>,
+    /// Add the instrument to this plan; all else in the file stays as it is
+    #[arg(long, value_name = "PLAN")]
+    pub into: Option<PathBuf>,
 }
 
 /// `check`

@@ -8,7 +8,7 @@ use std::sync::Arc;
 use revisant_daemon::intake::collect::{self, IntakeLock, Progress, Report};
 use revisant_daemon::intake::error::{IntakeError, WouldChange};
 use revisant_daemon::intake::rules::Rules;
-use revisant_daemon::intake::{plan as force, replace, sample};
+use revisant_daemon::intake::{draft, plan as force, replace, sample};
 use revisant_schema::hold::Answer;
 use revisant_schema::plan::{Loaded, Plan};
 use revisant_schema::records::exports::ExportState;
@@ -20,6 +20,24 @@ use serde_json::{Map, Value as Json, json};
 
 use crate::error::{Exit, Failure};
 use crate::study::PROGRAM;
+
+pub use revisant_daemon::intake::draft::{Asked, Draft, PreviewRow, Sample as SampleExport};
+
+/// Drafts an instrument from its sample exports.
+pub fn draft(asked: &Asked<'_>) -> Result<Draft, Failure> {
+    draft::draft(asked).map_err(|fault| Failure::new("samples", fault.to_string()))
+}
+
+/// A plan's text with the drafted instrument in it; all else stays byte for byte.
+pub fn draft_into(text: &str, draft: &Draft, code: &str) -> Result<String, Failure> {
+    draft::into::insert(text, &draft.toml, code)
+        .map_err(|fault| Failure::refused(format!("the plan is as before: {fault}")))
+}
+
+/// What a plan says besides its instruments, which need not be sound for drafting one more.
+pub fn without_instruments(text: &str) -> Option<String> {
+    draft::into::without_instruments(text)
+}
 
 /// The plan that is in force now.
 pub struct PlanInForce {

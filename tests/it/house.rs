@@ -251,8 +251,9 @@ fn the_top_level_is_as_laid_out() {
 }
 
 /// The commands of the vocabulary that this version has.
-const COMMANDS: [&str; 19] = [
+const COMMANDS: [&str; 20] = [
     "new",
+    "probe",
     "check",
     "roster",
     "collect",

@@ -13,6 +13,7 @@ mod holds;
 mod house;
 mod instruments;
 mod kills;
+mod probe;
 mod properties;
 mod readings;
 mod reference;

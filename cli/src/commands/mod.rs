@@ -12,6 +12,7 @@ mod due;
 mod enter;
 mod holds;
 mod new;
+mod probe;
 mod provenance;
 mod readings;
 mod roster;
@@ -33,6 +34,7 @@ pub type Done = Result<Exit, Failure>;
 pub fn run(context: &mut Context<'_, '_>, command: &Command) -> Done {
     match command {
         Command::New(args) => new::run(context, args),
+        Command::Probe(args) => probe::run(context, args),
         Command::Check(args) => check::run(context, args),
         Command::Roster(args) => roster::run(context, args),
         Command::Collect(args) => collect::run(context, args),

@@ -2,6 +2,7 @@
 
 pub mod account;
 pub mod collect;
+pub mod draft;
 pub mod error;
 pub mod file;
 pub mod keep;

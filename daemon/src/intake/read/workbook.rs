@@ -109,6 +109,39 @@ fn heading_texts(row: &SheetRow) -> Result<Vec<String>, FileFault> {
     Ok(row.texts())
 }
 
+/// The beginning of a sheet.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Glance {
+    /// The sheet's name.
+    pub name: String,
+    /// The texts of its rows, from the first row of the sheet on; rows without a text are empty.
+    pub rows: Vec<Vec<String>>,
+}
+
+/// The beginning of every sheet, for drafting a reader: no more than `most` rows of each.
+pub fn glance(bytes: &dyn Bytes, most: usize) -> Result<Vec<Glance>, FileFault> {
+    let book = Book::read(&mut Package::open(bytes, Limits::default())?)?;
+    book.sheets
+        .iter()
+        .map(|sheet| Ok(Glance { name: sheet.name.clone(), rows: beginning(bytes, &book, &sheet.part, most)? }))
+        .collect()
+}
+
+fn beginning(bytes: &dyn Bytes, book: &Book, part: &str, most: usize) -> Result<Vec<Vec<String>>, FileFault> {
+    let mut package = Package::open(bytes, Limits::default())?;
+    let texts = match &book.texts {
+        Some(part) => Texts::read(&mut package, part)?,
+        None => Texts::default(),
+    };
+    let mut sheet = Sheet::new(part, package.stream(part)?, texts);
+    let (mut row, mut rows) = (SheetRow::default(), vec![]);
+    while sheet.next_row(&mut row)? && row.number <= most as u64 {
+        rows.resize(usize::try_from(row.number).unwrap_or(most).saturating_sub(1), vec![]);
+        rows.push(row.texts());
+    }
+    Ok(rows)
+}
+
 impl<'a> Workbook<'a> {
     /// Finds the sheet, the header and the columns that the plan names, and stands before the first row.
     pub fn open(reader: &'a Reader, sheet: &plan::Sheet, bytes: &dyn Bytes) -> Result<Self, FileFault> {

@@ -21,7 +21,7 @@ const MOST_NAMED: usize = 10;
 /// A workbook's contents.
 pub struct Book {
     /// The worksheets in the workbook's order, hidden ones too.
-    sheets: Vec<Worksheet>,
+    pub sheets: Vec<Worksheet>,
     /// Whether day numbers count from 1904.
     pub since_1904: bool,
     /// The part that holds the texts that cells share.
