@@ -158,9 +158,13 @@ proptest! {
 /// from memory).
 #[test]
 fn tabled_critical_values() {
-    for (means, df, upper, want) in
-        [(3, 10.0, 0.05, 3.877), (4, 20.0, 0.05, 3.958), (5, 60.0, 0.01, 4.818), (10, 120.0, 0.05, 4.560), (3, 2.0, 0.05, 8.331)]
-    {
+    for (means, df, upper, want) in [
+        (3, 10.0, 0.05, 3.877),
+        (4, 20.0, 0.05, 3.958),
+        (5, 60.0, 0.01, 4.818),
+        (10, 120.0, 0.05, 4.560),
+        (3, 2.0, 0.05, 8.331),
+    ] {
         let q = StudentizedRange::new(means, df).unwrap().upper_quantile(upper).unwrap();
         assert!((q - want).abs() < 6e-4, "{means} {df}: {q}");
     }
