@@ -33,6 +33,7 @@
 
 #![forbid(unsafe_code)]
 
+pub mod agreement;
 pub mod anova;
 pub mod contrasts;
 pub mod design;

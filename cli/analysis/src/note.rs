@@ -4,6 +4,7 @@
 
 use std::fmt;
 
+use crate::agreement::Form;
 use crate::contrasts::ContrastKind;
 
 /// Why something in a result is `None`, or needs a word of caution.
@@ -69,6 +70,17 @@ pub enum Note {
         /// Its differences other than zero.
         differences: usize,
     },
+    /// This intraclass correlation or its interval is not defined for these mean squares.
+    IccUndefined {
+        /// Which form.
+        form: Form,
+    },
+    /// No subject has two readings: there is no error within subjects.
+    NoRepeatedReading,
+    /// The mean of a subject's readings is zero: the coefficient of variation is not defined.
+    CvUndefined,
+    /// Readings have both signs: a coefficient of variation says little about them.
+    CvOfBothSigns,
 }
 
 impl fmt::Display for Note {
@@ -116,6 +128,18 @@ impl fmt::Display for Note {
                 f,
                 "{contrast}: with {differences} differences no interval has the confidence asked for; the widest is given"
             ),
+            Self::IccUndefined { form } => {
+                write!(f, "{} or its interval is not defined for readings that vary like this", form.name())
+            }
+            Self::NoRepeatedReading => {
+                write!(f, "no subject has two readings, so there is no variation within subjects")
+            }
+            Self::CvUndefined => {
+                write!(f, "a subject's mean is zero, so the coefficient of variation is not defined")
+            }
+            Self::CvOfBothSigns => {
+                write!(f, "some readings are negative and some positive, so the coefficient of variation says little")
+            }
         }
     }
 }
