@@ -81,6 +81,10 @@ pub enum Note {
     CvUndefined,
     /// Readings have both signs: a coefficient of variation says little about them.
     CvOfBothSigns,
+    /// The groups have no more subjects than there are groups: there is no error to test against.
+    NoErrorDegrees,
+    /// The assumed covariance is not spherical: the power formula promises more than a corrected test has in small samples.
+    PowerOptimistic,
 }
 
 impl fmt::Display for Note {
@@ -140,6 +144,13 @@ impl fmt::Display for Note {
             Self::CvOfBothSigns => {
                 write!(f, "some readings are negative and some positive, so the coefficient of variation says little")
             }
+            Self::NoErrorDegrees => {
+                write!(f, "there are no more subjects than groups, so there is no error to test against")
+            }
+            Self::PowerOptimistic => write!(
+                f,
+                "the assumed covariance is not spherical, so the formula promises more power than a corrected test has with few subjects; simulate before relying on it"
+            ),
         }
     }
 }

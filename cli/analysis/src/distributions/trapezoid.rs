@@ -26,9 +26,9 @@ pub(super) fn whole_line(start: f64, width: f64, rate: f64, log_f: impl Fn(f64) 
     }
     let f = |u: f64| (log_f(u) - top).exp();
     let mut step = width / 2.0;
-    let mut sum = step * (f(peak) + rightward(peak, step, &f)? + leftward(peak, step, rate, &f)?);
+    let mut sum = step * (f(peak) + rightward(peak, step, f)? + leftward(peak, step, rate, f)?);
     for _ in 0..MOST_HALVINGS {
-        let between = rightward(peak - step / 2.0, step, &f)? + leftward(peak + step / 2.0, step, rate, &f)?;
+        let between = rightward(peak - step / 2.0, step, f)? + leftward(peak + step / 2.0, step, rate, f)?;
         let finer = f64::midpoint(sum, step * between);
         if (finer - sum).abs() <= AGREEMENT * finer {
             return Some(finer * top.exp());
