@@ -90,7 +90,7 @@ proptest! {
         let (central_f, central_t) = (FisherF::new(df, error_df).unwrap(), StudentT::new(error_df).unwrap());
         prop_assert!(near(f.cdf(x).unwrap(), central_f.cdf(x).unwrap(), 1e-12));
         prop_assert!(near(f.sf(x).unwrap(), central_f.sf(x).unwrap(), 1e-12));
-        prop_assert!(near(t.sf(x).unwrap(), central_t.sf(x).unwrap(), 1e-11), "{t:?} {x}");
+        prop_assert!(near(t.sf(x).unwrap(), central_t.sf(x).unwrap(), 1e-11) || central_t.sf(x) < Some(1e-300), "{t:?} {x} {:?}", central_t.sf(x));
     }
 
     /// A non-central t squared is a non-central F with one degree of freedom above.

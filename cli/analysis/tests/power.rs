@@ -80,7 +80,7 @@ fn reference_designs() {
 }
 
 /// 64 in each of two groups for a difference of half an SD (Cohen 1988, *Statistical Power Analysis for the Behavioral
-/// Sciences*, table 2.4.1), and 34 pairs for a d_z of a half (from memory); power by the non-central t.
+/// Sciences*, table 2.4.1), and 34 pairs for a d_z of a half (both from memory); power by the non-central t.
 #[test]
 fn two_groups_and_two_visits_are_t_tests() {
     let planning = Planning::new(0.05, 0.8, 0.0).unwrap();
@@ -102,6 +102,24 @@ fn two_groups_and_two_visits_are_t_tests() {
     let delta = 3.0 / 4.0 / (1.0 / 10.0 + 1.0 / 25.0_f64).sqrt();
     assert!((found.power.unwrap() - by_t(33.0, delta)).abs() < 1e-12);
     assert_eq!((found.df, found.error_df, found.epsilon, found.notes), (1.0, 33.0, Some(1.0), vec![]));
+}
+
+/// Plain means of the groups 1, 3 and 5 by visit, ñ = 4 / (1/9 + 1/15) = 22.5, Σ (1 − 3)² + … = 8, s² = 1.44 · 0.4;
+/// weighted for the interaction, whose changes differ by ±1 around 9 · 15 / 24 = 5.625 subjects' worth.
+#[test]
+fn unequal_groups_by_hand() {
+    let means = vec![vec![1.0, 3.0, 5.0], vec![1.0, 3.0, 5.0]];
+    let spread = covariance(&[1.2; 3], &compound_symmetry(3, 0.6));
+    let alpha = Alpha::new(0.05).unwrap();
+    let lambda = |means: Vec<Vec<f64>>, effect| {
+        power(&Assumed::new(means, spread.clone()).unwrap(), effect, &[9, 15], alpha).unwrap().noncentrality.unwrap()
+    };
+    let near = |got: f64, want: f64| assert!((got / want - 1.0).abs() < 1e-12, "{got} for {want}");
+    near(lambda(means, PlannedEffect::Within), 22.5 * 8.0 / (1.44 * 0.4));
+    let crossed = vec![vec![1.0, 2.0, 3.0], vec![3.0, 2.0, 1.0]];
+    near(lambda(crossed.clone(), PlannedEffect::Interaction), 5.625 * 8.0 / (1.44 * 0.4));
+    let apart = vec![vec![1.0, 2.0, 3.0], vec![2.0, 3.0, 4.0]];
+    near(lambda(apart, PlannedEffect::Between), 5.625 / (1.44 * 2.2 / 3.0));
 }
 
 /// The power of a two-sided t test at 0.05.
