@@ -54,8 +54,8 @@ pub enum Note {
     },
     /// Every subject's readings are all tied: Friedman's test is not defined.
     AllTied,
-    /// Trends were asked for of an analysis by ranks, which has none.
-    NoTrendsOfRanks,
+    /// Contrasts other than pairs of levels were asked for of an analysis by ranks, which has none.
+    OnlyPairsByRanks,
     /// A reading is no multiple of the step in which all were said to be exported: ties were looked for within rounding.
     OffGrain,
     /// All differences of this pair are zero: there is nothing to rank.
@@ -118,7 +118,7 @@ impl fmt::Display for Note {
             Self::AllTied => {
                 write!(f, "every subject's readings are all tied, so Friedman's test is not defined")
             }
-            Self::NoTrendsOfRanks => write!(f, "there are no trends of ranks"),
+            Self::OnlyPairsByRanks => write!(f, "an analysis by ranks compares pairs of levels only"),
             Self::OffGrain => {
                 write!(
                     f,
