@@ -33,12 +33,15 @@
 
 #![forbid(unsafe_code)]
 
+pub mod agreement;
 pub mod anova;
 pub mod contrasts;
 pub mod design;
 pub mod distributions;
 mod moments;
 mod note;
+pub mod power;
+pub mod ranks;
 mod settings;
 
 pub use note::Note;

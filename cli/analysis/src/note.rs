@@ -4,6 +4,7 @@
 
 use std::fmt;
 
+use crate::agreement::Form;
 use crate::contrasts::ContrastKind;
 
 /// Why something in a result is `None`, or needs a word of caution.
@@ -51,6 +52,39 @@ pub enum Note {
         /// Which contrast.
         contrast: ContrastKind,
     },
+    /// Every subject's readings are all tied: Friedman's test is not defined.
+    AllTied,
+    /// Contrasts other than pairs of levels were asked for of an analysis by ranks, which has none.
+    OnlyPairsByRanks,
+    /// A reading is no multiple of the step in which all were said to be exported: ties were looked for within rounding.
+    OffGrain,
+    /// All differences of this pair are zero: there is nothing to rank.
+    NoDifference {
+        /// Which pair.
+        contrast: ContrastKind,
+    },
+    /// The pair has so few differences that even its widest interval has less confidence than was asked for.
+    ConfidenceNotReached {
+        /// Which pair.
+        contrast: ContrastKind,
+        /// Its differences other than zero.
+        differences: usize,
+    },
+    /// This intraclass correlation or its interval is not defined for these mean squares.
+    IccUndefined {
+        /// Which form.
+        form: Form,
+    },
+    /// No subject has two readings: there is no error within subjects.
+    NoRepeatedReading,
+    /// The mean of a subject's readings is zero: the coefficient of variation is not defined.
+    CvUndefined,
+    /// Readings have both signs: a coefficient of variation says little about them.
+    CvOfBothSigns,
+    /// The groups have no more subjects than there are groups: there is no error to test against.
+    NoErrorDegrees,
+    /// The assumed covariance is not spherical: the power formula promises more than a corrected test has in small samples.
+    PowerOptimistic,
 }
 
 impl fmt::Display for Note {
@@ -81,6 +115,42 @@ impl fmt::Display for Note {
             Self::NoSpreadInContrast { contrast } => {
                 write!(f, "{contrast}: it is the same for all subjects, so t is not defined")
             }
+            Self::AllTied => {
+                write!(f, "every subject's readings are all tied, so Friedman's test is not defined")
+            }
+            Self::OnlyPairsByRanks => write!(f, "an analysis by ranks compares pairs of levels only"),
+            Self::OffGrain => {
+                write!(
+                    f,
+                    "not every reading has the decimals it was said to have, so ties were looked for within rounding"
+                )
+            }
+            Self::NoDifference { contrast } => {
+                write!(f, "{contrast}: all differences are zero, so there is nothing to rank")
+            }
+            Self::ConfidenceNotReached { contrast, differences } => write!(
+                f,
+                "{contrast}: with {differences} differences no interval has the confidence asked for; the widest is given"
+            ),
+            Self::IccUndefined { form } => {
+                write!(f, "{} or its interval is not defined for readings that vary like this", form.name())
+            }
+            Self::NoRepeatedReading => {
+                write!(f, "no subject has two readings, so there is no variation within subjects")
+            }
+            Self::CvUndefined => {
+                write!(f, "a subject's mean is zero, so the coefficient of variation is not defined")
+            }
+            Self::CvOfBothSigns => {
+                write!(f, "some readings are negative and some positive, so the coefficient of variation says little")
+            }
+            Self::NoErrorDegrees => {
+                write!(f, "there are no more subjects than groups, so there is no error to test against")
+            }
+            Self::PowerOptimistic => write!(
+                f,
+                "the assumed covariance is not spherical, so the formula promises more power than a corrected test has with few subjects; simulate before relying on it"
+            ),
         }
     }
 }
