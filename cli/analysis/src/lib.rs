@@ -42,4 +42,4 @@ mod note;
 mod settings;
 
 pub use note::Note;
-pub use settings::{Confidence, Interval, NotAConfidence, Settings};
+pub use settings::{Confidence, Interval, NotAConfidence, Settings, Sums};

@@ -49,6 +49,12 @@ impl Sum {
         sum
     }
 
+    /// Takes in all of another sum.
+    pub fn join(&mut self, other: Self) {
+        self.add(other.0.hi);
+        self.0.lo += other.0.lo;
+    }
+
     pub fn value(self) -> f64 {
         self.0.value()
     }
@@ -95,6 +101,11 @@ impl Moments {
         let own = Self::of(readings, rounding(readings.iter().copied()));
         // Readings near zero are what they are: only differences can vanish into rounding.
         Self { mean: Sum::of(readings.iter().copied()).over(readings.len()).value(), ..own }
+    }
+
+    /// Σ (x − x̄)².
+    pub fn ss(self) -> f64 {
+        self.ss
     }
 
     /// √(Σ (x − x̄)² / (n − 1)); `None` below two values.

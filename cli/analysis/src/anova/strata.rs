@@ -1,0 +1,270 @@
+//! Readings taken apart into strata: between subjects, and within them for each interaction of within factors.
+//!
+//! Invariants: deviations are taken from means held in two doubles and only then squared or contrasted, so neither an
+//! offset nor differences between subjects cost digits; residuals sum to zero over the cells of a subject and over the
+//! subjects of a group, to rounding; the strata are orthogonal, so their sums of squares add up to the total.
+
+use super::decomposition::Line;
+use super::hypothesis::contrasts;
+use super::term::FactorSet;
+use crate::design::Design;
+use crate::design::factorial::number;
+use crate::moments::{Sum, Twofold, rounding};
+
+/// The complete subjects and their groups.
+pub(crate) struct Table {
+    /// The number of levels of each within factor.
+    pub within: Vec<usize>,
+    /// The levels of each between factor at which there is a complete subject.
+    pub filled: Vec<Vec<usize>>,
+    /// The group of each complete subject, among the combinations of the filled levels.
+    pub group: Vec<usize>,
+    /// The subjects of each of these groups.
+    pub counts: Vec<usize>,
+    /// Where each group of the design is among these; `None` for one at a level that is not filled.
+    pub place: Vec<Option<usize>>,
+    /// The readings, one column for each cell.
+    pub columns: Vec<Vec<f64>>,
+}
+
+impl Table {
+    pub fn of(design: &Design) -> Self {
+        let mut columns = vec![Vec::with_capacity(design.subjects()); design.width()];
+        let mut at = Vec::with_capacity(design.subjects());
+        for (row, &group) in design.rows().zip(design.groups()) {
+            if row.iter().all(Option::is_some) {
+                columns.iter_mut().zip(row.iter().flatten()).for_each(|(column, y)| column.push(*y));
+                at.push(group);
+            }
+        }
+        let filled = filled(design, &at);
+        let levels: Vec<usize> = filled.iter().map(Vec::len).collect();
+        let place: Vec<Option<usize>> =
+            (0..design.between().iter().product()).map(|group| place(design, &filled, &levels, group)).collect();
+        let group: Vec<usize> = at.iter().filter_map(|&group| place.get(group).copied().flatten()).collect();
+        let mut counts = vec![0; levels.iter().product()];
+        group.iter().for_each(|&group| counts.get_mut(group).into_iter().for_each(|n| *n += 1));
+        Self { within: design.within_levels(), filled, group, counts, place, columns }
+    }
+
+    pub fn subjects(&self) -> usize {
+        self.group.len()
+    }
+
+    /// The number of filled levels of each between factor.
+    pub fn between(&self) -> Vec<usize> {
+        self.filled.iter().map(Vec::len).collect()
+    }
+
+    /// The groups of the design whose levels are all filled and that have nobody all the same.
+    pub fn empty_groups(&self) -> impl Iterator<Item = usize> {
+        let nobody = |place: &Option<usize>| place.and_then(|at| self.counts.get(at)) == Some(&0);
+        self.place.iter().enumerate().filter(move |(_, place)| nobody(place)).map(|(group, _)| group)
+    }
+}
+
+fn filled(design: &Design, groups: &[usize]) -> Vec<Vec<usize>> {
+    let mut there: Vec<Vec<bool>> = design.between().iter().map(|&levels| vec![false; levels]).collect();
+    for &group in groups {
+        for (there, level) in there.iter_mut().zip(design.group_levels(group)) {
+            there.get_mut(level).into_iter().for_each(|it| *it = true);
+        }
+    }
+    let levels = |there: &Vec<bool>| there.iter().enumerate().filter(|(_, it)| **it).map(|(level, _)| level).collect();
+    there.iter().map(levels).collect()
+}
+
+/// The number of a group among the filled levels.
+fn place(design: &Design, filled: &[Vec<usize>], levels: &[usize], group: usize) -> Option<usize> {
+    let at = design.group_levels(group);
+    let own: Option<Vec<usize>> =
+        at.iter().zip(filled).map(|(level, filled)| filled.iter().position(|it| it == level)).collect();
+    Some(number(own?.into_iter(), levels))
+}
+
+/// The readings taken apart. Orthonormal contrasts of the cells turn the means and the residuals into scores.
+pub(crate) struct Strata {
+    /// The mean of each group at each cell: columns of cells, over groups.
+    pub cell_means: Vec<Vec<f64>>,
+    /// y − group's mean at the cell − what the subject is above its group: columns of cells, over subjects.
+    pub residuals: Vec<Vec<f64>>,
+    /// What each subject is above the mean of its group, over all cells.
+    pub subjects: Vec<f64>,
+    /// One for each set of within factors; that between subjects first.
+    pub strata: Vec<Stratum>,
+    /// Σ (y − ȳ)² over all readings.
+    pub total: Line,
+    /// What rounding can have put into any of the sums of squares.
+    pub rounding: f64,
+}
+
+/// One stratum: scores on its orthonormal contrasts.
+pub(crate) struct Stratum {
+    /// Its within factors; none between subjects.
+    pub within: FactorSet,
+    /// The means of the groups on each contrast; between subjects less the mean of all subjects.
+    pub means: Vec<Vec<f64>>,
+    /// The residual scores of the subjects on each contrast.
+    pub scores: Vec<Vec<f64>>,
+    /// Within groups.
+    pub error: Line,
+    /// Of all scores: between subjects about their mean, else about zero.
+    pub total: Line,
+}
+
+impl Strata {
+    /// A group without subjects has means of 0, which nothing may use.
+    pub fn of(table: &Table) -> Self {
+        let means = Means::of(table);
+        let (subjects, residuals) = means.deviations(table);
+        let rounding = rounding(table.columns.iter().flatten().copied());
+        let readings = table.subjects() * table.columns.len();
+        let total = squares(table.columns.iter().flatten().map(|&y| means.grand.below(y).value()));
+        let total = Line::new(vanishing(total, rounding), readings.saturating_sub(1) as f64);
+        let between = between(table, &means, &subjects, rounding);
+        let within = FactorSet::varied(&table.within).subjects_of_within(table, &means, &residuals, rounding);
+        let strata = std::iter::once(between).chain(within).collect();
+        let cell_means = means.cells.iter().map(|cell| cell.iter().map(|mean| mean.value()).collect()).collect();
+        Self { cell_means, residuals, subjects, strata, total, rounding }
+    }
+}
+
+impl FactorSet {
+    fn subjects_of_within(
+        self,
+        table: &Table,
+        means: &Means,
+        residuals: &[Vec<f64>],
+        rounding: f64,
+    ) -> impl Iterator<Item = Stratum> {
+        let sets = self.subsets().into_iter().filter(|set| !set.is_empty());
+        sets.map(move |set| within(table, means, residuals, set, rounding))
+    }
+}
+
+/// Means in two doubles give sums of squares off by ε² in their turn, so what is smaller still is nothing but that.
+pub(super) fn vanishing(ss: f64, rounding: f64) -> f64 {
+    if ss <= f64::EPSILON * f64::EPSILON * rounding { 0.0 } else { ss }
+}
+
+fn between(table: &Table, means: &Means, subjects: &[f64], rounding: f64) -> Stratum {
+    let root = (table.columns.len() as f64).sqrt();
+    let scores = vec![subjects.iter().map(|s| root * s).collect()];
+    let means = vec![means.groups.iter().map(|mean| root * mean.minus(means.grand).value()).collect()];
+    Stratum::of(table, FactorSet::EMPTY, means, scores, rounding)
+}
+
+fn within(table: &Table, means: &Means, residuals: &[Vec<f64>], set: FactorSet, rounding: f64) -> Stratum {
+    let rows = contrasts(&table.within, set, |levels| 1.0 / levels.sqrt());
+    let profiles = means.profiles();
+    let scores = rows.iter().map(|row| combined(row, residuals)).collect();
+    let means = rows.iter().map(|row| combined(row, &profiles)).collect();
+    Stratum::of(table, set, means, scores, rounding)
+}
+
+/// Σ_j c_j x_j for columns x.
+fn combined(coefficients: &[f64], columns: &[Vec<f64>]) -> Vec<f64> {
+    let mut sum = vec![0.0; columns.first().map_or(0, Vec::len)];
+    for (c, column) in coefficients.iter().zip(columns).filter(|(c, _)| **c != 0.0) {
+        sum.iter_mut().zip(column).for_each(|(sum, x)| *sum += c * x);
+    }
+    sum
+}
+
+impl Stratum {
+    fn of(table: &Table, within: FactorSet, means: Vec<Vec<f64>>, scores: Vec<Vec<f64>>, rounding: f64) -> Self {
+        let (n, p) = (table.subjects(), scores.len());
+        let groups = table.counts.iter().filter(|n| **n > 0).count();
+        let error = vanishing(squares(scores.iter().flatten().copied()), rounding);
+        let weighted = means.iter().flat_map(|column| column.iter().zip(&table.counts));
+        let model = Sum::of(weighted.map(|(x, &n)| n as f64 * x * x)).value();
+        let free = if within.is_empty() { n.saturating_sub(1) } else { n * p };
+        Self {
+            within,
+            means,
+            scores,
+            error: Line::new(error, (n.saturating_sub(groups) * p) as f64),
+            total: Line::new(vanishing(error + model, rounding), free as f64),
+        }
+    }
+
+    /// The number of contrasts.
+    pub fn contrasts(&self) -> usize {
+        self.scores.len()
+    }
+
+    /// The degrees of freedom of each contrast's error.
+    pub fn error_df_each(&self) -> f64 {
+        self.error.df / self.contrasts().max(1) as f64
+    }
+}
+
+/// The means that the deviations are taken from.
+struct Means {
+    grand: Twofold,
+    /// Of each group over all cells.
+    groups: Vec<Twofold>,
+    /// Of each cell, of each group.
+    cells: Vec<Vec<Twofold>>,
+    /// Of each subject.
+    subjects: Vec<Twofold>,
+}
+
+impl Means {
+    fn of(table: &Table) -> Self {
+        let mut of_subjects = vec![Sum::default(); table.subjects()];
+        let mut of_groups = vec![Sum::default(); table.counts.len()];
+        let mut cells = Vec::with_capacity(table.columns.len());
+        for column in &table.columns {
+            of_subjects.iter_mut().zip(column).for_each(|(sum, &y)| sum.add(y));
+            let sums = by_group(table, column);
+            of_groups.iter_mut().zip(&sums).for_each(|(all, one)| all.join(*one));
+            cells.push(sums.iter().zip(&table.counts).map(|(sum, &n)| sum.over(n)).collect());
+        }
+        let width = table.columns.len();
+        let mut grand = Sum::default();
+        of_groups.iter().for_each(|&sum| grand.join(sum));
+        Self {
+            grand: grand.over(table.subjects() * width),
+            groups: of_groups.iter().zip(&table.counts).map(|(sum, &n)| sum.over(n * width)).collect(),
+            cells,
+            subjects: of_subjects.iter().map(|sum| sum.over(width)).collect(),
+        }
+    }
+
+    /// What each group's cells are above the group's own mean: columns of cells, over groups.
+    fn profiles(&self) -> Vec<Vec<f64>> {
+        let profile =
+            |cell: &Vec<Twofold>| cell.iter().zip(&self.groups).map(|(mean, own)| mean.minus(*own).value()).collect();
+        self.cells.iter().map(profile).collect()
+    }
+
+    /// The subjects above their groups, and the residuals.
+    fn deviations(&self, table: &Table) -> (Vec<f64>, Vec<Vec<f64>>) {
+        let own = |group: &usize| self.groups.get(*group).copied().unwrap_or_default();
+        let subjects =
+            self.subjects.iter().zip(&table.group).map(|(mean, group)| mean.minus(own(group)).value()).collect();
+        let residual = |column: &Vec<f64>, cell: &Vec<Twofold>| {
+            let effects: Vec<Twofold> = cell.iter().zip(&self.groups).map(|(mean, own)| mean.minus(*own)).collect();
+            let rows = column.iter().zip(&self.subjects).zip(&table.group);
+            rows.map(|((&y, subject), &group)| match effects.get(group) {
+                Some(&effect) => subject.below(y).minus(effect).value(),
+                None => 0.0,
+            })
+            .collect()
+        };
+        (subjects, table.columns.iter().zip(&self.cells).map(|(column, cell)| residual(column, cell)).collect())
+    }
+}
+
+fn by_group(table: &Table, column: &[f64]) -> Vec<Sum> {
+    let mut sums = vec![Sum::default(); table.counts.len()];
+    for (&y, &group) in column.iter().zip(&table.group) {
+        sums.get_mut(group).into_iter().for_each(|sum| sum.add(y));
+    }
+    sums
+}
+
+fn squares(deviations: impl Iterator<Item = f64>) -> f64 {
+    Sum::of(deviations.map(|d| d * d)).value()
+}
