@@ -34,6 +34,7 @@
 #![forbid(unsafe_code)]
 
 pub mod anova;
+pub mod checks;
 pub mod contrasts;
 pub mod design;
 pub mod distributions;

@@ -15,7 +15,7 @@ pub struct Line {
 }
 
 impl Line {
-    pub(super) fn new(ss: f64, df: f64) -> Self {
+    pub(crate) fn new(ss: f64, df: f64) -> Self {
         Self { ss, df, ms: (df > 0.0).then(|| ss / df) }
     }
 }

@@ -72,7 +72,7 @@ pub struct CorrectedTest {
 
 /// An observed *F*.
 #[derive(Debug, Clone, Copy, PartialEq)]
-pub(super) enum Ratio {
+pub(crate) enum Ratio {
     Finite(f64),
     Infinite,
     Undefined,

@@ -9,12 +9,12 @@ use super::decomposition::Line;
 use super::effect::{Effect, Ratio, Tested};
 use super::hypothesis::Hypothesis;
 use super::sphericity::Sphericity;
-use super::strata::{Strata, Stratum, Table};
+use super::strata::{Strata, Stratum, Table, vanishing};
 use super::term::{FactorSet, Term};
 use super::unlinked::{IfUnlinked, if_unlinked};
 use crate::contrasts::{self, Comparison, SimpleEffect};
 use crate::design::Design;
-use crate::{Note, Settings};
+use crate::{Note, Settings, Sums};
 
 /// An analysis of variance of several factors.
 #[derive(Debug, Clone, PartialEq)]
@@ -161,7 +161,8 @@ impl Analysed {
         remark_on_groups(design, table, remarks);
         let strata = Strata::of(table);
         let errors = strata.strata.iter().map(|stratum| stratum.error.ss).sum();
-        let analysis = Analysis { table, strata: &strata, settings, errors };
+        let hypotheses = hypotheses(table, &table.counts, settings.sums);
+        let analysis = Analysis { table, strata: &strata, hypotheses, errors };
         let tables: Vec<StratumTable> = strata.strata.iter().map(|it| analysis.stratum(it, remarks)).collect();
         remark_on_variation(&strata, remarks);
         Self { if_unlinked: unlinked(table, &strata, &tables), strata: tables, total: Some(strata.total) }
@@ -217,8 +218,16 @@ fn unlinked(table: &Table, strata: &Strata, tables: &[StratumTable]) -> Option<I
 struct Analysis<'a> {
     table: &'a Table,
     strata: &'a Strata,
-    settings: &'a Settings,
+    hypotheses: Vec<(FactorSet, Hypothesis)>,
     errors: f64,
+}
+
+/// One for each set of between factors of more than one level, if every group has somebody; else none can be tested.
+pub(crate) fn hypotheses(table: &Table, counts: &[usize], sums: Sums) -> Vec<(FactorSet, Hypothesis)> {
+    let levels = table.between();
+    let sets = FactorSet::varied(&levels).subsets().into_iter().filter(|_| !counts.contains(&0));
+    let counts: Vec<f64> = counts.iter().map(|&n| n as f64).collect();
+    sets.map(|set| (set, Hypothesis::of(set, &levels, &counts, sums))).collect()
 }
 
 impl Analysis<'_> {
@@ -264,15 +273,12 @@ impl Analysis<'_> {
 
     /// Sum of squares and degrees of freedom of a term; none where a group is empty.
     fn line(&self, term: Term, stratum: &Stratum) -> Line {
-        if self.table.counts.contains(&0) {
+        let Some((_, hypothesis)) = self.hypotheses.iter().find(|(set, _)| *set == term.between) else {
             return Line::new(0.0, 0.0);
-        }
-        let levels = self.table.between();
-        let counts: Vec<f64> = self.table.counts.iter().map(|&n| n as f64).collect();
-        let hypothesis = Hypothesis::of(term.between, &levels, &counts, self.settings.sums);
+        };
         let ss = stratum.means.iter().map(|means| hypothesis.squares(means)).sum();
-        let df = term.between.contrasts(&levels) * stratum.contrasts();
-        Line::new(super::strata::vanishing(ss, self.strata.rounding), df as f64)
+        let df = hypothesis.df() * stratum.contrasts();
+        Line::new(vanishing(ss, self.strata.rounding), df as f64)
     }
 }
 

@@ -54,6 +54,11 @@ impl Hypothesis {
         Self { rows, centred: !set.is_empty() }
     }
 
+    /// The degrees of freedom for one column.
+    pub fn df(&self) -> usize {
+        self.rows.len()
+    }
+
     /// ‖H x‖².
     pub fn squares(&self, means: &[f64]) -> f64 {
         // The rows sum to zero only to rounding, which must not meet the common part of the means.

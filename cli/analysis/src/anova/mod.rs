@@ -25,8 +25,10 @@ pub use unlinked::IfUnlinked;
 use crate::contrasts::{self, Contrast};
 use crate::design::{Design, OneWithin};
 use crate::{Note, Settings};
-pub(crate) use factorial::Analysed;
-pub(crate) use strata::Table;
+pub(crate) use effect::Ratio;
+pub(crate) use factorial::{Analysed, hypotheses};
+pub(crate) use hypothesis::Hypothesis;
+pub(crate) use strata::{Strata, Stratum, Table};
 
 /// A repeated-measures analysis of one within-subject factor.
 #[derive(Debug, Clone, PartialEq)]

@@ -25,6 +25,8 @@ pub(crate) struct Table {
     pub place: Vec<Option<usize>>,
     /// The readings, one column for each cell.
     pub columns: Vec<Vec<f64>>,
+    /// What was taken from the readings before.
+    offset: f64,
 }
 
 impl Table {
@@ -44,7 +46,7 @@ impl Table {
         let group: Vec<usize> = at.iter().filter_map(|&group| place.get(group).copied().flatten()).collect();
         let mut counts = vec![0; levels.iter().product()];
         group.iter().for_each(|&group| counts.get_mut(group).into_iter().for_each(|n| *n += 1));
-        Self { within: design.within_levels(), filled, group, counts, place, columns }
+        Self { within: design.within_levels(), filled, group, counts, place, columns, offset: design.offset() }
     }
 
     pub fn subjects(&self) -> usize {
@@ -84,8 +86,8 @@ fn place(design: &Design, filled: &[Vec<usize>], levels: &[usize], group: usize)
 
 /// The readings taken apart. Orthonormal contrasts of the cells turn the means and the residuals into scores.
 pub(crate) struct Strata {
-    /// The mean of each group at each cell: columns of cells, over groups.
-    pub cell_means: Vec<Vec<f64>>,
+    /// The mean of each group over all cells.
+    pub group_means: Vec<f64>,
     /// y − group's mean at the cell − what the subject is above its group: columns of cells, over subjects.
     pub residuals: Vec<Vec<f64>>,
     /// What each subject is above the mean of its group, over all cells.
@@ -117,28 +119,16 @@ impl Strata {
     pub fn of(table: &Table) -> Self {
         let means = Means::of(table);
         let (subjects, residuals) = means.deviations(table);
-        let rounding = rounding(table.columns.iter().flatten().copied());
+        let rounding = rounding(table.columns.iter().flatten().map(|y| y + table.offset));
         let readings = table.subjects() * table.columns.len();
         let total = squares(table.columns.iter().flatten().map(|&y| means.grand.below(y).value()));
         let total = Line::new(vanishing(total, rounding), readings.saturating_sub(1) as f64);
         let between = between(table, &means, &subjects, rounding);
-        let within = FactorSet::varied(&table.within).subjects_of_within(table, &means, &residuals, rounding);
+        let sets = FactorSet::varied(&table.within).subsets().into_iter().filter(|set| !set.is_empty());
+        let within = sets.map(|set| within(table, &means, &residuals, set, rounding));
         let strata = std::iter::once(between).chain(within).collect();
-        let cell_means = means.cells.iter().map(|cell| cell.iter().map(|mean| mean.value()).collect()).collect();
-        Self { cell_means, residuals, subjects, strata, total, rounding }
-    }
-}
-
-impl FactorSet {
-    fn subjects_of_within(
-        self,
-        table: &Table,
-        means: &Means,
-        residuals: &[Vec<f64>],
-        rounding: f64,
-    ) -> impl Iterator<Item = Stratum> {
-        let sets = self.subsets().into_iter().filter(|set| !set.is_empty());
-        sets.map(move |set| within(table, means, residuals, set, rounding))
+        let group_means = means.groups.iter().map(|mean| mean.value()).collect();
+        Self { group_means, residuals, subjects, strata, total, rounding }
     }
 }
 

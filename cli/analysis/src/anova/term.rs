@@ -21,6 +21,12 @@ impl FactorSet {
         Self(u32::try_from(factor).ok().and_then(|by| 1_u16.checked_shl(by)).unwrap_or(0))
     }
 
+    /// The set with this factor too.
+    #[must_use]
+    pub fn with(self, factor: usize) -> Self {
+        Self(self.0 | Self::one(factor).0)
+    }
+
     /// Whether the factor is in the set.
     #[must_use]
     pub fn has(self, factor: usize) -> bool {
@@ -51,20 +57,15 @@ impl FactorSet {
     }
 
     /// The factors of more than one level: only these have effects.
-    pub(super) fn varied(levels: &[usize]) -> Self {
+    pub(crate) fn varied(levels: &[usize]) -> Self {
         Self(levels.iter().enumerate().filter(|(_, levels)| **levels > 1).map(|(f, _)| Self::one(f).0).sum())
     }
 
     /// Every set of these factors, the empty one first.
-    pub(super) fn subsets(self) -> Vec<Self> {
+    pub(crate) fn subsets(self) -> Vec<Self> {
         let mut subsets: Vec<Self> = (0..=self.0).map(Self).filter(|&subset| self.contains(subset)).collect();
         subsets.sort_by_key(|subset| (subset.len(), Reverse(subset.0.reverse_bits())));
         subsets
-    }
-
-    /// Π (levels − 1) over the set: the degrees of freedom of the interaction of its factors.
-    pub(super) fn contrasts(self, levels: &[usize]) -> usize {
-        self.iter().filter_map(|factor| levels.get(factor)).map(|levels| levels - 1).product()
     }
 }
 

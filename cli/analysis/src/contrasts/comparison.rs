@@ -99,6 +99,7 @@ pub struct Comparison {
 
 /// The families that the settings ask for, in their order; within each the factors in theirs.
 pub(crate) fn comparisons(design: &Design, settings: &Settings, remarks: &mut Vec<Remark>) -> Vec<Comparison> {
+    let design = &design.centred();
     let mut families = Families { tests: Tests::new(settings.confidence), settings, remarks, found: Vec::new() };
     settings.contrasts.iter().for_each(|&family| families.add(design, family));
     families.found
@@ -203,6 +204,8 @@ pub(super) struct Levels {
     groups: Vec<usize>,
     count: usize,
     spreads: Vec<Spread>,
+    /// What was taken from the readings.
+    offset: f64,
 }
 
 /// The spread of one level within groups.
@@ -212,8 +215,9 @@ struct Spread {
 }
 
 impl Spread {
-    fn of(values: &[f64], groups: &[usize], count: usize) -> Self {
-        let own: Vec<Moments> = split(values, groups, count).iter().map(|own| Moments::of_readings(own)).collect();
+    fn of(values: &[f64], groups: &[usize], count: usize, offset: f64) -> Self {
+        let moments = |own: &Vec<f64>| Moments::of(own, rounding(own.iter().map(|y| y + offset)));
+        let own: Vec<Moments> = split(values, groups, count).iter().map(moments).collect();
         let filled = own.iter().filter(|own| own.n > 0).count();
         let (n, ss) = (values.len(), own.iter().map(|own| own.ss()).sum::<f64>());
         Self { n, sd: (n > filled).then(|| (ss / (n - filled) as f64).sqrt()) }
@@ -226,13 +230,14 @@ impl Levels {
         let level = |level: usize| design.rows().map(|row| row.get(level).copied().flatten()).collect::<Vec<_>>();
         let readings: Vec<Vec<Option<f64>>> = (0..design.width()).map(level).collect();
         let (groups, count) = (design.groups().to_vec(), design.between().iter().product());
+        let offset = design.offset();
         let spread = |level: &Vec<Option<f64>>| {
             let there = level.iter().zip(&groups).filter_map(|(y, &group)| y.map(|y| (y, group)));
             let (values, groups): (Vec<f64>, Vec<usize>) = there.unzip();
-            Spread::of(&values, &groups, count)
+            Spread::of(&values, &groups, count, offset)
         };
         let spreads = readings.iter().map(spread).collect();
-        Self { factor, readings, groups, count, spreads }
+        Self { factor, readings, groups, count, spreads, offset }
     }
 
     /// The same as the levels of this factor of another design.
@@ -265,7 +270,7 @@ impl Levels {
         };
         let pair = self.pair(level, against);
         let differences: Vec<f64> = pair.later.iter().zip(&pair.earlier).map(|(y, x)| y - x).collect();
-        let noise = rounding(pair.later.iter().chain(&pair.earlier).copied());
+        let noise = rounding(pair.later.iter().chain(&pair.earlier).map(|y| y + self.offset));
         let scores = Scores::of(&differences, &pair.groups, self.count, noise);
         let sds = (self.sd(level, &pair.later, &pair.groups), self.sd(against, &pair.earlier, &pair.groups));
         let weights = scores.weights(families.settings.sums);
@@ -291,7 +296,7 @@ impl Levels {
     fn sd(&self, level: usize, of_pair: &[f64], groups: &[usize]) -> Option<f64> {
         match self.spreads.get(level) {
             Some(whole) if whole.n == of_pair.len() => whole.sd,
-            _ => Spread::of(of_pair, groups, self.count).sd,
+            _ => Spread::of(of_pair, groups, self.count, self.offset).sd,
         }
     }
 
@@ -301,7 +306,7 @@ impl Levels {
         };
         let complete = self.groups.iter().enumerate().filter_map(|(subject, &group)| Some((row(subject)?, group)));
         let (rows, groups): (Vec<Vec<f64>>, Vec<usize>) = complete.unzip();
-        let noise = rounding(rows.iter().flatten().copied());
+        let noise = rounding(rows.iter().flatten().map(|y| y + self.offset));
         let trend = |(degree, coefficients): (usize, &Vec<f64>)| {
             let scores: Vec<f64> = rows.iter().map(|row| score(row, coefficients)).collect();
             let scores = Scores::of(&scores, &groups, self.count, noise);

@@ -49,7 +49,8 @@ fn against_first(design: &Design, factor: usize, at: Option<At>, families: &mut 
     let there = design.rows().zip(design.groups()).filter_map(|(row, &group)| Some(((*row.first()?)?, group)));
     let there = there.filter(|(_, group)| levels.get(*group).is_some_and(Option::is_some));
     let (values, groups): (Vec<f64>, Vec<usize>) = there.unzip();
-    let scores = Scores::of(&values, &groups, levels.len(), rounding(values.iter().copied()));
+    let noise = rounding(values.iter().map(|y| y + design.offset()));
+    let scores = Scores::of(&values, &groups, levels.len(), noise);
     let later =
         (1..design.levels(FactorId::Between(factor))).map(|level| Compared::Effect { factor, level, against: 0 });
     later.map(|compared| difference(compared, at, &scores, &levels, families)).collect()

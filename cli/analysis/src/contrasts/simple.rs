@@ -88,6 +88,7 @@ pub(crate) fn simple_effects(design: &Design, settings: &Settings, remarks: &mut
     if !settings.contrasts.contains(&Family::Simple) {
         return Vec::new();
     }
+    let design = &design.centred();
     let factors = (0..design.between().len()).map(FactorId::Between);
     let factors = factors.chain((0..design.within().len()).map(FactorId::Within));
     let pairs = factors.flat_map(|factor| others(design, factor).map(move |other| (factor, other)));

@@ -10,7 +10,7 @@ use crate::moments::Sum;
 /// The most factors, within and between together: they have 2 to this power effects.
 pub const MOST_FACTORS: usize = 10;
 /// The most combinations of between levels.
-pub const MOST_GROUPS: usize = 1024;
+pub const MOST_GROUPS: usize = 256;
 
 /// The levels of a factor, and where they lie if they are points in time.
 #[derive(Debug, Clone, PartialEq)]
@@ -82,8 +82,10 @@ pub struct Design {
     width: usize,
     /// The group of each subject.
     groups: Vec<usize>,
-    /// Row by row, as in [`OneWithin`].
+    /// Row by row, as in [`OneWithin`], each less the offset.
     cells: Vec<Option<f64>>,
+    /// 0 in every design that a caller can see.
+    offset: f64,
 }
 
 impl Design {
@@ -104,7 +106,7 @@ impl Design {
         if subjects.is_empty() {
             return Err(DesignError::NoSubjects);
         }
-        let mut design = Self { within, between, width, groups: Vec::new(), cells: Vec::new() };
+        let mut design = Self { within, between, width, groups: Vec::new(), cells: Vec::new(), offset: 0.0 };
         design.groups.reserve(subjects.len());
         design.cells.reserve(subjects.len().saturating_mul(width));
         for (subject, (groups, cells)) in subjects.iter().enumerate() {
@@ -196,6 +198,20 @@ impl Design {
         Ok(self.keeping(&kept, |_| true))
     }
 
+    /// The same readings less the smallest of them in magnitude, which costs no reading more than its own rounding, so
+    /// that means of cells keep the digits that a common offset would take.
+    pub(crate) fn centred(&self) -> Self {
+        let readings = self.cells.iter().flatten().copied();
+        let least = readings.min_by(|a, b| a.abs().total_cmp(&b.abs())).unwrap_or(0.0);
+        let cells = self.cells.iter().map(|y| y.map(|y| y - least)).collect();
+        Self { cells, offset: self.offset + least, ..self.empty_of(self.groups.clone()) }
+    }
+
+    /// What was taken from every reading.
+    pub(crate) fn offset(&self) -> f64 {
+        self.offset
+    }
+
     /// The number of levels of each within factor.
     pub(crate) fn within_levels(&self) -> Vec<usize> {
         self.within.iter().map(Factor::levels).collect()
@@ -219,7 +235,7 @@ impl Design {
         for row in self.rows() {
             cells.extend(taken.iter().map(|taken| mean_of(row, taken)));
         }
-        Self { within, between: self.between.clone(), width, groups: self.groups.clone(), cells }
+        Self { within, between: self.between.clone(), width, groups: self.groups.clone(), cells, offset: self.offset }
     }
 
     /// The subjects of which `wanted` holds by the levels of the between factors; `None` if there are none.
@@ -228,13 +244,13 @@ impl Design {
         let groups: Vec<usize> = self.groups.iter().zip(&kept).filter(|(_, kept)| **kept).map(|(g, _)| *g).collect();
         let rows = self.rows().zip(&kept).filter(|(_, kept)| **kept);
         let cells = rows.flat_map(|(row, _)| row.iter().copied()).collect();
-        (!groups.is_empty()).then(|| Self { groups, cells, ..self.empty() })
+        (!groups.is_empty()).then(|| Self { cells, ..self.empty_of(groups) })
     }
 
-    /// The same factors without subjects.
-    fn empty(&self) -> Self {
+    /// The same factors, with subjects of these groups whose cells are yet to come.
+    fn empty_of(&self, groups: Vec<usize>) -> Self {
         let (within, between) = (self.within.clone(), self.between.clone());
-        Self { within, between, width: self.width, groups: Vec::new(), cells: Vec::new() }
+        Self { within, between, width: self.width, groups, cells: Vec::new(), offset: self.offset }
     }
 
     fn subjects_where(&self, keep: impl Fn(&[Option<f64>]) -> bool) -> Vec<usize> {
@@ -252,6 +268,7 @@ impl From<&OneWithin> for Design {
             width: design.levels(),
             groups: vec![0; design.subjects()],
             cells: design.cells.clone(),
+            offset: 0.0,
         }
     }
 }
