@@ -40,6 +40,7 @@ pub mod design;
 pub mod distributions;
 mod moments;
 mod note;
+pub mod ranks;
 mod settings;
 
 pub use note::Note;

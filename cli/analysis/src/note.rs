@@ -88,6 +88,24 @@ pub enum Note {
         /// Which contrast.
         contrast: ContrastKind,
     },
+    /// Every subject's readings are all tied: Friedman's test is not defined.
+    AllTied,
+    /// Trends were asked for of an analysis by ranks, which has none.
+    NoTrendsOfRanks,
+    /// A reading is no multiple of the step in which all were said to be exported: ties were looked for within rounding.
+    OffGrain,
+    /// All differences of this pair are zero: there is nothing to rank.
+    NoDifference {
+        /// Which pair.
+        contrast: ContrastKind,
+    },
+    /// The pair has so few differences that even its widest interval has less confidence than was asked for.
+    ConfidenceNotReached {
+        /// Which pair.
+        contrast: ContrastKind,
+        /// Its differences other than zero.
+        differences: usize,
+    },
 }
 
 impl fmt::Display for Note {
@@ -139,6 +157,23 @@ impl fmt::Display for Note {
             Self::NoSpreadInContrast { contrast } => {
                 write!(f, "{contrast}: it is the same for all subjects, so t is not defined")
             }
+            Self::AllTied => {
+                write!(f, "every subject's readings are all tied, so Friedman's test is not defined")
+            }
+            Self::NoTrendsOfRanks => write!(f, "there are no trends of ranks"),
+            Self::OffGrain => {
+                write!(
+                    f,
+                    "not every reading has the decimals it was said to have, so ties were looked for within rounding"
+                )
+            }
+            Self::NoDifference { contrast } => {
+                write!(f, "{contrast}: all differences are zero, so there is nothing to rank")
+            }
+            Self::ConfidenceNotReached { contrast, differences } => write!(
+                f,
+                "{contrast}: with {differences} differences no interval has the confidence asked for; the widest is given"
+            ),
         }
     }
 }
