@@ -167,6 +167,7 @@ fn interval(ci: Option<Interval>) -> [Option<f64>; 2] {
 fn numbers_of(effect: &Effect) -> Vec<Option<f64>> {
     let mut all = vec![Some(effect.ss), Some(effect.df), effect.ms, Some(effect.error_ss), effect.error_ms];
     all.extend(tests_of(effect));
+    all.extend(interval(effect.partial_eta_sq_ci));
     all.extend(effect.mauchly.into_iter().flat_map(|it| [it.w, it.chi2, it.df]));
     all.extend(effect.epsilon.into_iter().flat_map(|it| [it.lecoutre, Some(it.lower_bound)]));
     let corrected = effect.corrected.into_iter();
@@ -196,7 +197,7 @@ fn only_pair(result: &Factorial, factor: usize) -> Comparison {
 }
 
 proptest! {
-    #![proptest_config(ProptestConfig { cases: 200, failure_persistence: None, ..ProptestConfig::default() })]
+    #![proptest_config(ProptestConfig { cases: 64, failure_persistence: None, ..ProptestConfig::default() })]
 
     #[test]
     fn strata_add_up_to_the_total(made in complete(false)) {
@@ -336,6 +337,18 @@ proptest! {
                 }
                 prop_assert_eq!(it.simultaneous.is_some(), it.ci.is_some());
             }
+        }
+    }
+
+    /// At confidence 1 − 2p the interval of a size begins at 0.
+    #[test]
+    fn the_interval_of_a_size_holds_it_and_goes_with_the_test(made in complete(false)) {
+        for it in made.analyse(Sums::Type3).effects() {
+            let (Some(ci), Some(size), Some(p)) = (it.effect.partial_eta_sq_ci, it.effect.partial_eta_sq, it.effect.p) else { continue };
+            let p = it.effect.corrected.and_then(|it| it.greenhouse_geisser).and_then(|it| it.p).unwrap_or(p);
+            prop_assert!(0.0 <= ci.lower && ci.lower <= ci.upper && ci.upper < 1.0);
+            prop_assert!(ci.lower <= size, "{ci:?} {size}");
+            prop_assert_eq!(ci.lower > 0.0, p < 0.025, "{:?} {}", ci, p);
         }
     }
 

@@ -61,19 +61,18 @@ fn ten_thousand_subjects_at_ten_visits() {
 }
 
 fn time<T>(what: &str, work: impl Fn() -> T) {
-    let mut times: Vec<(f64, f64)> = (0..21)
+    const TIMES: u32 = 21;
+    let on_processor = processor();
+    let mut times: Vec<f64> = (0..TIMES)
         .map(|_| {
-            let (start, on_processor) = (Instant::now(), processor());
+            let start = Instant::now();
             black_box(work());
-            (processor() - on_processor, start.elapsed().as_secs_f64() * 1e3)
+            start.elapsed().as_secs_f64() * 1e3
         })
         .collect();
-    times.sort_by(|a, b| a.partial_cmp(b).unwrap());
-    let wall = times.iter().map(|it| it.1).fold(f64::INFINITY, f64::min);
-    println!(
-        "{what}: {:.2} ms of the processor (median of 21; fastest {:.2}), {wall:.2} by the clock",
-        times[10].0, times[0].0
-    );
+    let mean = (processor() - on_processor) / f64::from(TIMES);
+    times.sort_by(f64::total_cmp);
+    println!("{what}: {:.2} ms (median of {TIMES}; fastest {:.2}; on the processor {mean:.2})", times[10], times[0]);
 }
 
 /// Milliseconds that this thread has had the processor, which another program's load does not lengthen; 0 where the system

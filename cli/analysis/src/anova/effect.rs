@@ -5,7 +5,8 @@
 
 use super::decomposition::Line;
 use super::sphericity::{Epsilon, Mauchly, Sphericity};
-use crate::distributions::FisherF;
+use crate::distributions::{FisherF, effect_size_interval};
+use crate::{Confidence, Interval};
 
 /// The test of one effect against its error.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -34,6 +35,11 @@ pub struct Effect {
     pub corrected: Option<Corrected>,
     /// SS / (SS + error SS) (Cohen 1973, *Educational and Psychological Measurement* 33:107).
     pub partial_eta_sq: Option<f64>,
+    /// The interval of the population's, by inverting the non-central *F* (Steiger 2004, *Psychological Methods* 9:164;
+    /// Smithson 2001, *Educational and Psychological Measurement* 61:605), on the degrees of freedom that the
+    /// Greenhouse-Geisser correction leaves, so that it goes with that test: exact between subjects and for one contrast,
+    /// elsewhere as good as the correction. Its ends are λ / (λ + df + error df + 1). `None` where *F* is.
+    pub partial_eta_sq_ci: Option<Interval>,
     /// SS / (SS + the error SS of all strata), for one factor SS / (SS + subject SS + residual SS): the share of all
     /// variation that a design with other subjects at each level would see as well. Between factors are taken as
     /// manipulated, not observed (Olejnik & Algina 2003, *Psychological Methods* 8:434; Bakeman 2005, *Behavior Research
@@ -112,13 +118,22 @@ pub(super) struct Tested {
     pub rounding: f64,
     /// Within subjects.
     pub sphericity: Option<Sphericity>,
+    pub confidence: Confidence,
 }
 
 impl Tested {
     /// Of a factor with one level.
     pub fn nothing(none: Line, means: f64) -> Self {
         let sphericity = Some(Sphericity { mauchly: Mauchly::default(), epsilon: None });
-        Self { effect: none, error: none, all_errors: 0.0, means, rounding: 0.0, sphericity }
+        Self {
+            effect: none,
+            error: none,
+            all_errors: 0.0,
+            means,
+            rounding: 0.0,
+            sphericity,
+            confidence: Confidence::default(),
+        }
     }
 
     /// Whether there is an effect and an error at all.
@@ -147,6 +162,7 @@ impl Tested {
             epsilon,
             corrected: epsilon.map(|epsilon| corrected(f, epsilon, effect.df, error.df)),
             partial_eta_sq: self.share(effect.ss, error.ss),
+            partial_eta_sq_ci: self.interval(f.finite(), epsilon),
             generalized_eta_sq: self.share(effect.ss, self.all_errors),
             partial_omega_sq: self.partial_omega_sq(),
         }
@@ -155,6 +171,12 @@ impl Tested {
     /// The share of a part in itself and the rest, where they are more than rounding.
     fn share(&self, part: f64, rest: f64) -> Option<f64> {
         (self.testable() && part + rest > self.rounding).then(|| part / (part + rest))
+    }
+
+    fn interval(&self, f: Option<f64>, epsilon: Option<Epsilon>) -> Option<Interval> {
+        let by = epsilon.and_then(|it| it.greenhouse_geisser).unwrap_or(1.0);
+        let (df, error_df) = (by * self.effect.df, by * self.error.df);
+        effect_size_interval(f?, df, error_df, df + error_df + 1.0, self.confidence)
     }
 
     fn partial_omega_sq(&self) -> Option<f64> {

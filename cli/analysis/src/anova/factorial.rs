@@ -14,7 +14,7 @@ use super::term::{FactorSet, Term};
 use super::unlinked::{IfUnlinked, if_unlinked};
 use crate::contrasts::{self, Comparison, SimpleEffect};
 use crate::design::Design;
-use crate::{Note, Settings, Sums};
+use crate::{Confidence, Note, Settings, Sums};
 
 /// An analysis of variance of several factors.
 #[derive(Debug, Clone, PartialEq)]
@@ -162,7 +162,7 @@ impl Analysed {
         let strata = Strata::of(table);
         let errors = strata.strata.iter().map(|stratum| stratum.error.ss).sum();
         let hypotheses = hypotheses(table, &table.counts, settings.sums);
-        let analysis = Analysis { table, strata: &strata, hypotheses, errors };
+        let analysis = Analysis { table, strata: &strata, hypotheses, errors, confidence: settings.confidence };
         let tables: Vec<StratumTable> = strata.strata.iter().map(|it| analysis.stratum(it, remarks)).collect();
         remark_on_variation(&strata, remarks);
         Self { if_unlinked: unlinked(table, &strata, &tables), strata: tables, total: Some(strata.total) }
@@ -220,6 +220,7 @@ struct Analysis<'a> {
     strata: &'a Strata,
     hypotheses: Vec<(FactorSet, Hypothesis)>,
     errors: f64,
+    confidence: Confidence,
 }
 
 /// One for each set of between factors of more than one level, if every group has somebody; else none can be tested.
@@ -264,6 +265,7 @@ impl Analysis<'_> {
             means: (self.table.subjects() * cells) as f64,
             rounding: self.strata.rounding,
             sphericity,
+            confidence: self.confidence,
         };
         if let Some(note) = degenerate(&tested) {
             remarks.push(Remark::new(About::Term(term), note));
