@@ -55,10 +55,10 @@ fn run(bench: &Bench) {
     let between = if bench.groups > 1 { vec![bench.groups] } else { vec![] };
     let design = Design::new(factors(), between, &rows).unwrap();
     let settings = Settings::default();
-    let own = median(51, || factorial(&design, &settings));
+    let own = fastest(51, || factorial(&design, &settings));
     let f = factorial(&design, &settings).effect(Term::main(FactorId::Within(0))).unwrap().f.unwrap();
     println!("{}: {:.3} ms, F of the first within factor {f:.9}", bench.name, own * 1e3);
-    println!("  with all checks besides: {:.3} ms", median(11, || checks(&design, &settings)) * 1e3);
+    println!("  with all checks besides: {:.3} ms", fastest(11, || checks(&design, &settings)) * 1e3);
     match peer(bench, &rows) {
         Ok((seconds, theirs)) => {
             println!("  peer: {:.1} ms, F {theirs:.9}: {:.0} times as long", seconds * 1e3, seconds / own);
@@ -79,22 +79,20 @@ fn rows(bench: &Bench) -> Vec<(Vec<usize>, Vec<Option<f64>>)> {
     (0..bench.subjects)
         .map(|subject| {
             let own = 10.0 * next();
-            let cells = (0..width).map(|cell| Some(own + 0.05 * cell as f64 + next())).collect();
+            let cells = (0..width).map(|cell| Some(own + 0.01 * cell as f64 + next())).collect();
             (if bench.groups > 1 { vec![subject % bench.groups] } else { vec![] }, cells)
         })
         .collect()
 }
 
-fn median<T>(times: usize, work: impl Fn() -> T) -> f64 {
-    let mut taken: Vec<f64> = (0..times)
-        .map(|_| {
-            let start = Instant::now();
-            black_box(work());
-            start.elapsed().as_secs_f64()
-        })
-        .collect();
-    taken.sort_by(f64::total_cmp);
-    taken[times / 2]
+/// The fastest of so many, in seconds: on a busy machine the others measure what else is running, ours and the peer's alike.
+fn fastest<T>(times: usize, work: impl Fn() -> T) -> f64 {
+    let once = |_| {
+        let start = Instant::now();
+        black_box(work());
+        start.elapsed().as_secs_f64()
+    };
+    (0..times).map(once).fold(f64::INFINITY, f64::min)
 }
 
 /// Seconds and *F* of the peer.

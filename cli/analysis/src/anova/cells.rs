@@ -5,7 +5,7 @@
 use super::strata::{Strata, Table};
 use crate::design::{Design, OneWithin};
 use crate::distributions::StudentT;
-use crate::moments::{Moments, Sum};
+use crate::moments::{Moments, squares};
 use crate::{Confidence, Interval};
 
 /// The complete subjects' readings at one level.
@@ -38,19 +38,12 @@ pub struct Band {
 
 /// Each group's cells in turn, over the groups of the table.
 pub(super) fn cells(table: &Table, confidence: Confidence) -> Vec<Vec<Cell>> {
-    let by_group: Vec<Vec<Vec<f64>>> = table.columns.iter().map(|column| split(table, column)).collect();
-    let of_group = |(group, &n): (usize, &usize)| {
-        let multiplier = multiplier(n, confidence);
-        by_group.iter().map(|cell| self::cell(cell.get(group).map_or(&[], Vec::as_slice), multiplier)).collect()
-    };
-    table.counts.iter().enumerate().map(of_group).collect()
-}
-
-/// A column by groups.
-fn split(table: &Table, column: &[f64]) -> Vec<Vec<f64>> {
-    let mut groups: Vec<Vec<f64>> = table.counts.iter().map(|&n| Vec::with_capacity(n)).collect();
-    for (&y, &group) in column.iter().zip(&table.group) {
-        groups.get_mut(group).into_iter().for_each(|own| own.push(y));
+    let mut groups: Vec<Vec<Cell>> = vec![Vec::with_capacity(table.columns.len()); table.counts.len()];
+    let multipliers: Vec<Option<f64>> = table.counts.iter().map(|&n| multiplier(n, confidence)).collect();
+    for column in &table.columns {
+        for ((cells, own), &multiplier) in groups.iter_mut().zip(table.by_group(column)).zip(&multipliers) {
+            cells.push(cell(own, multiplier));
+        }
     }
     groups
 }
@@ -104,17 +97,15 @@ fn band(cells: &[Cell], errors: &[Option<f64>], confidence: Confidence) -> Vec<B
 /// A normalised reading deviates from its cell's mean by exactly the residual, so the residuals serve. By groups.
 fn within_errors(table: &Table) -> Vec<Vec<Option<f64>>> {
     let k = table.columns.len() as f64;
-    let residuals = Strata::of(table).residuals;
-    let of_group = |(group, &n): (usize, &usize)| {
-        let n = n as f64;
-        let error = |column: &Vec<f64>| {
-            let own = column.iter().zip(&table.group).filter(|(_, of)| **of == group);
-            let ss = Sum::of(own.map(|(e, _)| e * e)).value();
-            (n > 1.0 && k > 1.0).then(|| (k / (k - 1.0) * ss / (n - 1.0) / n).sqrt())
-        };
-        residuals.iter().map(error).collect()
+    let error = |own: &[f64]| {
+        let n = own.len() as f64;
+        (n > 1.0 && k > 1.0).then(|| (k / (k - 1.0) * squares(own).value() / (n - 1.0) / n).sqrt())
     };
-    table.counts.iter().enumerate().map(of_group).collect()
+    let mut groups = vec![Vec::with_capacity(table.columns.len()); table.counts.len()];
+    for column in &Strata::of(table).residuals {
+        groups.iter_mut().zip(table.by_group(column)).for_each(|(errors, own)| errors.push(error(own)));
+    }
+    groups
 }
 
 fn multiplier(subjects: usize, confidence: Confidence) -> Option<f64> {

@@ -9,15 +9,17 @@ use super::hypothesis::contrasts;
 use super::term::FactorSet;
 use crate::design::Design;
 use crate::design::factorial::number;
-use crate::moments::{Sum, Twofold, rounding};
+use crate::moments::{Sum, Twofold, rounding_of, squares};
 
-/// The complete subjects and their groups.
+/// The complete subjects, group by group.
 pub(crate) struct Table {
     /// The number of levels of each within factor.
     pub within: Vec<usize>,
     /// The levels of each between factor at which there is a complete subject.
     pub filled: Vec<Vec<usize>>,
-    /// The group of each complete subject, among the combinations of the filled levels.
+    /// The complete subjects, as the design has them, in the order of the rows here.
+    pub used: Vec<usize>,
+    /// The group of each, among the combinations of the filled levels; never falling.
     pub group: Vec<usize>,
     /// The subjects of each of these groups.
     pub counts: Vec<usize>,
@@ -31,22 +33,36 @@ pub(crate) struct Table {
 
 impl Table {
     pub fn of(design: &Design) -> Self {
-        let mut columns = vec![Vec::with_capacity(design.subjects()); design.width()];
-        let mut at = Vec::with_capacity(design.subjects());
-        for (row, &group) in design.rows().zip(design.groups()) {
-            if row.iter().all(Option::is_some) {
-                columns.iter_mut().zip(row.iter().flatten()).for_each(|(column, y)| column.push(*y));
-                at.push(group);
-            }
-        }
-        let filled = filled(design, &at);
+        let complete =
+            design.rows().zip(design.groups()).enumerate().filter(|(_, (row, _))| row.iter().all(Option::is_some));
+        let mut complete: Vec<(usize, &[Option<f64>], usize)> =
+            complete.map(|(subject, (row, &group))| (subject, row, group)).collect();
+        let filled = filled(design, complete.iter().map(|(_, _, group)| *group));
         let levels: Vec<usize> = filled.iter().map(Vec::len).collect();
         let place: Vec<Option<usize>> =
             (0..design.between().iter().product()).map(|group| place(design, &filled, &levels, group)).collect();
-        let group: Vec<usize> = at.iter().filter_map(|&group| place.get(group).copied().flatten()).collect();
+        // Groups keep their order among the filled levels.
+        complete.sort_by_key(|(_, _, group)| *group);
+        let group: Vec<usize> =
+            complete.iter().filter_map(|(_, _, group)| place.get(*group).copied().flatten()).collect();
         let mut counts = vec![0; levels.iter().product()];
         group.iter().for_each(|&group| counts.get_mut(group).into_iter().for_each(|n| *n += 1));
-        Self { within: design.within_levels(), filled, group, counts, place, columns, offset: design.offset() }
+        let mut columns = vec![Vec::with_capacity(complete.len()); design.width()];
+        for (_, row, _) in &complete {
+            columns.iter_mut().zip(*row).for_each(|(column, y)| column.push(y.unwrap_or(0.0)));
+        }
+        let used = complete.iter().map(|(subject, ..)| *subject).collect();
+        Self { within: design.within_levels(), filled, used, group, counts, place, columns, offset: design.offset() }
+    }
+
+    /// A column by groups.
+    pub fn by_group<'a>(&'a self, column: &'a [f64]) -> impl Iterator<Item = &'a [f64]> {
+        let mut rest = column;
+        self.counts.iter().map(move |&n| {
+            let (own, others) = rest.split_at_checked(n).unwrap_or((rest, &[]));
+            rest = others;
+            own
+        })
     }
 
     pub fn subjects(&self) -> usize {
@@ -65,9 +81,9 @@ impl Table {
     }
 }
 
-fn filled(design: &Design, groups: &[usize]) -> Vec<Vec<usize>> {
+fn filled(design: &Design, groups: impl Iterator<Item = usize>) -> Vec<Vec<usize>> {
     let mut there: Vec<Vec<bool>> = design.between().iter().map(|&levels| vec![false; levels]).collect();
-    for &group in groups {
+    for group in groups {
         for (there, level) in there.iter_mut().zip(design.group_levels(group)) {
             there.get_mut(level).into_iter().for_each(|it| *it = true);
         }
@@ -119,9 +135,10 @@ impl Strata {
     pub fn of(table: &Table) -> Self {
         let means = Means::of(table);
         let (subjects, residuals) = means.deviations(table);
-        let rounding = rounding(table.columns.iter().flatten().map(|y| y + table.offset));
+        let rounding = table.columns.iter().map(|column| rounding_of(column, table.offset)).sum();
         let readings = table.subjects() * table.columns.len();
-        let total = squares(table.columns.iter().flatten().map(|&y| means.grand.below(y).value()));
+        let about = |column: &Vec<f64>| Sum::over_each(column, |y| means.grand.below(y).value().powi(2));
+        let total = joined(table.columns.iter().map(about)).value();
         let total = Line::new(vanishing(total, rounding), readings.saturating_sub(1) as f64);
         let between = between(table, &means, &subjects, rounding);
         let sets = FactorSet::varied(&table.within).subsets().into_iter().filter(|set| !set.is_empty());
@@ -165,7 +182,7 @@ impl Stratum {
     fn of(table: &Table, within: FactorSet, means: Vec<Vec<f64>>, scores: Vec<Vec<f64>>, rounding: f64) -> Self {
         let (n, p) = (table.subjects(), scores.len());
         let groups = table.counts.iter().filter(|n| **n > 0).count();
-        let error = vanishing(squares(scores.iter().flatten().copied()), rounding);
+        let error = vanishing(joined(scores.iter().map(|column| squares(column))).value(), rounding);
         let weighted = means.iter().flat_map(|column| column.iter().zip(&table.counts));
         let model = Sum::of(weighted.map(|(x, &n)| n as f64 * x * x)).value();
         let free = if within.is_empty() { n.saturating_sub(1) } else { n * p };
@@ -207,7 +224,7 @@ impl Means {
         let mut cells = Vec::with_capacity(table.columns.len());
         for column in &table.columns {
             of_subjects.iter_mut().zip(column).for_each(|(sum, &y)| sum.add(y));
-            let sums = by_group(table, column);
+            let sums: Vec<Sum> = table.by_group(column).map(|own| Sum::over_each(own, |y| y)).collect();
             of_groups.iter_mut().zip(&sums).for_each(|(all, one)| all.join(*one));
             cells.push(sums.iter().zip(&table.counts).map(|(sum, &n)| sum.over(n)).collect());
         }
@@ -234,27 +251,22 @@ impl Means {
         let own = |group: &usize| self.groups.get(*group).copied().unwrap_or_default();
         let subjects =
             self.subjects.iter().zip(&table.group).map(|(mean, group)| mean.minus(own(group)).value()).collect();
-        let residual = |column: &Vec<f64>, cell: &Vec<Twofold>| {
-            let effects: Vec<Twofold> = cell.iter().zip(&self.groups).map(|(mean, own)| mean.minus(*own)).collect();
-            let rows = column.iter().zip(&self.subjects).zip(&table.group);
-            rows.map(|((&y, subject), &group)| match effects.get(group) {
-                Some(&effect) => subject.below(y).minus(effect).value(),
-                None => 0.0,
-            })
-            .collect()
+        let residual = |(column, cell): (&Vec<f64>, &Vec<Twofold>)| {
+            let mut residuals = Vec::with_capacity(column.len());
+            let mut subjects = self.subjects.iter();
+            let effects = cell.iter().zip(&self.groups).map(|(mean, own)| mean.minus(*own));
+            for (own, effect) in table.by_group(column).zip(effects) {
+                residuals.extend(own.iter().zip(&mut subjects).map(|(&y, mean)| mean.below(y).minus(effect).value()));
+            }
+            residuals
         };
-        (subjects, table.columns.iter().zip(&self.cells).map(|(column, cell)| residual(column, cell)).collect())
+        (subjects, table.columns.iter().zip(&self.cells).map(residual).collect())
     }
 }
 
-fn by_group(table: &Table, column: &[f64]) -> Vec<Sum> {
-    let mut sums = vec![Sum::default(); table.counts.len()];
-    for (&y, &group) in column.iter().zip(&table.group) {
-        sums.get_mut(group).into_iter().for_each(|sum| sum.add(y));
-    }
-    sums
-}
-
-fn squares(deviations: impl Iterator<Item = f64>) -> f64 {
-    Sum::of(deviations.map(|d| d * d)).value()
+fn joined(sums: impl Iterator<Item = Sum>) -> Sum {
+    sums.fold(Sum::default(), |mut all, one| {
+        all.join(one);
+        all
+    })
 }

@@ -32,15 +32,15 @@ pub struct Without {
 /// The scores of a subject e and its group's means m become, in a group of n, those of the others: m − e / (n − 1), and the
 /// error's cross-products S − n / (n − 1) e eᵀ (Cook & Weisberg 1982, *Residuals and Influence in Regression*, section 2.2,
 /// for the mean of a group).
-pub(super) fn influence(table: &Table, strata: &Strata, used: &[usize], settings: &Settings) -> Vec<Influence> {
+pub(super) fn influence(table: &Table, strata: &Strata, settings: &Settings) -> Vec<Influence> {
     let smaller = (0..table.counts.len()).map(|group| without_one(table, group, settings)).collect();
-    let leaving = Leaving { table, strata, used, smaller };
+    let leaving = Leaving { table, strata, smaller };
     let sets = FactorSet::varied(&table.between()).subsets();
     let terms = strata.strata.iter().flat_map(|stratum| {
         let own = sets.iter().map(|&between| Term { between, within: stratum.within });
         own.filter(|term| *term != Term::default()).map(move |term| (term, stratum))
     });
-    if used.is_empty() {
+    if table.used.is_empty() {
         return Vec::new();
     }
     terms.map(|(term, stratum)| leaving.influence(term, stratum)).collect()
@@ -56,7 +56,6 @@ fn without_one(table: &Table, group: usize, settings: &Settings) -> Vec<(FactorS
 struct Leaving<'a> {
     table: &'a Table,
     strata: &'a Strata,
-    used: &'a [usize],
     /// By the group that is smaller by one.
     smaller: Vec<Vec<(FactorSet, Hypothesis)>>,
 }
@@ -64,7 +63,7 @@ struct Leaving<'a> {
 impl Leaving<'_> {
     fn influence(&self, term: Term, stratum: &Stratum) -> Influence {
         let cross = Cross::of(&stratum.scores);
-        let without = self.used.iter().enumerate().map(|(at, &subject)| {
+        let without = self.table.used.iter().enumerate().map(|(at, &subject)| {
             let nothing = Without { subject, f: None, p: None, p_greenhouse_geisser: None };
             let one = self.one(stratum, at);
             let hypothesis = one.as_ref().and_then(|one| self.hypothesis(term, one.group));
@@ -73,7 +72,9 @@ impl Leaving<'_> {
                 ..self.without(term, stratum, &cross, &one, hypothesis)
             })
         });
-        Influence { term, without: without.collect() }
+        let mut without: Vec<Without> = without.collect();
+        without.sort_by_key(|it| it.subject);
+        Influence { term, without }
     }
 
     fn one(&self, stratum: &Stratum, at: usize) -> Option<One> {

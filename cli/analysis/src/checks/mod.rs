@@ -35,11 +35,10 @@ pub struct Checks {
 pub fn checks(design: &Design, settings: &Settings) -> Checks {
     let table = Table::of(design);
     let strata = Strata::of(&table);
-    let used = design.complete();
     Checks {
-        residuals: residuals::residuals(&table, &strata, &used),
-        subjects: residuals::subjects(&table, &strata, &used),
-        influence: influence::influence(&table, &strata, &used, settings),
+        residuals: residuals::residuals(&table, &strata),
+        subjects: residuals::subjects(&table, &strata),
+        influence: influence::influence(&table, &strata, settings),
         missing: missing(design, 0),
         thin: thin_cells(design),
     }

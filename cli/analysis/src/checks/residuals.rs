@@ -34,12 +34,12 @@ pub struct SubjectEffect {
     pub quantile: f64,
 }
 
-pub(super) fn residuals(table: &Table, strata: &Strata, used: &[usize]) -> Vec<Residual> {
+pub(super) fn residuals(table: &Table, strata: &Strata) -> Vec<Residual> {
     if table.columns.len() < 2 {
         return Vec::new();
     }
-    let mut found = Vec::with_capacity(used.len() * table.columns.len());
-    for (at, &subject) in used.iter().enumerate() {
+    let mut found = Vec::with_capacity(table.used.len() * table.columns.len());
+    for (at, &subject) in table.used.iter().enumerate() {
         let cells = table.columns.iter().zip(&strata.residuals).enumerate();
         found.extend(cells.filter_map(|(cell, (readings, residuals))| {
             let (reading, residual) = (readings.get(at)?, *residuals.get(at)?);
@@ -48,20 +48,20 @@ pub(super) fn residuals(table: &Table, strata: &Strata, used: &[usize]) -> Vec<R
     }
     let quantiles = normal_quantiles(&found.iter().map(|it| it.residual).collect::<Vec<_>>());
     found.iter_mut().zip(quantiles).for_each(|(it, quantile)| it.quantile = quantile);
+    // The table has the subjects group by group.
+    found.sort_by_key(|it| it.subject);
     found
 }
 
-pub(super) fn subjects(table: &Table, strata: &Strata, used: &[usize]) -> Vec<SubjectEffect> {
+pub(super) fn subjects(table: &Table, strata: &Strata) -> Vec<SubjectEffect> {
     let mean = |group: &usize| strata.group_means.get(*group).copied().unwrap_or(0.0);
     let quantiles = normal_quantiles(&strata.subjects);
-    let each = used.iter().zip(&strata.subjects).zip(&table.group).zip(quantiles);
-    each.map(|(((&subject, &effect), group), quantile)| SubjectEffect {
-        subject,
-        effect,
-        fitted: mean(group),
-        quantile,
-    })
-    .collect()
+    let each = table.used.iter().zip(&strata.subjects).zip(&table.group).zip(quantiles);
+    let effect =
+        |(((&subject, &effect), group), quantile)| SubjectEffect { subject, effect, fitted: mean(group), quantile };
+    let mut found: Vec<SubjectEffect> = each.map(effect).collect();
+    found.sort_by_key(|it| it.subject);
+    found
 }
 
 /// The standard normal quantile that belongs to each value's rank i of n, at (i − 3/8) / (n + 1/4) (Blom 1958, *Statistical

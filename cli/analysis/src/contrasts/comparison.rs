@@ -2,6 +2,9 @@
 //!
 //! Invariants: a comparison uses every subject that has the cells it needs, and no other; a family is adjusted by itself.
 
+use std::borrow::Cow;
+use std::collections::BTreeMap;
+
 use super::Family;
 use super::groups::group_differences;
 use super::polynomial;
@@ -10,7 +13,7 @@ use super::simple;
 use crate::anova::{About, Remark};
 use crate::design::{At, Design, Factor};
 use crate::distributions::StudentT;
-use crate::moments::{Moments, rounding};
+use crate::moments::{Moments, rounding, rounding_of};
 use crate::{Confidence, Interval, Note, Settings};
 
 /// What is compared; factors by their index among those of their kind, levels by index.
@@ -99,9 +102,15 @@ pub struct Comparison {
 
 /// The families that the settings ask for, in their order; within each the factors in theirs.
 pub(crate) fn comparisons(design: &Design, settings: &Settings, remarks: &mut Vec<Remark>) -> Vec<Comparison> {
+    if settings.contrasts.is_empty() {
+        return Vec::new();
+    }
     let design = &design.centred();
     let mut families = Families { tests: Tests::new(settings.confidence), settings, remarks, found: Vec::new() };
-    settings.contrasts.iter().for_each(|&family| families.add(design, family));
+    let over_all = |family: &Family| matches!(family, Family::Pairwise | Family::EachVsFirst | Family::Polynomial);
+    let factors = if settings.contrasts.iter().any(over_all) { 0..design.within().len() } else { 0..0 };
+    let levels: Vec<Levels> = factors.map(|factor| Levels::of(design, factor)).collect();
+    settings.contrasts.iter().for_each(|&family| families.add(design, &levels, family));
     families.found
 }
 
@@ -114,16 +123,15 @@ pub(super) struct Families<'a> {
 }
 
 impl Families<'_> {
-    fn add(&mut self, design: &Design, family: Family) {
+    fn add(&mut self, design: &Design, levels: &[Levels], family: Family) {
         match family {
             Family::Pairwise | Family::EachVsFirst => {
-                for factor in 0..design.within().len() {
-                    let levels = Levels::of(design, factor);
+                for levels in levels {
                     let found = levels.pairs(&[], family == Family::EachVsFirst, self);
                     self.settle(found);
                 }
             }
-            Family::Polynomial => self.trends(design),
+            Family::Polynomial => self.trends(design, levels),
             Family::Simple => simple::comparisons(design, self),
             Family::Groups { at } => {
                 for factor in 0..design.between().len() {
@@ -149,19 +157,20 @@ impl Families<'_> {
         }
     }
 
-    fn trends(&mut self, design: &Design) {
-        let placed = |(index, factor): (usize, &Factor)| factor.positions().map(|at| (index, at.to_vec()));
-        let placed: Vec<(usize, Vec<f64>)> = design.within().iter().enumerate().filter_map(placed).collect();
+    fn trends(&mut self, design: &Design, levels: &[Levels]) {
+        let placed = |(factor, own): (&Factor, &'_ Levels)| factor.positions().map(|at| (own.factor, at.to_vec()));
+        let placed: Vec<(usize, Vec<f64>)> = design.within().iter().zip(levels).filter_map(placed).collect();
         if placed.is_empty() {
             self.remarks.push(Remark::new(About::Design, Note::TrendsNeedPositions));
         }
         for (factor, positions) in placed {
+            let Some(own) = levels.get(factor) else { continue };
             let coefficients = polynomial::orthonormal(&positions);
             if coefficients.len() + 1 < positions.len() {
                 let note = Note::TrendsIndistinct { degree: coefficients.len() + 1 };
                 self.remarks.push(Remark::new(About::Design, note));
             }
-            let found = Levels::of(design, factor).trends(&coefficients, self);
+            let found = own.trends(&coefficients, self);
             self.settle(found);
         }
     }
@@ -179,14 +188,14 @@ fn note(found: &Comparison) -> Option<Note> {
 
 /// Intervals that hold together.
 struct Together {
-    tests: std::collections::BTreeMap<u64, Option<f64>>,
+    tests: BTreeMap<u64, Option<f64>>,
     level: f64,
 }
 
 impl Together {
     fn of(confidence: Confidence, family: usize) -> Self {
         let level = 1.0 - (1.0 - confidence.level()) / family.max(1) as f64;
-        Self { tests: std::collections::BTreeMap::new(), level }
+        Self { tests: BTreeMap::new(), level }
     }
 
     fn interval(&mut self, found: &Comparison) -> Option<Interval> {
@@ -203,24 +212,40 @@ pub(super) struct Levels {
     readings: Vec<Vec<Option<f64>>>,
     groups: Vec<usize>,
     count: usize,
-    spreads: Vec<Spread>,
+    wholes: Vec<Whole>,
     /// What was taken from the readings.
     offset: f64,
 }
 
+/// One level by itself.
+struct Whole {
+    /// The readings that there are, in the order of the subjects.
+    values: Vec<f64>,
+    rounding: f64,
+    sd: Option<f64>,
+}
+
+impl Whole {
+    fn of(level: &[Option<f64>], groups: &[usize], count: usize, offset: f64) -> Self {
+        let there = level.iter().zip(groups).filter_map(|(y, &group)| y.map(|y| (y, group)));
+        let (values, groups): (Vec<f64>, Vec<usize>) = there.unzip();
+        let rounding = rounding_of(&values, offset);
+        Self { sd: Spread::of(&values, &groups, count, offset).sd, values, rounding }
+    }
+}
+
 /// The spread of one level within groups.
 struct Spread {
-    n: usize,
     sd: Option<f64>,
 }
 
 impl Spread {
     fn of(values: &[f64], groups: &[usize], count: usize, offset: f64) -> Self {
-        let moments = |own: &Vec<f64>| Moments::of(own, rounding(own.iter().map(|y| y + offset)));
-        let own: Vec<Moments> = split(values, groups, count).iter().map(moments).collect();
+        let own = split(values, groups, count);
+        let own: Vec<Moments> = own.iter().map(|own| Moments::of(own, rounding_of(own, offset))).collect();
         let filled = own.iter().filter(|own| own.n > 0).count();
         let (n, ss) = (values.len(), own.iter().map(|own| own.ss()).sum::<f64>());
-        Self { n, sd: (n > filled).then(|| (ss / (n - filled) as f64).sqrt()) }
+        Self { sd: (n > filled).then(|| (ss / (n - filled) as f64).sqrt()) }
     }
 }
 
@@ -231,13 +256,8 @@ impl Levels {
         let readings: Vec<Vec<Option<f64>>> = (0..design.width()).map(level).collect();
         let (groups, count) = (design.groups().to_vec(), design.between().iter().product());
         let offset = design.offset();
-        let spread = |level: &Vec<Option<f64>>| {
-            let there = level.iter().zip(&groups).filter_map(|(y, &group)| y.map(|y| (y, group)));
-            let (values, groups): (Vec<f64>, Vec<usize>) = there.unzip();
-            Spread::of(&values, &groups, count, offset)
-        };
-        let spreads = readings.iter().map(spread).collect();
-        Self { factor, readings, groups, count, spreads, offset }
+        let wholes = readings.iter().map(|level| Whole::of(level, &groups, count, offset)).collect();
+        Self { factor, readings, groups, count, wholes, offset }
     }
 
     /// The same as the levels of this factor of another design.
@@ -269,9 +289,8 @@ impl Levels {
             return families.tests.of_scores(compared, at.to_vec(), &nobody, &[]);
         };
         let pair = self.pair(level, against);
-        let differences: Vec<f64> = pair.later.iter().zip(&pair.earlier).map(|(y, x)| y - x).collect();
-        let noise = rounding(pair.later.iter().chain(&pair.earlier).map(|y| y + self.offset));
-        let scores = Scores::of(&differences, &pair.groups, self.count, noise);
+        let differences: Vec<f64> = pair.later.iter().zip(pair.earlier.iter()).map(|(y, x)| y - x).collect();
+        let scores = Scores::of(&differences, &pair.groups, self.count, pair.rounding);
         let sds = (self.sd(level, &pair.later, &pair.groups), self.sd(against, &pair.earlier, &pair.groups));
         let weights = scores.weights(families.settings.sums);
         let found = families.tests.of_scores(compared, at.to_vec(), &scores, &weights);
@@ -279,23 +298,27 @@ impl Levels {
     }
 
     /// The readings of the subjects that have both levels.
-    fn pair(&self, later: usize, earlier: usize) -> Pair {
-        let level = |level: usize| self.readings.get(level).into_iter().flatten();
-        let mut pair = Pair::default();
-        for ((later, earlier), &group) in level(later).zip(level(earlier)).zip(&self.groups) {
-            if let (Some(y), Some(x)) = (later, earlier) {
-                pair.later.push(*y);
-                pair.earlier.push(*x);
-                pair.groups.push(group);
-            }
+    fn pair(&self, later: usize, earlier: usize) -> Pair<'_> {
+        let whole = |level: usize| self.wholes.get(level).filter(|it| it.values.len() == self.groups.len());
+        if let (Some(later), Some(earlier)) = (whole(later), whole(earlier)) {
+            let groups = Cow::Borrowed(self.groups.as_slice());
+            let rounding = later.rounding + earlier.rounding;
+            return Pair { later: (&later.values).into(), earlier: (&earlier.values).into(), groups, rounding };
         }
-        pair
+        let level = |level: usize| self.readings.get(level).into_iter().flatten();
+        let both = level(later).zip(level(earlier)).zip(&self.groups);
+        let both: Vec<(f64, (f64, usize))> =
+            both.filter_map(|((y, x), &group)| Some(((*y)?, ((*x)?, group)))).collect();
+        let (later, rest): (Vec<f64>, Vec<(f64, usize)>) = both.into_iter().unzip();
+        let (earlier, groups): (Vec<f64>, Vec<usize>) = rest.into_iter().unzip();
+        let rounding = rounding_of(&later, self.offset) + rounding_of(&earlier, self.offset);
+        Pair { later: later.into(), earlier: earlier.into(), groups: groups.into(), rounding }
     }
 
     /// The SD of one level over a pair's subjects; known already if no reading of the level dropped out.
     fn sd(&self, level: usize, of_pair: &[f64], groups: &[usize]) -> Option<f64> {
-        match self.spreads.get(level) {
-            Some(whole) if whole.n == of_pair.len() => whole.sd,
+        match self.wholes.get(level) {
+            Some(whole) if whole.values.len() == of_pair.len() => whole.sd,
             _ => Spread::of(of_pair, groups, self.count, self.offset).sd,
         }
     }
@@ -319,11 +342,11 @@ impl Levels {
 }
 
 /// The readings of one pair.
-#[derive(Default)]
-struct Pair {
-    later: Vec<f64>,
-    earlier: Vec<f64>,
-    groups: Vec<usize>,
+struct Pair<'a> {
+    later: Cow<'a, [f64]>,
+    earlier: Cow<'a, [f64]>,
+    groups: Cow<'a, [usize]>,
+    rounding: f64,
 }
 
 fn dav(estimate: Option<f64>, (later, earlier): (Option<f64>, Option<f64>)) -> Option<f64> {

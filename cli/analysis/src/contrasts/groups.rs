@@ -6,7 +6,7 @@
 use super::comparison::{Compared, Comparison, Families};
 use super::score::Scores;
 use crate::design::{At, Design, FactorId};
-use crate::moments::rounding;
+use crate::moments::rounding_of;
 
 /// Every later level of a between factor minus the first, at each level of a within factor, or over all cells.
 pub(super) fn group_differences(
@@ -49,7 +49,7 @@ fn against_first(design: &Design, factor: usize, at: Option<At>, families: &mut 
     let there = design.rows().zip(design.groups()).filter_map(|(row, &group)| Some(((*row.first()?)?, group)));
     let there = there.filter(|(_, group)| levels.get(*group).is_some_and(Option::is_some));
     let (values, groups): (Vec<f64>, Vec<usize>) = there.unzip();
-    let noise = rounding(values.iter().map(|y| y + design.offset()));
+    let noise = rounding_of(&values, design.offset());
     let scores = Scores::of(&values, &groups, levels.len(), noise);
     let later =
         (1..design.levels(FactorId::Between(factor))).map(|level| Compared::Effect { factor, level, against: 0 });

@@ -3,6 +3,7 @@
 //! Invariants: a contrast is a number for each subject that has what it needs; the error is the spread of these numbers
 //! within groups; with one group this is the paired *t* test.
 
+use std::borrow::Cow;
 use std::collections::BTreeMap;
 
 use super::comparison::{Compared, Comparison};
@@ -65,12 +66,15 @@ impl Scores {
 }
 
 /// Values by group.
-pub(super) fn split(values: &[f64], groups: &[usize], count: usize) -> Vec<Vec<f64>> {
+pub(super) fn split<'a>(values: &'a [f64], groups: &[usize], count: usize) -> Vec<Cow<'a, [f64]>> {
+    if count == 1 {
+        return vec![Cow::Borrowed(values)];
+    }
     let mut split = vec![Vec::new(); count];
     for (&value, &group) in values.iter().zip(groups) {
         split.get_mut(group).into_iter().for_each(|own: &mut Vec<f64>| own.push(value));
     }
-    split
+    split.into_iter().map(Cow::Owned).collect()
 }
 
 /// Student's tests; remembers the critical value of each number of degrees of freedom.
