@@ -69,7 +69,7 @@ pub struct TermEffect {
 pub enum About {
     /// The design as a whole.
     Design,
-    /// One effect, or, for a note on sphericity, the main effect of a stratum.
+    /// One effect; for a note on sphericity or on trends, that of the within factors alone.
     Term(Term),
     /// The contrast of this index in the result.
     Contrast(usize),
@@ -120,6 +120,30 @@ impl Factorial {
 /// failure of its own: what a degenerate design leaves undefined is `None`, with a [`Remark`]. An error sum of squares no
 /// larger than what rounding the readings to doubles can produce, Σ (ε y)², counts as zero in the tests, and is reported
 /// as it is.
+///
+/// ```
+/// use revisant_analysis::Settings;
+/// use revisant_analysis::anova::{Term, factorial};
+/// use revisant_analysis::contrasts::Family;
+/// use revisant_analysis::design::{Design, DesignError, Factor, FactorId};
+///
+/// // Two arms, three visits on days 0, 14 and 42.
+/// let subjects = [
+///     ([0], [Some(31.0), Some(33.5), Some(36.0)]),
+///     ([0], [Some(28.5), Some(30.0), Some(30.5)]),
+///     ([1], [Some(40.0), Some(40.5), Some(41.0)]),
+///     ([1], [Some(35.0), Some(36.5), Some(35.5)]),
+/// ];
+/// let design = Design::new(vec![Factor::at(vec![0.0, 14.0, 42.0])?], vec![2], &subjects)?;
+/// let result = factorial(&design, &Settings { contrasts: vec![Family::Groups { at: Some(0) }], ..Settings::default() });
+///
+/// let (arm, visit) = (Term::main(FactorId::Between(0)), Term::main(FactorId::Within(0)));
+/// let both = Term { between: arm.between, within: visit.within };
+/// assert_eq!(result.effects().map(|it| it.term).collect::<Vec<_>>(), [arm, visit, both]);
+/// assert!(result.effect(both).and_then(|effect| effect.f).is_some_and(|f| f > 1.0));
+/// assert_eq!(result.contrasts.len(), 3); // arm 1 minus arm 0 at each visit
+/// # Ok::<(), DesignError>(())
+/// ```
 #[must_use]
 pub fn factorial(design: &Design, settings: &Settings) -> Factorial {
     let table = Table::of(design);

@@ -10,8 +10,8 @@ use super::groups::group_differences;
 use super::polynomial;
 use super::score::{Scores, Tests, split};
 use super::simple;
-use crate::anova::{About, Remark};
-use crate::design::{At, Design, Factor};
+use crate::anova::{About, Remark, Term};
+use crate::design::{At, Design, Factor, FactorId};
 use crate::distributions::StudentT;
 use crate::moments::{Moments, rounding, rounding_of};
 use crate::{Confidence, Interval, Note, Settings};
@@ -168,7 +168,8 @@ impl Families<'_> {
             let coefficients = polynomial::orthonormal(&positions);
             if coefficients.len() + 1 < positions.len() {
                 let note = Note::TrendsIndistinct { degree: coefficients.len() + 1 };
-                self.remarks.push(Remark::new(About::Design, note));
+                let about = About::Term(Term::main(FactorId::Within(factor)));
+                self.remarks.push(Remark::new(about, note));
             }
             let found = own.trends(&coefficients, self);
             self.settle(found);

@@ -22,11 +22,11 @@ pub struct SimpleEffect {
     pub effect: Effect,
 }
 
-/// The other factors of a design and their levels.
+/// The other factors of a design that have levels to be at.
 fn others(design: &Design, factor: FactorId) -> impl Iterator<Item = FactorId> {
     let between = (0..design.between().len()).map(FactorId::Between);
     let within = (0..design.within().len()).map(FactorId::Within);
-    between.chain(within).filter(move |other| *other != factor)
+    between.chain(within).filter(move |other| *other != factor && design.levels(*other) > 1)
 }
 
 /// The design at one level of a factor, averaged over all within factors but the `kept` one, with the level of a between

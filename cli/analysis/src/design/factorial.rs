@@ -9,8 +9,8 @@ use crate::moments::Sum;
 
 /// The most factors, within and between together: they have 2 to this power effects.
 pub const MOST_FACTORS: usize = 10;
-/// The most combinations of between levels.
-pub const MOST_GROUPS: usize = 256;
+/// The most combinations of between levels: the work for unequal groups grows with the fourth power of their number.
+pub const MOST_GROUPS: usize = 100;
 
 /// The levels of a factor, and where they lie if they are points in time.
 #[derive(Debug, Clone, PartialEq)]
