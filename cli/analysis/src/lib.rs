@@ -34,6 +34,7 @@
 
 #![forbid(unsafe_code)]
 
+pub mod agreement;
 pub mod anova;
 pub mod checks;
 pub mod contrasts;
@@ -41,6 +42,7 @@ pub mod design;
 pub mod distributions;
 mod moments;
 mod note;
+pub mod power;
 pub mod ranks;
 mod settings;
 

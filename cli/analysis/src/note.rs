@@ -4,6 +4,7 @@
 
 use std::fmt;
 
+use crate::agreement::Form;
 use crate::contrasts::ContrastKind;
 
 /// Why something in a result is `None`, or needs a word of caution.
@@ -90,8 +91,8 @@ pub enum Note {
     },
     /// Every subject's readings are all tied: Friedman's test is not defined.
     AllTied,
-    /// Trends were asked for of an analysis by ranks, which has none.
-    NoTrendsOfRanks,
+    /// Contrasts other than pairs of levels were asked for of an analysis by ranks, which has none.
+    OnlyPairsByRanks,
     /// A reading is no multiple of the step in which all were said to be exported: ties were looked for within rounding.
     OffGrain,
     /// All differences of this pair are zero: there is nothing to rank.
@@ -106,6 +107,21 @@ pub enum Note {
         /// Its differences other than zero.
         differences: usize,
     },
+    /// This intraclass correlation or its interval is not defined for these mean squares.
+    IccUndefined {
+        /// Which form.
+        form: Form,
+    },
+    /// No subject has two readings: there is no error within subjects.
+    NoRepeatedReading,
+    /// The mean of a subject's readings is zero: the coefficient of variation is not defined.
+    CvUndefined,
+    /// Readings have both signs: a coefficient of variation says little about them.
+    CvOfBothSigns,
+    /// The groups have no more subjects than there are groups: there is no error to test against.
+    NoErrorDegrees,
+    /// The assumed covariance is not spherical: the power formula promises more than a corrected test has in small samples.
+    PowerOptimistic,
 }
 
 impl fmt::Display for Note {
@@ -160,7 +176,7 @@ impl fmt::Display for Note {
             Self::AllTied => {
                 write!(f, "every subject's readings are all tied, so Friedman's test is not defined")
             }
-            Self::NoTrendsOfRanks => write!(f, "there are no trends of ranks"),
+            Self::OnlyPairsByRanks => write!(f, "an analysis by ranks compares pairs of levels only"),
             Self::OffGrain => {
                 write!(
                     f,
@@ -173,6 +189,25 @@ impl fmt::Display for Note {
             Self::ConfidenceNotReached { contrast, differences } => write!(
                 f,
                 "{contrast}: with {differences} differences no interval has the confidence asked for; the widest is given"
+            ),
+            Self::IccUndefined { form } => {
+                write!(f, "{} or its interval is not defined for readings that vary like this", form.name())
+            }
+            Self::NoRepeatedReading => {
+                write!(f, "no subject has two readings, so there is no variation within subjects")
+            }
+            Self::CvUndefined => {
+                write!(f, "a subject's mean is zero, so the coefficient of variation is not defined")
+            }
+            Self::CvOfBothSigns => {
+                write!(f, "some readings are negative and some positive, so the coefficient of variation says little")
+            }
+            Self::NoErrorDegrees => {
+                write!(f, "there are no more subjects than groups, so there is no error to test against")
+            }
+            Self::PowerOptimistic => write!(
+                f,
+                "the assumed covariance is not spherical, so the formula promises more power than a corrected test has with few subjects; simulate before relying on it"
             ),
         }
     }

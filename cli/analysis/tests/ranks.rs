@@ -171,7 +171,7 @@ fn degenerate_designs() {
     assert_eq!((none.effect, none.used.len(), none.incomplete), (None, 0, vec![0, 1]));
     let first = ContrastKind::EachVsFirst { level: 1, against: 0 };
     let too_few = Note::TooFewForContrast { contrast: first, subjects: 0 };
-    assert_eq!(none.notes, [Note::NoCompleteSubject, too_few, Note::NoTrendsOfRanks]);
+    assert_eq!(none.notes, [Note::NoCompleteSubject, too_few, Note::OnlyPairsByRanks]);
 }
 
 /// Tables of tenths with gaps, of any shape.

@@ -15,7 +15,7 @@ pub(super) fn over_scale(df: f64, start: f64, widest: f64, log_tail: impl Fn(f64
     let log_height = (2.0 * gamma_kernel(a, a)).ln();
     let width = (1.0 / (2.0 * df + 1.0).sqrt()).min(widest);
     let log_f = |u: f64| log_height - a * beyond_linear(2.0 * u) + log_tail(u.exp());
-    trapezoid::whole_line(start, width, |u| if u < LARGEST_LOG { log_f(u) } else { f64::NEG_INFINITY })
+    trapezoid::whole_line(start, width, df, |u| if u < LARGEST_LOG { log_f(u) } else { f64::NEG_INFINITY })
 }
 
 /// From here on the density of u is 0 for any degrees of freedom.

@@ -16,14 +16,14 @@ pub struct NonCentralF {
 }
 
 /// The largest non-centrality of *F* that is accepted.
-const MOST_NONCENTRALITY: f64 = 1e9;
+const MOST_NONCENTRALITY: f64 = 1e7;
 /// The share of the sum below which a term, and with it all those farther out, no longer counts.
 const NEGLIGIBLE: f64 = 1e-18;
 
 impl NonCentralF {
     /// # Errors
     /// [`ParameterError`] unless the degrees of freedom lie between [`FEWEST`](super::FEWEST) and
-    /// [`MOST`](super::MOST), and `noncentrality` between 0 and 1e9.
+    /// [`MOST`](super::MOST), and `noncentrality` between 0 and 1e7.
     pub fn new(df: f64, error_df: f64, noncentrality: f64) -> Result<Self, ParameterError> {
         let (df, error_df) = (degrees(df)?, degrees(error_df)?);
         if (0.0..=MOST_NONCENTRALITY).contains(&noncentrality) {
@@ -48,7 +48,7 @@ impl NonCentralF {
 
     /// The λ ≥ 0 with P(F ≤ f) = `p` at the given degrees of freedom: the end of a confidence interval for λ. 0 where
     /// even λ = 0 leaves less than `p` below f; `None` unless 0 < p < 1, the degrees of freedom are usable, f is finite
-    /// and not negative, and the answer is at most 1e9.
+    /// and not negative, and the answer is at most 1e7.
     #[must_use]
     pub fn noncentrality_with_cdf(df: f64, error_df: f64, f: f64, p: f64) -> Option<f64> {
         let p = probability(p)?;

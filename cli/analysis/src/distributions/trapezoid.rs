@@ -14,20 +14,21 @@ const MOST_CLIMBS: u32 = 4_000;
 const MOST_HALVINGS: u32 = 14;
 const MOST_TERMS: u32 = 4_000_000;
 
-/// ∫ exp(`log_f`(u)) du over all u, for an analytic integrand with one peak. The search for the peak begins at `start`,
-/// and `width` is about the standard deviation that the peak would have if it were normal. `None` without convergence.
+/// ∫ exp(`log_f`(u)) du over all u, for an analytic integrand with one peak that falls to the left no slower than
+/// e^(`rate` u). The search for the peak begins at `start`, and `width` is about the standard deviation that the peak
+/// would have if it were normal. `None` without convergence.
 ///
 /// The rule converges exponentially for such integrands (Trefethen & Weideman 2014, *SIAM Review* 56:385).
-pub(super) fn whole_line(start: f64, width: f64, log_f: impl Fn(f64) -> f64) -> Option<f64> {
+pub(super) fn whole_line(start: f64, width: f64, rate: f64, log_f: impl Fn(f64) -> f64) -> Option<f64> {
     let (peak, top) = climb(start, width, &log_f);
     if top == f64::NEG_INFINITY {
         return Some(0.0);
     }
     let f = |u: f64| (log_f(u) - top).exp();
     let mut step = width / 2.0;
-    let mut sum = step * (f(peak) + outward(peak, step, &f)? + outward(peak, -step, &f)?);
+    let mut sum = step * (f(peak) + rightward(peak, step, f)? + leftward(peak, step, rate, f)?);
     for _ in 0..MOST_HALVINGS {
-        let between = outward(peak - step / 2.0, step, &f)? + outward(peak + step / 2.0, -step, &f)?;
+        let between = rightward(peak - step / 2.0, step, f)? + leftward(peak + step / 2.0, step, rate, f)?;
         let finer = f64::midpoint(sum, step * between);
         if (finer - sum).abs() <= AGREEMENT * finer {
             return Some(finer * top.exp());
@@ -54,15 +55,39 @@ fn climb(start: f64, width: f64, log_f: impl Fn(f64) -> f64) -> (f64, f64) {
 }
 
 /// The sum of f at `from` + `step`, `from` + 2 `step`, and so on.
-fn outward(from: f64, step: f64, f: impl Fn(f64) -> f64) -> Option<f64> {
+fn rightward(from: f64, step: f64, f: impl Fn(f64) -> f64) -> Option<f64> {
     let (mut sum, mut last) = (0.0, 0.0);
     for count in 1..MOST_TERMS {
         let term = f(from + f64::from(count) * step);
         sum += term;
-        if term <= NEGLIGIBLE * sum && term <= last || term == 0.0 {
+        if ended(term, last, sum) {
             return Some(sum);
         }
         last = term;
     }
     None
+}
+
+/// The sum of f at `from` − `step`, `from` − 2 `step`, and so on. Where f has come to fall by the slowest rate there is,
+/// what is left is a geometric series.
+fn leftward(from: f64, step: f64, rate: f64, f: impl Fn(f64) -> f64) -> Option<f64> {
+    let slowest = (-rate * step).exp();
+    let (mut sum, mut last, mut geometric) = (0.0, 0.0, 0);
+    for count in 1..MOST_TERMS {
+        let term = f(from - f64::from(count) * step);
+        sum += term;
+        if ended(term, last, sum) {
+            return Some(sum);
+        }
+        geometric = if (term / last / slowest - 1.0).abs() <= 4.0 * f64::EPSILON { geometric + 1 } else { 0 };
+        if geometric > 2 {
+            return Some(sum + term / (rate * step).exp_m1());
+        }
+        last = term;
+    }
+    None
+}
+
+fn ended(term: f64, last: f64, sum: f64) -> bool {
+    term == 0.0 || term <= NEGLIGIBLE * sum && term <= last
 }

@@ -73,7 +73,7 @@ pub struct ImanDavenport {
 ///
 /// `grain` is the step of which all readings are whole multiples, as exported (see [`Grain`]): ties are then exact. With
 /// `None`, or where a reading is no multiple of it, numbers count as tied that differ by no more than the rounding of
-/// readings to doubles can make. There are no trends of ranks: a family of them is passed over with a note. Pairs come
+/// readings to doubles can make. Any other family than pairs of levels is passed over with a note. Pairs come
 /// in the order of the earlier level, then of the later; `p_adjusted` is over the family. The function has no failure of
 /// its own: what a degenerate design leaves undefined is `None`, with a [`Note`].
 #[must_use]
@@ -149,7 +149,7 @@ fn one_family(graded: &Graded, family: &Family, settings: &Settings, notes: &mut
             .collect(),
         Family::EachVsFirst => (1..levels).map(|level| ContrastKind::EachVsFirst { level, against: 0 }).collect(),
         _ => {
-            notes.push(Note::NoTrendsOfRanks);
+            notes.push(Note::OnlyPairsByRanks);
             Vec::new()
         }
     };
