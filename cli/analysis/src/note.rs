@@ -29,6 +29,43 @@ pub enum Note {
         /// Levels.
         levels: usize,
     },
+    /// The same, with several factors.
+    TooFewErrorDf {
+        /// Error degrees of freedom of each contrast.
+        error_df: usize,
+        /// Contrasts.
+        contrasts: usize,
+    },
+    /// There is nobody at this level of a between factor who is complete: the level is left out of the comparison.
+    EmptyLevel {
+        /// The between factor.
+        factor: usize,
+        /// The level.
+        level: usize,
+    },
+    /// Nobody in this combination of between levels is complete: effects are not defined.
+    EmptyGroup {
+        /// The group's number in the design.
+        group: usize,
+    },
+    /// A group of one complete subject, which adds nothing to the error.
+    GroupOfOne {
+        /// The group's number in the design.
+        group: usize,
+    },
+    /// Every group has one subject at most: nothing tells an effect from chance.
+    NoErrorWithinGroups,
+    /// The groups are not equal in size, so the sums of squares of the effects do not add up to the total.
+    UnequalGroups,
+    /// Fewer subjects have what a comparison needs than it has groups, and two: it has no standard error.
+    TooFewForComparison {
+        /// How many subjects have it.
+        subjects: usize,
+    },
+    /// Nobody of a group that there is has what a comparison needs: it is not defined.
+    GroupWithoutComparison,
+    /// All subjects of a group have the same value of a comparison, as far as doubles can tell: *t* is infinite, or 0/0.
+    NoSpread,
     /// The covariance of the contrasts is singular, as far as doubles can tell: Mauchly's test is not defined.
     SingularCovariance,
     /// The Huynh-Feldt epsilons have a denominator of zero or below: too few subjects for so strong a correlation.
@@ -101,6 +138,27 @@ impl fmt::Display for Note {
             Self::TooFewSubjectsForMauchly { subjects, levels } => {
                 write!(f, "Mauchly's test is not defined for {subjects} complete subjects and {levels} levels")
             }
+            Self::TooFewErrorDf { error_df, contrasts } => {
+                write!(f, "Mauchly's test is not defined for {contrasts} contrasts on {error_df} degrees of freedom")
+            }
+            Self::EmptyLevel { factor, level } => {
+                write!(f, "nobody at level {level} of between factor {factor} is complete, so it is not compared")
+            }
+            Self::EmptyGroup { group } => {
+                write!(f, "nobody in group {group} is complete, so effects are not defined")
+            }
+            Self::GroupOfOne { group } => write!(f, "only one subject of group {group} is complete"),
+            Self::NoErrorWithinGroups => {
+                write!(f, "no group has two complete subjects, so there is no error to test against")
+            }
+            Self::UnequalGroups => {
+                write!(f, "the groups are of unequal size, so the sums of squares do not add up to the total")
+            }
+            Self::TooFewForComparison { subjects } => {
+                write!(f, "{subjects} subjects are too few for a standard error")
+            }
+            Self::GroupWithoutComparison => write!(f, "a group has nobody with all that it needs"),
+            Self::NoSpread => write!(f, "it is the same for all subjects of a group, so t is not defined"),
             Self::SingularCovariance => {
                 write!(f, "the covariance of the contrasts is singular, so Mauchly's test is not defined")
             }
