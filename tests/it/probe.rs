@@ -1,5 +1,5 @@
 //! Drafted readers, on every study of the corpus: the plan without one instrument's reader, the reader drafted from
-//! that instrument's exports, and what it then files held against what the true reader files.
+//! that instrument's exports, from two of them or from one, and what it then files held against what the true reader files.
 
 use std::collections::BTreeMap;
 use std::fs;
@@ -228,6 +228,11 @@ fn drafts_from_all_exports_file_nothing_wrongly() {
 #[test]
 fn drafts_from_two_exports_file_nothing_wrongly() {
     judge_all(2);
+}
+
+#[test]
+fn drafts_from_one_export_file_nothing_wrongly() {
+    judge_all(1);
 }
 
 // ---- the command ----
