@@ -235,6 +235,29 @@ fn drafts_from_one_export_file_nothing_wrongly() {
     judge_all(1);
 }
 
+/// The delimiter of each delimited export of the corpus by itself, against that of the plan.
+#[test]
+fn delimiters_of_single_exports_are_found() {
+    let (mut right, mut wrong) = (0, vec![]);
+    for study in studies() {
+        let plan = last_plan(&study);
+        for block in blocks(&plan).iter().filter(|block| block.reader.contains("format = \"delimited\"")) {
+            let stated = block.reader.lines().find(|line| line.starts_with("delimiter"));
+            let expected = stated.unwrap_or("delimiter = \",\"").to_owned();
+            let site = site(&study, &plan.replace(&block.whole, ""));
+            for file in exports(&site, block) {
+                // What is no table at all has no delimiter.
+                let Ok(drafted) = probe(&site, block, std::slice::from_ref(&file)) else { continue };
+                let toml = drafted["toml"].as_str().unwrap();
+                let found = toml.lines().find(|line| line.starts_with("delimiter")).unwrap_or_default();
+                if found == expected { right += 1 } else { wrong.push(format!("{study} {file}: {found}")) }
+            }
+        }
+    }
+    println!("{right} right, {} wrong: {wrong:#?}", wrong.len());
+    assert!(right > 150 && wrong.len() * 50 <= right, "{right} right, wrong: {wrong:#?}");
+}
+
 // ---- the command ----
 
 const PLAN: &str = "\
