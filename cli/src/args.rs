@@ -45,10 +45,11 @@ pub enum Command {
     #[command(after_help = "\
 Example:
   revisant new --study grip --code GR-1 --title \"Grip\" --zone Europe/London \\
-    --measure grip:kg --visit baseline:0 --visit week-4:28 \\
-    --instrument dyn-1:exports/dyn-1
+    --subject GR-012 --measure grip:kg:3:2:95 --condition grip:hand=left,right \\
+    --visit baseline:0 --visit week-4:28:-3:7 --instrument dyn-1:exports/dyn-1
 
-On a terminal, what is not given is asked for. The plan is never overwritten.
+On a terminal, what is not given is asked for; elsewhere --code, --zone, --measure and --visit are needed.
+The plan is never overwritten.
 JSON: {\"plan\": path, \"folders\": [path]}")]
     New(New),
     /// Draft an instrument's reader from sample exports
@@ -240,15 +241,24 @@ pub struct New {
     /// The zone of the study centre, such as Europe/London
     #[arg(long, value_name = "ZONE")]
     pub zone: Option<String>,
-    /// A measure and its unit; may be given again
-    #[arg(long, value_name = "CODE:UNIT")]
+    /// A subject's code, from which the pattern of all codes is made
+    #[arg(long, value_name = "EXAMPLE")]
+    pub subject: Option<String>,
+    /// A measure and its unit, its replicates in a session and its plausible range; may be given again
+    #[arg(long, value_name = "CODE:UNIT[:REPLICATES[:LOW:HIGH]]")]
     pub measure: Vec<String>,
-    /// A visit and its day after the first; may be given again
-    #[arg(long, value_name = "CODE:DAY")]
+    /// A condition under which a measure is taken; may be given again
+    #[arg(long, value_name = "MEASURE:FACTOR=LEVEL,LEVEL")]
+    pub condition: Vec<String>,
+    /// A visit, its day after day 0 and its window in days around that; may be given again
+    #[arg(long, value_name = "CODE:DAY[:FROM:UNTIL]")]
     pub visit: Vec<String>,
     /// An instrument and the folder of its exports; may be given again
     #[arg(long, value_name = "CODE:FOLDER")]
     pub instrument: Vec<String>,
+    /// There are no instruments yet, and none is asked for
+    #[arg(long, conflicts_with = "instrument")]
+    pub no_instrument: bool,
 }
 
 /// `probe`

@@ -10,7 +10,7 @@ use serde::Serialize;
 
 use crate::error::{Exit, Failure};
 use crate::report::table::Table;
-use crate::report::text::wrap;
+use crate::report::text::{clean_lines, wrap};
 
 /// The narrowest and the widest that text is laid out for.
 const NARROWEST: usize = 40;
@@ -108,12 +108,14 @@ impl<'w> Out<'w> {
     }
 
     fn plain(&self, failure: &Failure) -> String {
-        let faults = failure.faults.as_ref().map_or(String::new(), |faults| format!("{}\n\n", faults.0.trim_end()));
+        // Faults and messages may quote what a file says.
+        let faults =
+            failure.faults.as_ref().map_or(String::new(), |faults| format!("{}\n\n", clean_lines(faults.0.trim_end())));
         // What the option parser says is laid out already.
-        let message = match failure.what.contains('\n') {
+        let message = clean_lines(&match failure.what.contains('\n') {
             true => format!("revisant: {}", failure.message()),
             false => wrap(&format!("revisant: {}", sentence(&failure.message())), self.width, "  "),
-        };
+        });
         let name = "revisant:";
         let message = match message.strip_prefix(name) {
             Some(rest) if self.colour => format!("{}{rest}", name.red().bold()),

@@ -404,6 +404,26 @@ fn a_new_plan_passes_check_and_is_never_overwritten() {
 }
 
 #[test]
+fn what_was_done_is_said_in_words() {
+    let study = Study::begun();
+    let rows = Study::session("GR-001", "2025-01-06", 31.0);
+    study.export("a.csv", &rows);
+    study.export("b.csv", &rows);
+    study.run(&["collect"]).well();
+    let status = study.run(&["status"]).well().out;
+    assert!(status.contains("repeat") && status.contains("the same bytes as"), "{status}");
+    let args = ["roster", "withdraw", "GR-001", "--on", "2025-02-01", "--data", "keep", "--why", "moved"];
+    let withdrawn = study.run(&args).well().out;
+    assert!(withdrawn.starts_with("GR-001 is withdrawn on 2025-02-01; the data"), "{withdrawn}");
+    let trail = study.run(&["trail"]).well().out;
+    for internal in ["capture", "stood_at", "repeat_of"] {
+        assert!(!trail.contains(internal), "{trail}");
+    }
+    let trail: String = trail.split_whitespace().collect::<Vec<_>>().join(" ");
+    assert!(trail.contains("4 readings") && trail.contains("the same bytes as before"), "{trail}");
+}
+
+#[test]
 fn a_mended_reader_is_adopted_only_on_purpose() {
     let study = Study::begun();
     study.export("a.csv", "GR-001,2025-01-06T09:00,1,30,31\n");

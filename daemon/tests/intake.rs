@@ -9,6 +9,8 @@ use std::sync::Arc;
 
 use revisant_daemon::intake::collect::{How, Report, collect};
 use revisant_daemon::intake::error::IntakeError;
+use revisant_daemon::intake::file::add_hold;
+use revisant_daemon::intake::place::resolve::Held;
 use revisant_daemon::intake::{plan, replace};
 use revisant_schema::hold::{Answer, HoldState, Reason};
 use revisant_schema::reading::ReadingState;
@@ -535,4 +537,42 @@ fn adopting_leaves_what_a_person_has_seen_to_and_holds_its_new_value() {
     study.decide(&hold, Answer::TakeNew);
     assert_eq!(study.current(), ["IN-01 2025-03-03 #1 177.8", "IN-02 2025-03-03 #1 154.94"]);
     assert_eq!(study.account("a.csv")["held"], 0);
+}
+
+/// A file that an older program could not read is read once a newer one is there, and not before.
+#[test]
+fn a_file_held_by_an_older_program_is_tried_again() {
+    let mut study = Study::new("", LABELLED);
+    study.collect();
+    let text = "who,at,visit,n,length\nIN-01,2025-03-03 09:00,first,1,70\n";
+    let doer = study.doer.clone();
+    // As an older program left it: the bytes are kept, and the file is held since nobody could read it.
+    let kept = study.records.keep_small(text.as_bytes().to_vec()).unwrap();
+    let capture = study.records.next_capture().unwrap();
+    let mut filing = study.records.new_filing(Some(capture)).unwrap();
+    let held = Held::row(Reason::UnknownLayout, "exports of this format cannot be read by this version");
+    add_hold(&mut study.records, &mut filing, None, &held, &[0; 24]).unwrap();
+    let add = |act: &mut revisant_schema::records::Act<'_>| {
+        act.add_raw(&kept)?;
+        let cells = [
+            Cell::Term("mat"),
+            Cell::Text("exports/mat/a.csv"),
+            Cell::Int(0),
+            Cell::Int(text.len() as i64),
+            Cell::Bytes(&kept.sha256),
+            Cell::Int(1),
+            Cell::Null,
+            Cell::Null,
+        ];
+        act.add("capture", &cells)?;
+        act.publish(filing)?;
+        Ok(())
+    };
+    study.records.act(ActKind::File, &doer, add).unwrap();
+    study.collect();
+    assert_eq!((study.open().len(), study.all().len()), (1, 0), "the same program does not try again");
+    study.records.set_working(replace::READ_BY, "an older one").unwrap();
+    study.collect();
+    assert_eq!((study.open().len(), study.all().len()), (0, 1));
+    assert!(study.records.verify(&mut |_, _| {}).unwrap().faults.is_empty());
 }

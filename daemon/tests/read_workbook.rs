@@ -551,6 +551,7 @@ fn a_sheet_out_of_order_is_a_fault() {
         ("<row r=\"2\"><c r=\"XFE2\"/></row>", "order"),
         ("<row r=\"2\"><c r=\"ZZZZZZZZZZ2\"/></row>", "names itself"),
         ("<row r=\"2\"><c r=\"2\"/></row>", "names itself"),
+        ("<row><c r=\"A\"/></row>", "names itself"),
         ("<row r=\"2\"><c t=\"z\"/></row>", "unknown kind"),
         ("<row r=\"2\"><c><v>1</v><v>2</v></c></row>", "two values"),
         ("<row r=\"2\"><c><v>1<x/></v></c></row>", "where it should not"),

@@ -43,9 +43,9 @@ reasons! {
     AfterClosing = "after-closing", "the file came after the study's close";
     UnreadableRow = "unreadable-row", "the row cannot be read";
     UnfinishedRow = "unfinished-row", "the last row has no line end and may have been cut";
-    NoSubject = "no-subject", "the row names no subject";
+    NoSubject = "no-subject", "no subject is named";
     UnknownSubject = "unknown-subject", "the subject is not on the roster";
-    NoStamp = "no-stamp", "the row says no time";
+    NoStamp = "no-stamp", "no time is said";
     UnreadableStamp = "unreadable-stamp", "the time cannot be read";
     ClockGap = "clock-gap", "the time does not exist: clocks went forward over it";
     ClockFold = "clock-fold", "the time exists twice: clocks went back over it";
@@ -82,6 +82,9 @@ impl FromStr for Reason {
             .ok_or_else(|| format!("\"{text}\" is no reason for a hold"))
     }
 }
+
+/// What a likely answer begins with that takes the place of a replicate, before its number.
+pub const INSTEAD_OF: &str = "instead of";
 
 /// A person's answer to a hold. Binds to the row as written.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
@@ -151,6 +154,11 @@ impl Reason {
         self >= Reason::UnknownMeasure
     }
 
+    /// Whether no answer mends it: only another plan or other bytes do.
+    pub fn accepts_nothing(self) -> bool {
+        matches!(self, Self::UnreadableFile | Self::UnknownLayout | Self::TooLarge)
+    }
+
     /// Whether a person may give this answer to a hold with this reason.
     pub fn accepts(self, answer: &Answer) -> bool {
         use Reason::*;
@@ -187,7 +195,7 @@ impl Reason {
             ChangedValue => "--keep-old or --take-new",
             ExtraReplicate | UnknownReplicate => "--replicate NUMBER or --instead-of NUMBER",
             UnreadableRow | UnfinishedRow | OtherInstrument | AfterClosing => "--as-it-stands",
-            UnreadableFile | UnknownLayout | TooLarge => "none: mend the plan or export again, or dismiss it",
+            UnreadableFile | UnknownLayout | TooLarge => "none: mend the plan, or export the file again, or dismiss it",
         }
     }
 }

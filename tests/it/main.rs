@@ -9,6 +9,7 @@
 mod corpus;
 mod cuts;
 mod errors;
+mod holds;
 mod house;
 mod instruments;
 mod kills;

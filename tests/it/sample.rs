@@ -217,3 +217,18 @@ fn the_instrument_is_found_or_asked_for() {
     site.check_snapshot("sample/unknown-instrument", &site.run(&["check", "--sample", "a.csv", "--instrument", "x"]));
     site.check_snapshot("sample/no-file", &site.run(&["check", "--sample", "d.csv"]));
 }
+
+#[test]
+fn of_many_holds_the_first_are_shown_and_all_are_counted() {
+    let site = begun();
+    let rows: String = (0..60).map(|row| format!("W-9{},start,2026-01-05 09:10,31\n", row % 10)).collect();
+    site.drop_export("exports/dyn/many.csv", format!("Subject,Visit,Taken,Grip\n{rows},start,2026-01-05 09:10,31\n"));
+    assert_eq!(sample(&site, &["exports/dyn/many.csv"])["holds"].as_array().unwrap().len(), 61);
+    let text = site.run(&["check", "--sample", "exports/dyn/many.csv"]).stdout;
+    assert_eq!(text.matches("as exported").count(), 40);
+    let words: String = text.split_whitespace().collect::<Vec<_>>().join(" ");
+    assert!(
+        words.contains("and 21 more; --json lists all of them. In all: 1 no-subject, 60 unknown-subject."),
+        "{text}"
+    );
+}

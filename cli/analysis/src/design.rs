@@ -2,9 +2,14 @@
 //!
 //! Invariants: a design is a full rectangle of at least one subject by at least one level, and each of its cells is
 //! empty or holds a finite number of magnitude at most [`LARGEST`], so that no analysis needs to ask again. Positions,
-//! where there are any, are finite, distinct, and one for each level.
+//! where there are any, are finite, distinct, and one for each level. Every subject of a [`Design`] stands at
+//! one level of each between factor.
+
+pub(crate) mod factorial;
 
 use std::fmt;
+
+pub use factorial::{At, Design, Factor, FactorId, MOST_FACTORS, MOST_GROUPS};
 
 /// The largest magnitude that a reading or a position may have. Squares, and sums of any number of squares that fit
 /// into memory, then stay far inside the range of a double.
@@ -59,6 +64,36 @@ pub enum DesignError {
         /// The earlier level there.
         other: usize,
     },
+    /// There are more factors than [`MOST_FACTORS`].
+    TooManyFactors {
+        /// How many there are.
+        factors: usize,
+    },
+    /// The between factors make more groups than [`MOST_GROUPS`], or the within factors more cells than there can be.
+    TooManyCombinations,
+    /// A subject's groups are not one for each between factor.
+    GroupCount {
+        /// The subject.
+        subject: usize,
+        /// How many it has.
+        groups: usize,
+        /// How many between factors there are.
+        factors: usize,
+    },
+    /// A subject is in a group that there is not.
+    NoSuchGroup {
+        /// The subject.
+        subject: usize,
+        /// The between factor.
+        factor: usize,
+        /// The level that the factor has not.
+        level: usize,
+    },
+    /// There is no within factor of this index.
+    NoSuchFactor {
+        /// The index.
+        factor: usize,
+    },
 }
 
 impl fmt::Display for DesignError {
@@ -80,6 +115,22 @@ impl fmt::Display for DesignError {
             }
             Self::PositionUnusable { level } => write!(f, "the position of level {level} is not a usable number"),
             Self::PositionShared { level, other } => write!(f, "levels {level} and {other} stand at the same position"),
+            Self::TooManyFactors { factors } => {
+                write!(f, "{factors} factors are more than the {MOST_FACTORS} that can be analysed together")
+            }
+            Self::TooManyCombinations => {
+                write!(
+                    f,
+                    "the factors have too many combinations of levels; at most {MOST_GROUPS} groups can be compared"
+                )
+            }
+            Self::GroupCount { subject, groups, factors } => {
+                write!(f, "subject {subject} has {groups} groups where {factors} are due")
+            }
+            Self::NoSuchGroup { subject, factor, level } => {
+                write!(f, "subject {subject} is at level {level} of between factor {factor}, which there is not")
+            }
+            Self::NoSuchFactor { factor } => write!(f, "there is no within factor {factor}"),
         }
     }
 }
@@ -165,47 +216,6 @@ impl OneWithin {
 
     fn subjects_where(&self, keep: impl Fn(&[Option<f64>]) -> bool) -> Vec<usize> {
         self.rows().enumerate().filter(|(_, row)| keep(row)).map(|(subject, _)| subject).collect()
-    }
-
-    /// The readings of the complete subjects alone.
-    pub(crate) fn complete_table(&self) -> Table {
-        let mut values = Vec::with_capacity(self.cells.len());
-        for row in self.rows() {
-            let before = values.len();
-            values.extend(row.iter().flatten());
-            if values.len() - before < self.levels {
-                values.truncate(before);
-            }
-        }
-        Table { levels: self.levels, values }
-    }
-}
-
-/// A rectangle of readings without gaps; it may have no rows.
-pub(crate) struct Table {
-    levels: usize,
-    values: Vec<f64>,
-}
-
-impl Table {
-    pub fn subjects(&self) -> usize {
-        self.values.len() / self.levels
-    }
-
-    pub fn levels(&self) -> usize {
-        self.levels
-    }
-
-    pub fn values(&self) -> &[f64] {
-        &self.values
-    }
-
-    pub fn rows(&self) -> impl Iterator<Item = &[f64]> {
-        self.values.chunks_exact(self.levels)
-    }
-
-    pub fn level(&self, level: usize) -> impl Iterator<Item = f64> {
-        self.values.iter().skip(level).step_by(self.levels).copied()
     }
 }
 

@@ -6,9 +6,10 @@
 //! 2. **Never a NaN, an infinity or a panic.** A value that the readings do not define is `None`, and a [`Note`]
 //!    says why; a value that the method makes infinite (an *F* over a residual of zero) is `None` with its *p* 0.
 //!
-//! The way through: readings, summarised over replicates, become a [`design::OneWithin`]; an analysis such as
-//! [`anova::repeated_measures`] takes the design and its [`Settings`] and returns a result that the caller prints,
-//! draws or stores. Levels and subjects are known by index only, in the order in which the caller gave them.
+//! The way through: readings, summarised over replicates, become a [`design::Design`] of any number of factors, or a
+//! [`design::OneWithin`] of one; an analysis such as [`anova::factorial`] or [`anova::repeated_measures`] takes the design
+//! and its [`Settings`] and returns a result that the caller prints, draws or stores, and [`checks::checks`] what it rests
+//! on. Factors, levels and subjects are known by index only, in the order in which the caller gave them.
 //!
 //! ```
 //! use revisant_analysis::anova::repeated_measures;
@@ -33,13 +34,17 @@
 
 #![forbid(unsafe_code)]
 
+pub mod agreement;
 pub mod anova;
+pub mod checks;
 pub mod contrasts;
 pub mod design;
 pub mod distributions;
 mod moments;
 mod note;
+pub mod power;
+pub mod ranks;
 mod settings;
 
 pub use note::Note;
-pub use settings::{Confidence, Interval, NotAConfidence, Settings};
+pub use settings::{Confidence, Interval, NotAConfidence, Settings, Sums};

@@ -49,6 +49,29 @@ impl Sum {
         sum
     }
 
+    /// The sum of what a function makes of each value, in strands that the processor adds side by side.
+    pub fn over_each(values: &[f64], of: impl Fn(f64) -> f64) -> Self {
+        const STRANDS: usize = 8;
+        let (chunks, rest) = values.as_chunks::<STRANDS>();
+        let (mut hi, mut lo) = ([0.0; STRANDS], [0.0; STRANDS]);
+        for chunk in chunks {
+            for ((hi, lo), &x) in hi.iter_mut().zip(&mut lo).zip(chunk) {
+                let (sum, lost) = two_sum(*hi, of(x));
+                *hi = sum;
+                *lo += lost;
+            }
+        }
+        let mut sum = Self::of(rest.iter().map(|&x| of(x)));
+        hi.into_iter().zip(lo).for_each(|(hi, lo)| sum.join(Self(Twofold { hi, lo })));
+        sum
+    }
+
+    /// Takes in all of another sum.
+    pub fn join(&mut self, other: Self) {
+        self.add(other.0.hi);
+        self.0.lo += other.0.lo;
+    }
+
     pub fn value(self) -> f64 {
         self.0.value()
     }
@@ -70,6 +93,23 @@ pub(crate) fn rounding(readings: impl IntoIterator<Item = f64>) -> f64 {
     f64::EPSILON * f64::EPSILON * readings.into_iter().map(|y| y * y).sum::<f64>()
 }
 
+/// The [`rounding`] of readings from which an offset was taken.
+pub(crate) fn rounding_of(readings: &[f64], offset: f64) -> f64 {
+    // A bound needs no compensation, only several strands for the processor to add side by side.
+    let (chunks, rest) = readings.as_chunks::<8>();
+    let mut strands = [0.0; 8];
+    for chunk in chunks {
+        strands.iter_mut().zip(chunk).for_each(|(strand, y)| *strand += (y + offset) * (y + offset));
+    }
+    let rest: f64 = rest.iter().map(|y| (y + offset) * (y + offset)).sum();
+    f64::EPSILON * f64::EPSILON * (strands.iter().sum::<f64>() + rest)
+}
+
+/// Σ x².
+pub(crate) fn squares(values: &[f64]) -> Sum {
+    Sum::over_each(values, |x| x * x)
+}
+
 /// Count, mean, and sum of squared deviations from the mean.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub(crate) struct Moments {
@@ -82,19 +122,26 @@ pub(crate) struct Moments {
 impl Moments {
     /// The moments of `values`, computed from readings whose [`rounding`] is given.
     pub fn of(values: &[f64], rounding: f64) -> Self {
-        let n = values.len();
-        let mean = Sum::of(values.iter().copied()).over(n);
-        let ss = Sum::of(values.iter().map(|&x| mean.below(x).value().powi(2))).value();
-        let ss = if ss <= rounding { 0.0 } else { ss };
-        let flat_at_zero = ss == 0.0 && n as f64 * mean.value().powi(2) <= rounding;
-        Self { n, mean: if flat_at_zero { 0.0 } else { mean.value() }, ss }
+        let own = Self::of_readings_with(values, rounding);
+        let flat_at_zero = own.ss == 0.0 && own.n as f64 * own.mean.powi(2) <= rounding;
+        Self { mean: if flat_at_zero { 0.0 } else { own.mean }, ..own }
     }
 
-    /// The moments of readings themselves.
+    /// The moments of readings themselves. Readings near zero are what they are: only differences can vanish into rounding.
     pub fn of_readings(readings: &[f64]) -> Self {
-        let own = Self::of(readings, rounding(readings.iter().copied()));
-        // Readings near zero are what they are: only differences can vanish into rounding.
-        Self { mean: Sum::of(readings.iter().copied()).over(readings.len()).value(), ..own }
+        Self::of_readings_with(readings, rounding_of(readings, 0.0))
+    }
+
+    fn of_readings_with(values: &[f64], rounding: f64) -> Self {
+        let n = values.len();
+        let mean = Sum::over_each(values, |x| x).over(n);
+        let ss = Sum::over_each(values, |x| mean.below(x).value().powi(2)).value();
+        Self { n, mean: mean.value(), ss: if ss <= rounding { 0.0 } else { ss } }
+    }
+
+    /// Σ (x − x̄)².
+    pub fn ss(self) -> f64 {
+        self.ss
     }
 
     /// √(Σ (x − x̄)² / (n − 1)); `None` below two values.

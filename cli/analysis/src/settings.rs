@@ -60,6 +60,16 @@ impl Interval {
     }
 }
 
+/// Which sums of squares unequal groups have; of equal groups all are the same.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default, Hash)]
+pub enum Sums {
+    /// Of the unweighted means of the groups: what would be found if the groups were equal.
+    #[default]
+    Type3,
+    /// Each effect beside all those that do not contain it; effects within subjects from the mean of all subjects.
+    Type2,
+}
+
 /// What to compute beside the analysis of variance, and how.
 #[derive(Debug, Clone, PartialEq, Default)]
 pub struct Settings {
@@ -69,4 +79,6 @@ pub struct Settings {
     pub contrasts: Vec<Family>,
     /// How the p values of each family are adjusted, each family by itself.
     pub multiplicity: Multiplicity,
+    /// Which sums of squares unequal groups have.
+    pub sums: Sums,
 }

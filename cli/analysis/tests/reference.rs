@@ -5,12 +5,14 @@
 mod support;
 
 use revisant_analysis::anova::{
-    Corrected, CorrectedTest, Decomposition, Effect, IfUnlinked, RepeatedMeasures, repeated_measures,
+    Corrected, CorrectedTest, Decomposition, Effect, Factorial, IfUnlinked, RepeatedMeasures, Term, factorial,
+    repeated_measures,
 };
 use revisant_analysis::contrasts::{Contrast, ContrastKind, Family, Multiplicity};
+use revisant_analysis::design::FactorId;
 use revisant_analysis::distributions::{ChiSquare, FisherF, Normal, StudentT};
-use revisant_analysis::{Note, Settings};
-use support::{Case, cases, folder, lines, settle};
+use revisant_analysis::{Note, Settings, Sums};
+use support::{Case, Several, cases, cases_of_several, folder, lines, settle};
 
 #[test]
 fn repeated_measures_of_one_factor() {
@@ -74,15 +76,75 @@ fn check_decomposition(case: &mut Case, within: &str, parts: &Decomposition) {
     }
 }
 
-fn check_effect(case: &mut Case, within: &str, effect: &Effect) {
-    let (mauchly, epsilon) = (effect.mauchly.unwrap(), effect.epsilon.unwrap());
+#[test]
+fn several_factors() {
+    let mut all = cases_of_several("factorial");
+    all.iter_mut().for_each(check_several);
+    settle(&all.into_iter().map(|it| it.case).collect::<Vec<_>>(), 700);
+}
+
+/// Keys without a type hold for both.
+fn check_several(several: &mut Several) {
+    for (sums, suffix) in [(Sums::Type3, ".type3"), (Sums::Type2, ".type2")] {
+        let result = factorial(&several.design, &Settings { sums, ..Settings::default() });
+        let used = several.case.doc["config"]["n_subjects_used"].as_u64().unwrap();
+        assert_eq!(result.used.len() as u64, used, "{}", several.case.name);
+        check_terms(several, &result, suffix);
+        several.case.check("subject_error.ss", Some(result.strata[0].error.ss));
+        several.case.check("subject_error.df", Some(result.strata[0].error.df));
+    }
+}
+
+fn check_terms(several: &mut Several, result: &Factorial, suffix: &str) {
+    let effects: Vec<(Term, Effect)> = result.effects().map(|it| (it.term, it.effect)).collect();
+    let mut met = 0;
+    for (term, effect) in effects {
+        let name = |factor: FactorId| match factor {
+            FactorId::Between(at) => several.between[at].as_str(),
+            FactorId::Within(at) => several.within[at].as_str(),
+        };
+        let names: Vec<&str> = term.factors().map(name).collect();
+        let key = names.join(":");
+        for key in [key.clone(), format!("{key}{suffix}")] {
+            if several.case.has(&format!("{key}.ss")) {
+                met += 1;
+                match effect.mauchly {
+                    Some(_) => check_effect(&mut several.case, &key, &effect),
+                    None => check_between(&mut several.case, &key, &effect),
+                }
+            }
+        }
+    }
+    // obk_two_between has both types of each, the others plain keys or those of one type.
+    assert_eq!(met, result.effects().count(), "{}{suffix}", several.case.name);
+}
+
+fn check_between(case: &mut Case, key: &str, effect: &Effect) {
+    assert!(effect.epsilon.is_none() && effect.corrected.is_none());
+    check_test(case, key, effect);
+}
+
+fn check_test(case: &mut Case, key: &str, effect: &Effect) {
     for (short, got) in [
         ("ss", Some(effect.ss)),
+        ("df", Some(effect.df)),
+        ("ms", effect.ms),
         ("sse", Some(effect.error_ss)),
+        ("dfe", Some(effect.error_df)),
+        ("mse", effect.error_ms),
         ("F", effect.f),
         ("p", effect.p),
         ("pes", effect.partial_eta_sq),
         ("ges", effect.generalized_eta_sq),
+    ] {
+        case.check(&format!("{key}.{short}"), got);
+    }
+}
+
+fn check_effect(case: &mut Case, within: &str, effect: &Effect) {
+    let (mauchly, epsilon) = (effect.mauchly.unwrap(), effect.epsilon.unwrap());
+    check_test(case, within, effect);
+    for (short, got) in [
         ("eps_lb", Some(epsilon.lower_bound)),
         ("eps_gg", epsilon.greenhouse_geisser),
         ("eps_hf_lecoutre", epsilon.lecoutre),

@@ -204,7 +204,8 @@ fn settings(analysis: &Analysis) -> Result<Settings, Failure> {
         Multiplicity::Holm => Adjust::Holm,
         Multiplicity::BenjaminiHochberg => Adjust::BenjaminiHochberg,
     };
-    Ok(Settings { confidence, contrasts: analysis.contrasts.iter().filter_map(family).collect(), multiplicity })
+    let contrasts = analysis.contrasts.iter().filter_map(family).collect();
+    Ok(Settings { confidence, contrasts, multiplicity, ..Settings::default() })
 }
 
 /// Writes the look on the trail.

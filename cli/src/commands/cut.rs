@@ -15,7 +15,7 @@ use crate::args::Cut;
 use crate::error::{Exit, Failure};
 use crate::report::json;
 use crate::report::table::{Left, Right, Table, Whole};
-use crate::report::text::count;
+use crate::report::text::{count, wrap};
 use crate::report::when;
 use crate::study::{Basis, Context, reason};
 
@@ -190,13 +190,14 @@ fn text(
     let changed: Vec<ReadingRow> =
         found.changed.iter().flat_map(|(one, two)| [(*one).clone(), (*two).clone()]).collect();
     let owned = |rows: &[&ReadingRow]| rows.iter().map(|row| (*row).clone()).collect::<Vec<_>>();
-    context.out.text(&format!(
+    let all = format!(
         "From {from} to {to}: {} new, {} changed, {} gone, {} at another visit.",
         count(found.new.len() as u64, "reading"),
         found.changed.len(),
         found.gone.len(),
         found.moved.len()
-    ))?;
+    );
+    context.out.text(&wrap(&all, context.out.width, ""))?;
     let parts = [
         ("New", &after.basis, owned(&found.new)),
         ("Changed, before and after", &after.basis, changed),

@@ -5,7 +5,8 @@
 
 use std::collections::BTreeMap;
 
-use revisant_schema::hold::{Answer, Reason};
+use chrono_tz::Tz;
+use revisant_schema::hold::{Answer, INSTEAD_OF, Reason};
 use revisant_schema::records::Records;
 use revisant_schema::records::view::HoldRow;
 use serde_json::{Value as Json, json};
@@ -16,7 +17,7 @@ use crate::error::{Exit, Failure};
 use crate::intake::{self, Decided};
 use crate::report::json;
 use crate::report::table::{Left, Right, Table, Whole};
-use crate::report::text::{clean, clip, count};
+use crate::report::text::{clean, clip, count, wrap};
 use crate::report::when;
 use crate::study::{Basis, Context, reason, view};
 
@@ -82,31 +83,97 @@ fn show(context: &mut Context<'_, '_>, hold: i64) -> Done {
         context.out.json(&shown_json(&hold, like, &commands))?;
         return Ok(Exit::Done);
     }
-    let lines = [
-        format!("Hold {}, {}: {}", hold.hold, hold.state.code(), whereabouts(&hold)),
-        format!("Instrument: {}; since {}", hold.instrument, when::written(&hold.since, zone)),
-        format!("Reason:     {}, {}", hold.reason, hold.reason.meaning()),
-        format!("Wrong:      {}", hold.wrong),
-    ];
-    context.out.text(&lines.map(|line| clean(&line)).join("\n"))?;
-    if let Some(row) = hold.row.as_deref().filter(|row| !row.is_empty()) {
-        context.out.text(&format!("As exported:\n  {}", clean(row.trim_end())))?;
-    }
-    if !hold.likely.is_empty() {
-        context.out.text(&format!("Likeliest:  {}", clean(&hold.likely.join(", "))))?;
-    }
-    if let Some(answer) = &hold.answer {
-        context.out.text(&format!("Answer:     {}", clean(&answer.say())))?;
-    }
+    let width = context.out.width;
+    context.out.text(&labelled(&facts(&hold, zone), width))?;
     if like > 1 {
         context
             .out
             .say(&format!("{like} open holds of this export are alike; --all-like-it {like} answers all of them."))?;
     }
     if !commands.is_empty() {
-        context.out.text(&format!("\nTo answer it:\n  {}", commands.join("\n  ")))?;
+        context.out.text("\nWhat can be done:")?;
+    }
+    if open && hold.reason.accepts_nothing() {
+        let by_itself = format!(
+            "  It settles by itself once the plan can read the file (`revisant check --sample FILE` shows whether it does), \
+             or once {} holds other bytes that it can.",
+            hold.export
+        );
+        context.out.text(&wrap(&clean(&by_itself), width, "  "))?;
+    }
+    let options = options(hold.reason, &hold.likely);
+    let deeds = options.iter().map(|option| deed(hold.reason, option)).chain([leaving(hold.reason)]);
+    let mut before = "";
+    for (what, command) in deeds.zip(&commands) {
+        if what != before {
+            context.out.text(&format!("  {what}:"))?;
+            before = what;
+        }
+        context.out.text(&format!("    {command}"))?;
     }
     Ok(Exit::Done)
+}
+
+/// What dismissing does, in words.
+fn leaving(reason: Reason) -> &'static str {
+    match (reason.of_file(), reason.of_value()) {
+        (true, _) => "leave the file out for good",
+        (false, true) => "leave the value out for good",
+        (false, false) => "leave the row out for good",
+    }
+}
+
+/// What is known of a hold, each with its label.
+fn facts(hold: &HoldRow, zone: Tz) -> Vec<(&'static str, String)> {
+    let on = if hold.column.is_empty() { String::new() } else { format!(", column \"{}\"", hold.column) };
+    let mut facts = vec![
+        ("Hold", format!("{}, {}", hold.hold, hold.state.code())),
+        ("Where", format!("{}{on}", whereabouts(hold))),
+        ("Instrument", format!("{}; held since {}", hold.instrument, when::written(&hold.since, zone))),
+        ("Reason", format!("{}: {}", hold.reason, hold.reason.meaning())),
+        ("What is wrong", hold.wrong.clone()),
+    ];
+    let row = hold.row.as_deref().map(str::trim_end).filter(|row| !row.is_empty());
+    facts.extend(row.map(|row| ("As exported", row.to_owned())));
+    facts.extend((!hold.likely.is_empty()).then(|| ("Likeliest", hold.likely.join(", "))));
+    facts.extend(hold.answer.as_ref().map(|answer| ("Answer", answer.say())));
+    facts
+}
+
+/// Labels and what belongs to each, in two columns.
+fn labelled(facts: &[(&str, String)], width: usize) -> String {
+    const LABEL: usize = 15;
+    let indent = " ".repeat(LABEL);
+    let lines: Vec<String> = facts
+        .iter()
+        .map(|(label, text)| wrap(&format!("{:LABEL$}{}", format!("{label}:"), clean(text)), width, &indent))
+        .collect();
+    lines.join("\n")
+}
+
+/// What an option of `decide` does, in words.
+fn deed(reason: Reason, option: &str) -> &'static str {
+    let name = option.split(' ').next().unwrap_or_default();
+    match name {
+        "--subject" if matches!(reason, Reason::BeforeEnrolment | Reason::AfterWithdrawal) => {
+            "say whose it is, all the same"
+        }
+        "--subject" => "say whose it is",
+        "--moment" => "say when it was taken",
+        "--date" => "say on which day it was taken, if that is all that is known",
+        "--visit" if option.ends_with("unscheduled") => "say that it belongs to no visit",
+        "--visit" => "say to which visit it belongs",
+        "--measure" => "say what was measured",
+        "--condition" => "say under which condition",
+        "--unit" => "say in which unit it is",
+        "--value" => "say what the value is",
+        "--keep-old" => "let the old value stand",
+        "--take-new" => "let the new value take its place",
+        "--replicate" => "file it as this replicate",
+        "--instead-of" => "file it in the place of this replicate",
+        _ if matches!(reason, Reason::BelowLimit | Reason::AboveLimit) => "file the limit itself, marked as such",
+        _ => "file it as it stands",
+    }
 }
 
 fn shown_json(hold: &HoldRow, like: usize, commands: &[String]) -> Json {
@@ -151,10 +218,22 @@ pub(super) fn options(reason: Reason, likely: &[String]) -> Vec<String> {
             Some((option, "CODE" | "MOMENT" | "FACTOR=LEVEL")) if !likely.is_empty() => {
                 options.extend(likely.iter().map(|answer| format!("{option} {}", quoted(answer))));
             }
+            Some((option, "NUMBER")) if option != "--value" && !likely.is_empty() => {
+                options.extend(numbers(option, likely).map(|number| format!("{option} {number}")));
+            }
             _ => options.push(kind.to_owned()),
         }
     }
     options
+}
+
+/// The likely numbers that belong to an option.
+fn numbers<'l>(option: &str, likely: &'l [String]) -> impl Iterator<Item = &'l str> {
+    let instead = option == "--instead-of";
+    likely.iter().filter_map(move |answer| match answer.strip_prefix(INSTEAD_OF) {
+        Some(number) => instead.then_some(number.trim()),
+        None => (!instead).then_some(answer.as_str()),
+    })
 }
 
 /// Quoted for a shell where it has to be.
@@ -277,6 +356,10 @@ mod tests {
         assert_eq!(options(Reason::ChangedValue, &likely), ["--keep-old", "--take-new"]);
         assert_eq!(options(Reason::ImplausibleValue, &[]), ["--value NUMBER", "--as-it-stands"]);
         assert!(options(Reason::UnreadableFile, &[]).is_empty());
+        let likely = ["4".to_owned(), "instead of 2".to_owned()];
+        assert_eq!(options(Reason::ExtraReplicate, &likely), ["--replicate 4", "--instead-of 2"]);
+        assert_eq!(options(Reason::ExtraReplicate, &likely[1..]), ["--instead-of 2"]);
+        assert_eq!(options(Reason::UnknownCondition, &["hand=left".to_owned()]), ["--condition hand=left"]);
     }
 
     #[test]

@@ -204,7 +204,16 @@ fn withdraw(context: &mut Context<'_, '_>, subject: &str, on: NaiveDate, data: D
         change("data", entry.data, "keep".to_owned()),
     ];
     let changes: Vec<CellChange> = changes.into_iter().filter(|change| change.before != change.after).collect();
-    write(context, &mut records, &basis.roster, &changes, Some(why))
+    let trail = match changes.as_slice() {
+        [] => None,
+        changes => Some(write_act(context, &mut records, changes, Some(why))?),
+    };
+    if context.out.json || changes.is_empty() {
+        return report(context, &basis.roster, &changes, trail);
+    }
+    let before = entry.withdrawn.map(|day| format!(" (before: on {day})")).unwrap_or_default();
+    context.out.say(&format!("{subject} is withdrawn on {on}{before}; the data that are there are kept."))?;
+    Ok(Exit::Done)
 }
 
 fn show(context: &mut Context<'_, '_>, then: &Then) -> Done {

@@ -3,9 +3,11 @@
 //! Invariant: nothing of the study changes; numbers of throw-away readings and holds are never shown, since nobody can
 //! ask for them.
 
+use std::collections::BTreeMap;
 use std::path::Path;
 use std::time::{Duration, Instant};
 
+use revisant_schema::hold::Reason;
 use revisant_schema::plan::{Anchor, Loaded};
 use revisant_schema::records::Records;
 use revisant_schema::records::view::{HoldRow, ReadingRow};
@@ -263,7 +265,9 @@ impl Shown<'_> {
             context.out.text(&hold_text(hold, context.out.width))?;
         }
         if holds.len() > HOLDS {
-            context.out.text(&format!("\nand {} more; --json lists all of them.", holds.len() - HOLDS))?;
+            let more =
+                format!("\nand {} more; --json lists all of them. In all: {}.", holds.len() - HOLDS, reasons(holds));
+            context.out.say(&more)?;
         }
         if !held_before.is_empty() {
             let numbers: Vec<String> = held_before.iter().map(|hold| hold.hold.to_string()).collect();
@@ -276,6 +280,14 @@ impl Shown<'_> {
     }
 }
 
+/// How many holds there are for each reason: `3 no-subject, 12 unknown-unit`.
+fn reasons(holds: &[HoldRow]) -> String {
+    let mut counts: BTreeMap<Reason, usize> = BTreeMap::new();
+    holds.iter().for_each(|hold| *counts.entry(hold.reason).or_default() += 1);
+    let words: Vec<String> = counts.iter().map(|(reason, number)| format!("{number} {reason}")).collect();
+    words.join(", ")
+}
+
 fn hold_text(hold: &HoldRow, width: usize) -> String {
     let place = hold.place().unwrap_or_else(|| "the whole file".to_owned());
     let on = if hold.column.is_empty() { String::new() } else { format!(", column \"{}\"", hold.column) };
@@ -283,8 +295,10 @@ fn hold_text(hold: &HoldRow, width: usize) -> String {
     let row = hold.row.as_deref().map(str::trim_end).filter(|row| !row.is_empty());
     lines.extend(row.map(|row| format!("  as exported: {}", clip(row, ROW))));
     let options = options(hold.reason, &hold.likely);
-    let answers = if options.is_empty() { hold.reason.answers().to_owned() } else { options.join(", or ") };
-    lines.push(format!("  answers: {answers}"));
+    lines.push(match options.as_slice() {
+        [] => "  settled by a mended plan, or by exporting the file again".to_owned(),
+        options => format!("  answers: {}", options.join(", or ")),
+    });
     let wrapped: Vec<String> = lines.iter().map(|line| wrap(line, width, "    ")).collect();
     wrapped.join("\n")
 }

@@ -201,13 +201,22 @@ fn text(
 
 /// The exports that are not simply filed, with the reason where there is one.
 fn wanting(context: &mut Context<'_, '_>, exports: &[ExportRow]) -> Result<(), Failure> {
+    const REPEATS: usize = 10;
     let mut table = Table::new(&[("export", Left), ("state", Whole), ("", Left)]);
-    for export in exports.iter().filter(|export| !matches!(export.state, ExportState::Filed | ExportState::Repeat)) {
+    let (repeats, others): (Vec<&ExportRow>, Vec<&ExportRow>) = exports
+        .iter()
+        .filter(|export| export.state != ExportState::Filed)
+        .partition(|export| export.state == ExportState::Repeat);
+    for export in others.into_iter().chain(repeats.iter().copied().take(REPEATS)) {
         let row = [export.export.clone(), export.state.code().to_owned(), export.detail.clone().unwrap_or_default()];
         table.row(row);
     }
-    match table.is_empty() {
-        true => Ok(()),
-        false => context.out.text("").and_then(|()| context.out.table(&table)),
+    if table.is_empty() {
+        return Ok(());
+    }
+    context.out.text("").and_then(|()| context.out.table(&table))?;
+    match repeats.len().saturating_sub(REPEATS) {
+        0 => Ok(()),
+        more => context.out.say(&format!("and {} more; --json lists all of them.", count(more as u64, "repeat"))),
     }
 }

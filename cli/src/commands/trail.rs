@@ -57,12 +57,39 @@ fn row_json(row: &TrailRow) -> Json {
     })
 }
 
-/// `export exports/dyn-2/a.csv, readings 12`
+/// What an act was about, in words: `exports/dyn-2/a.csv, 12 readings, 1 hold opened`. Numbers that only the records
+/// use among themselves are left out; `--json` has them.
 fn objects_words(objects: &str) -> String {
     let Json::Object(fields) = parsed(objects) else { return String::new() };
-    let words: Vec<String> =
-        fields.iter().filter_map(|(name, value)| Some(format!("{name} {}", word(value)?))).collect();
+    // What it was done to comes first.
+    const FIRST: [&str; 6] = ["export", "analysis", "name", "subject", "subjects", "visit"];
+    let place = |name: &String| FIRST.iter().position(|first| first == name).unwrap_or(FIRST.len());
+    let mut names: Vec<&String> = fields.keys().collect();
+    names.sort_by_key(|name| (place(name), *name));
+    let words: Vec<String> = names.into_iter().filter_map(|name| object_words(name, fields.get(name)?)).collect();
     words.join(", ")
+}
+
+fn object_words(name: &str, value: &Json) -> Option<String> {
+    let some = |value: &Json| value.as_u64().filter(|number| *number > 0);
+    match name {
+        "capture" | "stood_at" => None,
+        "export" | "analysis" | "name" | "subject" | "subjects" | "visit" => word(value),
+        "repeat_of" => Some("the same bytes as before".to_owned()),
+        "held" => Some(format!("held: {}", word(value)?)),
+        "readings" if value.is_number() => some(value).map(|number| count(number, "reading")),
+        "holds" => some(value).map(|number| format!("{} opened", count(number, "hold"))),
+        "lines" => some(value).map(|number| format!("{} read anew", count(number, "line"))),
+        "superseded_without_successor" => {
+            let ended = value.as_array().map_or(0, Vec::len) as u64;
+            (ended > 0).then(|| format!("{} that the reader no longer gives", count(ended, "reading")))
+        }
+        "decided" | "dismissed" => Some(format!("hold {}", word(value)?)),
+        "trail" => Some(format!("records at act {}", word(value)?)),
+        "plan" => Some(format!("plan version {}", word(value)?)),
+        "sha256" => word(value),
+        other => Some(format!("{other} {}", word(value)?)),
+    }
 }
 
 fn word(value: &Json) -> Option<String> {

@@ -14,7 +14,7 @@ use serde_json::{Map, Value as Json, json};
 use super::number::{self, df, fixed_or_dash, p_or_dash, statistic, statistic_or_dash};
 use super::sentence;
 use super::table::{Left, Right, Table};
-use super::text::{clean, count, list, wrap};
+use super::text::{clean_lines, count, list, wrap};
 use crate::commands::InstrumentLine;
 use crate::dataset::{Dataset, VISIT};
 use crate::looked::Looked;
@@ -551,11 +551,6 @@ impl Analysed<'_> {
         let used = if all.iter().all(|cell| cell.used) { "used" } else { "left out" };
         format!("{} off-window, {used}", count(all.len() as u64, "session"))
     }
-}
-
-/// Cleans a text line by line.
-fn clean_lines(text: &str) -> String {
-    text.lines().map(clean).collect::<Vec<_>>().join("\n")
 }
 
 /// What stands under every result.

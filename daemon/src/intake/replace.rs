@@ -22,16 +22,18 @@ use super::file::{Export, Filer, Moved, Outcome, Placing, Scope, add_hold, reaso
 use super::place::number;
 use super::place::resolve::{Held, nearest};
 use super::plan::{below, differing_lines, in_force};
-use super::read::{At, FileFault};
+use super::read::{self, At, FileFault};
 use super::rules::{Gathered, Rules};
 
 type Done<T> = revisant_schema::records::Result<T>;
 
 /// The note of how far changes of plan and roster have been followed up.
 const FOLLOWED: &str = "placed_again_after";
+/// The note of which readers last tried the files that are held.
+pub const READ_BY: &str = "read_again_by";
 
-/// Tries held rows again if the plan or the roster has changed since that was last done. When it is stopped, the next
-/// collect begins anew.
+/// Tries held rows again if the plan or the roster has changed since that was last done, and held files also if the
+/// program reads them in another way since. When it is stopped, the next collect begins anew.
 pub fn after_changes(
     records: &mut Records,
     rules: &Rules,
@@ -41,10 +43,14 @@ pub fn after_changes(
 ) -> Result<()> {
     let head = records.rules_head()?;
     let followed: i64 = records.working(FOLLOWED)?.and_then(|text| text.parse().ok()).unwrap_or(0);
-    if head <= followed {
+    let same_rules = head <= followed;
+    if same_rules && records.working(READ_BY)?.as_deref() == Some(read::READERS) {
         return Ok(());
     }
-    let open = records.view()?.holds(true)?;
+    let mut open = records.view()?.holds(true)?;
+    if same_rules {
+        open.retain(|hold| hold.reason.accepts_nothing());
+    }
     let captures: HashMap<i64, CaptureRow> =
         records.view()?.captures()?.into_iter().map(|capture| (capture.capture, capture)).collect();
     for (capture, holds) in by_capture(open) {
@@ -69,6 +75,7 @@ pub fn after_changes(
             }
         }
     }
+    records.set_working(READ_BY, read::READERS)?;
     Ok(records.set_working(FOLLOWED, &head.to_string())?)
 }
 
@@ -203,7 +210,7 @@ fn whole_again(filer: &mut Filer<'_>, capture: &CaptureRow, export: &Export, hol
             placing.outcome.settled = 1;
             Ok(placing.outcome)
         }
-        Err(fault) if reason_of(&fault) == hold.reason => {
+        Err(fault) if reason_of(&fault) == hold.reason && fault.to_string() == hold.wrong => {
             filer.records.clear_filing(filing.id)?;
             Ok(Outcome::default())
         }

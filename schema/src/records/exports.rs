@@ -83,7 +83,11 @@ impl View<'_> {
     pub fn exports(&self) -> Result<Vec<ExportRow>> {
         let holds = self.holds_by_capture()?;
         let mut exports: BTreeMap<String, ExportRow> = BTreeMap::new();
+        let mut paths: HashMap<i64, String> = HashMap::new();
         for capture in self.captures()? {
+            let same =
+                capture.repeat_of.and_then(|other| paths.get(&other)).map(|path| format!("the same bytes as {path}"));
+            paths.insert(capture.capture, capture.path.clone());
             let row = ExportRow {
                 state: state_of(&capture, holds.get(&capture.capture)),
                 export: capture.path.clone(),
@@ -91,7 +95,7 @@ impl View<'_> {
                 lines: capture.lines,
                 capture: Some(capture.capture),
                 at: Some(capture.at),
-                detail: holds.get(&capture.capture).and_then(|holds| holds.file.clone()),
+                detail: same.or_else(|| holds.get(&capture.capture).and_then(|holds| holds.file.clone())),
             };
             exports.insert(capture.path, row);
         }

@@ -2,10 +2,10 @@
 //!
 //! Invariant: a standard error exists from two subjects on, and an interval exactly where a standard error does.
 
-use super::decomposition::Split;
-use crate::design::{OneWithin, Table};
+use super::strata::{Strata, Table};
+use crate::design::{Design, OneWithin};
 use crate::distributions::StudentT;
-use crate::moments::{Moments, Sum};
+use crate::moments::{Moments, squares};
 use crate::{Confidence, Interval};
 
 /// The complete subjects' readings at one level.
@@ -36,15 +36,27 @@ pub struct Band {
     pub ci: Option<Interval>,
 }
 
-pub(super) fn cells(table: &Table, confidence: Confidence) -> Vec<Cell> {
-    let multiplier = multiplier(table.subjects(), confidence);
-    (0..table.levels()).map(|level| cell(&table.level(level).collect::<Vec<_>>(), multiplier)).collect()
+/// Each group's cells in turn, over the groups of the table.
+pub(super) fn cells(table: &Table, confidence: Confidence) -> Vec<Vec<Cell>> {
+    let mut groups: Vec<Vec<Cell>> = vec![Vec::with_capacity(table.columns.len()); table.counts.len()];
+    let multipliers: Vec<Option<f64>> = table.counts.iter().map(|&n| multiplier(n, confidence)).collect();
+    for column in &table.columns {
+        for ((cells, own), &multiplier) in groups.iter_mut().zip(table.by_group(column)).zip(&multipliers) {
+            cells.push(cell(own, multiplier));
+        }
+    }
+    groups
 }
 
 fn cell(readings: &[f64], multiplier: Option<f64>) -> Cell {
     let own = Moments::of_readings(readings);
     let mean = (own.n > 0).then_some(own.mean);
     Cell { n: own.n, mean, sd: own.sd(), se: own.se(), ci: interval(mean, own.se(), multiplier) }
+}
+
+impl Cell {
+    /// Where there is nobody.
+    pub(super) const EMPTY: Self = Self { n: 0, mean: None, sd: None, se: None, ci: None };
 }
 
 /// The band of a profile plot that shows the changes within subjects: the means of the levels with standard errors and
@@ -55,31 +67,45 @@ fn cell(readings: &[f64], multiplier: Option<f64>) -> Cell {
 /// (Morey 2008, *ibid.* 4:61); the interval is mean ± t(n − 1) SE. In the readings' unit.
 #[must_use]
 pub fn within_subject_band(design: &OneWithin, confidence: Confidence) -> Vec<Band> {
-    let table = design.complete_table();
-    let multiplier = multiplier(table.subjects(), confidence);
-    let errors = within_errors(&table);
-    let band = |(level, se): (usize, Option<f64>)| {
-        let mean = level_mean(&table, level);
-        Band { n: table.subjects(), mean, se, ci: interval(mean, se, multiplier) }
-    };
-    errors.into_iter().enumerate().map(band).collect()
+    within_subject_bands(&Design::from(design), confidence).pop().unwrap_or_default()
 }
 
-fn level_mean(table: &Table, level: usize) -> Option<f64> {
-    (table.subjects() > 0).then(|| Sum::of(table.level(level)).over(table.subjects()).value())
+/// The same for several groups and any within factors: for each group in the order of their numbers, a band for each
+/// cell. Each group is normalised by itself, with k the number of cells (Morey 2008 has the factor for any number of
+/// within cells; groups are other subjects, so nothing of one enters another's).
+#[must_use]
+pub fn within_subject_bands(design: &Design, confidence: Confidence) -> Vec<Vec<Band>> {
+    let table = Table::of(design);
+    let (cells, errors) = (cells(&table, confidence), within_errors(&table));
+    let of_group = |place: &Option<usize>| match place.and_then(|at| cells.get(at).zip(errors.get(at))) {
+        Some((cells, errors)) => band(cells, errors, confidence),
+        None => band(&vec![Cell::EMPTY; design.width()], &vec![None; design.width()], confidence),
+    };
+    table.place.iter().map(of_group).collect()
 }
 
-/// A normalised reading deviates from its level's mean by exactly the residual, so the residuals serve.
-fn within_errors(table: &Table) -> Vec<Option<f64>> {
-    let (n, k) = (table.subjects() as f64, table.levels() as f64);
-    let Some(split) = Split::of(table).filter(|_| n > 1.0 && k > 1.0) else {
-        return vec![None; table.levels()];
+fn band(cells: &[Cell], errors: &[Option<f64>], confidence: Confidence) -> Vec<Band> {
+    let multiplier = cells.first().and_then(|cell| multiplier(cell.n, confidence));
+    let band = |(cell, &se): (&Cell, &Option<f64>)| Band {
+        n: cell.n,
+        mean: cell.mean,
+        se,
+        ci: interval(cell.mean, se, multiplier),
     };
-    let mut squares = vec![Sum::default(); table.levels()];
-    for row in split.residuals.chunks_exact(table.levels()) {
-        squares.iter_mut().zip(row).for_each(|(sum, e)| sum.add(e * e));
+    cells.iter().zip(errors).map(band).collect()
+}
+/// A normalised reading deviates from its cell's mean by exactly the residual, so the residuals serve. By groups.
+fn within_errors(table: &Table) -> Vec<Vec<Option<f64>>> {
+    let k = table.columns.len() as f64;
+    let error = |own: &[f64]| {
+        let n = own.len() as f64;
+        (n > 1.0 && k > 1.0).then(|| (k / (k - 1.0) * squares(own).value() / (n - 1.0) / n).sqrt())
+    };
+    let mut groups = vec![Vec::with_capacity(table.columns.len()); table.counts.len()];
+    for column in &Strata::of(table).residuals {
+        groups.iter_mut().zip(table.by_group(column)).for_each(|(errors, own)| errors.push(error(own)));
     }
-    squares.into_iter().map(|ss| Some((k / (k - 1.0) * ss.value() / (n - 1.0) / n).sqrt())).collect()
+    groups
 }
 
 fn multiplier(subjects: usize, confidence: Confidence) -> Option<f64> {

@@ -1,12 +1,12 @@
-//! The test of a within-subject factor, its corrections and its sizes.
+//! The test of an effect, its corrections and its sizes.
 //!
 //! Invariants: an infinite *F* is `None` with p = 0, and 0/0 is `None` with p `None`; corrected tests differ from the
 //! uncorrected one in their degrees of freedom alone.
 
-use super::decomposition::{Decomposition, Line, Split};
+use super::decomposition::Line;
 use super::sphericity::{Epsilon, Mauchly, Sphericity};
-use crate::Note;
-use crate::distributions::FisherF;
+use crate::distributions::{FisherF, effect_size_interval};
+use crate::{Confidence, Interval};
 
 /// The test of one effect against its error.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -35,13 +35,20 @@ pub struct Effect {
     pub corrected: Option<Corrected>,
     /// SS / (SS + error SS) (Cohen 1973, *Educational and Psychological Measurement* 33:107).
     pub partial_eta_sq: Option<f64>,
-    /// SS / (SS + subject SS + residual SS): the share of all variation that a design with other subjects at each level
-    /// would see as well (Olejnik & Algina 2003, *Psychological Methods* 8:434; Bakeman 2005, *Behavior Research
+    /// The interval of the population's, by inverting the non-central *F* (Steiger 2004, *Psychological Methods* 9:164;
+    /// Smithson 2001, *Educational and Psychological Measurement* 61:605), on the degrees of freedom that the
+    /// Greenhouse-Geisser correction leaves, so that it goes with that test: exact between subjects and for one contrast,
+    /// elsewhere as good as the correction. Its ends are λ / (λ + df + error df + 1). `None` where *F* is.
+    pub partial_eta_sq_ci: Option<Interval>,
+    /// SS / (SS + the error SS of all strata), for one factor SS / (SS + subject SS + residual SS): the share of all
+    /// variation that a design with other subjects at each level would see as well. Between factors are taken as
+    /// manipulated, not observed (Olejnik & Algina 2003, *Psychological Methods* 8:434; Bakeman 2005, *Behavior Research
     /// Methods* 37:379).
     pub generalized_eta_sq: Option<f64>,
-    /// df (MS − error MS) / (df (MS − error MS) + N error MS) with N = n k readings, as Olejnik & Algina 2003 give it for
-    /// an effect against its own error (after Keren & Lewis 1979, *Educational and Psychological Measurement* 39:119).
-    /// Given raw: negative where F < 1.
+    /// df (MS − error MS) / (df (MS − error MS) + N error MS), as Olejnik & Algina 2003 give it for an effect against its
+    /// own error (after Keren & Lewis 1979, *Educational and Psychological Measurement* 39:119), with N the subjects times
+    /// the levels of the effect's own within factors, so that averaging over the others changes nothing: n k readings for
+    /// one within factor, n subjects between them. Given raw: negative where F < 1.
     pub partial_omega_sq: Option<f64>,
 }
 
@@ -71,7 +78,7 @@ pub struct CorrectedTest {
 
 /// An observed *F*.
 #[derive(Debug, Clone, Copy, PartialEq)]
-pub(super) enum Ratio {
+pub(crate) enum Ratio {
     Finite(f64),
     Infinite,
     Undefined,
@@ -100,53 +107,81 @@ impl Ratio {
     }
 }
 
-/// The effect of the factor, and the notes that it owes.
-pub(super) fn effect(split: &Split, notes: &mut Vec<Note>) -> Effect {
-    let Decomposition { effect, subject, residual, .. } = split.decomposition;
-    let f = Ratio::of(effect, residual, split.rounding);
-    note_degenerate(split, f, notes);
-    let sphericity = Sphericity::of(split, notes);
-    Effect {
-        ss: effect.ss,
-        df: effect.df,
-        ms: effect.ms,
-        error_ss: residual.ss,
-        error_df: residual.df,
-        error_ms: residual.ms,
-        f: f.finite(),
-        p: f.p(effect.df, residual.df),
-        mauchly: Some(sphericity.mauchly),
-        epsilon: sphericity.epsilon,
-        corrected: sphericity.epsilon.map(|epsilon| corrected(f, epsilon, effect.df, residual.df)),
-        partial_eta_sq: share(split, effect.ss, residual.ss),
-        generalized_eta_sq: share(split, effect.ss, subject.ss + residual.ss),
-        partial_omega_sq: partial_omega_sq(split),
-    }
+/// An effect and its error, with what the sizes of the effect are measured by.
+pub(super) struct Tested {
+    pub effect: Line,
+    pub error: Line,
+    /// The error sums of squares of all strata.
+    pub all_errors: f64,
+    /// Subjects times the levels of the effect's within factors.
+    pub means: f64,
+    pub rounding: f64,
+    /// Within subjects.
+    pub sphericity: Option<Sphericity>,
+    pub confidence: Confidence,
 }
 
-/// Whether there is an effect and an error at all.
-fn testable(split: &Split) -> bool {
-    split.subjects > 1 && split.levels > 1
-}
-
-/// The share of a part in itself and the rest, where they are more than rounding.
-fn share(split: &Split, part: f64, rest: f64) -> Option<f64> {
-    (testable(split) && part + rest > split.rounding).then(|| part / (part + rest))
-}
-
-fn note_degenerate(split: &Split, f: Ratio, notes: &mut Vec<Note>) {
-    if split.subjects == 1 {
-        notes.push(Note::OneSubject);
+impl Tested {
+    /// Of a factor with one level.
+    pub fn nothing(none: Line, means: f64) -> Self {
+        let sphericity = Some(Sphericity { mauchly: Mauchly::default(), epsilon: None });
+        Self {
+            effect: none,
+            error: none,
+            all_errors: 0.0,
+            means,
+            rounding: 0.0,
+            sphericity,
+            confidence: Confidence::default(),
+        }
     }
-    if split.levels == 1 {
-        notes.push(Note::OneLevel);
+
+    /// Whether there is an effect and an error at all.
+    pub fn testable(&self) -> bool {
+        self.effect.df > 0.0 && self.error.df > 0.0
     }
-    match f {
-        Ratio::Finite(_) => {}
-        Ratio::Infinite => notes.push(Note::ZeroResidual),
-        Ratio::Undefined if !testable(split) => {}
-        Ratio::Undefined if split.decomposition.total.ss <= split.rounding => notes.push(Note::NoVariation),
-        Ratio::Undefined => notes.push(Note::NoEffectNoResidual),
+
+    pub fn ratio(&self) -> Ratio {
+        Ratio::of(self.effect, self.error, self.rounding)
+    }
+
+    pub fn test(&self) -> Effect {
+        let Self { effect, error, .. } = *self;
+        let f = self.ratio();
+        let epsilon = self.sphericity.and_then(|it| it.epsilon);
+        Effect {
+            ss: effect.ss,
+            df: effect.df,
+            ms: effect.ms,
+            error_ss: error.ss,
+            error_df: error.df,
+            error_ms: error.ms,
+            f: f.finite(),
+            p: f.p(effect.df, error.df),
+            mauchly: self.sphericity.map(|it| it.mauchly),
+            epsilon,
+            corrected: epsilon.map(|epsilon| corrected(f, epsilon, effect.df, error.df)),
+            partial_eta_sq: self.share(effect.ss, error.ss),
+            partial_eta_sq_ci: self.interval(f.finite(), epsilon),
+            generalized_eta_sq: self.share(effect.ss, self.all_errors),
+            partial_omega_sq: self.partial_omega_sq(),
+        }
+    }
+
+    /// The share of a part in itself and the rest, where they are more than rounding.
+    fn share(&self, part: f64, rest: f64) -> Option<f64> {
+        (self.testable() && part + rest > self.rounding).then(|| part / (part + rest))
+    }
+
+    fn interval(&self, f: Option<f64>, epsilon: Option<Epsilon>) -> Option<Interval> {
+        let by = epsilon.and_then(|it| it.greenhouse_geisser).unwrap_or(1.0);
+        let (df, error_df) = (by * self.effect.df, by * self.error.df);
+        effect_size_interval(f?, df, error_df, df + error_df + 1.0, self.confidence)
+    }
+
+    fn partial_omega_sq(&self) -> Option<f64> {
+        let (effect, error) = (self.effect.ms?, self.error.ms?);
+        self.share(self.effect.df * (effect - error), self.means * error)
     }
 }
 
@@ -162,12 +197,4 @@ fn corrected(f: Ratio, epsilon: Epsilon, df: f64, error_df: f64) -> Corrected {
         lecoutre: by(epsilon.lecoutre),
         lower_bound: by(Some(epsilon.lower_bound)),
     }
-}
-
-fn partial_omega_sq(split: &Split) -> Option<f64> {
-    let parts = split.decomposition;
-    let (effect, error) = (parts.effect.ms?, parts.residual.ms?);
-    let gain = parts.effect.df * (effect - error);
-    let whole = parts.total.df + 1.0;
-    share(split, gain, whole * error)
 }

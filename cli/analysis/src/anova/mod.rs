@@ -1,25 +1,34 @@
 //! Analysis of variance for repeated measurements.
 //!
-//! Invariants: only complete subjects enter, and who they are stands in the result; every quantity derives from one
-//! [`Decomposition`], so no two fields of a result can disagree.
+//! Invariants: only complete subjects enter, and who they are stands in the result; every quantity derives from one set
+//! of strata, so no two fields of a result can disagree. One factor is several factors with no others.
 
 mod cells;
 mod decomposition;
 mod effect;
+mod factorial;
 mod householder;
+mod hypothesis;
 mod sphericity;
+mod strata;
+mod term;
 mod unlinked;
 
-pub use cells::{Band, Cell, within_subject_band};
+pub use cells::{Band, Cell, within_subject_band, within_subject_bands};
 pub use decomposition::{Decomposition, Line};
 pub use effect::{Corrected, CorrectedTest, Effect};
+pub use factorial::{About, Factorial, Remark, StratumTable, TermEffect, factorial};
 pub use sphericity::{Epsilon, Mauchly};
+pub use term::{FactorSet, Term};
 pub use unlinked::IfUnlinked;
 
 use crate::contrasts::{self, Contrast};
-use crate::design::{OneWithin, Table};
+use crate::design::{Design, OneWithin};
 use crate::{Note, Settings};
-use decomposition::Split;
+pub(crate) use effect::Ratio;
+pub(crate) use factorial::{Analysed, hypotheses};
+pub(crate) use hypothesis::Hypothesis;
+pub(crate) use strata::{Strata, Stratum, Table};
 
 /// A repeated-measures analysis of one within-subject factor.
 #[derive(Debug, Clone, PartialEq)]
@@ -54,21 +63,17 @@ pub struct RepeatedMeasures {
 /// readings to doubles can produce, Σ (ε y)², counts as zero in the tests, and is reported as it is.
 #[must_use]
 pub fn repeated_measures(design: &OneWithin, settings: &Settings) -> RepeatedMeasures {
-    let table = design.complete_table();
-    let mut notes = Vec::new();
-    let (decomposition, effect, if_unlinked) = match Split::of(&table) {
-        Some(split) => analysed(&split, &mut notes),
-        None => {
-            notes.push(Note::NoCompleteSubject);
-            (None, None, None)
-        }
-    };
+    let several = Design::from(design);
+    let table = Table::of(&several);
+    let mut remarks = Vec::new();
+    let analysed = Analysed::of(&several, &table, settings, &mut remarks);
+    let mut notes: Vec<Note> = remarks.iter().map(|remark| of_one_factor(remark.note, &table)).collect();
     let contrasts = contrasts::contrasts(design, settings, &mut notes);
     RepeatedMeasures {
-        decomposition,
-        effect,
-        cells: cells::cells(&table, settings.confidence),
-        if_unlinked,
+        decomposition: decomposition(&analysed),
+        effect: analysed.strata.last().and_then(|stratum| effect_of(stratum, &table)),
+        cells: cells::cells(&table, settings.confidence).pop().unwrap_or_default(),
+        if_unlinked: analysed.if_unlinked,
         contrasts,
         notes,
         used: design.complete(),
@@ -76,9 +81,34 @@ pub fn repeated_measures(design: &OneWithin, settings: &Settings) -> RepeatedMea
     }
 }
 
-type Analysed = (Option<Decomposition>, Option<Effect>, Option<IfUnlinked>);
+/// The note in the words of one factor.
+fn of_one_factor(note: Note, table: &Table) -> Note {
+    match note {
+        Note::TooFewErrorDf { contrasts, .. } => {
+            Note::TooFewSubjectsForMauchly { subjects: table.subjects(), levels: contrasts + 1 }
+        }
+        note => note,
+    }
+}
 
-fn analysed(split: &Split, notes: &mut Vec<Note>) -> Analysed {
-    let effect = effect::effect(split, notes);
-    (Some(split.decomposition), Some(effect), unlinked::if_unlinked(&split.decomposition, split.rounding))
+fn decomposition(analysed: &Analysed) -> Option<Decomposition> {
+    let (subject, total) = (analysed.strata.first()?.error, analysed.total?);
+    let none = Line::new(0.0, 0.0);
+    let within = analysed.strata.get(1);
+    let effect = within.and_then(|stratum| stratum.effects.first());
+    Some(Decomposition {
+        effect: effect.map_or(none, |it| Line::new(it.effect.ss, it.effect.df)),
+        subject,
+        residual: within.map_or(none, |stratum| stratum.error),
+        total,
+    })
+}
+
+/// The test of the factor; of one level there is none to make, which its fields say.
+fn effect_of(stratum: &StratumTable, table: &Table) -> Option<Effect> {
+    let none = Line::new(0.0, 0.0);
+    match stratum.effects.first() {
+        Some(it) => Some(it.effect),
+        None => Some(effect::Tested::nothing(none, table.subjects() as f64).test()),
+    }
 }

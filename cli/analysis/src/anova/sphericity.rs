@@ -4,8 +4,8 @@
 //! square root of their covariance's, so the covariance is never formed before its determinant is known; and nothing
 //! here depends on which orthonormal contrasts were chosen.
 
-use super::decomposition::Split;
 use super::householder::triangular;
+use super::strata::Stratum;
 use crate::Note;
 use crate::distributions::ChiSquare;
 use crate::moments::Sum;
@@ -30,13 +30,13 @@ pub struct Mauchly {
 
 /// Estimates of how far the contrasts are from sphericity: 1 is spherical, 1 / p as far as can be.
 ///
-/// All are 1 for two levels. Those of Huynh and Feldt are given as computed and may exceed 1; tests use min(1, epsilon).
+/// All are 1 for a single contrast, but for the classic one of several groups, which stands as computed. Those of Huynh and Feldt are given as computed and may exceed 1; tests use min(1, epsilon).
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct Epsilon {
     /// ε̂ = (tr S)² / (p tr S²) (Greenhouse & Geisser 1959, *Psychometrika* 24:95); `None` where the residual is zero.
     pub greenhouse_geisser: Option<f64>,
-    /// (n p ε̂ − 2) / (p (n − 1 − p ε̂)) (Huynh & Feldt 1976, *Journal of Educational Statistics* 1:69); `None` where
-    /// the denominator is not positive.
+    /// (n p ε̂ − 2) / (p (v − p ε̂)) with n subjects in all groups (Huynh & Feldt 1976, *Journal of Educational
+    /// Statistics* 1:69); `None` where the denominator is not positive.
     pub huynh_feldt: Option<f64>,
     /// ((v + 1) p ε̂ − 2) / (p (v − p ε̂)) with v error degrees of freedom (Lecoutre 1991, *Journal of Educational
     /// Statistics* 16:371); `None` where the denominator is not positive. With one group it is the classic one.
@@ -46,74 +46,61 @@ pub struct Epsilon {
 }
 
 impl Epsilon {
-    const SPHERICAL: Self =
-        Self { greenhouse_geisser: Some(1.0), huynh_feldt: Some(1.0), lecoutre: Some(1.0), lower_bound: 1.0 };
+    /// Of one contrast, for which there is nothing to depart from: only the classic estimate of several groups, with
+    /// its subjects instead of its degrees of freedom, differs from 1.
+    fn of_one(n: f64, v: f64) -> Self {
+        let huynh_feldt = huynh_feldt(1.0, 1.0, n, v).unwrap_or(1.0);
+        Self { greenhouse_geisser: Some(1.0), huynh_feldt: Some(huynh_feldt), lecoutre: Some(1.0), lower_bound: 1.0 }
+    }
 
     fn undefined(contrasts: f64) -> Self {
         Self { greenhouse_geisser: None, huynh_feldt: None, lecoutre: None, lower_bound: 1.0 / contrasts }
     }
 }
 
-/// What the residuals say about sphericity.
+/// What the residuals of a stratum say about sphericity.
+#[derive(Debug, Clone, Copy)]
 pub(super) struct Sphericity {
     pub mauchly: Mauchly,
+    /// `None` where there is no error to estimate it from.
     pub epsilon: Option<Epsilon>,
 }
 
 impl Sphericity {
-    pub fn of(split: &Split, notes: &mut Vec<Note>) -> Self {
+    /// For a stratum within subjects; `subjects` are those of all groups.
+    pub fn of(stratum: &Stratum, subjects: usize, rounding: f64, notes: &mut Vec<Note>) -> Self {
         let none = |epsilon| Self { mauchly: Mauchly::default(), epsilon };
-        match split.levels {
-            ..=1 => none(None),
-            _ if split.subjects < 2 => none(None),
-            2 => none(Some(Epsilon::SPHERICAL)),
-            _ if split.decomposition.residual.ss <= split.rounding => none(Some(Epsilon::undefined(contrasts(split)))),
-            _ => Self::of_scores(split, notes),
+        let (p, v) = (stratum.contrasts(), stratum.error_df_each());
+        match p {
+            _ if v < 1.0 => none(None),
+            0 => none(None),
+            1 => none(Some(Epsilon::of_one(subjects as f64, v))),
+            _ if stratum.error.ss <= rounding => none(Some(Epsilon::undefined(p as f64))),
+            _ => Self::of_scores(stratum, subjects, rounding, notes),
         }
     }
 
-    /// For at least two subjects, three levels, and a residual.
-    fn of_scores(split: &Split, notes: &mut Vec<Note>) -> Self {
-        let factor = triangular(helmert_scores(split));
-        let epsilon = epsilon(&factor, contrasts(split), (split.subjects - 1) as f64);
-        if epsilon.huynh_feldt.is_none() {
+    /// For at least two contrasts, and an error.
+    fn of_scores(stratum: &Stratum, subjects: usize, rounding: f64, notes: &mut Vec<Note>) -> Self {
+        let factor = triangular(stratum.scores.clone());
+        let epsilon = epsilon(&factor, subjects as f64, stratum.error_df_each());
+        if epsilon.huynh_feldt.is_none() || epsilon.lecoutre.is_none() {
             notes.push(Note::HuynhFeldtUndefined);
         }
-        Self { mauchly: mauchly(split, &factor, notes), epsilon: Some(epsilon) }
+        Self { mauchly: mauchly(&factor, stratum.error_df_each(), rounding, notes), epsilon: Some(epsilon) }
     }
 }
 
-fn contrasts(split: &Split) -> f64 {
-    (split.levels - 1) as f64
-}
-
-/// The scores of the subjects on the orthonormal Helmert contrasts (the mean of the levels before, less the level),
-/// one column for each contrast; their columns have mean zero because the residuals have.
-fn helmert_scores(split: &Split) -> Vec<Vec<f64>> {
-    let mut scores = vec![Vec::with_capacity(split.subjects); split.levels - 1];
-    for row in split.residuals.chunks_exact(split.levels) {
-        let (mut before, mut count) = (0.0_f64, 0.0_f64);
-        let mut levels = row.iter();
-        before += levels.next().unwrap_or(&0.0);
-        for (column, level) in scores.iter_mut().zip(levels) {
-            count += 1.0;
-            column.push((before - count * level) / (count * (count + 1.0)).sqrt());
-            before += level;
-        }
-    }
-    scores
-}
-
-/// The epsilons of p contrasts, from a factor R with RᵀR a multiple of their covariance, on v error degrees of freedom.
-fn epsilon(factor: &[Vec<f64>], p: f64, v: f64) -> Epsilon {
+/// The epsilons of n subjects, from a factor R with RᵀR a multiple of the contrasts' covariance on v degrees of freedom.
+fn epsilon(factor: &[Vec<f64>], n: f64, v: f64) -> Epsilon {
+    let p = factor.len() as f64;
     let trace = Sum::of(factor.iter().flatten().map(|r| r * r)).value();
     let squares = Sum::of(pairs(factor).map(|(a, b, times)| times * (dot(a, b) / trace).powi(2))).value();
     let pe = 1.0 / squares;
-    let lecoutre = huynh_feldt(p, pe, v + 1.0, v);
     Epsilon {
         greenhouse_geisser: Some((pe / p).clamp(1.0 / p, 1.0)),
-        huynh_feldt: lecoutre,
-        lecoutre,
+        huynh_feldt: huynh_feldt(p, pe, n, v),
+        lecoutre: huynh_feldt(p, pe, v + 1.0, v),
         lower_bound: 1.0 / p,
     }
 }
@@ -139,13 +126,14 @@ fn dot(a: &[f64], b: &[f64]) -> f64 {
     a.iter().zip(b).map(|(x, y)| x * y).sum()
 }
 
-fn mauchly(split: &Split, factor: &[Vec<f64>], notes: &mut Vec<Note>) -> Mauchly {
-    if split.subjects < split.levels {
-        notes.push(Note::TooFewSubjectsForMauchly { subjects: split.subjects, levels: split.levels });
+fn mauchly(factor: &[Vec<f64>], v: f64, rounding: f64, notes: &mut Vec<Note>) -> Mauchly {
+    let p = factor.len() as f64;
+    if v < p {
+        notes.push(Note::TooFewErrorDf { error_df: v as usize, contrasts: factor.len() });
         return Mauchly::default();
     }
-    match log_w(split, factor) {
-        Some(log_w) => mauchly_of(log_w, contrasts(split), (split.subjects - 1) as f64),
+    match log_w(factor, rounding) {
+        Some(log_w) => mauchly_of(log_w, p, v),
         None => {
             notes.push(Note::SingularCovariance);
             Mauchly::default()
@@ -154,10 +142,10 @@ fn mauchly(split: &Split, factor: &[Vec<f64>], notes: &mut Vec<Note>) -> Mauchly
 }
 
 /// ln W from the diagonal of the factor; `None` where an element of it may be rounding alone.
-fn log_w(split: &Split, factor: &[Vec<f64>]) -> Option<f64> {
-    let p = contrasts(split);
+fn log_w(factor: &[Vec<f64>], rounding: f64) -> Option<f64> {
+    let p = factor.len() as f64;
     // The factorisation adds a little rounding of its own to what the readings brought.
-    let floor = 8.0 * split.rounding.sqrt();
+    let floor = 8.0 * rounding.sqrt();
     let mut diagonal = factor.iter().enumerate().map(|(i, column)| column.get(i).copied().unwrap_or(0.0).abs());
     let log_det: Option<f64> = diagonal.try_fold(0.0, |sum, r| (r > floor).then(|| sum + 2.0 * r.ln()));
     let trace = Sum::of(factor.iter().flatten().map(|r| r * r)).value();

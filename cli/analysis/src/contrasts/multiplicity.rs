@@ -19,6 +19,11 @@ pub enum Multiplicity {
 }
 
 impl Multiplicity {
+    /// Whether it bounds the chance of a single false finding in the family.
+    pub(super) fn bounds_the_family(self) -> bool {
+        matches!(self, Self::Bonferroni | Self::Holm)
+    }
+
     /// The adjusted p values, in the order given. The family is made up of the p values that there are; what is `None`,
     /// or no number between 0 and 1, comes out as `None`.
     #[must_use]

@@ -54,7 +54,7 @@ impl FisherF {
 }
 
 /// cf / (cf + 1) and 1 / (cf + 1), for f ≥ 0, also where cf is beyond the largest double.
-fn shares(f: f64, c: f64) -> (f64, f64) {
+pub(super) fn shares(f: f64, c: f64) -> (f64, f64) {
     let odds = c * f;
     if odds <= 1.0 {
         return (odds / (1.0 + odds), 1.0 / (1.0 + odds));

@@ -2,7 +2,7 @@
 //!
 //! Invariant: each tail is an error function of its own argument, and the quantile works from the smaller tail.
 
-use std::f64::consts::SQRT_2;
+use std::f64::consts::{PI, SQRT_2};
 
 use super::{held, probability};
 
@@ -42,6 +42,27 @@ impl Normal {
     pub fn upper_quantile(self, q: f64) -> Option<f64> {
         self.quantile(q).map(|z| 0.0 - z)
     }
+}
+
+/// Φ(z).
+pub(super) fn phi(z: f64) -> f64 {
+    libm::erfc(-z / SQRT_2) / 2.0
+}
+
+/// φ(z).
+pub(super) fn density(z: f64) -> f64 {
+    (-0.5 * z * z).exp() / (2.0 * PI).sqrt()
+}
+
+/// ln Φ(z), also where Φ(z) is too small for a double: from −30 down by the asymptotic series (Abramowitz & Stegun 1964,
+/// 26.2.12), whose first term left out is below 1e-16.
+pub(super) fn log_cdf(z: f64) -> f64 {
+    if z > -30.0 {
+        return phi(z).ln();
+    }
+    let ratio = 1.0 / (z * z);
+    let series = (1..8).rev().fold(1.0, |rest, n| 1.0 - f64::from(2 * n - 1) * ratio * rest);
+    -0.5 * z * z - (-z).ln() - 0.5 * (2.0 * PI).ln() + series.ln()
 }
 
 /// The size of the quantile whose tail is exp(−r²).

@@ -71,7 +71,7 @@ impl StudentT {
     }
 
     /// The masses inside and outside ±t: I_x(½, ν/2) and I_y(ν/2, ½) for x = t² / (ν + t²), y = ν / (ν + t²).
-    fn around_zero(self, t: f64) -> Option<Tails> {
+    pub(super) fn around_zero(self, t: f64) -> Option<Tails> {
         if t.is_nan() {
             return None;
         }

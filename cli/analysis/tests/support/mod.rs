@@ -6,7 +6,7 @@
 use std::fs;
 use std::path::{Path, PathBuf};
 
-use revisant_analysis::design::OneWithin;
+use revisant_analysis::design::{Design, Factor, OneWithin};
 use serde_json::Value;
 
 pub fn folder(name: &str) -> PathBuf {
@@ -31,11 +31,63 @@ pub struct Case {
 }
 
 pub fn cases(name: &str) -> Vec<Case> {
+    paths(name).iter().map(|path| Case::read(path)).collect()
+}
+
+fn paths(name: &str) -> Vec<PathBuf> {
     let mut paths: Vec<PathBuf> = fs::read_dir(folder(name)).unwrap().map(|entry| entry.unwrap().path()).collect();
     paths.retain(|path| path.extension().is_some_and(|e| e == "json"));
     paths.sort();
     assert!(!paths.is_empty(), "no cases in {name}");
-    paths.iter().map(|path| Case::read(path)).collect()
+    paths
+}
+
+/// A case of several factors: its design, and the names of its factors, between then within.
+pub struct Several {
+    pub case: Case,
+    pub design: Design,
+    pub between: Vec<String>,
+    pub within: Vec<String>,
+}
+
+pub fn cases_of_several(name: &str) -> Vec<Several> {
+    paths(name).iter().map(|path| Several::read(path)).collect()
+}
+
+impl Several {
+    /// Lines of subject, between levels, within levels, value, in the order in which the columns are named.
+    fn read(path: &Path) -> Self {
+        let doc: Value = serde_json::from_str(&fs::read_to_string(path).unwrap()).unwrap();
+        let lines = lines(&path.with_extension("csv"));
+        let names = |kind: &str| -> Vec<String> {
+            doc["columns"][kind].as_array().unwrap().iter().map(|name| name.as_str().unwrap().to_owned()).collect()
+        };
+        let (between, within) = (names("between"), names("within"));
+        let mut group_levels: Vec<Vec<String>> = vec![Vec::new(); between.len()];
+        let mut within_levels: Vec<Vec<String>> =
+            within.iter().map(|name| texts(&doc["config"]["within_levels"][name])).collect();
+        let sizes: Vec<usize> = within_levels.iter().map(Vec::len).collect();
+        let (mut subjects, mut rows) = (Vec::new(), Vec::new());
+        for line in &lines {
+            let subject = position(&mut subjects, &line[0]);
+            let (groups, rest) = line[1..].split_at(between.len());
+            let groups: Vec<usize> =
+                groups.iter().zip(&mut group_levels).map(|(at, known)| position(known, at)).collect();
+            rows.resize(subjects.len(), (groups, vec![None; sizes.iter().product()]));
+            let at = rest.iter().zip(&mut within_levels).map(|(at, known)| position(known, at));
+            let cell = at.zip(&sizes).fold(0, |cell, (level, size)| cell * size + level);
+            rows[subject].1[cell] = rest[within.len()].parse().ok();
+        }
+        let factors = sizes.iter().map(|&size| Factor::of(size).unwrap()).collect();
+        let design = Design::new(factors, group_levels.iter().map(Vec::len).collect(), &rows).unwrap();
+        let name = path.file_stem().unwrap().to_string_lossy().into_owned();
+        let case = Case { name, doc, levels: Vec::new(), rows: Vec::new(), worst: 0.0, compared: 0, wrong: Vec::new() };
+        Self { case, design, between, within }
+    }
+}
+
+fn texts(list: &Value) -> Vec<String> {
+    list.as_array().unwrap().iter().map(|text| text.as_str().unwrap().to_owned()).collect()
 }
 
 impl Case {

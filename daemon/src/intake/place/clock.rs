@@ -6,7 +6,7 @@
 use std::collections::HashMap;
 
 use chrono::{DateTime, NaiveDate, NaiveDateTime, TimeDelta, Utc};
-use chrono::{MappedLocalTime, TimeZone};
+use chrono::{MappedLocalTime, Offset, TimeZone};
 use chrono_tz::Tz;
 use revisant_schema::plan::{ClockError, Instrument};
 
@@ -25,14 +25,28 @@ pub enum Local {
 
 /// What a local time is in a zone.
 pub fn in_zone(zone: Tz, local: NaiveDateTime) -> Local {
-    match zone.from_local_datetime(&local) {
-        MappedLocalTime::Single(moment) => Local::Once(moment.to_utc()),
-        MappedLocalTime::Ambiguous(one, other) => {
-            let (one, other) = (one.to_utc(), other.to_utc());
-            Local::Twice(one.min(other), one.max(other))
-        }
+    let moment = |offset: <Tz as TimeZone>::Offset| local.checked_sub_offset(offset.fix()).map(|utc| utc.and_utc());
+    match zone.offset_from_local_datetime(&local) {
+        MappedLocalTime::Single(offset) => moment(offset).map_or(Local::Never, Local::Once),
+        MappedLocalTime::Ambiguous(one, other) => match (moment(one), moment(other)) {
+            (Some(one), Some(other)) => Local::Twice(one.min(other), one.max(other)),
+            _ => Local::Never,
+        },
         MappedLocalTime::None => Local::Never,
     }
+}
+
+/// What a local time that does not exist may have been: by a clock that was not put forward yet, and by one that had
+/// been put forward before its time.
+pub fn around_gap(zone: Tz, local: NaiveDateTime) -> [Option<DateTime<Utc>>; 2] {
+    let day = TimeDelta::days(1);
+    // The offsets of the day before and of the day after are those on both sides of the gap.
+    let offset = |aside: Option<NaiveDateTime>| {
+        let there = zone.from_local_datetime(&aside?).earliest()?;
+        Some(there.naive_local() - there.naive_utc())
+    };
+    let by = |offset: Option<TimeDelta>| Some(local.checked_sub_signed(offset?)?.and_utc());
+    [by(offset(local.checked_sub_signed(day))), by(offset(local.checked_add_signed(day)))]
 }
 
 /// The error of the instrument's clock on a day of that clock: the last entry not after it.
@@ -126,6 +140,22 @@ mod tests {
 
     fn at(minute: i64) -> DateTime<Utc> {
         DateTime::from_timestamp(minute * 60, 0).unwrap()
+    }
+
+    proptest::proptest! {
+        /// A local time's day is the day of each of its moments in the same zone, however clocks change.
+        #[test]
+        fn a_moment_is_on_the_day_it_was_written_on(minute in 0_i64..80_000_000, which in 0..chrono_tz::TZ_VARIANTS.len()) {
+            let (zone, local) = (chrono_tz::TZ_VARIANTS[which], at(minute).naive_utc());
+            let moments = match in_zone(zone, local) {
+                Local::Once(moment) => vec![moment],
+                Local::Twice(early, late) => vec![early, late],
+                Local::Never => vec![],
+            };
+            for moment in moments {
+                proptest::prop_assert_eq!(moment.with_timezone(&zone).naive_local(), local);
+            }
+        }
     }
 
     /// Rows as (early, late), equal when there is one moment only; every good choice by trying all.

@@ -5,7 +5,7 @@
 
 use std::collections::{HashMap, HashSet};
 
-use revisant_schema::hold::{Answer, Reason};
+use revisant_schema::hold::{Answer, INSTEAD_OF, Reason};
 use revisant_schema::plan::{Changed, Instrument, Measure, ReExport};
 use revisant_schema::records::intake::{Candidate, Identity, Slot};
 use revisant_schema::records::texts::SessionId;
@@ -228,7 +228,8 @@ impl<'p> Judge<'p> {
         }
         let was = known.exported.map(|number| number.to_string()).unwrap_or_default();
         let by_hand = if touched { ", which a person has struck or amended" } else { "" };
-        let wrong = format!("it was {was} when first exported (reading {}){by_hand}", known.reading);
+        let now = case.value.exported.map(|number| number.to_string()).unwrap_or_default();
+        let wrong = format!("it is {now} now, and was {was} when first exported (reading {}){by_hand}", known.reading);
         Ok(Verdict::Held(Held::row(Reason::ChangedValue, wrong).on(&case.value.column).about(known.reading)))
     }
 
@@ -279,16 +280,19 @@ fn equal(value: &PlacedValue, known: &Candidate) -> bool {
 
 fn beyond_plan(case: &Case<'_>, number: u32) -> Held {
     let planned = case.measure.replicates;
-    let wrong = match planned {
-        1 => format!("replicate {number}, where the plan expects one"),
-        _ => format!("replicate {number}, where the plan expects {planned}"),
-    };
-    Held::row(Reason::ExtraReplicate, wrong).on(&case.value.column)
+    let expects = if planned == 1 { "one".to_owned() } else { planned.to_string() };
+    let wrong =
+        format!("this is replicate {number} of {} in this session; the plan expects {expects}", case.measure.code);
+    let instead = (1..=planned.min(6)).map(|number| format!("{INSTEAD_OF} {number}"));
+    let likely = (number > 0).then(|| number.to_string()).into_iter().chain(instead).collect();
+    Held::row(Reason::ExtraReplicate, wrong).on(&case.value.column).likely(likely)
 }
 
 fn taken_already(case: &Case<'_>, number: u32, taken: &Slot) -> Held {
-    let wrong = format!("replicate {number} of this session was filed with another time (reading {})", taken.reading);
-    Held::row(Reason::ExtraReplicate, wrong).on(&case.value.column).about(taken.reading)
+    let wrong =
+        format!("replicate {number} of this session is there already, with another time (reading {})", taken.reading);
+    let likely = vec![format!("{INSTEAD_OF} {number}")];
+    Held::row(Reason::ExtraReplicate, wrong).on(&case.value.column).about(taken.reading).likely(likely)
 }
 
 fn looks_the_same(case: &Case<'_>, known: &Candidate) -> Held {

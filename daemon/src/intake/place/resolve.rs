@@ -5,17 +5,18 @@
 //! collection alone, never on other rows (but for doubled local times, which the export's order may settle).
 
 use std::borrow::Cow;
-use std::cell::RefCell;
-use std::collections::{BTreeMap, HashMap, HashSet};
+use std::cell::{Cell, RefCell};
+use std::collections::{BTreeMap, HashMap};
 use std::sync::Arc;
 
-use chrono::{DateTime, NaiveDate, Utc};
+use chrono::{DateTime, NaiveDate, NaiveDateTime, Utc};
+use chrono_tz::Tz;
 use regex::Regex;
 use revisant_schema::hold::{Answer, Reason};
 use revisant_schema::plan::stamp::{CompiledStamp, Written};
 use revisant_schema::plan::{
     Affine, ConditionFactor, Instrument, LevelRule, LimitRule, MeasureIx, MeasureRule, Place, Plan, Reader, Source,
-    UnitRule, ValueRule, units,
+    UnitRule, ValueRule, VisitIx, units,
 };
 use revisant_schema::reading::Condition;
 use revisant_schema::roster::{Roster, tidy};
@@ -294,8 +295,8 @@ pub struct Resolver<'p> {
     replicate: Option<Finder<'p>>,
     operator: Option<Finder<'p>>,
     values: Vec<ValueFinder<'p>>,
-    /// The visits' codes, and `unscheduled`.
-    labels: HashSet<&'p str>,
+    /// The visit that a label named last: rows of one visit stand together.
+    visit_before: Cell<VisitIx>,
     /// Subjects met, by the text that names them.
     subjects: RefCell<HashMap<String, Listed>>,
     /// Settled moments of doubled local times, by row.
@@ -356,7 +357,7 @@ impl<'p> Resolver<'p> {
             replicate: reader.replicate.as_ref().map(finder),
             operator: reader.operator.as_ref().map(finder),
             values: reader.values.iter().map(|rule| ValueFinder::new(plan, rule, wanted, whereabouts)).collect(),
-            labels: plan.visits.iter().map(|visit| visit.code.as_str()).chain([UNSCHEDULED]).collect(),
+            visit_before: Cell::new(0),
             subjects: Default::default(),
             settled: HashMap::new(),
         })
@@ -482,17 +483,24 @@ impl<'p> Resolver<'p> {
     fn listed(&self, found: &str) -> Result<Listed, Box<Held>> {
         let code = tidy(found, &self.plan.subject.normalise);
         if code.trim().is_empty() {
-            return Err(Box::new(Held::row(Reason::NoSubject, "the row names no subject")));
+            let wrong = format!("no subject is named: {} is empty", place_words(&self.instrument.reader.subject));
+            return Err(Box::new(Held::row(Reason::NoSubject, wrong)));
         }
         let fits = self.plan.subject.pattern.is_match(&code);
         match self.roster.subjects.get(&code) {
             Some(entry) if fits => Ok(Listed { code, enrolled: entry.enrolled, withdrawn: entry.withdrawn }),
-            _ => {
-                let why = if fits { "is not on the roster" } else { "does not fit the plan's pattern" };
-                let held = Held::row(Reason::UnknownSubject, format!("\"{code}\" {why}"));
-                Err(Box::new(held.likely(nearest(&code, self.roster.subjects.keys().map(String::as_str)))))
-            }
+            _ => Err(Box::new(self.unlisted(&code, fits))),
         }
+    }
+
+    fn unlisted(&self, code: &str, fits: bool) -> Held {
+        let why = match self.roster.subjects.keys().next() {
+            None => "is not on the roster, which has nobody yet".to_owned(),
+            Some(_) if fits => "is not on the roster".to_owned(),
+            Some(other) => format!("is not on the roster, nor written as this study's codes are (such as {other})"),
+        };
+        let held = Held::row(Reason::UnknownSubject, format!("\"{code}\" {why}"));
+        held.likely(nearest(code, self.roster.subjects.keys().map(String::as_str)))
     }
 
     fn taken(&self, row: &Row, rows: &dyn Rows, decided: &Decided) -> Result<(Taken, String), Box<Held>> {
@@ -512,9 +520,24 @@ impl<'p> Resolver<'p> {
             Taken::Day(day) => (day > self.today()).then(|| day.to_string()),
         };
         if let Some(what) = future {
-            return Err(Box::new(Held::row(Reason::FutureStamp, format!("\"{what}\" lies in the future"))));
+            let today = self.today();
+            let wrong = format!("\"{what}\" lies in the future: the export was read on {today}");
+            return Err(Box::new(Held::row(Reason::FutureStamp, wrong)));
         }
         Ok((taken, written))
+    }
+
+    fn unreadable_stamp(&self, written: &str) -> Held {
+        use revisant_schema::plan::{Stamp, stamp};
+        let as_planned = match &self.instrument.reader.stamp {
+            Stamp::Iso => "such as 2026-02-28T14:05".to_owned(),
+            Stamp::Serial => "a workbook's number of the day".to_owned(),
+            Stamp::Pattern(pattern) => example(pattern),
+        };
+        let wrong = format!("\"{written}\" is no time as the plan expects it, {as_planned}");
+        // A time that reads as ISO 8601 is most likely that.
+        let iso = Some(written.replacen(' ', "T", 1)).filter(|text| stamp::read(&Stamp::Iso, text).is_some());
+        Held::row(Reason::UnreadableStamp, wrong).likely(iso.into_iter().collect())
     }
 
     fn today(&self) -> NaiveDate {
@@ -523,11 +546,11 @@ impl<'p> Resolver<'p> {
 
     fn stamped(&self, row: &Row, rows: &dyn Rows, written: &str) -> Result<Taken, Box<Held>> {
         if written.is_empty() {
-            return Err(Box::new(Held::row(Reason::NoStamp, "the row says no time")));
+            let wrong = format!("no time is said: {} is empty", place_words(&self.instrument.reader.taken_at));
+            return Err(Box::new(Held::row(Reason::NoStamp, wrong)));
         }
         let Some(read) = self.stamp.read_in(written, rows.since_1904()) else {
-            let wrong = format!("\"{written}\" cannot be read as the plan says a time is written");
-            return Err(Box::new(Held::row(Reason::UnreadableStamp, wrong)));
+            return Err(Box::new(self.unreadable_stamp(written)));
         };
         match read.written {
             Written::Date(day) => Ok(Taken::Day(day)),
@@ -537,13 +560,9 @@ impl<'p> Resolver<'p> {
                     Local::Once(moment) => moment,
                     Local::Twice(early, late) => match self.settled.get(&row.at()) {
                         Some(moment) => *moment,
-                        None => return Err(Box::new(doubled(written, early, late))),
+                        None => return Err(Box::new(doubled(written, self.instrument.time_zone, early, late))),
                     },
-                    Local::Never => {
-                        let zone = self.instrument.time_zone.name();
-                        let wrong = format!("\"{written}\" does not exist in {zone}: clocks went forward over it");
-                        return Err(Box::new(Held::row(Reason::ClockGap, wrong)));
-                    }
+                    Local::Never => return Err(Box::new(skipped(written, self.instrument.time_zone, local))),
                 };
                 Ok(self.at_local(moment, local.date(), read.finer))
             }
@@ -574,11 +593,8 @@ impl<'p> Resolver<'p> {
             Some(Written::Moment(moment)) => moment.to_utc(),
             Some(Written::Local(local)) => match clock::in_zone(zone, local) {
                 Local::Once(moment) => moment,
-                Local::Twice(early, late) => return Err(Box::new(doubled(text, early, late))),
-                Local::Never => {
-                    let wrong = format!("\"{text}\" does not exist in {}", zone.name());
-                    return Err(Box::new(Held::row(Reason::ClockGap, wrong)));
-                }
+                Local::Twice(early, late) => return Err(Box::new(doubled(text, zone, early, late))),
+                Local::Never => return Err(Box::new(skipped(text, zone, local))),
             },
             Some(Written::Date(day)) => return Ok(Taken::Day(day)),
             None => {
@@ -602,13 +618,22 @@ impl<'p> Resolver<'p> {
         let text = trim(&found);
         if text.is_empty() {
             Ok((None, false))
-        } else if self.labels.contains(text) {
+        } else if text == UNSCHEDULED || self.is_visit(text) {
             Ok((Some(text.to_owned()), false))
         } else {
             let codes = self.plan.visits.iter().map(|visit| visit.code.as_str());
             let held = Held::row(Reason::UnknownVisit, format!("\"{text}\" is no visit of the plan"));
-            Err(Box::new(held.likely(nearest(text, codes))))
+            Err(Box::new(held.likely(nearest_or_all(text, codes))))
         }
+    }
+
+    fn is_visit(&self, code: &str) -> bool {
+        if self.plan.visits.get(self.visit_before.get()).is_some_and(|visit| visit.code == code) {
+            return true;
+        }
+        let Some((visit, _)) = self.plan.visit(code) else { return false };
+        self.visit_before.set(visit);
+        true
     }
 
     fn replicate_of(&self, row: &Row, rows: &dyn Rows) -> Result<Option<u32>, Box<Held>> {
@@ -621,7 +646,7 @@ impl<'p> Resolver<'p> {
         match text.parse::<u32>() {
             Ok(number) => Ok(Some(number)),
             Err(_) => {
-                let wrong = format!("\"{text}\" is no replicate's number");
+                let wrong = format!("\"{text}\" is no replicate's number, which is 1, 2, 3 and so on");
                 Err(Box::new(Held::row(Reason::UnknownReplicate, wrong)))
             }
         }
@@ -665,7 +690,12 @@ impl<'p> Resolver<'p> {
             && !(low..=high).contains(&corrected)
             && !decided.stands(column, Reason::ImplausibleValue)
         {
-            let wrong = format!("{corrected} {} lies outside {low} to {high}", measure.unit);
+            let read = row.cell(value.slot).trim();
+            let is = match corrected == number.exported {
+                true => format!("{corrected} {}", measure.unit),
+                false => format!("\"{read}\" is {} {}, which", short(corrected), measure.unit),
+            };
+            let wrong = format!("{is} lies outside {low} to {high}, the plausible bounds of {}", measure.code);
             return Err(Held::row(Reason::ImplausibleValue, wrong));
         }
         let about_replicate = decided.find(column, |_, answer| {
@@ -713,7 +743,7 @@ impl<'p> Resolver<'p> {
                 true => "the row names no measure".to_owned(),
                 false => format!("\"{text}\" is no measure of the plan"),
             };
-            Held::row(Reason::UnknownMeasure, wrong).likely(nearest(&text, codes))
+            Held::row(Reason::UnknownMeasure, wrong).likely(nearest_or_all(&text, codes))
         })
     }
 
@@ -744,7 +774,8 @@ impl<'p> Resolver<'p> {
                     true => format!("the row does not say which {}", factor.code),
                     false => format!("\"{found}\" is no level of {}", factor.code),
                 };
-                let likely = nearest(&found, factor.levels.iter().map(String::as_str));
+                let near = nearest_or_all(&found, factor.levels.iter().map(String::as_str));
+                let likely = near.iter().map(|level| format!("{}={level}", factor.code)).collect();
                 return Err(Held::row(Reason::UnknownCondition, wrong).likely(likely));
             }
             condition.0.insert(factor.code.clone(), found.into_owned());
@@ -772,7 +803,9 @@ impl<'p> Resolver<'p> {
             (UnitRule::Found { convert, .. }, None) => {
                 let code = value.unit.as_ref().map(|finder| finder.find(row, rows).into_owned()).unwrap_or_default();
                 if code.is_empty() {
-                    return Err(Held::row(Reason::UnknownUnit, "the row names no unit"));
+                    let target = &self.plan.measures[measure].unit;
+                    let wrong = format!("the row names no unit; the plan's is {target}");
+                    return Err(Held::row(Reason::UnknownUnit, wrong).likely(vec![target.clone()]));
                 }
                 (code, *convert)
             }
@@ -794,8 +827,8 @@ impl<'p> Resolver<'p> {
             Some(conversion) => Ok((code, *conversion)),
             None => {
                 let converts = |meant: &String| units::convert(meant, target).is_some();
-                let meant = units::meant(&code).filter(converts).into_iter().collect();
-                Err(Held::row(Reason::UnknownUnit, unit_fault(&code, target)).likely(meant))
+                let meant = units::meant(&code).filter(converts).unwrap_or_else(|| target.clone());
+                Err(Held::row(Reason::UnknownUnit, unit_fault(&code, target)).likely(vec![meant]))
             }
         }
     }
@@ -826,7 +859,7 @@ impl<'p> Resolver<'p> {
         if let Some(number) = as_it_stands {
             return Ok(Some(Number { exported: number, used: number, mark: None }));
         }
-        let unreadable = || Held::row(Reason::UnreadableValue, format!("\"{text}\" is no number"));
+        let unreadable = || Held::row(Reason::UnreadableValue, not_a_number(text, reader));
         let (mark, limit) = number::limit(text).ok_or_else(unreadable)?;
         let limit = parse(limit).ok_or_else(unreadable)?;
         self.beyond_limit(measure, column, text, mark, limit, decided)
@@ -851,7 +884,11 @@ impl<'p> Resolver<'p> {
             LimitRule::Limit => limit,
             LimitRule::Half => limit / 2.0,
             LimitRule::Missing => return Ok(None),
-            LimitRule::Hold => return Err(Held::row(reason, format!("\"{text}\" lies beyond a limit of detection"))),
+            LimitRule::Hold => {
+                let side = if mark == "<" { "below" } else { "above" };
+                let wrong = format!("\"{text}\" says only that it lies {side} {limit}, and not what it is");
+                return Err(Held::row(reason, wrong));
+            }
         };
         Ok(Some(Number { exported: limit, used, mark: Some(mark) }))
     }
@@ -961,21 +998,79 @@ fn check_enrolment(listed: &Listed, day: NaiveDate, decided: &Decided) -> Result
         && !confirmed(Reason::BeforeEnrolment)
     {
         let wrong = format!("{day} lies before {subject}'s enrolment on {enrolled}");
-        return Err(Box::new(Held::row(Reason::BeforeEnrolment, wrong)));
+        return Err(Box::new(Held::row(Reason::BeforeEnrolment, wrong).likely(vec![subject.clone()])));
     }
     if let Some(withdrawn) = listed.withdrawn.filter(|withdrawn| day > *withdrawn)
         && !confirmed(Reason::AfterWithdrawal)
     {
         let wrong = format!("{day} lies after {subject}'s withdrawal on {withdrawn}");
-        return Err(Box::new(Held::row(Reason::AfterWithdrawal, wrong)));
+        return Err(Box::new(Held::row(Reason::AfterWithdrawal, wrong).likely(vec![subject.clone()])));
     }
     Ok(())
 }
 
-fn doubled(written: &str, early: DateTime<Utc>, late: DateTime<Utc>) -> Held {
-    let text = |moment: DateTime<Utc>| moment.to_rfc3339_opts(chrono::SecondsFormat::AutoSi, true);
-    let wrong = format!("\"{written}\" exists twice: clocks went back over it");
-    Held::row(Reason::ClockFold, wrong).likely(vec![text(early), text(late)])
+fn doubled(written: &str, zone: Tz, early: DateTime<Utc>, late: DateTime<Utc>) -> Held {
+    let wrong = format!("\"{written}\" was there twice in {}: clocks went back over it", zone.name());
+    Held::row(Reason::ClockFold, wrong).likely([early, late].map(|moment| local_text(moment, zone)).to_vec())
+}
+
+fn skipped(written: &str, zone: Tz, local: NaiveDateTime) -> Held {
+    let wrong = format!("\"{written}\" was never there in {}: clocks went forward over it", zone.name());
+    let around = clock::around_gap(zone, local).into_iter().flatten();
+    Held::row(Reason::ClockGap, wrong).likely(around.map(|moment| local_text(moment, zone)).collect())
+}
+
+/// A moment as a person may answer with it.
+fn local_text(moment: DateTime<Utc>, zone: Tz) -> String {
+    moment.with_timezone(&zone).to_rfc3339_opts(chrono::SecondsFormat::AutoSi, true)
+}
+
+/// A time as a pattern writes it.
+fn example(pattern: &str) -> String {
+    use std::fmt::Write;
+    let moment = DateTime::from_timestamp(1_772_287_500, 0).unwrap_or_default();
+    let mut text = String::new();
+    match write!(text, "{}", moment.format(pattern)) {
+        Ok(()) => format!("such as {text}"),
+        Err(_) => format!("as \"{pattern}\" says"),
+    }
+}
+
+/// What a place is, in words.
+fn place_words(place: &Place) -> String {
+    match &place.source {
+        Source::Column(name) => format!("the column \"{name}\""),
+        Source::Columns(names) => format!("each of the columns \"{}\"", names.join("\", \"")),
+        Source::Preamble(key) => format!("\"{key}\" above the header"),
+        Source::FileName(_) => "what the plan looks for in the file's name".to_owned(),
+        Source::Folder(_) => "what the plan looks for in the folder's name".to_owned(),
+        Source::Fixed(_) => "what the plan says".to_owned(),
+        Source::Parts(parts) => parts.iter().map(place_words).collect::<Vec<_>>().join(" and "),
+    }
+}
+
+/// A number in six digits, for the eye.
+fn short(number: f64) -> String {
+    let rounded: f64 = format!("{number:.5e}").parse().unwrap_or(number);
+    rounded.to_string()
+}
+
+/// Why a text is no number, with the marks that the plan expects where it has one of another kind.
+fn not_a_number(text: &str, reader: &Reader) -> String {
+    let other = if reader.decimal_mark == '.' { ',' } else { '.' };
+    match text.contains(other) && number::parse(text, other, None).is_some() {
+        true => {
+            format!("\"{text}\" is no number with the decimal mark that the plan states (\"{}\")", reader.decimal_mark)
+        }
+        false => format!("\"{text}\" is no number"),
+    }
+}
+
+/// The nearest codes, or all where none is near and there are few.
+fn nearest_or_all<'a>(text: &str, codes: impl Iterator<Item = &'a str> + Clone) -> Vec<String> {
+    const FEW: usize = 6;
+    let near = nearest(text, codes.clone());
+    if near.is_empty() && codes.clone().count() <= FEW { codes.map(str::to_owned).collect() } else { near }
 }
 
 /// The codes nearest to `text`, best first: at most three, one or two edits away.

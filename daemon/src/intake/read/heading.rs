@@ -148,6 +148,7 @@ pub fn decode(lines: &Lines, line: &Line, text: &mut String) -> Result<(), FileF
 pub fn find_columns(wanted: &[String], labels: &[String], line: u64) -> Result<Vec<usize>, FileFault> {
     let folded: Vec<String> = labels.iter().map(|label| fold(label)).collect();
     let mut faults = Vec::new();
+    let mut absent: Vec<String> = Vec::new();
     let mut columns = Vec::with_capacity(wanted.len());
     for name in wanted {
         let sought = fold(name);
@@ -155,11 +156,17 @@ pub fn find_columns(wanted: &[String], labels: &[String], line: u64) -> Result<V
         match (places.next(), places.next()) {
             (Some(column), None) => columns.push(column),
             (Some(_), Some(_)) => faults.push(format!("the column \"{name}\" stands twice")),
-            (None, _) => faults.push(match nearest(&sought, &folded, wanted) {
-                Some(label) => format!("there is no column \"{name}\" (the nearest is \"{}\")", labels[label]),
-                None => format!("there is no column \"{name}\""),
-            }),
+            (None, _) => match nearest(&sought, &folded, wanted) {
+                Some(label) => {
+                    faults.push(format!("there is no column \"{name}\" (the nearest is \"{}\")", labels[label]));
+                }
+                None => absent.push(format!("\"{name}\"")),
+            },
         }
+    }
+    if let Some((last, others)) = absent.split_last() {
+        let or = if others.is_empty() { "" } else { " or " };
+        faults.push(format!("there is no column {}{or}{last}", others.join(", ")));
     }
     if faults.is_empty() {
         return Ok(columns);
@@ -172,11 +179,14 @@ pub fn find_columns(wanted: &[String], labels: &[String], line: u64) -> Result<V
 }
 
 /// The label that `sought` has most likely become: one that it is part of, or else the one with the fewest changes of
-/// one character. Labels that the plan names itself have become nothing else.
+/// one character, if those are few. Labels that the plan names itself have become nothing else.
 fn nearest(sought: &str, labels: &[String], wanted: &[String]) -> Option<usize> {
     let free = |label: &str| !label.is_empty() && wanted.iter().all(|name| fold(name) != label);
-    let key = |label: &str| (!(label.contains(sought) || sought.contains(label)), distance(sought, label));
-    let free_labels = labels.iter().enumerate().filter(|(_, label)| free(label));
+    let holds = |label: &str| label.contains(sought) || sought.contains(label);
+    let key = |label: &str| (!holds(label), distance(sought, label));
+    let few = (sought.chars().count() / 2).max(1);
+    let near = |label: &str| holds(label) || distance(sought, label) <= few;
+    let free_labels = labels.iter().enumerate().filter(|(_, label)| free(label) && near(label));
     free_labels.min_by_key(|(_, label)| key(label)).map(|(index, _)| index)
 }
 

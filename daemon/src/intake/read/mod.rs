@@ -20,6 +20,10 @@ use std::io::Read;
 use revisant_schema::plan::{Format, Reader};
 use thiserror::Error;
 
+/// Which readers these are: the program's version, and a number that goes up with every change after which an export
+/// may be read that could not be. Files that are held are then tried again by themselves.
+pub const READERS: &str = concat!(env!("CARGO_PKG_VERSION"), "/2");
+
 /// An export's bytes, which can be read from the start as often as needed.
 pub trait Bytes {
     /// A fresh stream over all bytes.

@@ -70,16 +70,17 @@ impl Book {
         let mut markup = Markup::new(main, BufReader::new(part));
         let relations = relations.iter().map(|relation| (relation.id.as_str(), relation)).collect();
         let mut in_sheets = false;
-        loop {
-            match markup.advance()? {
-                (depth, Event::Start(tag)) => {
+        let mut more = true;
+        while more {
+            more = markup.advance(|depth, event| match event {
+                Event::Start(tag) => {
                     in_sheets = depth > 1 && in_sheets || depth == 1 && tag.local_name().as_ref() == "sheets";
-                    self.take(depth, &tag, in_sheets, &relations).map_err(|what| no_xml(main, &what))?;
+                    self.take(depth, tag, in_sheets, &relations).map(|()| true)
                 }
-                (_, Event::Eof) => return Ok(()),
-                _ => {}
-            }
+                event => Ok(!matches!(event, Event::Eof)),
+            })?;
         }
+        Ok(())
     }
 
     /// Takes what an element of the workbook's main part says.
@@ -163,16 +164,17 @@ fn relations(package: &mut Package, of: &str) -> Result<Option<Vec<Relation>>, F
     let Some(part) = package.part(&stated, most)? else { return Ok(None) };
     let mut markup = Markup::new(&stated, BufReader::new(part));
     let mut relations = Vec::new();
-    loop {
-        match markup.advance()? {
-            (1, Event::Start(tag)) if tag.local_name().as_ref() == "Relationship" => {
-                let relation = relation(&tag, folder).map_err(|what| no_xml(&stated, &what))?;
-                relations.extend(relation);
+    let mut more = true;
+    while more {
+        more = markup.advance(|depth, event| match event {
+            Event::Start(tag) if depth == 1 && tag.local_name().as_ref() == "Relationship" => {
+                relations.extend(relation(tag, folder)?);
+                Ok(true)
             }
-            (_, Event::Eof) => return Ok(Some(relations)),
-            _ => {}
-        }
+            event => Ok(!matches!(event, Event::Eof)),
+        })?;
     }
+    Ok(Some(relations))
 }
 
 /// One relation; `None` for one to something outside the workbook.

@@ -37,36 +37,54 @@ impl<R: BufRead> Markup<R> {
         Self { reader, buffer: vec![], depth: 0, part: part.to_owned() }
     }
 
-    /// The next event, and how many elements lie around what it is about; an element without content is its start
-    /// and its end.
-    pub fn advance(&mut self) -> Result<(usize, Event<'_>), FileFault> {
+    /// Lets `take` see the next event, and how many elements lie around what it is about; an element without content
+    /// is its start and its end. What `take` finds wrong becomes a fault of this part.
+    ///
+    /// The event is seen where it was made, because moving it on took as long as reading it.
+    pub fn advance<T>(&mut self, take: impl FnOnce(usize, &Event<'_>) -> Result<T, String>) -> Result<T, FileFault> {
         let Self { reader, buffer, depth, part } = self;
         buffer.clear();
         reader.get_mut().left = LONGEST_EVENT;
-        let event = match reader.read_event_into(buffer) {
-            Ok(event) => event,
-            Err(quick_xml::Error::Io(error)) => return Err(fault_of(&error, part)),
-            Err(error) => return Err(no_xml(part, &error.to_string())),
-        };
-        let around = match &event {
-            Event::Start(_) if *depth == DEEPEST => {
-                let what = format!("the elements of the workbook's part {} lie too deep in each other", excerpt(part));
-                return Err(FileFault::TooLarge(what));
+        match &reader.read_event_into(buffer) {
+            Ok(event) => {
+                let around = around(event, *depth).map_err(|wrong| wrong.fault(part))?;
+                *depth = around + usize::from(matches!(event, Event::Start(_)));
+                take(around, event).map_err(|what| no_xml(part, &what))
             }
-            Event::Start(_) => *depth,
-            Event::End(_) => depth.saturating_sub(1),
-            Event::Eof if *depth > 0 => return Err(no_xml(part, "it ends inside an element")),
-            Event::DocType(_) => return Err(no_xml(part, "it declares a document type, as no workbook does")),
-            Event::Decl(declared) if !is_utf8(declared) => return Err(no_xml(part, "it is not in UTF-8")),
-            _ => *depth,
-        };
-        *depth = around + usize::from(matches!(event, Event::Start(_)));
-        Ok((around, event))
+            Err(quick_xml::Error::Io(error)) => Err(fault_of(error, part)),
+            Err(error) => Err(no_xml(part, &error.to_string())),
+        }
     }
+}
 
-    /// A fault of this part.
-    pub fn fault(&self, what: &str) -> FileFault {
-        no_xml(&self.part, what)
+/// What is wrong with an event whatever the part is.
+enum Wrong {
+    TooDeep,
+    NoXml(&'static str),
+}
+
+impl Wrong {
+    fn fault(&self, part: &str) -> FileFault {
+        match self {
+            Self::NoXml(what) => no_xml(part, what),
+            Self::TooDeep => {
+                let part = excerpt(part);
+                FileFault::TooLarge(format!("the elements of the workbook's part {part} lie too deep in each other"))
+            }
+        }
+    }
+}
+
+/// How many elements lie around what an event is about, when `depth` are open.
+#[inline]
+fn around(event: &Event<'_>, depth: usize) -> Result<usize, Wrong> {
+    match event {
+        Event::Start(_) if depth == DEEPEST => Err(Wrong::TooDeep),
+        Event::End(_) => Ok(depth.saturating_sub(1)),
+        Event::Eof if depth > 0 => Err(Wrong::NoXml("it ends inside an element")),
+        Event::DocType(_) => Err(Wrong::NoXml("it declares a document type, as no workbook does")),
+        Event::Decl(declared) if !is_utf8(declared) => Err(Wrong::NoXml("it is not in UTF-8")),
+        _ => Ok(depth),
     }
 }
 
@@ -97,6 +115,27 @@ pub fn attribute_where<'t>(
         }
     }
     Ok(None)
+}
+
+/// Calls `take` for each attribute, by its whole name and its value as written, which are plain wherever this is used.
+#[inline]
+pub fn plain_attributes(
+    tag: &BytesStart<'_>,
+    mut take: impl FnMut(&str, &str) -> Result<(), String>,
+) -> Result<(), String> {
+    const UNQUOTED: &str = "an attribute has no value in quotes";
+    let mut rest = tag.attributes_raw().trim_ascii_start();
+    while !rest.is_empty() {
+        // Bytes, because names and values are a few characters each and this is done for every cell.
+        let equals = rest.bytes().position(|byte| byte == b'=').ok_or(UNQUOTED)?;
+        let (name, value) = (rest[..equals].trim_ascii_end(), rest[equals + 1..].trim_ascii_start());
+        let quote = value.bytes().next().filter(|quote| matches!(quote, b'"' | b'\'')).ok_or(UNQUOTED)?;
+        let value = &value[1..];
+        let end = value.bytes().position(|byte| byte == quote).ok_or(UNQUOTED)?;
+        take(name, &value[..end])?;
+        rest = value[end + 1..].trim_ascii_start();
+    }
+    Ok(())
 }
 
 fn is_utf8(declared: &BytesDecl<'_>) -> bool {
@@ -138,6 +177,7 @@ struct Metered<R> {
 }
 
 impl<R: BufRead> BufRead for Metered<R> {
+    #[inline]
     fn fill_buf(&mut self) -> io::Result<&[u8]> {
         if self.left == 0 {
             let what = format!("a cell or tag of the workbook takes more than {LONGEST_EVENT} bytes");
@@ -146,6 +186,7 @@ impl<R: BufRead> BufRead for Metered<R> {
         self.bytes.fill_buf()
     }
 
+    #[inline]
     fn consume(&mut self, count: usize) {
         self.left = self.left.saturating_sub(count);
         self.bytes.consume(count);

@@ -114,10 +114,10 @@ impl Package {
         // The archive begins where the file does: else the end of another archive, stored inside one that was cut
         // off there, would be read in its place.
         let config = Config { archive_offset: ArchiveOffset::Known(0) };
-        let archive = ZipArchive::with_config(config, Cursor::new(Shared(Arc::new(file)))).map_err(|error| {
-            FileFault::Unreadable(format!(
-                "the workbook is damaged or was cut off: it has no sound directory ({error})"
-            ))
+        let archive = ZipArchive::with_config(config, Cursor::new(Shared(Arc::new(file)))).map_err(|_| {
+            FileFault::Unreadable(
+                "the workbook is damaged or was cut off: its end is not that of a workbook".to_owned(),
+            )
         })?;
         let parts = names(&archive)?;
         Ok(Self { archive, parts, limits, left: limits.inflated })
@@ -282,6 +282,7 @@ pub struct Stream {
 }
 
 impl BufRead for Stream {
+    #[inline]
     fn fill_buf(&mut self) -> io::Result<&[u8]> {
         if self.at == self.block.len() && !self.ended {
             // A thread that went without a last block has failed: that is no end.
@@ -292,6 +293,7 @@ impl BufRead for Stream {
         Ok(&self.block[self.at..])
     }
 
+    #[inline]
     fn consume(&mut self, count: usize) {
         self.at = self.block.len().min(self.at + count);
     }

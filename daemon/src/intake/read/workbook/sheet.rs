@@ -9,7 +9,7 @@ use quick_xml::events::{BytesStart, Event};
 use super::super::FileFault;
 use super::super::heading::excerpt;
 use super::super::text::LONGEST_LINE;
-use super::markup::{Markup, characters};
+use super::markup::{Markup, characters, plain_attributes};
 use super::number::add_number;
 use super::package::Stream;
 use super::texts::{Rich, Texts, unescape};
@@ -79,6 +79,14 @@ impl SheetRow {
     /// Adds the text that was just put at the end of the row's as a cell; blanks alone are none.
     fn add(&mut self, column: usize, from: usize, number: bool) {
         let written = &self.raw[from..];
+        // Most texts have no blanks around them, and looking for all that Unicode calls so takes long.
+        if let [first, .., last] | [first @ last] = written.as_bytes()
+            && first.is_ascii_graphic()
+            && last.is_ascii_graphic()
+        {
+            self.cells.push(Cell { column, number, start: from, end: self.raw.len() });
+            return;
+        }
         let text = written.trim();
         if text.is_empty() {
             self.raw.truncate(from);
@@ -143,6 +151,8 @@ struct At {
     passed: usize,
     had_rows: bool,
     row: u64,
+    /// The row's number as the sheet writes it.
+    written: String,
     /// The column after the last cell.
     column: u32,
     cell: Open,
@@ -160,6 +170,7 @@ impl Sheet {
             passed: 0,
             had_rows: false,
             row: 0,
+            written: String::new(),
             column: 0,
             cell,
             rich: Rich::default(),
@@ -171,34 +182,44 @@ impl Sheet {
     /// Fills `row` with the next one that has a cell that is not empty; `false` at the end.
     pub fn next_row(&mut self, row: &mut SheetRow) -> Result<bool, FileFault> {
         while !self.done {
-            let Self { markup, texts, at, done } = self;
-            let outcome = match markup.advance()? {
-                (_, Event::Start(tag)) => at.start(&tag, row),
-                (_, Event::End(_)) => match at.end(texts, row) {
-                    Ok(true) if !row.cells.is_empty() || row.too_long => return Ok(true),
-                    outcome => outcome.map(drop),
-                },
-                (_, Event::Eof) if at.had_rows => {
-                    *done = true;
-                    Ok(())
-                }
-                (_, Event::Eof) => Err("it holds no rows".to_owned()),
-                (_, other) => at.take(&other),
-            };
-            outcome.map_err(|what| self.fault(&what))?;
+            let Self { markup, texts, at, .. } = self;
+            match markup.advance(|_, event| at.step(event, texts, row).map_err(|what| at.told(&what)))? {
+                Step::More => {}
+                Step::Row if row.cells.is_empty() && !row.too_long => {}
+                Step::Row => return Ok(true),
+                Step::End => self.done = true,
+            }
         }
         Ok(false)
     }
+}
 
-    fn fault(&self, what: &str) -> FileFault {
-        match self.at.row {
-            0 => self.markup.fault(what),
-            row => self.markup.fault(&format!("row {row}: {what}")),
-        }
-    }
+/// What an event comes to.
+enum Step {
+    More,
+    /// A row is complete.
+    Row,
+    /// The sheet ends.
+    End,
 }
 
 impl At {
+    fn step(&mut self, event: &Event<'_>, texts: &Texts, row: &mut SheetRow) -> Result<Step, String> {
+        match event {
+            Event::Start(tag) => self.start(tag, row)?,
+            Event::End(_) => return self.end(texts, row),
+            Event::Eof if self.had_rows => return Ok(Step::End),
+            Event::Eof => return Err("it holds no rows".to_owned()),
+            _ => self.take(event)?,
+        }
+        Ok(Step::More)
+    }
+
+    /// What is wrong, with the row where it is.
+    fn told(&self, what: &str) -> String {
+        if self.row == 0 { what.to_owned() } else { format!("row {}: {what}", self.row) }
+    }
+
     /// An element begins.
     fn start(&mut self, tag: &BytesStart<'_>, row: &mut SheetRow) -> Result<(), String> {
         if self.passed > 0 {
@@ -253,12 +274,17 @@ impl At {
 
     fn start_row(&mut self, tag: &BytesStart<'_>, row: &mut SheetRow) -> Result<(), String> {
         let mut number = None;
-        for attribute in tag.attributes().with_checks(false) {
-            let attribute = attribute.map_err(|error| error.to_string())?;
-            if attribute.key.as_ref() == "r" && number.replace(row_number(&attribute.value)?).is_some() {
-                return Err("a row has two numbers".to_owned());
+        self.written.clear();
+        plain_attributes(tag, |name, value| {
+            if name != "r" {
+                return Ok(());
             }
-        }
+            self.written.push_str(value);
+            match number.replace(row_number(value)?) {
+                Some(_) => Err("a row has two numbers".to_owned()),
+                None => Ok(()),
+            }
+        })?;
         let number = number.unwrap_or(self.row + 1);
         if number <= self.row || number > MOST_ROWS {
             return Err(format!("row {number} follows it"));
@@ -272,17 +298,14 @@ impl At {
 
     fn start_cell(&mut self, tag: &BytesStart<'_>) -> Result<(), String> {
         let (mut column, mut kind) = (None, None);
-        for attribute in tag.attributes().with_checks(false) {
-            let attribute = attribute.map_err(|error| error.to_string())?;
-            let again = match attribute.key.as_ref() {
-                "r" => column.replace(self.column_of(&attribute.value)?).is_some(),
-                "t" => kind.replace(kind_of(&attribute.value)?).is_some(),
+        plain_attributes(tag, |name, value| {
+            let again = match name {
+                "r" => column.replace(self.column_of(value)?).is_some(),
+                "t" => kind.replace(kind_of(value)?).is_some(),
                 _ => false,
             };
-            if again {
-                return Err("a cell says twice where it is or what it holds".to_owned());
-            }
-        }
+            if again { Err("a cell says twice where it is or what it holds".to_owned()) } else { Ok(()) }
+        })?;
         let column = column.unwrap_or(self.column);
         if column < self.column || column >= MOST_COLUMNS {
             return Err(format!("cell {} does not stand in the order of the columns", letters(column as usize)));
@@ -302,7 +325,9 @@ impl At {
         let wrong = || format!("a cell names itself \"{}\"", excerpt(name));
         let letters = name.bytes().take_while(u8::is_ascii_alphabetic).count();
         let (letters, digits) = name.split_at(letters);
-        if letters.is_empty() || letters.len() > 3 || row_number(digits) != Ok(self.row) {
+        // Nearly always it is written as the row has it.
+        let here = !digits.is_empty() && digits == self.written || row_number(digits) == Ok(self.row);
+        if letters.is_empty() || letters.len() > 3 || !here {
             return Err(wrong());
         }
         let value = |letter: u8| u32::from(letter.to_ascii_uppercase() - b'A') + 1;
@@ -326,11 +351,11 @@ impl At {
         Ok(())
     }
 
-    /// An element ends; `true` when it was a row.
-    fn end(&mut self, texts: &Texts, row: &mut SheetRow) -> Result<bool, String> {
+    /// An element ends.
+    fn end(&mut self, texts: &Texts, row: &mut SheetRow) -> Result<Step, String> {
         if self.passed > 0 {
             self.passed -= 1;
-            return Ok(false);
+            return Ok(Step::More);
         }
         self.inside = match self.inside {
             Inside::Cell => {
@@ -346,12 +371,12 @@ impl At {
             Inside::Text => Inside::Cell,
             Inside::Row => {
                 self.inside = Inside::Rows;
-                return Ok(true);
+                return Ok(Step::Row);
             }
             Inside::Rows => Inside::Worksheet,
             Inside::Worksheet | Inside::Part | Inside::After => Inside::After,
         };
-        Ok(false)
+        Ok(Step::More)
     }
 
     /// Adds the cell to the row, unless it is empty.
@@ -362,7 +387,7 @@ impl At {
         let column = self.cell.column as usize;
         let before = row.raw.len();
         let last = row.cells.last().map_or(0, |cell| cell.column);
-        row.raw.extend(std::iter::repeat_n('\t', column - last));
+        (last..column).for_each(|_| row.raw.push('\t'));
         let from = row.raw.len();
         let number = self.cell.add_text(texts, &mut row.raw)?;
         row.add(column, from, number);

@@ -28,28 +28,11 @@ impl Texts {
         let mut texts = Self::default();
         let mut rich = Rich::default();
         loop {
-            let outcome = match markup.advance()? {
-                (0, Event::Start(tag)) if tag.local_name().as_ref() != "sst" => {
-                    Err("it is no list of texts".to_owned())
-                }
-                (0, Event::Start(_) | Event::End(_)) => Ok(()),
-                (1, Event::Start(tag)) => {
-                    rich.begin(tag.local_name().as_ref() == "si");
-                    Ok(())
-                }
-                (_, Event::Start(tag)) => rich.start(&tag),
-                (1, Event::End(tag)) if tag.local_name().as_ref() == "si" => {
-                    texts.ends_here(limits.text_count)?;
-                    Ok(())
-                }
-                (_, Event::End(_)) => {
-                    rich.end(&mut texts.text);
-                    Ok(())
-                }
-                (_, Event::Eof) => return Ok(texts),
-                (_, other) => rich.take(&other, &mut texts.text),
-            };
-            outcome.map_err(|what| no_xml(part, &what))?;
+            match markup.advance(|depth, event| rich.step(depth, event, &mut texts.text))? {
+                Step::More => {}
+                Step::Text => texts.ends_here(limits.text_count)?,
+                Step::End => return Ok(texts),
+            }
         }
     }
 
@@ -74,6 +57,15 @@ impl Texts {
     }
 }
 
+/// What an event of the list of texts comes to.
+enum Step {
+    More,
+    /// A text is complete.
+    Text,
+    /// The list ends.
+    End,
+}
+
 /// Where in a text's markup one stands.
 #[derive(Debug, Clone, Copy, Default, PartialEq, Eq)]
 enum Inside {
@@ -93,6 +85,21 @@ pub struct Rich {
 }
 
 impl Rich {
+    /// Takes an event of the list of texts.
+    fn step(&mut self, depth: usize, event: &Event<'_>, text: &mut String) -> Result<Step, String> {
+        match (depth, event) {
+            (0, Event::Start(tag)) if tag.local_name().as_ref() != "sst" => return Err("it is no list of texts".into()),
+            (0, Event::Start(_) | Event::End(_)) => {}
+            (1, Event::Start(tag)) => self.begin(tag.local_name().as_ref() == "si"),
+            (1, Event::End(tag)) if tag.local_name().as_ref() == "si" => return Ok(Step::Text),
+            (_, Event::Start(tag)) => self.start(tag)?,
+            (_, Event::End(_)) => self.end(text),
+            (_, Event::Eof) => return Ok(Step::End),
+            _ => self.take(event, text)?,
+        }
+        Ok(Step::More)
+    }
+
     /// An element begins that is a text, or else is to be passed over.
     pub fn begin(&mut self, is_text: bool) {
         self.inside = if is_text { Inside::Text } else { Inside::Passed(1) };
