@@ -202,20 +202,7 @@ impl Found {
         used.extend(unit.as_ref().map(|it| it.column));
         let levels = values::level_columns(rows, plan, &|at| !used.contains(&at));
         used.extend(levels.iter().map(|it| it.column));
-        let visit = rest::visit(rows, &|at| !used.contains(&at), plan);
-        if let Some(visit) = visit {
-            used.extend(visit.column);
-            self.visit_column = visit.column;
-            self.visit = Some(visit.line);
-        } else {
-            let against = Against { plan: Some(plan), roster: asked.roster, now: asked.now };
-            let format = self.taken_at.formats.first().filter(|_| self.taken_at.formats.len() == 1);
-            let agree = |label: &rest::VisitOf<'_>| {
-                let (subject, taken_at) = (&self.subject.spot, &self.taken_at.spot);
-                format.is_some_and(|it| when::dates_agree(rows, plan, against, (subject, taken_at, it.as_str()), label))
-            };
-            self.visit = rest::visit_elsewhere(rows, asked.samples, plan, &agree);
-        }
+        self.look_for_visit(asked, rows, plan, used);
         self.settle_days(asked, rows, plan);
         let telling: Vec<usize> = long
             .iter()
@@ -240,14 +227,36 @@ impl Found {
         };
         used.extend(self.entries.iter().map(|it| it.column));
         self.unmatched = unmatched(plan, rows, long.as_ref(), &self.entries);
+        self.look_for_operator(rows, used);
+        self.needed = used.iter().filter_map(|at| all.columns.get(*at)).cloned().collect();
+        // Here all rows count: a control's rows are told by what they hold.
+        let last = rest::unaccounted(all, &|at| !used.contains(&at), &keys, self.visit.is_some());
+        self.needed.extend(last.columns);
+        (self.ignore, self.left) = (last.ignore, last.left);
+    }
+
+    fn look_for_visit(&mut self, asked: &Asked<'_>, rows: &Grid, plan: &Plan, used: &mut BTreeSet<usize>) {
+        let visit = rest::visit(rows, &|at| !used.contains(&at), plan);
+        if let Some(visit) = visit {
+            used.extend(visit.column);
+            self.visit_column = visit.column;
+            self.visit = Some(visit.line);
+        } else {
+            let against = Against { plan: Some(plan), roster: asked.roster, now: asked.now };
+            let format = self.taken_at.formats.first().filter(|_| self.taken_at.formats.len() == 1);
+            let agree = |label: &rest::VisitOf<'_>| {
+                let (subject, taken_at) = (&self.subject.spot, &self.taken_at.spot);
+                format.is_some_and(|it| when::dates_agree(rows, plan, against, (subject, taken_at, it.as_str()), label))
+            };
+            self.visit = rest::visit_elsewhere(rows, asked.samples, plan, &agree);
+        }
+    }
+
+    fn look_for_operator(&mut self, rows: &Grid, used: &mut BTreeSet<usize>) {
         if let Some(operator) = rest::operator(rows, &|at| !used.contains(&at)) {
             used.extend(operator.column);
             self.operator = Some(operator.line);
         }
-        self.needed = used.iter().filter_map(|at| all.columns.get(*at)).cloned().collect();
-        // Here all rows count: a control's rows are told by what they hold.
-        let last = rest::unaccounted(all, &|at| !used.contains(&at), &keys, self.visit.is_some());
-        (self.ignore, self.left) = (last.ignore, last.left);
     }
 
     /// Where the texts leave open how days are written, the visits' windows may say.
@@ -272,10 +281,7 @@ impl Found {
         if self.entries.is_empty() {
             self.entries.push(no_value("which column holds the values? None of the samples' columns holds numbers"));
         }
-        if let Some(operator) = rest::operator(rows, &|at| !used.contains(&at)) {
-            used.extend(operator.column);
-            self.operator = Some(operator.line);
-        }
+        self.look_for_operator(rows, used);
         let rest = (0..rows.columns.len()).filter(|at| !used.contains(at) && !rows.distinct(*at).is_empty());
         self.left = rest.filter_map(|at| rows.columns.get(at)).cloned().collect();
     }

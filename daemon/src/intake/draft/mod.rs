@@ -162,6 +162,30 @@ mod tests {
     }
 
     #[test]
+    fn without_a_roster_whoever_fits_the_pattern_is_shown() {
+        let (plan, _) = parse(&PlanFiles { main: PLAN.to_owned(), readers: vec![] }).unwrap();
+        let samples = [Sample {
+            shown: "a.csv".to_owned(),
+            file_name: "a.csv".to_owned(),
+            folder: String::new(),
+            bytes: EXPORTS[0].as_bytes().to_vec(),
+        }];
+        let asked = Asked {
+            samples: &samples,
+            code: "dyn",
+            folder: "exports/dyn",
+            plan: Some(&plan),
+            plan_text: Some(PLAN),
+            roster: None,
+            now: "2026-12-01T12:00:00Z".parse().unwrap(),
+        };
+        let draft = draft(&asked).unwrap();
+        assert!(draft.gaps.is_empty(), "{}", draft.toml);
+        let first = &draft.preview[0];
+        assert_eq!((first.subject.as_str(), first.value.as_str(), first.held.as_str()), ("P-001", "31.5 kg", ""));
+    }
+
+    #[test]
     fn every_kind_of_export_is_drafted() {
         for text in EXPORTS {
             holds(&[text.as_bytes()]);
