@@ -273,22 +273,23 @@ impl Levels {
         let pairs = earlier.flat_map(|against| (against + 1..levels).map(move |level| (level, against)));
         let factor = self.factor;
         pairs
-            .map(|(level, against)| match first {
-                true => Compared::EachVsFirst { factor, level, against },
-                false => Compared::Pairwise { factor, level, against },
+            .map(|(level, against)| {
+                let compared = match first {
+                    true => Compared::EachVsFirst { factor, level, against },
+                    false => Compared::Pairwise { factor, level, against },
+                };
+                self.compare(compared, (level, against), at, families)
             })
-            .map(|compared| self.compare(compared, at, families))
             .collect()
     }
 
-    fn compare(&self, compared: Compared, at: &[At], families: &mut Families<'_>) -> Comparison {
-        let (Compared::Pairwise { level, against, .. }
-        | Compared::EachVsFirst { level, against, .. }
-        | Compared::Effect { level, against, .. }) = compared
-        else {
-            let nobody = Scores::of(&[], &[], 0, 0.0);
-            return families.tests.of_scores(compared, at.to_vec(), &nobody, &[]);
-        };
+    fn compare(
+        &self,
+        compared: Compared,
+        (level, against): (usize, usize),
+        at: &[At],
+        families: &mut Families<'_>,
+    ) -> Comparison {
         let pair = self.pair(level, against);
         let differences: Vec<f64> = pair.later.iter().zip(pair.earlier.iter()).map(|(y, x)| y - x).collect();
         let scores = Scores::of(&differences, &pair.groups, self.count, pair.rounding);
