@@ -152,7 +152,7 @@ fn draft(study: &str, plan: &str, block: &Block, most: usize, truth: &BTreeMap<S
         Ok(drafted) => drafted,
         Err(ran) => return Outcome { toml: ran.shown(), ..Outcome::default() },
     };
-    let toml = drafted["toml"].as_str().unwrap().to_owned();
+    let toml = drafted["reader"].as_str().unwrap().to_owned();
     let made = Block::of(&toml);
     let kept: Vec<&str> = block.head.lines().filter(|line| !line.starts_with("re_export")).collect();
     let re_export: Vec<&str> = made.head.lines().filter(|line| line.starts_with("re_export")).collect();
@@ -248,7 +248,7 @@ fn delimiters_of_single_exports_are_found() {
             for file in exports(&site, block) {
                 // What is no table at all has no delimiter.
                 let Ok(drafted) = probe(&site, block, std::slice::from_ref(&file)) else { continue };
-                let toml = drafted["toml"].as_str().unwrap();
+                let toml = drafted["reader"].as_str().unwrap();
                 let found = toml.lines().find(|line| line.starts_with("delimiter")).unwrap_or_default();
                 if found == expected { right += 1 } else { wrong.push(format!("{study} {file}: {found}")) }
             }
@@ -368,7 +368,7 @@ fn without_a_plan_what_the_plan_would_say_is_left_open() {
     site.write("march.csv", EXPORT);
     let ran = site.run(&["probe", "march.csv", "--code", "dyn", "--json"]);
     assert_eq!(ran.code, Some(3), "{}", ran.shown());
-    let toml = ran.json()["toml"].as_str().unwrap().to_owned();
+    let toml = ran.json()["reader"].as_str().unwrap().to_owned();
     assert!(toml.contains("subject = { column = \"Subject\" }") && toml.contains("measure = \"FILL IN\""), "{toml}");
     let bad = site.run(&["probe", "absent.csv", "--json"]);
     assert_eq!((bad.code, bad.error()["kind"].clone()), (Some(1), "file".into()));

@@ -11,6 +11,7 @@ use super::nested::{self, Nested};
 use super::numbers::{self, Marks, Settled};
 use super::place::{self, Against, Taken};
 use super::rest::{self, Keys};
+use super::told::{self, Answers, Told};
 use super::values::{self, Entry, Hints, Numeric};
 use super::when;
 use super::words;
@@ -152,6 +153,8 @@ struct Found {
     missing: (Vec<String>, Vec<String>, Vec<String>),
     grows: Option<(String, String)>,
     visit_column: Option<usize>,
+    replicate_column: Option<usize>,
+    operator_column: Option<usize>,
     /// The plan's measures that no column is taken for.
     unmatched: Vec<String>,
     /// The columns that the draft names.
@@ -183,6 +186,8 @@ impl Found {
             missing: Default::default(),
             grows: rest::grows(all, asked.samples),
             visit_column: None,
+            replicate_column: None,
+            operator_column: None,
             unmatched: vec![],
             needed: vec![],
         };
@@ -216,6 +221,7 @@ impl Found {
         let keys = Keys { session: &session, columns: &telling, expected };
         if let Some(replicate) = rest::replicate(rows, &|at| !used.contains(&at), &keys) {
             used.extend(replicate.column);
+            self.replicate_column = replicate.column;
             self.replicate = Some(replicate.line);
         }
         let mut numeric = values::numeric(rows, &|at| !used.contains(&at), self.marks.marks);
@@ -255,6 +261,7 @@ impl Found {
     fn look_for_operator(&mut self, rows: &Grid, used: &mut BTreeSet<usize>) {
         if let Some(operator) = rest::operator(rows, &|at| !used.contains(&at)) {
             used.extend(operator.column);
+            self.operator_column = operator.column;
             self.operator = Some(operator.line);
         }
     }
@@ -269,6 +276,29 @@ impl Found {
             let why = format!("only so do the labelled sessions of {subjects} subjects lie in their visits' windows");
             self.taken_at.settle(format, why);
         }
+    }
+
+    /// What was found, column by column.
+    fn tell(&self, asked: &Asked<'_>, laid: &Laid) -> Told {
+        let measure = |at: usize| {
+            let entry = self.entries.iter().find(|entry| entry.column == at)?;
+            let code = entry.measure.and_then(|ix| Some(asked.plan?.measures.get(ix)?.code.clone()));
+            Some(code.unwrap_or_else(|| "value".to_owned()))
+        };
+        let taken_for = |at: usize| match at {
+            _ if self.subject.spot.columns().contains(&at) => Some("subject".to_owned()),
+            _ if self.taken_at.spot.columns().contains(&at) => Some("taken_at".to_owned()),
+            _ if self.visit_column == Some(at) => Some("visit".to_owned()),
+            _ if self.replicate_column == Some(at) => Some("replicate".to_owned()),
+            _ if self.operator_column == Some(at) => Some("operator".to_owned()),
+            _ => measure(at),
+        };
+        let stamp = match self.taken_at.formats.as_slice() {
+            [one] => Some(one.clone()),
+            _ => None,
+        };
+        let decimal = self.marks.open.is_none().then_some(self.marks.marks.decimal);
+        told::tell(asked.samples, &laid.layout, &laid.grid, Answers { taken_for: &taken_for, decimal, stamp })
     }
 
     fn without_plan(&mut self, rows: &Grid, used: &mut BTreeSet<usize>) {
@@ -516,7 +546,8 @@ impl Written {
             values: found.entries.iter().map(|it| (it.column, it.measure)).collect(),
         };
         let preview = preview::preview(asked, &toml, gaps.is_empty(), &laid.grid, &spots);
-        Draft { toml, gaps, unsure, misfits: misfits(asked, laid, &found.needed), preview }
+        let told = found.tell(asked, &laid);
+        Draft { toml, gaps, unsure, misfits: misfits(asked, laid, &found.needed), preview, told }
     }
 }
 

@@ -23,6 +23,7 @@ mod preview;
 mod rest;
 mod stamps;
 mod text;
+mod told;
 mod units;
 mod values;
 mod when;
@@ -33,6 +34,7 @@ use revisant_schema::plan::Plan;
 use revisant_schema::roster::Roster;
 
 pub use preview::PreviewRow;
+pub use told::{Told, ToldColumn};
 
 /// One sample export.
 #[derive(Debug, Clone)]
@@ -97,6 +99,8 @@ pub struct Draft {
     pub misfits: Vec<Misfit>,
     /// The first rows as they would be filed.
     pub preview: Vec<PreviewRow>,
+    /// What was found, for machines.
+    pub told: Told,
 }
 
 /// Why nothing can be drafted.
