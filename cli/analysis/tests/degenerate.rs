@@ -470,3 +470,18 @@ fn simultaneous_intervals_by_hand() {
     let without = [Multiplicity::None, Multiplicity::BenjaminiHochberg].map(family);
     assert!(without.iter().flatten().all(|it| it.simultaneous.is_none() && it.ci.is_some()));
 }
+
+/// Decimals whose differences are equal on paper, far from zero: what rounding them took is judged by what they are, not by
+/// what is left of them once a common part has been taken off.
+#[test]
+fn a_common_part_brings_its_rounding_along() {
+    let row = |own: f64| [own + 0.1, own + 0.3, own + 0.2, own + 0.4].map(Some).to_vec();
+    let subjects = [100_000.1, 100_000.2, 100_000.4, 100_000.7].map(|own| (Vec::<usize>::new(), row(own)));
+    let design = Design::new(vec![Factor::of(2).unwrap(), Factor::of(2).unwrap()], vec![], &subjects).unwrap();
+    let result = with(&design, &[Family::Pairwise, Family::Simple]);
+    for it in &result.contrasts {
+        assert_eq!((it.se, it.t, it.p), (Some(0.0), None, Some(0.0)), "{it:?}");
+    }
+    assert!(result.simple.iter().all(|it| it.effect.f.is_none() && it.effect.p == Some(0.0)));
+    assert_eq!(result.contrasts.len(), 6);
+}
