@@ -62,7 +62,7 @@ pub enum Compared {
 /// III the mean of the groups' means, SE = SD √(Σ_g 1 / n_g) / groups, with type II that of all subjects, SE = SD / √n, so
 /// that t² is the *F* of two levels; SD² = Σ_g SS_g / (n − groups) (Maxwell, Delaney & Kelley 2018, *Designing Experiments
 /// and Analyzing Data*, chapters 11 to 15, contrasts with separate error terms; Boik 1981, *Psychometrika* 46:241).
-/// Between subjects, see [`Family::Groups`] and [`Compared::Effect`]: the unweighted mean of the groups at one level
+/// Groups of which nobody has what it needs are not in the mean. Between subjects, see [`Family::Groups`] and [`Compared::Effect`]: the unweighted mean of the groups at one level
 /// minus that at the other, SD² that of the scores within all groups.
 #[derive(Debug, Clone, PartialEq)]
 pub struct Comparison {
