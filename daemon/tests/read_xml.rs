@@ -346,6 +346,9 @@ const ILL_FORMED: &[(&str, &str)] = &[
     ("2.8", "<!DOCTYPE d PUBLIC 'p'><d/>"),
     ("2.8", "<!DOCTYPE d x><d/>"),
     ("2.8", "<!DOCTYPE d [<d/>"),
+    ("2.8", "<!DOCTYPE d [] x><d/>"),
+    ("2.8", "<!DOCTYPE d [<!-- -- -->]><d/>"),
+    ("2.8", "<!DOCTYPE d [<?xml x?>]><d/>"),
     ("2.9", "<?xml version='1.0' standalone='maybe'?><d/>"),
     ("3.1", "<d a='1' a='2'/>"),
     ("3.1", "<d a='1' b='1' c='1' a='1'></d>"),
@@ -767,6 +770,8 @@ mod whatever_the_bytes {
             for character in value.chars() {
                 let must = matches!(character, '<' | '&' | '\t' | '\n' | '\r') || character == quote;
                 match (self.one_of(3), character) {
+                    // A line feed behind a carriage return would be one line end with it.
+                    (0, ' ') if out.ends_with('\r') => out.push('\t'),
                     (0, ' ') => out.push_str(["\n", "\t", "\r\n", "\r"][usize::from(self.one_of(4))]),
                     (1, '"') => out.push_str("&quot;"),
                     (1, '\'') => out.push_str("&apos;"),
@@ -865,6 +870,7 @@ mod whatever_the_bytes {
             drip in 1..6_usize,
         ) {
             let (reader, mut bytes) = samples().swap_remove(which);
+            let all = read_all(&reader, &bytes).unwrap().lines;
             for (at, byte, kind) in edits {
                 let at = at.index(bytes.len());
                 match kind {
@@ -873,9 +879,10 @@ mod whatever_the_bytes {
                     _ => drop(bytes.remove(at)),
                 }
             }
-            let plain = read_all(&reader, &bytes).map(|seen| seen.rows);
+            let plain = read_all(&reader, &bytes);
+            prop_assert!(plain.as_ref().map_or(0, |seen| seen.lines) <= all);
             let dripped = read_all(&reader, &Drip(&bytes, drip)).map(|seen| seen.rows);
-            prop_assert_eq!(format!("{:?}", plain), format!("{:?}", dripped));
+            prop_assert_eq!(format!("{:?}", plain.map(|seen| seen.rows)), format!("{:?}", dripped));
         }
 
         #[test]
