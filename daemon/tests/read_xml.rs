@@ -182,6 +182,7 @@ fn the_text_of_an_element_is_all_of_its_characters() {
 fn line_ends_and_attributes_are_normalised() {
     // Section 2.11.
     assert_eq!(cell("a", "<d><r><a>1\r\n2\r3\n4\r\r\n5<![CDATA[\r\n]]>6&#13;7</a></r></d>"), "1\n2\n3\n4\n\n5\n6\r7");
+    assert_eq!(cell("a", "<d><r><a>1\r2</a></r></d>"), "1\n2");
     // Section 3.3.3, with its examples for attributes of the type CDATA.
     assert_eq!(cell("@a", "<d><r a=\"x\r\n\t y&#10;z&#xd;&#9;w\ru\"/></d>"), "x   y\nz\r\tw u");
     assert_eq!(cell("@a", "<d><r a='\"&lt;&quot;&apos;>'/></d>"), "\"<\"'>");
@@ -274,6 +275,10 @@ fn rows_that_the_plan_ignores_are_counted() {
                 <r kind='QC' n:kind='QC'/><r kind=' QC'><at/><at/></r></d>";
     let seen = whole(&reader, text);
     assert_eq!((seen.good().len(), seen.faults().len(), seen.counts.ignored, seen.lines), (2, 1, 3, 6));
+    // A text that cannot be told is not an empty one.
+    reader.ignore = vec![ignore_equals("id", "")];
+    let seen = whole(&reader, "<d><r><id>1</id><id>2</id></r><r/><r><id>3</id></r></d>");
+    assert_eq!((seen.good().len(), seen.faults().len(), seen.counts.ignored), (1, 1, 1));
 }
 
 /// Documents that are not well-formed, with the section that says so.
