@@ -6,6 +6,7 @@
 
 pub mod args;
 pub mod by_hand;
+pub mod chance;
 pub mod commands;
 pub mod dataset;
 pub mod demo;
@@ -15,6 +16,7 @@ pub mod looked;
 pub mod moment;
 pub mod output;
 pub mod report;
+pub mod simulate;
 pub mod study;
 pub mod took_part;
 
