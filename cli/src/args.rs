@@ -217,9 +217,11 @@ F test over complete subjects, by the non-central F with the assumed epsilon, is
 held against simulated studies that are analysed with the Greenhouse-Geisser
 correction. The same seed gives the same studies.
 JSON: {\"effect\", \"alpha\", \"visits\", \"groups\", \"assumed\", \"epsilon\",
-\"wanted\": {\"power\", \"per_group\", \"enrolled_per_group\", \"enrolled\", \"formula\",
-\"simulation\": {\"runs\", \"seed\", \"rejected\", \"power\", \"ci\"} or null}, \"planned\":
-the like of enrolment's target, or null, \"sentences\", \"notes\"}")]
+\"wanted\": {\"power\", \"enrolled\", \"enrolled_per_group\", \"complete\", \"per_group\",
+\"sizes\", \"formula\": {\"power\", \"noncentrality\", \"df\", \"error_df\", \"critical_f\"},
+\"simulation\": {\"runs\", \"seed\", \"rejected\", \"power\", \"ci\"} or null}, and in the same
+shape or null \"by_simulation\" (the number that simulated studies ask for, where
+it is another) and \"planned\" (enrolment's target); \"sentences\", \"notes\"}")]
     Rehearse(Rehearse),
     /// Run an invented study on a fresh copy, to see all of this at work
     #[command(after_help = "\

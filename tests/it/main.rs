@@ -17,6 +17,7 @@ mod probe;
 mod properties;
 mod readings;
 mod reference;
+mod rehearse;
 mod sample;
 
 use revisant_tests::site::{Programs, Site};

@@ -6,6 +6,7 @@
 use std::time::Duration;
 
 use indicatif::{ProgressBar, ProgressDrawTarget};
+use revisant_analysis::distributions::Normal;
 use revisant_analysis::power::{
     Alpha, Assumed, PlannedEffect, Planning, PowerError, ar1, compound_symmetry, covariance, power, sample_size,
 };
@@ -16,12 +17,17 @@ use super::collect::progress_bar;
 use crate::args::{PlannedEffect as Asked, Rehearse};
 use crate::error::{Exit, Failure};
 use crate::intake;
-use crate::report::rehearse::{Number, Sized, percent_text};
+use crate::report::rehearse::{Number, Sized};
+use crate::report::text::count;
 use crate::simulate::{Simulated, Study};
 use crate::study::{Context, unknown};
 
 /// Studies that are simulated unless somebody says otherwise.
 const USUAL_RUNS: u32 = 4000;
+/// Fewer say next to nothing.
+const FEWEST_RUNS: u32 = 200;
+/// How often the number is moved to where simulated studies have the wanted power.
+const MOST_STEPS: usize = 4;
 /// Then no more readings than these are made up in all, which takes seconds.
 const USUAL_READINGS: usize = 20_000_000;
 /// A simulated study with more readings would take more memory than its answer is worth.
@@ -95,85 +101,49 @@ impl<'p> Question<'p> {
         let level = Alpha::new(self.alpha).map_err(|error| unusable(&error))?;
         let planning = Planning::new(self.alpha, self.assume.power, self.assume.dropout).map_err(|e| unusable(&e))?;
         let found = sample_size(&self.assumed, self.effect, planning).map_err(|error| self.out_of_reach(&error))?;
-        let groups = self.assumed.groups();
-        let sizes = vec![found.per_group; groups];
-        let wanted = Number {
-            simulated: self.simulate(context, args, &sizes, level)?,
-            enrolled: found.enrolled,
-            sizes,
-            formula: found.reached,
-        };
         let target = plan.study.enrol.as_ref().map(|enrol| enrol.target as usize);
-        let planned = target.map(|target| self.planned(context, args, target, level)).transpose()?;
+        let runs = self.runs(args.runs, found.enrolled.max(target.unwrap_or(0)));
+        let trial = Trial { question: self, context, level, runs, seed: args.seed };
+        let wanted = trial.number(found.enrolled, self.each(found.per_group))?;
+        let planned = target.map(|target| trial.planned(target)).transpose()?;
+        let by_simulation = trial.by_simulation(&wanted, found.per_group)?;
+        Ok(self.sized(plan, wanted, by_simulation, planned))
+    }
+
+    /// So many in each group.
+    fn each(&self, per_group: usize) -> Vec<usize> {
+        vec![per_group; self.assumed.groups()]
+    }
+
+    /// As asked; else so many that the studies are made up within seconds.
+    fn runs(&self, asked: Option<u32>, enrolled: usize) -> u32 {
+        let readings = enrolled.saturating_mul(self.assumed.visits()).max(1);
+        let affordable = u32::try_from(USUAL_READINGS / readings).unwrap_or(USUAL_RUNS);
+        asked.unwrap_or_else(|| affordable.clamp(FEWEST_RUNS, USUAL_RUNS))
+    }
+
+    fn sized(&self, plan: &Plan, wanted: Number, by_simulation: Option<Number>, planned: Option<Number>) -> Sized {
         let visits = self.visits.iter().filter_map(|visit| plan.visits.get(*visit));
-        Ok(Sized {
+        let variances = self.assumed.covariance().iter().enumerate().filter_map(|(at, row)| row.get(at));
+        Sized {
             study: plan.study.code.clone(),
             analysis: self.analysis.map(|it| it.code.clone()),
             mixed: self.analysis.is_some_and(|it| it.method == Method::MixedModel),
-            ignores_arms: groups > 1 && self.analysis.is_some_and(|it| it.between.is_empty()),
+            ignores_arms: self.assumed.groups() > 1 && self.analysis.is_some_and(|it| it.between.is_empty()),
             unit: self.analysis.and_then(|it| plan.measures.get(it.measure)).map(|it| it.unit.clone()),
             effect: self.effect,
             alpha: self.alpha,
             visits: visits.map(|visit| visit.code.clone()).collect(),
             arms: self.arms.clone(),
             means: self.assumed.means().to_vec(),
-            sds: self
-                .assumed
-                .covariance()
-                .iter()
-                .enumerate()
-                .filter_map(|(at, row)| Some(row.get(at)?.sqrt()))
-                .collect(),
+            sds: variances.map(|variance| variance.sqrt()).collect(),
             correlation: self.assume.correlation.clone(),
             dropout: self.assume.dropout,
             power: self.assume.power,
-            enrolled_per_group: found.enrolled_per_group,
             wanted,
+            by_simulation,
             planned,
-        })
-    }
-
-    /// The power of so many enrolled subjects, as evenly in the groups as they go; those who drop out are not complete.
-    fn planned(
-        &self,
-        context: &Context<'_, '_>,
-        args: &Rehearse,
-        target: usize,
-        level: Alpha,
-    ) -> Result<Number, Failure> {
-        let groups = self.assumed.groups();
-        // 40 of 50 stay with a dropout of 0.2, whatever the last digit of the product says.
-        let complete = (target as f64 * (1.0 - self.assume.dropout) * (1.0 + 1e-12)).floor() as usize;
-        let size = |group: usize| complete / groups + usize::from(group < complete % groups);
-        let sizes: Vec<usize> = (0..groups).map(size).collect();
-        if sizes.contains(&0) {
-            let what = format!("of {target} subjects planned none would be complete in some group");
-            return Err(Failure::refused(what).at("[study] enrol"));
         }
-        let formula = power(&self.assumed, self.effect, &sizes, level).map_err(|error| unusable(&error))?;
-        let simulated = self.simulate(context, args, &sizes, level)?;
-        Ok(Number { enrolled: target, sizes, formula, simulated })
-    }
-
-    /// `None` where a study has too many readings to be made up thousands of times.
-    fn simulate(
-        &self,
-        context: &Context<'_, '_>,
-        args: &Rehearse,
-        sizes: &[usize],
-        alpha: Alpha,
-    ) -> Result<Option<Simulated>, Failure> {
-        let readings = sizes.iter().sum::<usize>().saturating_mul(self.assumed.visits());
-        if readings > MOST_READINGS {
-            return Ok(None);
-        }
-        let affordable = u32::try_from(USUAL_READINGS / readings.max(1)).unwrap_or(USUAL_RUNS);
-        let runs = args.runs.unwrap_or_else(|| USUAL_RUNS.min(affordable.max(200)));
-        let study = Study { assumed: &self.assumed, effect: self.effect, sizes, alpha };
-        let bar = Bar::new(context, runs);
-        let found = study.simulate(runs, args.seed, || bar.step());
-        bar.bar.finish_and_clear();
-        found.map(Some).map_err(|error| Failure::refused(format!("such a study cannot be simulated: {error}")))
     }
 
     /// Why no number of subjects does, in the words of the plan.
@@ -184,13 +154,90 @@ impl<'p> Question<'p> {
                 "the assumed means have no effect of {}, so no number of subjects can show it",
                 crate::report::rehearse::name(self.effect)
             ),
-            PowerError::OutOfReach { power } => format!(
-                "the wanted power of {} takes more than a million subjects a group",
-                percent_text(self.assume.power.max(*power))
-            ),
+            PowerError::OutOfReach { .. } => {
+                format!("a power of {} takes more than a million subjects a group", self.assume.power)
+            }
             other => other.to_string(),
         };
         Failure::refused(what).at("[assume]")
+    }
+}
+
+/// Numbers of subjects tried, by formula and by simulation.
+struct Trial<'t, 'c, 'w> {
+    question: &'t Question<'t>,
+    context: &'t Context<'c, 'w>,
+    level: Alpha,
+    runs: u32,
+    seed: u64,
+}
+
+impl Trial<'_, '_, '_> {
+    fn number(&self, enrolled: usize, sizes: Vec<usize>) -> Result<Number, Failure> {
+        let Question { assumed, effect, .. } = self.question;
+        let formula = power(assumed, *effect, &sizes, self.level).map_err(|error| unusable(&error))?;
+        Ok(Number { simulated: self.simulate(&sizes)?, enrolled, sizes, formula })
+    }
+
+    /// So many enrolled, as evenly in the groups as they go; those who drop out are not complete.
+    fn planned(&self, target: usize) -> Result<Number, Failure> {
+        let groups = self.question.assumed.groups();
+        // 40 of 50 stay with a dropout of 0.2, whatever the last digit of the product says.
+        let complete = (target as f64 * (1.0 - self.question.assume.dropout) * (1.0 + 1e-12)).floor() as usize;
+        let size = |group: usize| complete / groups + usize::from(group < complete % groups);
+        let sizes: Vec<usize> = (0..groups).map(size).collect();
+        if sizes.contains(&0) {
+            let what = format!("of {} planned too few would be complete", count(target as u64, "subject"));
+            return Err(Failure::refused(what).at("enrol"));
+        }
+        self.number(target, sizes)
+    }
+
+    /// The number that simulated studies ask for, where it is another than the formula's. Power rises with the root of
+    /// the number about as the normal distribution has it; a few steps of that arrive within what chance leaves open.
+    fn by_simulation(&self, wanted: &Number, per_group: usize) -> Result<Option<Number>, Failure> {
+        let power = self.question.assume.power;
+        let mut each = per_group;
+        let mut found: Option<Number> = None;
+        for _ in 0..MOST_STEPS {
+            let Some(simulated) = found.as_ref().unwrap_or(wanted).simulated else { break };
+            let (lower, upper) = simulated.interval();
+            if lower <= power && power <= upper {
+                break;
+            }
+            let next = self.next(each, simulated.power());
+            if next == each {
+                break;
+            }
+            each = next;
+            let dropout = self.question.assume.dropout;
+            let enrolled = (each as f64 / (1.0 - dropout) * (1.0 - 1e-12)).ceil() as usize;
+            let sizes = self.question.each(each);
+            found = Some(self.number(enrolled.saturating_mul(sizes.len()), sizes)?);
+        }
+        Ok(found)
+    }
+
+    fn next(&self, each: usize, reached: f64) -> usize {
+        let z = |share: f64| Normal.quantile(share.clamp(0.001, 0.999)).unwrap_or(0.0);
+        let rejects = z(1.0 - self.level.level() / 2.0);
+        let ratio = (z(self.question.assume.power) + rejects) / (z(reached) + rejects);
+        // A power near alpha says little about how far there is to go.
+        let factor = if ratio.is_finite() && ratio > 0.0 { ratio.powi(2).clamp(0.25, 4.0) } else { 4.0 };
+        ((each as f64 * factor).ceil() as usize).max(2)
+    }
+
+    /// `None` where a study has too many readings to be made up thousands of times.
+    fn simulate(&self, sizes: &[usize]) -> Result<Option<Simulated>, Failure> {
+        let Question { assumed, effect, .. } = self.question;
+        if sizes.iter().sum::<usize>().saturating_mul(assumed.visits()) > MOST_READINGS {
+            return Ok(None);
+        }
+        let study = Study { assumed, effect: *effect, sizes, alpha: self.level };
+        let bar = Bar::new(self.context, self.runs);
+        let found = study.simulate(self.runs, self.seed, || bar.step());
+        bar.bar.finish_and_clear();
+        found.map(Some).map_err(|error| Failure::refused(format!("such a study cannot be simulated: {error}")))
     }
 }
 

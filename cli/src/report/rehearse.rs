@@ -42,10 +42,10 @@ pub struct Sized {
     pub dropout: f64,
     /// Wanted power.
     pub power: f64,
-    /// To enrol in each group for the wanted power.
-    pub enrolled_per_group: usize,
-    /// The number for the wanted power.
+    /// The number for the wanted power, by the formula.
     pub wanted: Number,
+    /// The number that simulated studies ask for instead.
+    pub by_simulation: Option<Number>,
     /// The number planned.
     pub planned: Option<Number>,
 }
@@ -81,10 +81,37 @@ impl Number {
         self.sizes.iter().sum()
     }
 
+    /// Complete subjects in each group, where all are of one size.
+    fn each(&self) -> Option<usize> {
+        let first = self.sizes.first().copied()?;
+        self.sizes.iter().all(|size| *size == first).then_some(first)
+    }
+
+    /// The same of those to enrol.
+    fn enrolled_each(&self) -> Option<usize> {
+        let groups = self.sizes.len();
+        (groups > 0 && self.enrolled.is_multiple_of(groups)).then(|| self.enrolled / groups)
+    }
+
+    /// `93 complete subjects in each of 2 arms (110 in each, 220 in all to be enrolled)`
+    fn said(&self) -> String {
+        let each = count(self.each().unwrap_or(0) as u64, "complete subject");
+        match self.sizes.len() {
+            0 | 1 => format!("{each} ({} to be enrolled)", self.enrolled),
+            arms => format!(
+                "{each} in each of {arms} arms ({} in each, {} in all to be enrolled)",
+                self.enrolled_each().unwrap_or(0),
+                self.enrolled
+            ),
+        }
+    }
+
     fn json(&self) -> Json {
         json!({
             "enrolled": self.enrolled,
+            "enrolled_per_group": self.enrolled_each(),
             "complete": self.complete(),
+            "per_group": self.each(),
             "sizes": self.sizes,
             "formula": {
                 "power": self.formula.power,
@@ -112,8 +139,8 @@ impl Number {
             self.enrolled.to_string(),
             self.complete().to_string(),
             fixed_or_dash(self.formula.noncentrality, 2),
-            df(self.formula.df),
-            df(self.formula.error_df),
+            degrees(self.formula.df),
+            degrees(self.formula.error_df),
             self.formula.power.map_or_else(super::number::dash, |power| share(power, 3)),
             simulated,
         ]
@@ -126,8 +153,6 @@ impl Sized {
         let mut wanted = self.wanted.json();
         if let Some(fields) = wanted.as_object_mut() {
             fields.insert("power".to_owned(), json!(self.power));
-            fields.insert("per_group".to_owned(), json!(self.wanted.sizes.first()));
-            fields.insert("enrolled_per_group".to_owned(), json!(self.enrolled_per_group));
         }
         let correlation = match &self.correlation {
             AssumedCorrelation::Ar1(rho) => json!({ "ar1": rho }),
@@ -148,6 +173,7 @@ impl Sized {
             },
             "epsilon": self.wanted.formula.epsilon,
             "wanted": wanted,
+            "by_simulation": self.by_simulation.as_ref().map(Number::json),
             "planned": self.planned.as_ref().map(Number::json),
             "sentences": self.sentences(),
             "notes": self.notes(),
@@ -228,7 +254,10 @@ impl Sized {
             ("power", Right),
             ("simulated (95 % CI)", Right),
         ]);
-        table.row(self.wanted.row("wanted".to_owned()));
+        table.row(self.wanted.row("formula".to_owned()));
+        if let Some(other) = &self.by_simulation {
+            table.row(other.row("simulation".to_owned()));
+        }
         if let Some(planned) = &self.planned {
             table.row(planned.row("planned".to_owned()));
         }
@@ -237,28 +266,22 @@ impl Sized {
 
     /// What was found, one sentence each.
     fn sentences(&self) -> Vec<String> {
-        let each = self.wanted.sizes.first().copied().unwrap_or(0);
         let power = share(self.power, 2);
-        let lost = percent_text(self.dropout);
-        let (who, enrol) = match self.arms.len() {
-            0 | 1 => (count(each as u64, "complete subject"), count(self.wanted.enrolled as u64, "subject")),
-            arms => (
-                format!("{} in each of {arms} arms", count(each as u64, "complete subject")),
-                format!("{} in each, {} in all", self.enrolled_per_group, self.wanted.enrolled),
-            ),
-        };
-        let mut said =
-            vec![format!("A power of {power} takes {who}; with a dropout of {lost}, {enrol} have to be enrolled.")];
+        let mut said = vec![format!("By the formula a power of {power} takes {}.", self.wanted.said())];
+        if let Some(other) = &self.by_simulation {
+            said.push(format!("Simulated studies ask for about {}.", other.said()));
+        }
         match &self.planned {
             Some(planned) => {
                 let found = planned.formula.power.map_or("no power that can be worked out".to_owned(), |power| {
                     format!("a power of {} by the formula", share(power, 3))
                 });
+                let sizes: Vec<String> = planned.sizes.iter().map(usize::to_string).collect();
+                let by_arm = if sizes.len() > 1 { format!(" ({})", list(&sizes)) } else { String::new() };
                 said.push(format!(
-                    "The {} planned, of whom {} would be complete ({}), have {found}.",
+                    "The {} planned, of whom {} would be complete{by_arm}, have {found}.",
                     count(planned.enrolled as u64, "subject"),
                     planned.complete(),
-                    list(&planned.sizes.iter().map(usize::to_string).collect::<Vec<_>>())
                 ));
             }
             None => said.push("The plan names no number of subjects (enrol in [study]).".to_owned()),
@@ -287,17 +310,11 @@ impl Sized {
         let mut notes = Vec::new();
         if self.wanted.formula.notes.contains(&Note::PowerOptimistic) {
             notes.push(
-                "The assumed readings are not spherical, so with few subjects the formula promises more power than the \
-                 corrected test has: where the two differ, go by the simulated studies."
+                "The assumed readings are not spherical (epsilon below 1). The formula is then an approximation, and \
+                 mostly promises more power than the corrected test has: with few subjects, and with any number where \
+                 means change in the way in which readings vary most. Where the two differ, go by the simulated studies."
                     .to_owned(),
             );
-        }
-        if self.wanted.simulated.is_some_and(|found| found.interval().1 < self.power) {
-            notes.push(format!(
-                "The simulated studies reach less than the wanted power of {}: plan for more subjects than the formula \
-                 says.",
-                share(self.power, 2)
-            ));
         }
         let others = self.planned.iter().flat_map(|number| &number.formula.notes);
         notes.extend(
@@ -319,6 +336,11 @@ impl Sized {
         }
         notes
     }
+}
+
+/// Degrees of freedom; an epsilon that is 1 but for rounding leaves whole ones.
+fn degrees(value: f64) -> String {
+    df((value * 1e9).round() / 1e9)
 }
 
 /// Without what the arithmetic of doubles adds to it.
