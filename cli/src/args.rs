@@ -790,7 +790,10 @@ pub struct Analyse {
     #[command(flatten)]
     #[expect(missing_docs, reason = "a doc comment here would become help text")]
     pub then: Then,
-    /// Draw every subject's profile, and the mean, into this SVG file
+    /// Show what the result rests on: residuals, influence of each subject, missing visits, thin cells
+    #[arg(long)]
+    pub checks: bool,
+    /// Draw every subject's profile, and the means, into this file: SVG, or PNG if its name ends in .png
     #[arg(long, value_name = "FILE")]
     pub plot: Option<PathBuf>,
 }

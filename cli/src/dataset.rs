@@ -2,13 +2,14 @@
 //!
 //! Invariants: every subject of the roster is in the data set, used or left out; whoever is left out has a reason in
 //! words; one number stands in a cell, made of that cell's current readings in the session that counts as the plan
-//! says, or none does.
+//! says, or none does. Cells lie in the order of a [`Design`]: the last within factor runs fastest.
 
 use std::collections::{BTreeMap, HashMap};
 
 use chrono::NaiveDate;
+use revisant_analysis::design::{self, Design, DesignError};
 use revisant_schema::completeness::chosen_session;
-use revisant_schema::plan::{Analysis, Measure, OffWindow, Plan, Summary, VisitIx};
+use revisant_schema::plan::{Analysis, AttributeKind, Measure, OffWindow, Plan, Summary, VisitIx};
 use revisant_schema::reading::Condition;
 use revisant_schema::records::View;
 use revisant_schema::records::view::{AccountedRow, ValueRow};
@@ -20,15 +21,24 @@ use crate::report::text::list;
 use crate::study::Basis;
 use crate::took_part::{Corrections, TookPart, outside_use};
 
-/// The within factor that an analysis has.
+/// A factor of an analysis.
 #[derive(Debug, Clone, PartialEq, Eq)]
 pub struct Factor {
-    /// `visit`, or a condition's code.
+    /// `visit` or a condition's code; between subjects `arm` or an attribute's code.
     pub code: String,
     /// The codes of its levels.
     pub levels: Vec<String>,
     /// What people read.
     pub labels: Vec<String>,
+}
+
+/// What a cell is called where it is empty.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct CellName {
+    /// Where the whole session is not there.
+    pub session: String,
+    /// Where it is the cell alone.
+    pub cell: String,
 }
 
 /// Why a cell is empty.
@@ -60,28 +70,46 @@ pub enum Empty {
 pub struct Row {
     /// The subject's code.
     pub subject: String,
-    /// By level: the number that is analysed, or why there is none.
+    /// By between factor: the level that the subject is at; `None` where the roster has none.
+    pub group: Vec<Option<usize>>,
+    /// By combination of the within levels: the number that is analysed, or why there is none.
     pub cells: Vec<Result<f64, Empty>>,
     /// There is at least one current reading of the measure at the visits analysed.
     pub any: bool,
 }
 
 impl Row {
-    /// A reading at every level.
+    /// A level of every between factor, and a reading in every cell.
     pub fn complete(&self) -> bool {
-        self.cells.iter().all(Result::is_ok)
+        self.placed() && self.cells.iter().all(Result::is_ok)
+    }
+
+    /// A level of every between factor.
+    fn placed(&self) -> bool {
+        self.group.iter().all(Option::is_some)
+    }
+
+    /// A level of every between factor, and some reading.
+    pub fn some(&self) -> bool {
+        self.placed() && self.cells.iter().any(Result::is_ok)
     }
 
     /// Why it is left out of an analysis of complete subjects, in words; empty when it is not.
-    pub fn why(&self, factor: &Factor) -> String {
+    pub fn why(&self, names: &[CellName], between: &[Factor]) -> String {
+        let no_group = self.group.iter().zip(between).filter(|(level, _)| level.is_none());
+        let no_group = no_group.map(|(_, factor)| format!("no value of {}", factor.code));
         let mut by_reason: BTreeMap<&Empty, Vec<String>> = BTreeMap::new();
-        for (cell, level) in self.cells.iter().zip(&factor.levels) {
+        for (cell, name) in self.cells.iter().zip(names) {
             if let Err(empty) = cell {
-                by_reason.entry(empty).or_default().push(level.clone());
+                let named = by_reason.entry(empty).or_default();
+                let name = if matches!(empty, Empty::Few { .. }) { &name.cell } else { &name.session };
+                if !named.contains(name) {
+                    named.push(name.clone());
+                }
             }
         }
-        let words: Vec<String> = by_reason.into_iter().map(|(empty, levels)| empty.say(&levels)).collect();
-        words.join("; ")
+        let words = by_reason.into_iter().map(|(empty, levels)| empty.say(&levels));
+        no_group.chain(words).collect::<Vec<_>>().join("; ")
     }
 }
 
@@ -174,9 +202,13 @@ pub struct Care {
 /// The data of one analysis.
 #[derive(Debug, Clone, PartialEq)]
 pub struct Dataset {
-    /// The within factor.
-    pub factor: Factor,
-    /// For visits: days after day 0, cumulated along `after`.
+    /// The within factors, in the order of the plan; at least one.
+    pub within: Vec<Factor>,
+    /// The between factors, in the order of the plan.
+    pub between: Vec<Factor>,
+    /// By cell.
+    pub names: Vec<CellName>,
+    /// Where the visits are a factor: days after day 0, cumulated along `after`.
     pub positions: Option<Vec<f64>>,
     /// Every subject of the roster, by code.
     pub rows: Vec<Row>,
@@ -185,14 +217,14 @@ pub struct Dataset {
 }
 
 impl Dataset {
-    /// From the records as they stand at a view, for an analysis of one within factor; `today` is the local day of
-    /// that standing.
+    /// From the records as they stand at a view; `today` is the local day of that standing.
     pub fn build(view: &View<'_>, basis: &Basis, analysis: &Analysis, today: NaiveDate) -> Result<Self, Failure> {
         let measure = &basis.plan.measures[analysis.measure];
         let readings = Readings::of(view.values(&measure.code)?);
         let accounted = view.accounted()?;
-        let factor = factor(basis, analysis);
-        let conditions = conditions(view, measure, &factor)?;
+        let within: Vec<Factor> = analysis.within.iter().map(|code| within(basis, analysis, code)).collect();
+        let between: Vec<Factor> = analysis.between.iter().map(|code| between(basis, code)).collect();
+        let layout = Layout::of(view, basis, analysis, &within)?;
         let corrections = Corrections::of(view, readings.values.iter().filter_map(|value| value.placed_by))?;
         let mut builder = Builder {
             basis,
@@ -201,21 +233,57 @@ impl Dataset {
             readings,
             accounted,
             today,
-            factor,
-            conditions,
+            between: &between,
+            layout: &layout,
             instruments: Instruments { codes: view.terms()?, corrections },
             care: Care::default(),
         };
         let subjects: Vec<&String> = basis.roster.subjects.keys().collect();
         let rows = subjects.into_iter().map(|subject| builder.row(subject)).collect();
-        let positions = (builder.factor.code == VISIT).then(|| positions(basis, &analysis.visits));
-        Ok(Self { factor: builder.factor, positions, rows, care: builder.care })
+        let care = builder.care;
+        let positions = within.iter().any(|factor| factor.code == VISIT).then(|| positions(basis, &analysis.visits));
+        let names = layout.names(&within, basis);
+        Ok(Self { within, between, names, positions, rows, care })
     }
 
-    /// The cells of each subject that has one, with the subject's place among the rows.
-    pub fn design_rows(&self) -> (Vec<usize>, Vec<Vec<Option<f64>>>) {
-        let with_cell = self.rows.iter().enumerate().filter(|(_, row)| row.cells.iter().any(Result::is_ok));
-        with_cell.map(|(at, row)| (at, row.cells.iter().map(|cell| cell.as_ref().ok().copied()).collect())).unzip()
+    /// The subjects that an analysis can take in, by their place among the rows: those with a level of every between
+    /// factor and a reading.
+    pub fn subjects(&self) -> Vec<usize> {
+        let taken = self.rows.iter().enumerate().filter(|(_, row)| row.some());
+        taken.map(|(at, _)| at).collect()
+    }
+
+    /// These subjects as a design. Where nobody has a reading it has one subject without any, so that the notes say so.
+    ///
+    /// # Errors
+    /// As [`Design::new`].
+    pub fn design(&self) -> Result<Design, DesignError> {
+        let cells = |row: &Row| row.cells.iter().map(|cell| cell.as_ref().ok().copied()).collect::<Vec<_>>();
+        let groups = |row: &Row| row.group.iter().map(|level| level.unwrap_or(0)).collect::<Vec<_>>();
+        let mut subjects: Vec<(Vec<usize>, Vec<Option<f64>>)> =
+            self.rows.iter().filter(|row| row.some()).map(|row| (groups(row), cells(row))).collect();
+        if subjects.is_empty() {
+            subjects.push((vec![0; self.between.len()], vec![None; self.names.len()]));
+        }
+        let within = self.within.iter().map(|factor| self.factor(factor)).collect::<Result<_, _>>()?;
+        Design::new(within, self.between.iter().map(|factor| factor.levels.len()).collect(), &subjects)
+    }
+
+    /// Visits on the same day have no order in time: then there are no trends, which the notes say.
+    fn factor(&self, factor: &Factor) -> Result<design::Factor, DesignError> {
+        let positions = self.positions.as_ref().filter(|_| factor.code == VISIT);
+        match positions.map(|positions| design::Factor::at(positions.clone())) {
+            Some(Ok(placed)) => Ok(placed),
+            _ => design::Factor::of(factor.levels.len()),
+        }
+    }
+
+    /// The one within factor of an analysis that has no other factor.
+    pub fn only(&self) -> Option<&Factor> {
+        match (self.within.as_slice(), self.between.is_empty()) {
+            ([one], true) => Some(one),
+            _ => None,
+        }
     }
 
     /// How many subjects have a reading at all.
@@ -225,23 +293,24 @@ impl Dataset {
 
     /// How many subjects a mixed model would use: those with at least one cell.
     pub fn mixed_model_would_use(&self) -> usize {
-        self.rows.iter().filter(|row| row.cells.iter().any(Result::is_ok)).count()
+        self.rows.iter().filter(|row| row.some()).count()
     }
 
     /// Those who are left out of an analysis of complete subjects, and why.
     pub fn left_out(&self) -> Vec<(&str, String)> {
         let left = self.rows.iter().filter(|row| !row.complete());
-        left.map(|row| (row.subject.as_str(), row.why(&self.factor))).collect()
+        left.map(|row| (row.subject.as_str(), row.why(&self.names, &self.between))).collect()
     }
 }
 
 /// The factor's code when it is the visits.
 pub const VISIT: &str = "visit";
+/// The factor's code when it is the arms.
+pub const ARM: &str = "arm";
 
-fn factor(basis: &Basis, analysis: &Analysis) -> Factor {
+fn within(basis: &Basis, analysis: &Analysis, code: &str) -> Factor {
     let measure = &basis.plan.measures[analysis.measure];
-    let condition = analysis.within.iter().find_map(|code| measure.conditions.iter().find(|it| it.code == *code));
-    match condition {
+    match measure.conditions.iter().find(|it| it.code == *code) {
         Some(factor) => {
             Factor { code: factor.code.clone(), levels: factor.levels.clone(), labels: factor.levels.clone() }
         }
@@ -251,6 +320,19 @@ fn factor(basis: &Basis, analysis: &Analysis) -> Factor {
             Factor { code: VISIT.to_owned(), levels, labels }
         }
     }
+}
+
+fn between(basis: &Basis, code: &str) -> Factor {
+    if code == ARM {
+        let (levels, labels) = basis.plan.arms.iter().map(|arm| (arm.code.clone(), arm.label.clone())).unzip();
+        return Factor { code: code.to_owned(), levels, labels };
+    }
+    let attribute = basis.plan.subject.attributes.iter().find(|attribute| attribute.code == code);
+    let levels = match attribute.map(|attribute| &attribute.kind) {
+        Some(AttributeKind::Levels(levels)) => levels.clone(),
+        _ => Vec::new(),
+    };
+    Factor { code: code.to_owned(), labels: levels.clone(), levels }
 }
 
 /// Days after day 0 of each visit; one that is counted from an earlier visit lies so many days after that one's.
@@ -297,21 +379,81 @@ struct Part {
     term: Option<i64>,
 }
 
-/// By level of the factor: the conditions that make it up. For visits there is one entry for all.
-fn conditions(view: &View<'_>, measure: &Measure, factor: &Factor) -> Result<Vec<Vec<Part>>, Failure> {
+/// Of what each cell is made.
+struct Layout {
+    /// By cell: which visit of the analysis, and which of `parts`.
+    cells: Vec<(usize, usize)>,
+    /// By combination of the levels of the within conditions: the conditions that make it up.
+    parts: Vec<Vec<Part>>,
+    /// The visits of the analysis; one where they are no factor.
+    visits: Vec<VisitIx>,
+}
+
+impl Layout {
+    fn of(view: &View<'_>, basis: &Basis, analysis: &Analysis, within: &[Factor]) -> Result<Self, Failure> {
+        let by_visit = within.iter().any(|factor| factor.code == VISIT);
+        let visits = match by_visit {
+            true => analysis.visits.clone(),
+            false => vec![analysis.visits.first().copied().unwrap_or(0)],
+        };
+        let mut layout = Self { cells: Vec::new(), parts: Vec::new(), visits };
+        let mut combinations: Vec<Vec<(&str, &str)>> = Vec::new();
+        for cell in product(within) {
+            let mut visit = 0;
+            let mut combination = Vec::new();
+            for (factor, level) in within.iter().zip(cell) {
+                match factor.code.as_str() {
+                    VISIT => visit = level,
+                    code => combination.push((code, factor.levels[level].as_str())),
+                }
+            }
+            let parts = combinations.iter().position(|known| *known == combination).unwrap_or_else(|| {
+                combinations.push(combination);
+                combinations.len() - 1
+            });
+            layout.cells.push((visit, parts));
+        }
+        layout.parts = parts(view, &basis.plan.measures[analysis.measure], &combinations)?;
+        Ok(layout)
+    }
+
+    fn names(&self, within: &[Factor], basis: &Basis) -> Vec<CellName> {
+        let cells = self.cells.iter().zip(product(within));
+        let name = |((visit, _), cell): (&(usize, usize), Vec<usize>)| {
+            let levels = within.iter().zip(cell).map(|(factor, level)| factor.levels[level].clone());
+            let cell = levels.collect::<Vec<_>>().join(" ");
+            let visit = self.visits.get(*visit).map(|visit| basis.plan.visits[*visit].code.clone());
+            let session = visit.filter(|_| within.len() > 1).unwrap_or_else(|| cell.clone());
+            CellName { session, cell }
+        };
+        cells.map(name).collect()
+    }
+}
+
+/// Every combination of the factors' levels, the last running fastest.
+pub fn product(factors: &[Factor]) -> Vec<Vec<usize>> {
+    factors.iter().fold(vec![vec![]], |all, factor| {
+        let longer = |begun: Vec<usize>| {
+            (0..factor.levels.len()).map(move |level| begun.iter().copied().chain([level]).collect())
+        };
+        all.into_iter().flat_map(longer).collect()
+    })
+}
+
+/// By combination of condition levels: the conditions of the measure that have all of them.
+fn parts(view: &View<'_>, measure: &Measure, combinations: &[Vec<(&str, &str)>]) -> Result<Vec<Vec<Part>>, Failure> {
     let terms: HashMap<String, i64> = view.terms()?.into_iter().map(|(term, text)| (text, term)).collect();
     let all: Vec<Condition> = measure.cells().into_iter().map(|cell| Condition::of_cell(measure, &cell)).collect();
-    let of_level = |level: Option<&String>| {
-        let holds = |condition: &&Condition| level.is_none_or(|level| condition.0.get(&factor.code) == Some(level));
-        // The empty text has no row of its own.
-        let term = |text: String| if text.is_empty() { Some(0) } else { terms.get(&text).copied() };
-        let part = |condition: &Condition| Part { condition: condition.clone(), term: term(condition.to_string()) };
-        all.iter().filter(holds).map(part).collect()
+    // The empty text has no row of its own.
+    let term = |text: String| if text.is_empty() { Some(0) } else { terms.get(&text).copied() };
+    let part = |condition: &Condition| Part { condition: condition.clone(), term: term(condition.to_string()) };
+    let of_combination = |levels: &Vec<(&str, &str)>| {
+        let has =
+            |condition: &Condition, (code, level): (&str, &str)| condition.0.get(code).is_some_and(|own| own == level);
+        let all_of_them = |condition: &&Condition| levels.iter().all(|level| has(condition, *level));
+        all.iter().filter(all_of_them).map(part).collect()
     };
-    Ok(match factor.code.as_str() {
-        VISIT => vec![of_level(None)],
-        _ => factor.levels.iter().map(|level| of_level(Some(level))).collect(),
-    })
+    Ok(combinations.iter().map(of_combination).collect())
 }
 
 /// What is known of the instruments that gave values.
@@ -349,37 +491,67 @@ struct Builder<'b> {
     readings: Readings,
     accounted: Vec<AccountedRow>,
     today: NaiveDate,
-    factor: Factor,
-    conditions: Vec<Vec<Part>>,
+    between: &'b [Factor],
+    layout: &'b Layout,
     instruments: Instruments,
     care: Care,
+}
+
+/// The session of a visit that counts: its day, and its numbers in the records.
+struct Came {
+    day: NaiveDate,
+    sessions: Vec<i64>,
 }
 
 impl Builder<'_> {
     fn row(&mut self, subject: &str) -> Row {
         let nobody = Course::default();
-        let basis = self.basis;
+        let (basis, layout) = (self.basis, self.layout);
         let course = basis.courses.by_subject.get(subject).unwrap_or(&nobody);
-        let visits: Vec<(VisitIx, usize)> = match self.factor.code.as_str() {
-            VISIT => self.analysis.visits.iter().map(|visit| (*visit, 0)).collect(),
-            _ => {
-                let visit = self.analysis.visits.first().copied().unwrap_or(0);
-                (0..self.factor.levels.len()).map(|level| (visit, level)).collect()
-            }
-        };
         let mut any = false;
-        let mut cells = Vec::with_capacity(visits.len());
-        let mut seen = None;
-        for (visit, level) in visits {
+        let mut came = Vec::with_capacity(layout.visits.len());
+        for &visit in &layout.visits {
             let session = chosen_session(&basis.plan, course, visit, &self.measure.code);
             any |= session.is_some();
-            if seen != Some(visit) {
-                self.note_session(subject, course, visit, session);
-                seen = Some(visit);
-            }
-            cells.push(self.cell(subject, course, visit, level, session));
+            self.note_session(subject, course, visit, session);
+            came.push(self.came(subject, course, visit, session));
         }
-        Row { subject: subject.to_owned(), cells, any }
+        let cell = |&(visit, parts): &(usize, usize)| match &came[visit] {
+            Ok(came) => self.cell(subject, layout.visits[visit], came, &layout.parts[parts]),
+            Err(empty) => Err(empty.clone()),
+        };
+        let cells = layout.cells.iter().map(cell).collect();
+        Row { subject: subject.to_owned(), group: self.group(subject), cells, any }
+    }
+
+    /// The level of each between factor.
+    fn group(&self, subject: &str) -> Vec<Option<usize>> {
+        let entry = self.basis.roster.subjects.get(subject);
+        let level = |factor: &Factor| {
+            let own = match factor.code.as_str() {
+                ARM => entry?.arm.as_ref()?,
+                code => entry?.attributes.get(code)?,
+            };
+            factor.levels.iter().position(|level| level == own)
+        };
+        self.between.iter().map(level).collect()
+    }
+
+    /// The session that counts for a visit, or why there is none.
+    fn came(
+        &mut self,
+        subject: &str,
+        course: &Course,
+        visit: VisitIx,
+        session: Option<(NaiveDate, i64, bool)>,
+    ) -> Result<Came, Empty> {
+        let Some((day, session, off_window)) = session else { return Err(self.absent(subject, course, visit)) };
+        if off_window && self.analysis.off_window == OffWindow::Leave {
+            return Err(Empty::OffWindow);
+        }
+        // A visit's sessions of one day share their number; each has its own in the records.
+        let same = course.sessions.iter().filter(|other| other.session == session);
+        Ok(Came { day, sessions: same.map(|other| other.facts.session).collect() })
     }
 
     /// Notes what is unusual about the session that counts for a visit.
@@ -409,36 +581,14 @@ impl Builder<'_> {
         }
     }
 
-    fn cell(
-        &mut self,
-        subject: &str,
-        course: &Course,
-        visit: VisitIx,
-        level: usize,
-        session: Option<(NaiveDate, i64, bool)>,
-    ) -> Result<f64, Empty> {
-        let Some((day, session, off_window)) = session else { return Err(self.absent(subject, course, visit)) };
-        if off_window && self.analysis.off_window == OffWindow::Leave {
-            return Err(Empty::OffWindow);
-        }
-        // A visit's sessions of one day share their number; each has its own in the records.
-        let same = course.sessions.iter().filter(|other| other.session == session);
-        let sessions: Vec<i64> = same.map(|other| other.facts.session).collect();
-        let mut numbers = Vec::new();
-        for part in 0..self.conditions.get(level).map_or(0, Vec::len) {
-            numbers.push(self.one_condition(subject, (visit, day), &sessions, (level, part))?);
-        }
-        Ok(mean(&numbers))
+    /// The mean of the conditions that make a cell up, all of which must be there.
+    fn cell(&mut self, subject: &str, visit: VisitIx, came: &Came, parts: &[Part]) -> Result<f64, Empty> {
+        let numbers = parts.iter().map(|part| self.one_condition(subject, visit, came, part));
+        Ok(mean(&numbers.collect::<Result<Vec<f64>, Empty>>()?))
     }
 
-    fn one_condition(
-        &mut self,
-        subject: &str,
-        (visit, day): (VisitIx, NaiveDate),
-        sessions: &[i64],
-        (level, part): (usize, usize),
-    ) -> Result<f64, Empty> {
-        let Part { condition, term } = &self.conditions[level][part];
+    fn one_condition(&mut self, subject: &str, visit: VisitIx, came: &Came, part: &Part) -> Result<f64, Empty> {
+        let (Part { condition, term }, Came { day, sessions }) = (part, came);
         let held = sessions.iter().flat_map(|session| term.iter().map(move |term| (*session, *term)));
         let values: Vec<ValueRow> = held.flat_map(|(session, term)| self.readings.of_cell(session, term)).collect();
         let planned = self.measure.replicates;
@@ -456,7 +606,7 @@ impl Builder<'_> {
         if number.is_ok() {
             self.care.at_limit += limits;
             self.care.several_instruments += usize::from(several);
-            let seen = (&self.basis.plan, self.measure.code.as_str(), visit, day);
+            let seen = (&self.basis.plan, self.measure.code.as_str(), visit, *day);
             values.iter().for_each(|value| self.instruments.note(&mut self.care.took_part, value, seen));
         }
         number.map_err(|()| match current {
@@ -563,20 +713,15 @@ mod tests {
 
     #[test]
     fn reasons_are_words() {
-        let factor = Factor {
-            code: VISIT.to_owned(),
-            levels: ["baseline", "week-4", "week-8"].map(str::to_owned).to_vec(),
-            labels: vec![],
-        };
-        let row = |cells: Vec<Result<f64, Empty>>| Row { subject: "A-1".to_owned(), cells, any: true };
+        let name = |code: &str| CellName { session: code.to_owned(), cell: code.to_owned() };
+        let names = ["baseline", "week-4", "week-8"].map(name);
+        let group = vec![];
+        let row = |cells| Row { subject: "A-1".to_owned(), group: group.clone(), cells, any: true }.why(&names, &[]);
         let none = row(vec![Ok(1.0), Err(Empty::NoReading), Err(Empty::NoReading)]);
-        assert_eq!(none.why(&factor), "no reading at week-4 and week-8");
+        assert_eq!(none, "no reading at week-4 and week-8");
         let few = row(vec![Ok(1.0), Err(Empty::Few { current: 1, needed: 2 }), Err(Empty::Withdrawn)]);
-        assert_eq!(few.why(&factor), "withdrawn before week-8; week-4: 1 of the 2 replicates needed");
+        assert_eq!(few, "withdrawn before week-8; week-4: 1 of the 2 replicates needed");
         let off = row(vec![Ok(1.0), Err(Empty::OffWindow), Err(Empty::Accounted("in hospital".to_owned()))]);
-        assert_eq!(
-            off.why(&factor),
-            "no reading at week-8 (accounted for: in hospital); session at week-4 lies outside its window"
-        );
+        assert_eq!(off, "no reading at week-8 (accounted for: in hospital); session at week-4 lies outside its window");
     }
 }

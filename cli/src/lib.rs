@@ -13,6 +13,7 @@ pub mod demo;
 pub mod error;
 pub mod intake;
 pub mod looked;
+pub mod method;
 pub mod moment;
 pub mod output;
 pub mod report;

@@ -292,11 +292,9 @@ fn a_cut_stays_as_it_was() {
 #[test]
 fn what_is_not_there_yet_is_said_in_one_sentence() {
     let study = analysed();
-    for (code, word) in [("ranks", "friedman"), ("by-sex", "groups")] {
-        let ran = study.run(&["analyse", code, "--json"]);
-        assert_eq!((ran.exit, ran.error()["kind"].clone()), (Exit::Usage, json!("not-yet")), "{ran:?}");
-        assert!(ran.error()["message"].as_str().unwrap().contains(word));
-    }
+    let ran = study.run(&["analyse", "ranks", "--json"]);
+    assert_eq!((ran.exit, ran.error()["kind"].clone()), (Exit::Usage, json!("not-yet")), "{ran:?}");
+    assert!(ran.error()["message"].as_str().unwrap().contains("friedman"));
     assert!(study.run(&["analyse", "grip"]).err.contains("grip-over-visits"));
 }
 

@@ -5,21 +5,18 @@
 use std::path::Path;
 
 use chrono::{DateTime, NaiveDate};
-use revisant_analysis::anova::repeated_measures;
-use revisant_analysis::contrasts::{Family, Multiplicity as Adjust};
-use revisant_analysis::design::OneWithin;
-use revisant_analysis::{Confidence, Settings};
-use revisant_schema::plan::{Analysis, ContrastKind, Instrument, MeasureIx, MeasureRule, Method, Multiplicity, Plan};
+use revisant_schema::plan::{Allocation, Analysis, Instrument, MeasureIx, MeasureRule, Plan};
 use revisant_schema::records::view::PlanVersion;
 use revisant_schema::records::{ActKind, Records, View};
 use serde_json::json;
 
 use super::{Done, status};
 use crate::args::Analyse;
-use crate::dataset::Dataset;
+use crate::dataset::{ARM, Dataset};
 use crate::error::{Exit, Failure};
 use crate::intake;
 use crate::looked::Looked;
+use crate::method::{self, Outcome};
 use crate::report::analysis::{Analysed, PlanUsed};
 use crate::report::plot;
 use crate::study::{Basis, Context, unknown, view};
@@ -34,7 +31,7 @@ pub fn run(context: &mut Context<'_, '_>, args: &Analyse) -> Done {
     let basis = Basis::of(&then)?;
     let (plan_now, version_now) = Basis::plan(&records.view()?)?;
     let planned = Planned::find(&basis, &plan_now, &version_now, &args.code)?;
-    refuse(planned.plan(&basis, &plan_now), planned.analysis)?;
+    refuse([&basis.plan, &plan_now], planned.analysis)?;
     let analysed = analyse(context, &records, &then, &basis, &planned, args)?;
     let drawing = args.plot.as_deref().map(|file| (file, plot::profiles(&analysed)));
     remember(context, &mut records, &analysed)?;
@@ -60,7 +57,8 @@ impl<'p> Planned<'p> {
             let another = (version.version != basis.version)
                 .then_some(PlanUsed { version: version.version, sha256: version.sha256 });
             // An analysis of now refers to measures and visits by their places in its own plan.
-            let fits = another.is_none() || same_places(&basis.plan, now);
+            let fits = another.is_none()
+                || same_places(&basis.plan, now) && (analysis.between.is_empty() || same_groups(&basis.plan, now));
             return match fits {
                 true => Ok(Self { analysis, other: another }),
                 false => Self::then(basis, code),
@@ -76,10 +74,6 @@ impl<'p> Planned<'p> {
             None => Err(unknown("analysis", code, known)),
         }
     }
-
-    fn plan<'q>(&self, basis: &'q Basis, now: &'q Plan) -> &'q Plan {
-        if self.other.is_some() { now } else { &basis.plan }
-    }
 }
 
 /// Whether both plans list the same measures and visits at the same places.
@@ -89,31 +83,30 @@ fn same_places(then: &Plan, now: &Plan) -> bool {
     measures(then) == measures(now) && visits(then) == visits(now)
 }
 
-/// What this version cannot do yet, in one plain sentence.
-fn refuse(plan: &Plan, analysis: &Analysis) -> Result<(), Failure> {
-    let later = |what: &str| {
-        Err(Failure::not_yet(format!("{what}, which comes with a later version")).at(analysis.code.clone()))
-    };
-    match analysis.method {
-        Method::RepeatedMeasures => {}
-        Method::Friedman | Method::Agreement => {
-            return later(&format!("{} is an analysis by the method {}", analysis.code, analysis.method.name()));
-        }
-        Method::MixedModel => return later(&format!("{} is a mixed model", analysis.code)),
+/// Whether both plans group subjects alike.
+fn same_groups(then: &Plan, now: &Plan) -> bool {
+    let arms = |plan: &Plan| plan.arms.iter().map(|it| it.code.clone()).collect::<Vec<_>>();
+    arms(then) == arms(now) && then.subject.attributes == now.subject.attributes
+}
+
+/// What cannot be done, in one plain sentence; `plans` are those of then and of now.
+fn refuse(plans: [&Plan; 2], analysis: &Analysis) -> Result<(), Failure> {
+    method::offered(analysis)?;
+    if plans.iter().any(|plan| plan.interim.is_some()) {
+        return Err(Failure::not_yet(
+            "the plan names interim looks, and a result outside them would be a look of its own; it needs `revisant \
+             look`, which comes with a later version",
+        )
+        .at(analysis.code.clone()));
     }
-    if plan.interim.is_some() {
-        return later(
-            "the plan names interim looks, and a result outside them would be a look of its own; it needs `revisant look`",
-        );
-    }
-    if !analysis.between.is_empty() {
-        return later(&format!("{} compares groups of subjects", analysis.code));
-    }
-    if analysis.within.len() > 1 {
-        return later(&format!("{} has more than one within factor", analysis.code));
-    }
-    if analysis.contrasts.contains(&ContrastKind::Simple) {
-        return later(&format!("{} asks for simple effects", analysis.code));
+    let sealed = plans.iter().any(|plan| plan.study.allocation == Allocation::Sealed);
+    if sealed && analysis.between.iter().any(|factor| factor == ARM) {
+        return Err(Failure::refused(format!(
+            "{} compares arms, and the allocation is sealed: no result by arm can be shown before it is opened",
+            analysis.code
+        ))
+        .at(analysis.code.clone())
+        .then("until then, analyse without \"arm\" in \"between\""));
     }
     Ok(())
 }
@@ -130,7 +123,7 @@ fn analyse<'a>(
     let measure = &basis.plan.measures[analysis.measure];
     let standing = then.standing(args.then.cut.as_deref())?;
     let data = Dataset::build(then, basis, analysis, standing_day(context, basis, args, &standing.moment))?;
-    let result = repeated_measures(&design(&data)?, &settings(analysis)?);
+    let outcome = Outcome::of(analysis, &data, args.checks)?;
     let exports = then.exports()?;
     let instruments = status::instruments(context, then, basis, &exports)?;
     let measuring: Vec<&str> = measuring(&basis.plan, analysis.measure);
@@ -150,7 +143,7 @@ fn analyse<'a>(
         open_holds: holds.iter().filter(|hold| measuring.contains(&hold.instrument.as_str())).count(),
         looked: Looked::before(records, then, analysis)?,
         data,
-        result,
+        outcome,
         instruments,
     })
 }
@@ -171,41 +164,6 @@ fn measuring(plan: &Plan, measure: MeasureIx) -> Vec<&str> {
         })
     };
     plan.instruments.iter().filter(gives).map(|instrument| instrument.code.as_str()).collect()
-}
-
-fn design(data: &Dataset) -> Result<OneWithin, Failure> {
-    let (_, mut rows) = data.design_rows();
-    if rows.is_empty() {
-        // Nobody has a reading: a design of one subject without any says so in its notes.
-        rows.push(vec![None; data.factor.levels.len()]);
-    }
-    let unusable = |error: revisant_analysis::design::DesignError| {
-        Failure::new("design", format!("these readings cannot be analysed: {error}"))
-    };
-    let design = OneWithin::from_rows(&rows).map_err(unusable)?;
-    match &data.positions {
-        // Visits on the same day have no order in time: then there are no trends, which the notes say.
-        Some(positions) => Ok(design.clone().with_positions(positions.clone()).unwrap_or(design)),
-        None => Ok(design),
-    }
-}
-
-fn settings(analysis: &Analysis) -> Result<Settings, Failure> {
-    let confidence = Confidence::new(analysis.confidence).map_err(|error| Failure::refused(error.to_string()))?;
-    let family = |kind: &ContrastKind| match kind {
-        ContrastKind::Pairwise => Some(Family::Pairwise),
-        ContrastKind::EachVsFirst => Some(Family::EachVsFirst),
-        ContrastKind::Polynomial => Some(Family::Polynomial),
-        ContrastKind::Simple => None,
-    };
-    let multiplicity = match analysis.multiplicity {
-        Multiplicity::None => Adjust::None,
-        Multiplicity::Bonferroni => Adjust::Bonferroni,
-        Multiplicity::Holm => Adjust::Holm,
-        Multiplicity::BenjaminiHochberg => Adjust::BenjaminiHochberg,
-    };
-    let contrasts = analysis.contrasts.iter().filter_map(family).collect();
-    Ok(Settings { confidence, contrasts, multiplicity, ..Settings::default() })
 }
 
 /// Writes the look on the trail.

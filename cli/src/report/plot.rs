@@ -5,14 +5,13 @@
 
 use std::fmt::Write as _;
 
-use revisant_analysis::Confidence;
-use revisant_analysis::anova::{Band, within_subject_band};
-use revisant_analysis::design::OneWithin;
+use revisant_analysis::anova::Band;
 
 use super::analysis::Analysed;
 use super::number::{fixed, percent, plain};
 use super::text::{clean, count, wrap};
 use crate::dataset::{Row, VISIT};
+use crate::method::Outcome;
 
 const WIDTH: f64 = 760.0;
 const LEFT: f64 = 68.0;
@@ -73,7 +72,7 @@ fn text(svg: &mut String, (x, y): (f64, f64), anchor: &str, size: u32, words: &s
 }
 
 fn title(analysed: &Analysed<'_>) -> String {
-    let who = count(analysed.result.used.len() as u64, "subject");
+    let who = count(analysed.used() as u64, "subject");
     format!("{} ({}): profiles of {who}", analysed.label, analysed.unit)
 }
 
@@ -121,9 +120,9 @@ fn foot(analysed: &Analysed<'_>) -> Vec<String> {
 }
 
 fn band(analysed: &Analysed<'_>) -> Vec<Band> {
-    let (_, rows) = analysed.data.design_rows();
-    let confidence = Confidence::new(analysed.analysis.confidence).unwrap_or_default();
-    OneWithin::from_rows(&rows).map_or_else(|_| vec![], |design| within_subject_band(&design, confidence))
+    match &analysed.outcome {
+        Outcome::RepeatedMeasures(repeated) => repeated.bands().into_iter().next().unwrap_or_default(),
+    }
 }
 
 /// The scales of the picture.
@@ -136,7 +135,7 @@ struct Frame {
 
 impl Frame {
     fn of(analysed: &Analysed<'_>) -> Option<Self> {
-        let levels = analysed.data.factor.levels.len();
+        let levels = analysed.data.within[0].levels.len();
         let positions =
             analysed.data.positions.clone().unwrap_or_else(|| (0..levels).map(|level| level as f64).collect());
         let values = analysed.data.rows.iter().flat_map(|row| &row.cells).filter_map(|cell| cell.as_ref().ok());
@@ -188,9 +187,9 @@ impl Frame {
             r##"<line x1="{LEFT}" x2="{:.1}" y1="{base:.1}" y2="{base:.1}" stroke="#111"/>"##,
             WIDTH - RIGHT
         );
-        let by_visit = analysed.data.factor.code == VISIT;
+        let by_visit = analysed.data.within[0].code == VISIT;
         let mut ends = [f64::NEG_INFINITY; 3];
-        for (position, label) in self.positions.iter().zip(&analysed.data.factor.labels) {
+        for (position, label) in self.positions.iter().zip(&analysed.data.within[0].labels) {
             let x = self.at_x(*position);
             let _ = writeln!(
                 svg,
@@ -207,7 +206,7 @@ impl Frame {
             }
         }
         let rows = ends.iter().filter(|end| end.is_finite()).count();
-        let name = if by_visit { "visit · days after day 0" } else { analysed.data.factor.code.as_str() };
+        let name = if by_visit { "visit · days after day 0" } else { analysed.data.within[0].code.as_str() };
         text(svg, ((LEFT + WIDTH - RIGHT) / 2.0, base + 25.0 + 13.0 * rows as f64), "middle", 12, name);
     }
 

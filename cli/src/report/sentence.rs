@@ -2,19 +2,22 @@
 
 use revisant_analysis::anova::Effect;
 
-use super::number::{df, fixed, p_said, share};
+use super::number::{df, fixed, p_said, percent, plain, share};
+use super::text::list;
+use crate::dataset::VISIT;
 
 /// What a sentence speaks of.
 pub struct Subject<'a> {
     /// The measure's label.
     pub measure: &'a str,
-    /// `visits`, or the condition's code.
-    pub over: &'a str,
-    /// 1 − the confidence.
-    pub alpha: f64,
+    /// The codes of the effect's factors, those between subjects first.
+    pub factors: &'a [&'a str],
+    /// Of the interval; the effect counts as shown at 1 less this.
+    pub confidence: f64,
 }
 
-/// `Grip strength changed over visits, F(2.1, 48.3) = 9.41, p < .001 (Greenhouse–Geisser), partial η² = .29.`
+/// `Grip strength changed over visits, F(2.1, 48.3) = 9.41, p < .001 (Greenhouse–Geisser), partial η² = .29,
+/// 95 % CI .05 to .46.`
 ///
 /// The p value is always that of Greenhouse and Geisser's correction, where there is one: no test of sphericity chooses
 /// it.
@@ -25,22 +28,43 @@ pub fn effect(subject: &Subject<'_>, effect: &Effect) -> String {
     let f = effect.f.map_or_else(|| "is infinite".to_owned(), |f| format!("= {}", fixed(f, 2)));
     let how = if corrected.is_some() && effect.df > 1.0 { " (Greenhouse–Geisser)" } else { "" };
     let size = effect.partial_eta_sq.map_or(String::new(), |eta| format!(", partial η² = {}", share(eta, 2)));
-    format!("{}, F({}, {}) {f}, {}{how}{size}.", finding(subject, p), df(d1), df(d2), p_said(p))
+    let interval = effect.partial_eta_sq_ci.map_or(String::new(), |ci| {
+        let level = plain(percent(subject.confidence));
+        format!(", {level} % CI {} to {}", share(ci.lower, 2), share(ci.upper, 2))
+    });
+    format!("{}, F({}, {}) {f}, {}{how}{size}{interval}.", finding(subject, p), df(d1), df(d2), p_said(p))
 }
 
 fn finding(subject: &Subject<'_>, p: f64) -> String {
-    let Subject { measure, over, alpha } = subject;
-    let changed = p < *alpha;
-    match (*over, changed) {
-        ("visits", true) => format!("{measure} changed over visits"),
-        ("visits", false) => format!("No change of {measure} over visits was shown"),
-        (over, true) => format!("{measure} differed by {over}"),
-        (over, false) => format!("No difference of {measure} by {over} was shown"),
+    let Subject { measure, factors, confidence } = subject;
+    let shown = p < 1.0 - confidence;
+    match (*factors, shown) {
+        ([VISIT], true) => format!("{measure} changed over visits"),
+        ([VISIT], false) => format!("No change of {measure} over visits was shown"),
+        ([over], true) => format!("{measure} differed by {over}"),
+        ([over], false) => format!("No difference of {measure} by {over} was shown"),
+        ([other, VISIT] | [VISIT, other], true) => format!("The change of {measure} over visits differed by {other}"),
+        ([other, VISIT] | [VISIT, other], false) => {
+            format!("No difference by {other} in the change of {measure} over visits was shown")
+        }
+        ([one, other], true) => format!("The difference of {measure} by {other} depended on {one}"),
+        ([one, other], false) => format!("No dependence on {one} of the difference of {measure} by {other} was shown"),
+        (more, true) => format!("{measure} showed an interaction of {}", all(more)),
+        (more, false) => format!("No interaction of {} in {measure} was shown", all(more)),
     }
 }
 
+fn all(factors: &[&str]) -> String {
+    list(&factors.iter().map(|factor| (*factor).to_owned()).collect::<Vec<_>>())
+}
+
 fn undefined(subject: &Subject<'_>) -> String {
-    format!("The readings of {} that there are do not allow a test over {}.", subject.measure, subject.over)
+    let over = match subject.factors {
+        [VISIT] => "over visits".to_owned(),
+        [one] => format!("over {one}"),
+        more => format!("of the interaction of {}", all(more)),
+    };
+    format!("The readings of {} that there are do not allow a test {over}.", subject.measure)
 }
 
 #[cfg(test)]
@@ -53,7 +77,7 @@ mod tests {
     fn said(rows: &[[Option<f64>; 3]]) -> String {
         let design = OneWithin::from_rows(rows).unwrap();
         let result = repeated_measures(&design, &Settings::default());
-        effect(&Subject { measure: "Grip strength", over: "visits", alpha: 0.05 }, &result.effect.unwrap())
+        effect(&Subject { measure: "Grip strength", factors: &[VISIT], confidence: 0.95 }, &result.effect.unwrap())
     }
 
     #[test]
