@@ -18,6 +18,7 @@ pub mod moment;
 pub mod output;
 pub mod report;
 pub mod simulate;
+pub mod steps;
 pub mod study;
 pub mod took_part;
 

@@ -8,6 +8,7 @@ use std::fmt::Write as _;
 use revisant_analysis::anova::Band;
 
 use super::analysis::Analysed;
+use super::differences;
 use super::number::{fixed, percent, plain};
 use super::text::{clean, count, wrap};
 use crate::dataset::{Row, VISIT};
@@ -28,6 +29,9 @@ const SENTENCE_COLUMNS: usize = 100;
 
 /// The picture as an SVG document.
 pub fn profiles(analysed: &Analysed<'_>) -> String {
+    if let Outcome::Agreement(agreeing) = &analysed.outcome {
+        return differences::picture(analysed, agreeing);
+    }
     let foot = foot(analysed);
     let height = TOP + PLOT_HEIGHT + UNDER + LINE_HEIGHT * (foot.len() as f64 + 1.0);
     let mut svg = head(analysed, height);
@@ -65,7 +69,7 @@ pub fn escape(text: &str) -> String {
     escaped
 }
 
-fn text(svg: &mut String, (x, y): (f64, f64), anchor: &str, size: u32, words: &str) {
+pub(super) fn text(svg: &mut String, (x, y): (f64, f64), anchor: &str, size: u32, words: &str) {
     let words = escape(words);
     // Writing into a string cannot fail.
     let _ = writeln!(svg, r#"<text x="{x:.1}" y="{y:.1}" text-anchor="{anchor}" font-size="{size}">{words}</text>"#);
@@ -73,10 +77,14 @@ fn text(svg: &mut String, (x, y): (f64, f64), anchor: &str, size: u32, words: &s
 
 fn title(analysed: &Analysed<'_>) -> String {
     let who = count(analysed.used() as u64, "subject");
-    format!("{} ({}): profiles of {who}", analysed.label, analysed.unit)
+    let what = match analysed.outcome {
+        Outcome::Agreement(_) => "differences against means",
+        _ => "profiles",
+    };
+    format!("{} ({}): {what} of {who}", analysed.label, analysed.unit)
 }
 
-fn head(analysed: &Analysed<'_>, height: f64) -> String {
+pub(super) fn head(analysed: &Analysed<'_>, height: f64) -> String {
     let standing = &analysed.standing;
     let cut = standing.cut.as_ref().map_or(String::new(), |cut| format!(", cut {cut}"));
     let day = standing.moment.get(..10).unwrap_or_default();
@@ -103,7 +111,7 @@ fn head(analysed: &Analysed<'_>, height: f64) -> String {
 }
 
 /// What stands under the picture: who was left out and why, and the caution.
-fn foot(analysed: &Analysed<'_>) -> Vec<String> {
+pub(super) fn foot(analysed: &Analysed<'_>) -> Vec<String> {
     let left = analysed.data.left_out().len();
     let who = match left {
         0 => "Nobody was left out.".to_owned(),
@@ -122,6 +130,9 @@ fn foot(analysed: &Analysed<'_>) -> Vec<String> {
 fn band(analysed: &Analysed<'_>) -> Vec<Band> {
     match &analysed.outcome {
         Outcome::RepeatedMeasures(repeated) => repeated.bands().into_iter().next().unwrap_or_default(),
+        Outcome::Ranks(ranks) => ranks.bands(),
+        // Agreement has a picture of its own.
+        Outcome::Agreement(_) => vec![],
     }
 }
 
@@ -271,7 +282,7 @@ fn legend(svg: &mut String, analysed: &Analysed<'_>) {
     entry(svg, MEAN, &mean);
 }
 
-fn extent(values: &[f64]) -> Option<(f64, f64)> {
+pub(super) fn extent(values: &[f64]) -> Option<(f64, f64)> {
     let finite = values.iter().copied().filter(|value| value.is_finite());
     finite.fold(None, |found, value| match found {
         None => Some((value, value)),
@@ -280,13 +291,13 @@ fn extent(values: &[f64]) -> Option<(f64, f64)> {
 }
 
 /// With a little room at both ends.
-fn padded((low, high): (f64, f64)) -> (f64, f64) {
+pub(super) fn padded((low, high): (f64, f64)) -> (f64, f64) {
     let room = if high > low { (high - low) * 0.04 } else { 1.0 };
     (low - room, high + room)
 }
 
 /// A step of 1, 2 or 5 times a power of ten that makes four to eight steps of a span.
-fn nice_step(span: f64) -> f64 {
+pub(super) fn nice_step(span: f64) -> f64 {
     let rough = span / 6.0;
     let power = 10_f64.powf(rough.log10().floor());
     let factor = rough / power;
@@ -302,7 +313,7 @@ fn nice_step(span: f64) -> f64 {
     nice * power
 }
 
-fn decimals_of(step: f64) -> usize {
+pub(super) fn decimals_of(step: f64) -> usize {
     // The cast cannot go wrong: steps are finite.
     let size = step.log10().floor() as i32;
     usize::try_from((-size).clamp(0, 8)).unwrap_or(0)
