@@ -6,6 +6,7 @@
     reason = "a check that cannot go on says so by failing"
 )]
 
+mod analyses;
 mod corpus;
 mod cuts;
 mod errors;

@@ -5,7 +5,7 @@
 //! problems", Biometrika 51:313; Student 1908, "The probable error of a mean", Biometrika 6:1.
 
 use revisant_tests::chance::Chance;
-use revisant_tests::reference::{Case, Compared, find};
+use revisant_tests::reference::{Case, Compared, Row, find};
 use revisant_tests::site::Site;
 use serde_json::{Value as Json, json};
 
@@ -15,8 +15,8 @@ const ANALYSIS: &str = "[[analysis]]\ncode = \"over-visits\"\nmeasure = \"respon
 
 /// Every export, by path, in shuffled order.
 fn exports(case: &Case, seed: u64) -> Vec<(String, String)> {
-    let export = |row: &(String, String, String)| {
-        let path = format!("exports/rig/{}/{}.csv", case.code(&row.1), row.0);
+    let export = |row: &Row| {
+        let path = format!("exports/rig/{}/{}.csv", case.code(&row.visit), row.subject);
         (path, case.export(std::slice::from_ref(row)))
     };
     let mut exports: Vec<(String, String)> = case.rows.iter().map(export).collect();

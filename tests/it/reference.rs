@@ -69,6 +69,16 @@ cases! { decomposition:
     zero_resid_5x3 in "repeated_measures"
 }
 
+cases! { several:
+    md12_within_within in "factorial"
+    mixed_balanced_3x6x4 in "factorial"
+    mixed_two_times in "factorial"
+    obk_mixed_treatment in "factorial"
+    obk_phase_hour in "factorial"
+    obk_two_between in "factorial"
+    orthodont_mixed in "factorial"
+}
+
 cases! { pairs:
     missing_pairwise_8x4 in "contrasts"
     orthodont_boys_8_14 in "contrasts"
@@ -87,7 +97,7 @@ fn decomposition(case: &Case) -> Compared<'_> {
     compared.exactly("subjects left out", &json!(left_out), &case.config["dropped_subjects"]);
     means(&mut compared, case, &result);
     parts(&mut compared, case, &result);
-    effect(&mut compared, case, find(&result["effects"], &[("source", "visit")]));
+    effect(&mut compared, &case.factor, "residual", find(&result["effects"], &[("source", "visit")]));
     unlinked(&mut compared, case, &result);
     compared
 }
@@ -129,15 +139,16 @@ fn parts(compared: &mut Compared<'_>, case: &Case, result: &Json) {
     }
 }
 
-fn effect(compared: &mut Compared<'_>, case: &Case, effect: &Json) {
-    let key = |name: &str| format!("{}.{name}", case.factor);
+fn effect(compared: &mut Compared<'_>, prefix: &str, error: &str, effect: &Json) {
+    let case = compared.case;
+    let key = |name: &str| format!("{prefix}.{name}");
     let number = |name: &str| case.value(&key(name)).and_then(Json::as_f64);
     // An F that is infinite or undefined is null; its p may be 0 or null.
     let no_f = case.value(&key("F")).is_some_and(Json::is_string);
     for (name, pointer) in EFFECT {
         compared.key_or_null(&key(name), at(effect, pointer), no_f && name == "p");
     }
-    compared.exactly("error", &effect["error"], &json!("residual"));
+    compared.exactly("error", &effect["error"], &json!(error));
     for (name, field) in CORRECTED {
         if let (Some(epsilon), Some(df), Some(error_df)) = (number(&format!("eps_{name}")), number("df"), number("dfe"))
         {
@@ -155,6 +166,48 @@ fn effect(compared: &mut Compared<'_>, case: &Case, effect: &Json) {
         compared.exactly("Mauchly's W", at(effect, "/mauchly/w"), &Json::Null);
         compared.exactly("Mauchly's p", at(effect, "/mauchly/p"), &Json::Null);
     }
+}
+
+/// Every effect of several factors, with sums of squares of both types where the case has them.
+fn several(case: &Case) -> Compared<'_> {
+    let between: Vec<&String> = case.between.iter().map(|(name, _)| name).collect();
+    let within: Vec<&str> = ["visit"].into_iter().chain(case.conditions.iter().map(|it| it.0.as_str())).collect();
+    let analysis = |sums: &str| {
+        format!(
+            "[[analysis]]\ncode = \"{sums}\"\nmeasure = \"response\"\nmethod = \"repeated-measures\"\n\
+             within = {within:?}\nbetween = {between:?}\nsums = \"{sums}\"\n\n"
+        )
+    };
+    let kinds = ["type-3", "type-2"];
+    let site = case.collected(PROGRAMS, &kinds.map(analysis).concat());
+    let mut compared = Compared::new(case);
+    for sums in kinds {
+        let result = site.json(&["analyse", sums]);
+        common(&mut compared, case, &result);
+        compared.exactly("subjects used", &result["subjects"]["used"], &case.config["n_subjects_used"]);
+        let type_2 = sums == "type-2";
+        for prefix in case.prefixes().into_iter().filter(|prefix| prefix.ends_with(".type2") == type_2) {
+            let (source, error) = source_of(case, &prefix);
+            effect(&mut compared, &prefix, &error, find(&result["effects"], &[("source", &source)]));
+        }
+        let subject = find(&result["decomposition"], &[("source", "subject")]);
+        for field in ["ss", "df"] {
+            compared.key(&format!("subject_error.{field}"), &subject[field]);
+        }
+    }
+    compared
+}
+
+/// What an effect of the case and its error are called: between factors first, each kind in the order of the plan.
+fn source_of(case: &Case, prefix: &str) -> (String, String) {
+    let name = prefix.split('.').next().unwrap_or_default();
+    let has = |factor: &str| name.split(':').any(|part| part == factor);
+    let mut within: Vec<&str> = if has(&case.factor) { vec!["visit"] } else { vec![] };
+    within.extend(case.conditions.iter().map(|it| it.0.as_str()).filter(|name| has(name)));
+    let between = case.between.iter().map(|it| it.0.as_str()).filter(|name| has(name));
+    let source: Vec<&str> = between.chain(within.iter().copied()).collect();
+    within.push("subject");
+    (source.join(":"), within.join(":"))
 }
 
 /// What the same readings would have given if nobody had known who was who.

@@ -18,16 +18,35 @@ pub struct Case {
     pub name: String,
     /// Visits in order: the code in the plan, the label as exported, the day.
     pub visits: Vec<(String, String, u64)>,
-    /// Subject, label of the visit, value as written; missing ones are absent.
-    pub rows: Vec<(String, String, String)>,
+    /// The readings; missing ones are absent.
+    pub rows: Vec<Row>,
     /// All subjects, in the order of the table.
     pub subjects: Vec<String>,
-    /// The factor's name in the keys of `expected`.
+    /// By subject: the level of each between factor.
+    pub groups: Vec<Vec<String>>,
+    /// The first within factor's name in the keys of `expected`; its levels are the visits.
     pub factor: String,
+    /// The other within factors and their levels: conditions of the measure.
+    pub conditions: Vec<(String, Vec<String>)>,
+    /// The between factors and their levels: attributes of the subjects.
+    pub between: Vec<(String, Vec<String>)>,
     /// The case's own settings.
     pub config: Json,
     /// What must come out, by key.
     pub expected: Json,
+}
+
+/// One reading.
+#[derive(Debug, Clone)]
+pub struct Row {
+    /// Whose.
+    pub subject: String,
+    /// The label of the visit.
+    pub visit: String,
+    /// The level of each condition.
+    pub conditions: Vec<String>,
+    /// As written.
+    pub value: String,
 }
 
 /// A day before the first visit of every case; a Monday.
@@ -59,11 +78,23 @@ impl Case {
             let label = level.as_str().expect("a level");
             (slug(&format!("{factor}-{label}")), label.to_owned(), day)
         });
+        let names = |kind: &str| {
+            let names = columns[kind].as_array().into_iter().flatten();
+            names.map(|name| name.as_str().expect("a factor").to_owned()).collect::<Vec<_>>()
+        };
+        let (within, between) = (names("within"), names("between"));
+        let condition = |name: &String| {
+            let levels = json["config"]["within_levels"][name].as_array().expect("levels");
+            (name.clone(), levels.iter().map(|level| level.as_str().expect("a level").to_owned()).collect())
+        };
         let mut case = Self {
             name: name.to_owned(),
             visits: visits.collect(),
             rows: Vec::new(),
             subjects: Vec::new(),
+            groups: Vec::new(),
+            conditions: within.iter().skip(1).map(condition).collect(),
+            between: between.iter().map(|name| (name.clone(), Vec::new())).collect(),
             config: json["config"].clone(),
             expected: json["expected"].clone(),
             factor: factor.clone(),
@@ -74,13 +105,27 @@ impl Case {
         let column = |name: &Json| header.iter().position(|it| name == it).expect("a column");
         let (subject, level) = (column(&columns["subject"]), column(&columns["within"][0]));
         let value = column(&columns["value"]);
+        let places = |names: &[String]| names.iter().map(|name| column(&Json::from(name.as_str()))).collect::<Vec<_>>();
+        let (conditions, groups) = (places(&within[1..]), places(&between));
         for line in lines {
             let cells: Vec<&str> = line.split(',').collect();
+            let owned = |places: &[usize]| places.iter().map(|at| cells[*at].to_owned()).collect::<Vec<_>>();
             if !case.subjects.iter().any(|known| known == cells[subject]) {
                 case.subjects.push(cells[subject].to_owned());
+                case.groups.push(owned(&groups));
+            }
+            for ((_, levels), level) in case.between.iter_mut().zip(owned(&groups)) {
+                if !levels.contains(&level) {
+                    levels.push(level);
+                }
             }
             if !cells[value].is_empty() {
-                case.rows.push((cells[subject].to_owned(), cells[level].to_owned(), cells[value].to_owned()));
+                case.rows.push(Row {
+                    subject: cells[subject].to_owned(),
+                    visit: cells[level].to_owned(),
+                    conditions: owned(&conditions),
+                    value: cells[value].to_owned(),
+                });
             }
         }
         case
@@ -91,6 +136,17 @@ impl Case {
         self.expected.get(key).map(|entry| &entry["v"])
     }
 
+    /// The effects in the keys of `expected`, each once.
+    pub fn prefixes(&self) -> Vec<String> {
+        let keys = self.expected.as_object().into_iter().flatten().map(|(key, _)| key);
+        let mut prefixes: Vec<String> =
+            keys.filter_map(|key| key.rsplit_once('.')).map(|(prefix, _)| prefix.to_owned()).collect();
+        prefixes.sort_unstable();
+        prefixes.dedup();
+        prefixes.retain(|prefix| prefix != "subject_error");
+        prefixes
+    }
+
     /// The plan code of a level.
     pub fn code(&self, level: &str) -> &str {
         let (code, ..) = self.visits.iter().find(|(_, label, _)| label == level).expect("a level of the case");
@@ -99,10 +155,19 @@ impl Case {
 
     /// The plan, with these analyses at its end.
     pub fn plan(&self, analyses: &str) -> String {
-        let mut plan = "[study]\ncode = \"REF\"\ntitle = \"Reference values\"\ntime_zone = \"Europe/London\"\n\n\
-             [subject]\npattern = '[A-Za-z0-9]+'\nnormalise = [\"trim\"]\nanchor = \"enrolment\"\n\n\
-             [[measure]]\ncode = \"response\"\nunit = \"mm\"\n"
-            .to_owned();
+        let table = |factors: &[(String, Vec<String>)]| {
+            let each = factors.iter().map(|(name, levels)| format!("{name} = {levels:?}"));
+            format!("{{ {} }}", each.collect::<Vec<_>>().join(", "))
+        };
+        let mut plan = format!(
+            "[study]\ncode = \"REF\"\ntitle = \"Reference values\"\ntime_zone = \"Europe/London\"\n\n\
+             [subject]\npattern = '[A-Za-z0-9]+'\nnormalise = [\"trim\"]\nanchor = \"enrolment\"\nattributes = {}\n\n\
+             [[measure]]\ncode = \"response\"\nunit = \"mm\"\nconditions = {}\n",
+            table(&self.between),
+            table(&self.conditions)
+        );
+        let condition = self.conditions.iter().map(|(name, _)| format!("{name} = {{ column = \"{name}\" }}"));
+        let condition = format!("condition = {{ {} }}", condition.collect::<Vec<_>>().join(", "));
         let mut map = Vec::new();
         for (code, label, day) in &self.visits {
             plan.push_str(&format!("\n[[visit]]\ncode = \"{code}\"\nlabel = \"{label}\"\nday = {day}\n"));
@@ -113,7 +178,7 @@ impl Case {
              [instrument.reader]\nformat = \"delimited\"\ndelimiter = \",\"\nheader = {{ row = 1 }}\n\
              subject = {{ column = \"Subject\" }}\ntaken_at = {{ column = \"Date\", format = \"iso\" }}\n\
              visit = {{ column = \"Visit\", map = {{ {} }} }}\n\n\
-             [[instrument.reader.value]]\nmeasure = \"response\"\ncolumn = \"Value\"\n\n{analyses}",
+             [[instrument.reader.value]]\nmeasure = \"response\"\ncolumn = \"Value\"\n{condition}\n\n{analyses}",
             map.join(", ")
         ));
         plan
@@ -121,17 +186,23 @@ impl Case {
 
     /// The roster: everybody, enrolled on day 0.
     pub fn roster(&self) -> String {
-        let line = |subject: &String| format!("{subject},{},\n", day_0());
-        let lines: String = self.subjects.iter().map(line).collect();
-        format!("subject,enrolled,withdrawn\n{lines}")
+        let line = |(subject, groups): (&String, &Vec<String>)| {
+            let groups: String = groups.iter().map(|level| format!(",{level}")).collect();
+            format!("{subject},{},{groups}\n", day_0())
+        };
+        let lines: String = self.subjects.iter().zip(&self.groups).map(line).collect();
+        let names: String = self.between.iter().map(|(name, _)| format!(",{name}")).collect();
+        format!("subject,enrolled,withdrawn{names}\n{lines}")
     }
 
     /// Rows as an export.
-    pub fn export(&self, rows: &[(String, String, String)]) -> String {
-        let mut export = "Subject,Date,Visit,Value\n".to_owned();
-        for (subject, level, value) in rows {
-            let (.., day) = self.visits.iter().find(|(_, label, _)| label == level).expect("a level of the case");
-            export.push_str(&format!("{subject},{},{level},{value}\n", day_0() + Days::new(*day)));
+    pub fn export(&self, rows: &[Row]) -> String {
+        let names: String = self.conditions.iter().map(|(name, _)| format!("{name},")).collect();
+        let mut export = format!("Subject,Date,Visit,{names}Value\n");
+        for Row { subject, visit, conditions, value } in rows {
+            let (.., day) = self.visits.iter().find(|(_, label, _)| label == visit).expect("a level of the case");
+            let conditions: String = conditions.iter().map(|level| format!("{level},")).collect();
+            export.push_str(&format!("{subject},{},{visit},{conditions}{value}\n", day_0() + Days::new(*day)));
         }
         export
     }
@@ -155,7 +226,8 @@ fn slug(text: &str) -> String {
 /// Compared values of one case, with every difference in words.
 #[derive(Debug)]
 pub struct Compared<'c> {
-    case: &'c Case,
+    /// The case.
+    pub case: &'c Case,
     /// How many values were compared.
     pub values: usize,
     /// What differs.

@@ -33,10 +33,10 @@ pub fn run(context: &mut Context<'_, '_>, args: &Analyse) -> Done {
     let planned = Planned::find(&basis, &plan_now, &version_now, &args.code)?;
     refuse([&basis.plan, &plan_now], planned.analysis)?;
     let analysed = analyse(context, &records, &then, &basis, &planned, args)?;
-    let drawing = args.plot.as_deref().map(|file| (file, plot::profiles(&analysed)));
+    let drawing = args.plot.as_deref().map(|file| picture(file, &analysed).map(|bytes| (file, bytes))).transpose()?;
     remember(context, &mut records, &analysed)?;
-    if let Some((file, svg)) = drawing {
-        draw(file, &svg)?;
+    if let Some((file, bytes)) = drawing {
+        draw(file, &bytes)?;
     }
     match context.out.json {
         true => context.out.json(&analysed.json())?,
@@ -183,9 +183,23 @@ fn remember(context: &Context<'_, '_>, records: &mut Records, analysed: &Analyse
     })
 }
 
-fn draw(file: &Path, svg: &str) -> Result<(), Failure> {
+/// As the ending of the file's name asks.
+fn picture(file: &Path, analysed: &Analysed<'_>) -> Result<Vec<u8>, Failure> {
     let shown = file.display().to_string();
-    std::fs::write(file, svg).map_err(|error| {
+    let ending = file.extension().and_then(|ending| ending.to_str()).unwrap_or_default();
+    match ending.to_ascii_lowercase().as_str() {
+        "svg" => Ok(plot::svg(analysed).into_bytes()),
+        "png" => plot::png(&plot::svg(analysed))
+            .map_err(|error| Failure::new("plot", format!("the plot cannot be drawn as PNG ({error})")).at(shown)),
+        _ => Err(Failure::usage(format!("{shown} is neither an SVG nor a PNG file by its name"))
+            .at(shown)
+            .then("end its name in .svg or .png")),
+    }
+}
+
+fn draw(file: &Path, bytes: &[u8]) -> Result<(), Failure> {
+    let shown = file.display().to_string();
+    std::fs::write(file, bytes).map_err(|error| {
         Failure::new("file", format!("the plot {shown} cannot be written ({error})")).at(shown.clone())
     })
 }

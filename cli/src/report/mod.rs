@@ -1,7 +1,6 @@
 //! Results to tables, sentences, plots and JSON: the only place that formats numbers and dates.
 
 pub mod analysis;
-pub mod differences;
 pub mod json;
 pub mod number;
 pub mod plot;

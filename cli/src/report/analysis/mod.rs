@@ -176,9 +176,14 @@ fn interval(interval: Option<Interval>) -> Json {
 // ---- words for both ----
 
 impl Analysed<'_> {
+    /// What was found, one sentence each.
+    pub fn sentences(&self) -> Vec<String> {
+        self.findings().sentences()
+    }
+
     /// What was found, as one text.
     pub fn sentence(&self) -> String {
-        self.findings().sentences().join(" ")
+        self.sentences().join(" ")
     }
 
     /// `visits`, or `visits and hand by arm`.

@@ -8,43 +8,41 @@ use std::fmt::Write as _;
 use revisant_analysis::Interval;
 use revisant_analysis::agreement::{Limits, Point};
 
-use super::analysis::Analysed;
-use super::number::{decimals_for, fixed, percent, plain};
-use super::plot::{decimals_of, escape, extent, foot, head, nice_step, padded, text};
+use super::escape;
+use super::frame::{decimals_of, extent, nice_step, padded};
+use super::sheet::{LEFT, LINE_HEIGHT, Sheet, WIDTH, text};
 use crate::method::Agreeing;
+use crate::report::analysis::Analysed;
+use crate::report::number::{decimals_for, fixed, percent, plain};
+use crate::report::text::{clip, count};
 
-const WIDTH: f64 = 760.0;
-const LEFT: f64 = 68.0;
 /// Room for the names of lines.
 const RIGHT: f64 = 132.0;
-const TOP: f64 = 110.0;
 const PANEL: f64 = 300.0;
 /// From a panel's axis to the next panel: ticks and the axis's name.
 const UNDER: f64 = 62.0;
-const LINE_HEIGHT: f64 = 15.0;
 /// A picture of more panels than this is too long to be read.
 const MOST_PANELS: usize = 6;
 
 /// The picture as an SVG document.
-pub fn picture(analysed: &Analysed<'_>, found: &Agreeing) -> String {
+pub(super) fn draw(analysed: &Analysed<'_>, found: &Agreeing) -> String {
+    let who = count(analysed.data.subjects().len() as u64, "subject");
+    let title = format!("{} ({}): differences against means of {who}", analysed.label, analysed.unit);
+    let sheet = Sheet::of(analysed, title);
     let pairs = found.result.limits.get(..MOST_PANELS.min(found.result.limits.len())).unwrap_or_default();
-    let mut lines = vec![legend(analysed)];
-    lines.extend(left_aside(analysed, found));
-    lines.extend(foot(analysed));
-    let panels = TOP + pairs.len().max(1) as f64 * (PANEL + UNDER);
-    let mut svg = head(analysed, panels + LINE_HEIGHT * (lines.len() as f64 + 1.0));
+    let mut svg = String::new();
     if pairs.is_empty() {
-        text(&mut svg, (WIDTH / 2.0, TOP + PANEL / 2.0), "middle", 14, "There are no pairs of levels.");
+        text(&mut svg, (WIDTH / 2.0, sheet.top + PANEL / 2.0), "middle", 14, "There are no pairs of levels.");
     }
     for (at, pair) in pairs.iter().enumerate() {
-        let top = TOP + at as f64 * (PANEL + UNDER);
-        panel(&mut svg, analysed, found, pair, top);
+        panel(&mut svg, analysed, found, pair, sheet.top + at as f64 * (PANEL + UNDER));
     }
-    for (at, line) in lines.iter().enumerate() {
-        text(&mut svg, (LEFT, panels + LINE_HEIGHT * (at as f64 + 1.0) - 6.0), "start", 11, line);
+    let mut bottom = sheet.top + pairs.len().max(1) as f64 * (PANEL + UNDER);
+    for line in [Some(legend(analysed)), left_aside(analysed, found)].into_iter().flatten() {
+        text(&mut svg, (LEFT, bottom), "start", 11, &line);
+        bottom += LINE_HEIGHT;
     }
-    svg.push_str("</svg>\n");
-    svg
+    sheet.around(&svg, bottom)
 }
 
 fn legend(analysed: &Analysed<'_>) -> String {
@@ -58,7 +56,7 @@ fn legend(analysed: &Analysed<'_>) -> String {
 fn left_aside(analysed: &Analysed<'_>, found: &Agreeing) -> Option<String> {
     let more: Vec<String> =
         found.result.limits.iter().skip(MOST_PANELS).map(|pair| difference(analysed, pair)).collect();
-    (!more.is_empty()).then(|| format!("Not drawn: {}.", super::text::clip(&more.join(", "), 96)))
+    (!more.is_empty()).then(|| format!("Not drawn: {}.", clip(&more.join(", "), 96)))
 }
 
 /// `week-4 − baseline`
