@@ -9,7 +9,7 @@ use revisant_analysis::{Interval, Note};
 use revisant_schema::plan::AgreeOver;
 use serde_json::{Map, Value as Json, json};
 
-use super::{Analysed, interval};
+use super::{Analysed, PairNotes, interval};
 use crate::dataset::Factor;
 use crate::method::Agreeing;
 use crate::report::number::{self, df, fixed, fixed_or_dash, p_or_dash, percent, plain, share};
@@ -33,6 +33,12 @@ impl<'a> Findings<'a> {
 
     fn level(&self, level: usize) -> &'a str {
         self.factor().and_then(|factor| factor.levels.get(level)).map_or("", String::as_str)
+    }
+
+    /// `week-4`, `replicate 2`
+    fn named(&self, level: usize) -> String {
+        let code = self.factor().filter(|_| self.about.data.repeats_at.is_some()).map(|factor| factor.code.as_str());
+        code.map_or_else(|| self.level(level).to_owned(), |code| format!("{code} {}", self.level(level)))
     }
 
     fn pair(&self, level: usize, against: usize) -> String {
@@ -101,7 +107,7 @@ impl super::Findings for Findings<'_> {
                 count(it.subjects as u64, "subject")
             )
         });
-        more.into_iter().chain(self.one_session()).collect()
+        more.into_iter().collect()
     }
 
     fn checks(&self, _: usize) -> Vec<String> {
@@ -109,7 +115,7 @@ impl super::Findings for Findings<'_> {
     }
 
     fn notes(&self) -> Vec<String> {
-        let mut notes: Vec<String> = Vec::new();
+        let mut notes: Vec<String> = self.one_session().into_iter().collect();
         let undefined: Vec<String> = self.found.result.notes.iter().filter_map(undefined_form).collect();
         if !undefined.is_empty() {
             notes.push(format!(
@@ -118,13 +124,18 @@ impl super::Findings for Findings<'_> {
                 if undefined.len() == 1 { "its" } else { "their" }
             ));
         }
-        let others = self.found.result.notes.iter().filter(|note| undefined_form(note).is_none());
-        for note in others.map(|note| self.note(note)) {
-            if !notes.contains(&note) {
-                notes.push(note);
+        let mut pairs = PairNotes::default();
+        for note in self.found.result.notes.iter().filter(|note| undefined_form(note).is_none()) {
+            match note {
+                Note::TooFewForContrast { contrast: ContrastKind::Pairwise { level, against }, subjects } => {
+                    let who = if *subjects == 0 { "nobody has" } else { "only one subject has" };
+                    pairs.add(self.pair(*level, *against), format!("{who} both, so there are no limits"));
+                }
+                note => notes.push(self.note(note)),
             }
         }
-        notes
+        notes.dedup();
+        notes.into_iter().chain(pairs.said()).collect()
     }
 }
 
@@ -222,9 +233,9 @@ impl Findings<'_> {
         let (bias, lower, upper) = (pair.bias?, pair.lower?, pair.upper?);
         let decimals = self.decimals();
         Some(format!(
-            "{} differs from {} by {} on average, and 95 in 100 such differences lie between {} and {}.",
-            self.level(pair.level),
-            self.level(pair.against),
+            "On average {} differs from {} by {}, and 95 in 100 such differences lie between {} and {}.",
+            self.named(pair.level),
+            self.named(pair.against),
             fixed(bias, decimals),
             fixed(lower, decimals),
             self.unit(upper, decimals)
@@ -329,16 +340,6 @@ impl Findings<'_> {
             }
             Note::OneSubject => "only one subject is complete, so there are no intraclass correlations".to_owned(),
             Note::OneLevel => "there is only one level, so there is nothing to agree with".to_owned(),
-            Note::TooFewForContrast { contrast, subjects } => {
-                let who = count(*subjects as u64, "subject");
-                let pair = match contrast {
-                    ContrastKind::Pairwise { level, against } | ContrastKind::EachVsFirst { level, against } => {
-                        self.pair(*level, *against)
-                    }
-                    ContrastKind::Polynomial { .. } => contrast.to_string(),
-                };
-                format!("{pair}: {who} with both, so there are no limits")
-            }
             other => other.to_string(),
         }
     }

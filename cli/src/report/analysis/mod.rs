@@ -241,6 +241,27 @@ impl Analysed<'_> {
     }
 }
 
+/// What is to be noted about pairs of levels: once, with all pairs that it is about.
+#[derive(Default)]
+struct PairNotes(Vec<(String, Vec<String>)>);
+
+impl PairNotes {
+    fn add(&mut self, pair: String, text: String) {
+        match self.0.iter_mut().find(|(known, _)| *known == text) {
+            Some((_, pairs)) if pairs.contains(&pair) => {}
+            Some((_, pairs)) => pairs.push(pair),
+            None => self.0.push((text, vec![pair])),
+        }
+    }
+
+    fn said(self) -> impl Iterator<Item = String> {
+        self.0.into_iter().map(|(text, pairs)| match pairs.as_slice() {
+            [pair] => format!("the pair {pair}: {text}"),
+            pairs => format!("the pairs {}: {text}", list(pairs)),
+        })
+    }
+}
+
 fn sentence_case(text: &str) -> String {
     let mut chars = text.chars();
     let first = chars.next().map(|c| c.to_uppercase().to_string()).unwrap_or_default();

@@ -7,13 +7,13 @@ use revisant_analysis::contrasts::ContrastKind;
 use revisant_analysis::ranks::{Friedman, SignedRank};
 use serde_json::{Map, Value as Json, json};
 
-use super::{Analysed, interval};
+use super::{Analysed, PairNotes, interval};
 use crate::dataset::Factor;
 use crate::method::Ranks;
 use crate::report::number::{self, df, fixed_or_dash, p_or_dash, p_said, share};
 use crate::report::sentence;
 use crate::report::table::{Left, Right, Table};
-use crate::report::text::wrap;
+use crate::report::text::{count, wrap};
 
 /// An analysis by ranks with what stands beside it.
 pub(super) struct Findings<'a> {
@@ -72,7 +72,7 @@ impl super::Findings for Findings<'_> {
         let mut parts = vec![self.cells_table().render(width)];
         if !self.found.result.contrasts.is_empty() {
             parts.push(self.pairs_table().render(width));
-            parts.push(wrap(&self.how(), width, ""));
+            parts.extend(self.how().map(|text| wrap(&text, width, "")));
         }
         parts
     }
@@ -94,13 +94,16 @@ impl super::Findings for Findings<'_> {
     }
 
     fn notes(&self) -> Vec<String> {
+        let mut pairs = PairNotes::default();
         let mut notes: Vec<String> = Vec::new();
-        for note in self.found.result.notes.iter().map(|note| self.note(note)) {
-            if !notes.contains(&note) {
-                notes.push(note);
+        for note in &self.found.result.notes {
+            match self.pair_note(note) {
+                Some((kind, text)) => pairs.add(self.pair(kind), text),
+                None => notes.push(self.note(note)),
             }
         }
-        notes
+        notes.dedup();
+        notes.into_iter().chain(pairs.said()).collect()
     }
 }
 
@@ -232,18 +235,19 @@ impl Findings<'_> {
         table
     }
 
-    /// What the columns of the pairs are.
-    fn how(&self) -> String {
+    /// What the columns of the pairs are, where there is something in them.
+    fn how(&self) -> Option<String> {
         let exact = |exact: bool| self.found.result.contrasts.iter().any(|pair| pair.exact == Some(exact));
         let p = match (exact(true), exact(false)) {
             (true, true) => "p is exact up to 50 differences other than zero, and above by the normal distribution",
             (false, true) => "p is by the normal distribution, corrected for ties and continuity",
-            _ => "p is exact",
+            (true, false) => "p is exact",
+            (false, false) => return None,
         };
-        format!(
+        Some(format!(
             "Pairs by Wilcoxon's signed ranks, over all subjects that have both: the estimate is Hodges and Lehmann's, \
              without differences of zero; W+ is the sum of the positive ranks; {p}."
-        )
+        ))
     }
 
     fn note(&self, note: &Note) -> String {
@@ -252,20 +256,30 @@ impl Findings<'_> {
                 "no subject has a reading at every level, so there is no test over all".to_owned()
             }
             Note::OneSubject => "only one subject is complete, so nothing tells a level from chance".to_owned(),
-            Note::NoDifference { contrast } => {
-                format!("{}: all differences are zero, so there is nothing to rank", self.pair(*contrast))
-            }
-            Note::TooFewForContrast { contrast, .. } => format!("{}: nobody has both", self.pair(*contrast)),
-            Note::ConfidenceNotReached { contrast, differences } => format!(
-                "{}: with {differences} differences other than zero no interval has the confidence asked for; the widest \
-                 is given",
-                self.pair(*contrast)
-            ),
             Note::OnlyPairsByRanks => {
                 "an analysis by ranks compares pairs of levels only; the other contrasts of the plan are not made"
                     .to_owned()
             }
             other => other.to_string(),
+        }
+    }
+
+    /// A note on one pair.
+    fn pair_note(&self, note: &Note) -> Option<(ContrastKind, String)> {
+        match note {
+            Note::NoDifference { contrast } => {
+                Some((*contrast, "all differences are zero, so there is nothing to rank".to_owned()))
+            }
+            Note::TooFewForContrast { contrast, .. } => Some((*contrast, "nobody has both".to_owned())),
+            Note::ConfidenceNotReached { contrast, differences } => {
+                let few = count(*differences as u64, "difference");
+                let text = format!(
+                    "with {few} other than zero even the widest interval, which is given, has less \
+                                    confidence than was asked for"
+                );
+                Some((*contrast, text))
+            }
+            _ => None,
         }
     }
 }
