@@ -26,6 +26,8 @@ const LOW: f64 = 190.0;
 /// From the bottom of a panel to the top of the next: labels, and the next one's title.
 const BETWEEN: f64 = 78.0;
 const GAP: f64 = 16.0;
+/// How many lines of means a frame holds.
+const SERIES_IN_A_FRAME: usize = 6;
 
 /// The picture as an SVG document.
 pub(super) fn draw(analysed: &Analysed<'_>, bands: &[Vec<Band>]) -> String {
@@ -48,6 +50,8 @@ pub(super) fn draw(analysed: &Analysed<'_>, bands: &[Vec<Band>]) -> String {
 struct Panel {
     title: String,
     group: Vec<usize>,
+    /// What its group, and its other within levels, are called.
+    named: (String, String),
     /// By level on the axis: which cell.
     cells: Vec<usize>,
     bands: Vec<Band>,
@@ -84,10 +88,10 @@ impl<'a> Picture<'a> {
                 let own: Vec<usize> =
                     cells.iter().enumerate().filter(|(_, cell)| without(cell, x) == *other).map(|(at, _)| at).collect();
                 let bands = own.iter().filter_map(|cell| bands.get(*cell).copied()).collect();
-                let named = data.between.iter().zip(&group).chain(factors.iter().copied().zip(other));
-                let title: Vec<&str> =
-                    named.filter_map(|(factor, level)| factor.labels.get(*level).map(String::as_str)).collect();
-                panels.push(Panel { title: title.join(", "), group: group.clone(), cells: own, bands });
+                let named = (levels(data.between.iter().zip(&group)), levels(factors.iter().copied().zip(other)));
+                let title = [named.0.as_str(), named.1.as_str()].into_iter().filter(|name| !name.is_empty());
+                let title = title.collect::<Vec<_>>().join(", ");
+                panels.push(Panel { title, group: group.clone(), named, cells: own, bands });
             }
         }
         let level = plain(percent(analysed.analysis.confidence));
@@ -108,24 +112,17 @@ impl<'a> Picture<'a> {
 
     /// A panel for each, then their means together; where it ends.
     fn several(&self, svg: &mut String, top: f64, scales: &Scales) -> f64 {
-        let across = match self.panels.len() {
-            2 | 4 => 2,
-            _ => 3,
-        };
-        let width = (INSIDE - GAP * (across as f64 - 1.0)) / across as f64;
-        let mut bottom = top;
+        let grid = Grid::of(self.panels.len(), top);
         for (at, panel) in self.panels.iter().enumerate() {
-            let (row, column) = (at / across, at % across);
-            let top = top + 20.0 + row as f64 * (LOW + BETWEEN);
-            let area = Area { left: LEFT + column as f64 * (width + GAP), top, width, height: LOW };
-            let frame = Frame { area, scales };
-            frame.y_axis(svg, column == 0);
+            let frame = Frame { area: grid.area(at), scales };
+            frame.y_axis(svg, grid.first(at));
             frame.x_axis(svg, false);
             self.panel(svg, frame, panel);
             let who = self.rows(panel).filter(|row| row.complete()).count();
-            text(svg, (area.left, area.top - 6.0), "start", 12, &format!("{} (n = {who})", panel.title));
-            bottom = area.top + LOW + BETWEEN - 22.0;
+            let title = format!("{} (n = {who})", panel.title);
+            text(svg, (frame.area.left, frame.area.top - 6.0), "start", 12, &title);
         }
+        let bottom = grid.bottom();
         self.legend(svg, bottom);
         self.together(svg, bottom + 46.0, scales)
     }
@@ -151,31 +148,36 @@ impl<'a> Picture<'a> {
         mean(svg, frame, &panel.bands);
     }
 
-    /// The means of all panels in one frame, told apart by dash and mark; where it ends.
+    /// The means of the panels in one frame, told apart by dash and mark; more than can be told apart in a frame for each
+    /// combination of the other within factors. Where it ends.
     fn together(&self, svg: &mut String, top: f64, scales: &Scales) -> f64 {
         text(svg, (LEFT, top - 8.0), "start", 13, "Means together, with their within-subject bands");
-        let frame = Frame { area: Area { left: LEFT, top, width: INSIDE, height: TALL - 60.0 }, scales };
-        frame.y_axis(svg, true);
-        frame.x_axis(svg, true);
-        let base = top + frame.area.height;
-        let (mut x, mut y) = (LEFT, base + 88.0);
-        for (at, panel) in self.panels.iter().enumerate() {
-            series(svg, frame, &panel.bands, at, self.panels.len());
-            let wide = 56.0 + panel.title.chars().count() as f64 * 6.2;
-            if x > LEFT && x + wide > WIDTH - RIGHT {
-                (x, y) = (LEFT, y + 18.0);
+        let mut names: Vec<&str> = self.panels.iter().map(|panel| panel.named.0.as_str()).collect();
+        names.dedup();
+        if self.panels.len() <= SERIES_IN_A_FRAME || names.len() == self.panels.len() || names.len() < 2 {
+            let frame = Frame { area: Area { left: LEFT, top, width: INSIDE, height: TALL - 60.0 }, scales };
+            frame.y_axis(svg, true);
+            frame.x_axis(svg, true);
+            for (at, panel) in self.panels.iter().enumerate() {
+                series(svg, frame, &panel.bands, at, self.panels.len());
             }
-            let _ = writeln!(
-                svg,
-                r#"<line x1="{x:.1}" x2="{:.1}" y1="{y:.1}" y2="{y:.1}" {SERIES} stroke-dasharray="{}"/>"#,
-                x + 30.0,
-                dash(at)
-            );
-            mark(svg, (x + 15.0, y), at);
-            text(svg, (x + 36.0, y + 4.0), "start", 11, &panel.title);
-            x += wide;
+            let names: Vec<&str> = self.panels.iter().map(|panel| panel.title.as_str()).collect();
+            return marks(svg, top + frame.area.height + 88.0, &names);
         }
-        y + 16.0
+        let others = self.panels.len() / names.len();
+        let grid = Grid::of(others, top);
+        for at in 0..others {
+            let frame = Frame { area: grid.area(at), scales };
+            frame.y_axis(svg, grid.first(at));
+            frame.x_axis(svg, false);
+            let own: Vec<&Panel> = self.panels.iter().skip(at).step_by(others).collect();
+            for (at, panel) in own.iter().enumerate() {
+                series(svg, frame, &panel.bands, at, own.len());
+            }
+            let title = own.first().map_or("", |panel| panel.named.1.as_str());
+            text(svg, (frame.area.left, frame.area.top - 6.0), "start", 12, title);
+        }
+        marks(svg, grid.bottom(), &names)
     }
 
     fn legend(&self, svg: &mut String, y: f64) {
@@ -192,6 +194,41 @@ impl<'a> Picture<'a> {
             entry(svg, INCOMPLETE, "one subject, left out");
         }
         entry(svg, MEAN, &self.mean);
+    }
+}
+
+/// `band, left`
+fn levels<'f>(named: impl Iterator<Item = (&'f Factor, &'f usize)>) -> String {
+    named.filter_map(|(factor, level)| factor.labels.get(*level).cloned()).collect::<Vec<_>>().join(", ")
+}
+
+/// Several frames below and beside one another.
+struct Grid {
+    across: usize,
+    frames: usize,
+    top: f64,
+}
+
+impl Grid {
+    fn of(frames: usize, top: f64) -> Self {
+        let across = if matches!(frames, 1 | 2 | 4) { 2 } else { 3 };
+        Self { across, frames, top: top + 20.0 }
+    }
+
+    fn area(&self, at: usize) -> Area {
+        let width = (INSIDE - GAP * (self.across as f64 - 1.0)) / self.across as f64;
+        let left = LEFT + (at % self.across) as f64 * (width + GAP);
+        Area { left, top: self.top + (at / self.across) as f64 * (LOW + BETWEEN), width, height: LOW }
+    }
+
+    /// Whether a frame stands first in its row.
+    fn first(&self, at: usize) -> bool {
+        at.is_multiple_of(self.across)
+    }
+
+    /// Below the labels of the last row.
+    fn bottom(&self) -> f64 {
+        self.top + self.frames.div_ceil(self.across) as f64 * (LOW + BETWEEN) - 22.0
     }
 }
 
@@ -267,6 +304,27 @@ fn series(svg: &mut String, frame: Frame<'_>, bands: &[Band], at: usize, of: usi
     for point in means {
         mark(svg, point, at);
     }
+}
+
+/// What each dash and mark is; where that ends.
+fn marks(svg: &mut String, top: f64, names: &[&str]) -> f64 {
+    let (mut x, mut y) = (LEFT, top);
+    for (at, name) in names.iter().enumerate() {
+        let wide = 56.0 + name.chars().count() as f64 * 6.2;
+        if x > LEFT && x + wide > WIDTH - RIGHT {
+            (x, y) = (LEFT, y + 18.0);
+        }
+        let _ = writeln!(
+            svg,
+            r#"<line x1="{x:.1}" x2="{:.1}" y1="{y:.1}" y2="{y:.1}" {SERIES} stroke-dasharray="{}"/>"#,
+            x + 30.0,
+            dash(at)
+        );
+        mark(svg, (x + 15.0, y), at);
+        text(svg, (x + 36.0, y + 4.0), "start", 11, name);
+        x += wide;
+    }
+    y + 16.0
 }
 
 /// With five marks and four dashes twenty lines can be told apart.
