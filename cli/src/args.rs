@@ -207,6 +207,22 @@ Example:
 
 JSON: see the README; \"subjects\", \"cells\", \"decomposition\", \"effects\", \"contrasts\", \"data_state\", …")]
     Analyse(Analyse),
+    /// Work out how many subjects the study needs, from what its plan assumes
+    #[command(after_help = "\
+Example:
+  revisant rehearse --size --effect arm:visit --runs 10000 --seed 7
+
+It needs [assume] in the plan, and neither a roster nor records. The power of an
+F test over complete subjects, by the non-central F with the assumed epsilon, is
+held against simulated studies that are analysed with the Greenhouse-Geisser
+correction. The same seed gives the same studies.
+JSON: {\"effect\", \"alpha\", \"visits\", \"groups\", \"assumed\", \"epsilon\",
+\"wanted\": {\"power\", \"enrolled\", \"enrolled_per_group\", \"complete\", \"per_group\",
+\"sizes\", \"formula\": {\"power\", \"noncentrality\", \"df\", \"error_df\", \"critical_f\"},
+\"simulation\": {\"runs\", \"seed\", \"rejected\", \"power\", \"ci\"} or null}, and in the same
+shape or null \"by_simulation\" (the number that simulated studies ask for, where
+it is another) and \"planned\" (enrolment's target); \"sentences\", \"notes\"}")]
+    Rehearse(Rehearse),
     /// Run an invented study on a fresh copy, to see all of this at work
     #[command(after_help = "\
 Example:
@@ -780,6 +796,49 @@ pub struct Analyse {
     /// Draw every subject's profile, and the means, into this file: SVG, or PNG if its name ends in .png
     #[arg(long, value_name = "FILE")]
     pub plot: Option<PathBuf>,
+}
+
+/// `rehearse`
+#[derive(Debug, Group)]
+pub struct Rehearse {
+    /// The number of subjects for the wanted power, and the power of the planned number
+    #[arg(long, conflicts_with_all = ["boundaries", "blinded"])]
+    pub size: bool,
+    /// The boundaries of the planned looks (not in this version)
+    #[arg(long, conflicts_with = "blinded")]
+    pub boundaries: bool,
+    /// The number of subjects by the blinded variance so far (not in this version)
+    #[arg(long)]
+    pub blinded: bool,
+    /// Which effect is to be shown; default: arm:visit, or visit in one group
+    #[arg(long, requires = "size")]
+    pub effect: Option<PlannedEffect>,
+    /// The error rate; default: what the analysis's confidence leaves, or 0.05
+    #[arg(long, value_name = "SHARE", requires = "size")]
+    pub alpha: Option<f64>,
+    /// The analysis of the plan whose visits count; default: all that [assume] speaks of
+    #[arg(long, value_name = "CODE", requires = "size")]
+    pub analysis: Option<String>,
+    /// How many studies are simulated; default: 4000, or fewer of very large ones
+    #[arg(long, value_name = "N", requires = "size", value_parser = clap::value_parser!(u32).range(1..=10_000_000))]
+    pub runs: Option<u32>,
+    /// Other studies, the same for the same number
+    #[arg(long, value_name = "N", requires = "size", default_value_t = 1)]
+    pub seed: u64,
+}
+
+/// An effect whose test is planned.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ValueEnum)]
+pub enum PlannedEffect {
+    /// Visits differ, averaged over arms
+    #[value(name = "visit")]
+    Visit,
+    /// Arms change differently over visits
+    #[value(name = "arm:visit")]
+    ArmByVisit,
+    /// Arms differ, averaged over visits
+    #[value(name = "arm")]
+    Arm,
 }
 
 /// `demo`

@@ -4,12 +4,14 @@
 //! words; one number stands in a cell, made of that cell's current readings in the session that counts as the plan
 //! says, or none does. Cells lie in the order of a [`Design`]: the last within factor runs fastest.
 
-use std::collections::{BTreeMap, HashMap};
+use std::collections::{BTreeMap, HashMap, HashSet};
 
 use chrono::NaiveDate;
 use revisant_analysis::design::{self, Design, DesignError};
 use revisant_schema::completeness::chosen_session;
-use revisant_schema::plan::{Analysis, AttributeKind, Measure, OffWindow, Plan, Summary, VisitIx};
+use revisant_schema::plan::{
+    AgreeOver, Analysis, AttributeKind, Measure, MeasureRule, Method, OffWindow, Plan, Summary, VisitIx,
+};
 use revisant_schema::reading::Condition;
 use revisant_schema::records::View;
 use revisant_schema::records::view::{AccountedRow, ValueRow};
@@ -18,6 +20,7 @@ use serde::Serialize;
 
 use crate::error::Failure;
 use crate::report::text::list;
+use crate::steps::Steps;
 use crate::study::Basis;
 use crate::took_part::{Corrections, TookPart, outside_use};
 
@@ -210,6 +213,10 @@ pub struct Dataset {
     pub names: Vec<CellName>,
     /// Where the visits are a factor: days after day 0, cumulated along `after`.
     pub positions: Option<Vec<f64>>,
+    /// Where levels are repeats within a session: the code of its visit.
+    pub repeats_at: Option<String>,
+    /// Of what step the numbers are multiples.
+    pub steps: Steps,
     /// Every subject of the roster, by code.
     pub rows: Vec<Row>,
     /// What to know about them.
@@ -222,9 +229,17 @@ impl Dataset {
         let measure = &basis.plan.measures[analysis.measure];
         let readings = Readings::of(view.values(&measure.code)?);
         let accounted = view.accounted()?;
-        let within: Vec<Factor> = analysis.within.iter().map(|code| within(basis, analysis, code)).collect();
+        let terms = view.terms()?;
+        let repeats = Repeats::of(analysis);
+        let within: Vec<Factor> = match repeats {
+            Some(repeats) => vec![repeats.factor(basis, analysis, &readings, &terms)],
+            None => analysis.within.iter().map(|code| within(basis, analysis, code)).collect(),
+        };
         let between: Vec<Factor> = analysis.between.iter().map(|code| between(basis, code)).collect();
-        let layout = Layout::of(view, basis, analysis, &within)?;
+        let layout = match repeats {
+            Some(repeats) => Layout::of(view, basis, analysis, &[])?.repeated(repeats, &within, &terms),
+            None => Layout::of(view, basis, analysis, &within)?,
+        };
         let corrections = Corrections::of(view, readings.values.iter().filter_map(|value| value.placed_by))?;
         let mut builder = Builder {
             basis,
@@ -235,15 +250,22 @@ impl Dataset {
             today,
             between: &between,
             layout: &layout,
-            instruments: Instruments { codes: view.terms()?, corrections },
+            instruments: Instruments { codes: terms, corrections },
             care: Care::default(),
+            steps: Steps::default(),
         };
         let subjects: Vec<&String> = basis.roster.subjects.keys().collect();
         let rows = subjects.into_iter().map(|subject| builder.row(subject)).collect();
-        let care = builder.care;
+        let (care, mut steps) = (builder.care, builder.steps);
+        steps.averaged(layout.parts.first().map_or(1, Vec::len));
         let positions = within.iter().any(|factor| factor.code == VISIT).then(|| positions(basis, &analysis.visits));
-        let names = layout.names(&within, basis);
-        Ok(Self { within, between, names, positions, rows, care })
+        let repeated = repeats.and_then(|_| layout.visits.first());
+        let repeats_at = repeated.map(|visit| basis.plan.visits[*visit].code.clone());
+        let names = match &repeats_at {
+            Some(visit) => repeats_names(visit, &within),
+            None => layout.names(&within, basis),
+        };
+        Ok(Self { within, between, names, positions, repeats_at, steps, rows, care })
     }
 
     /// The subjects that an analysis can take in, by their place among the rows: those with a level of every between
@@ -374,9 +396,103 @@ impl Readings {
 
 /// One condition that takes part in a level: itself, and the term that it is in the records (`None`: it has never been
 /// filed).
+#[derive(Clone)]
 struct Part {
     condition: Condition,
     term: Option<i64>,
+    /// Which of its readings.
+    pick: Pick,
+}
+
+/// Which readings of a session and condition make up a cell.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+enum Pick {
+    All,
+    /// Those with this number, of which every instrument may have given one.
+    Replicate(u32),
+    /// Those of the instrument that is this term.
+    Instrument(i64),
+}
+
+impl Pick {
+    fn takes(self, value: &ValueRow) -> bool {
+        match self {
+            Self::All => true,
+            Self::Replicate(number) => value.replicate == number,
+            Self::Instrument(term) => value.instrument == term,
+        }
+    }
+}
+
+/// What repeats within a session, where agreement is over that. The session is that of the analysis's first visit: rows
+/// of several sessions of one subject would not be independent.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+enum Repeats {
+    /// Levels are the numbers of the replicates.
+    Replicates,
+    /// Levels are the instruments; each one's number is the plan's summary of its replicates.
+    Instruments,
+}
+
+impl Repeats {
+    fn of(analysis: &Analysis) -> Option<Self> {
+        match (analysis.method, analysis.agree_over) {
+            (Method::Agreement, AgreeOver::Replicates) => Some(Self::Replicates),
+            (Method::Agreement, AgreeOver::Instruments) => Some(Self::Instruments),
+            _ => None,
+        }
+    }
+
+    fn factor(self, basis: &Basis, analysis: &Analysis, readings: &Readings, terms: &HashMap<i64, String>) -> Factor {
+        let (code, levels) = match self {
+            Self::Replicates => {
+                let planned = basis.plan.measures[analysis.measure].replicates;
+                ("replicate", (1..=planned).map(|number| number.to_string()).collect())
+            }
+            Self::Instruments => ("instrument", instruments_at_work(basis, analysis, readings, terms)),
+        };
+        let levels: Vec<String> = levels;
+        Factor { code: code.to_owned(), labels: levels.clone(), levels }
+    }
+
+    fn pick(self, level: usize, code: &str, terms: &HashMap<i64, String>) -> Pick {
+        match self {
+            Self::Replicates => Pick::Replicate(u32::try_from(level + 1).unwrap_or(u32::MAX)),
+            // An instrument that never gave a reading is no term: it takes nothing.
+            Self::Instruments => Pick::Instrument(term_of(terms, code).unwrap_or(i64::MIN)),
+        }
+    }
+}
+
+fn term_of(terms: &HashMap<i64, String>, code: &str) -> Option<i64> {
+    terms.iter().find(|(_, text)| *text == code).map(|(term, _)| *term)
+}
+
+/// The plan's instruments that gave a reading of the measure; where fewer than two did, all that may.
+fn instruments_at_work(
+    basis: &Basis,
+    analysis: &Analysis,
+    readings: &Readings,
+    terms: &HashMap<i64, String>,
+) -> Vec<String> {
+    let gives = |rule: &MeasureRule| match rule {
+        MeasureRule::Fixed(measure) => *measure == analysis.measure,
+        MeasureRule::Found(_) => true,
+    };
+    let measuring = basis.plan.instruments.iter().filter(|it| it.reader.values.iter().any(|it| gives(&it.measure)));
+    let measuring: Vec<String> = measuring.map(|instrument| instrument.code.clone()).collect();
+    let gave: HashSet<i64> = readings.values.iter().map(|value| value.instrument).collect();
+    let at_work = |code: &&String| term_of(terms, code).is_some_and(|term| gave.contains(&term));
+    let working: Vec<String> = measuring.iter().filter(at_work).cloned().collect();
+    if working.len() < 2 { measuring } else { working }
+}
+
+fn repeats_names(visit: &str, within: &[Factor]) -> Vec<CellName> {
+    let name = |factor: &Factor, level: &String| CellName {
+        session: visit.to_owned(),
+        cell: format!("{visit}, {} {level}", factor.code),
+    };
+    within.iter().flat_map(|factor| factor.levels.iter().map(|level| name(factor, level))).collect()
 }
 
 /// Of what each cell is made.
@@ -417,6 +533,18 @@ impl Layout {
         Ok(layout)
     }
 
+    /// One cell a level, of the same conditions, with the readings of that level alone.
+    fn repeated(self, repeats: Repeats, within: &[Factor], terms: &HashMap<i64, String>) -> Self {
+        let all = self.parts.into_iter().next().unwrap_or_default();
+        let levels = within.iter().flat_map(|factor| &factor.levels).enumerate();
+        let of_level = |(level, code): (usize, &String)| {
+            let pick = repeats.pick(level, code, terms);
+            all.iter().map(|part| Part { pick, ..part.clone() }).collect()
+        };
+        let parts: Vec<Vec<Part>> = levels.map(of_level).collect();
+        Self { cells: (0..parts.len()).map(|level| (0, level)).collect(), parts, visits: self.visits }
+    }
+
     fn names(&self, within: &[Factor], basis: &Basis) -> Vec<CellName> {
         let cells = self.cells.iter().zip(product(within));
         let name = |((visit, _), cell): (&(usize, usize), Vec<usize>)| {
@@ -446,7 +574,11 @@ fn parts(view: &View<'_>, measure: &Measure, combinations: &[Vec<(&str, &str)>])
     let all: Vec<Condition> = measure.cells().into_iter().map(|cell| Condition::of_cell(measure, &cell)).collect();
     // The empty text has no row of its own.
     let term = |text: String| if text.is_empty() { Some(0) } else { terms.get(&text).copied() };
-    let part = |condition: &Condition| Part { condition: condition.clone(), term: term(condition.to_string()) };
+    let part = |condition: &Condition| Part {
+        condition: condition.clone(),
+        term: term(condition.to_string()),
+        pick: Pick::All,
+    };
     let of_combination = |levels: &Vec<(&str, &str)>| {
         let has =
             |condition: &Condition, (code, level): (&str, &str)| condition.0.get(code).is_some_and(|own| own == level);
@@ -495,6 +627,7 @@ struct Builder<'b> {
     layout: &'b Layout,
     instruments: Instruments,
     care: Care,
+    steps: Steps,
 }
 
 /// The session of a visit that counts: its day, and its numbers in the records.
@@ -588,14 +721,15 @@ impl Builder<'_> {
     }
 
     fn one_condition(&mut self, subject: &str, visit: VisitIx, came: &Came, part: &Part) -> Result<f64, Empty> {
-        let (Part { condition, term }, Came { day, sessions }) = (part, came);
+        let (Part { condition, term, pick }, Came { day, sessions }) = (part, came);
         let held = sessions.iter().flat_map(|session| term.iter().map(move |term| (*session, *term)));
-        let values: Vec<ValueRow> = held.flat_map(|(session, term)| self.readings.of_cell(session, term)).collect();
-        let planned = self.measure.replicates;
-        let enough = values.len() >= self.measure.at_least.max(1) as usize;
+        let values = held.flat_map(|(session, term)| self.readings.of_cell(session, term));
+        let values: Vec<ValueRow> = values.filter(|value| pick.takes(value)).collect();
+        let (planned, at_least, summary) = self.of_one_number(*pick);
+        let enough = values.len() >= at_least.max(1) as usize;
         let (current, limits) = (values.len(), values.iter().filter(|value| value.limit).count());
         let several = values.iter().any(|value| value.instrument != values[0].instrument);
-        let number = if enough { Ok(summarise(self.measure.summary, &values)) } else { Err(()) };
+        let number = if enough { Ok(summarise(summary, &values)) } else { Err(()) };
         // Replicates are planned for each instrument; those entered by hand stand in for one that could not export.
         let of_one = self.instruments.most_of_one(&values);
         if of_one < planned as usize && current > 0 {
@@ -604,16 +738,45 @@ impl Builder<'_> {
             self.care.fewer_replicates.push(few);
         }
         if number.is_ok() {
+            if self.analysis.method == Method::Friedman {
+                self.steps.take_in(summary, values.iter().map(|value| value.number));
+            }
             self.care.at_limit += limits;
             self.care.several_instruments += usize::from(several);
             let seen = (&self.basis.plan, self.measure.code.as_str(), visit, *day);
             values.iter().for_each(|value| self.instruments.note(&mut self.care.took_part, value, seen));
         }
         number.map_err(|()| match current {
-            0 if condition.0.is_empty() => Empty::NoReading,
-            0 => Empty::Lacks(condition.to_string()),
+            0 => self.nothing(condition, *pick),
             _ => Empty::Few { current, needed: self.measure.at_least },
         })
+    }
+
+    /// How many replicates are planned and needed for one number, and how they are summarised: a replicate by itself is
+    /// one, and the mean of those that several instruments gave under its number.
+    fn of_one_number(&self, pick: Pick) -> (u32, u32, Summary) {
+        match pick {
+            Pick::Replicate(_) => (1, 1, Summary::Mean),
+            Pick::All | Pick::Instrument(_) => (self.measure.replicates, self.measure.at_least, self.measure.summary),
+        }
+    }
+
+    /// Why there is no reading in a session that there is.
+    fn nothing(&self, condition: &Condition, pick: Pick) -> Empty {
+        let of = match pick {
+            Pick::All => None,
+            Pick::Replicate(number) => Some(format!("replicate {number}")),
+            Pick::Instrument(term) => Some(match self.instruments.codes.get(&term) {
+                Some(code) => code.clone(),
+                None => "an instrument that gave none at all".to_owned(),
+            }),
+        };
+        match (of, condition.0.is_empty()) {
+            (None, true) => Empty::NoReading,
+            (None, false) => Empty::Lacks(condition.to_string()),
+            (Some(of), true) => Empty::Lacks(of),
+            (Some(of), false) => Empty::Lacks(format!("{condition}, {of}")),
+        }
     }
 
     /// Why there is no session.

@@ -6,6 +6,7 @@
 
 pub mod args;
 pub mod by_hand;
+pub mod chance;
 pub mod commands;
 pub mod dataset;
 pub mod demo;
@@ -16,6 +17,8 @@ pub mod method;
 pub mod moment;
 pub mod output;
 pub mod report;
+pub mod simulate;
+pub mod steps;
 pub mod study;
 pub mod took_part;
 

@@ -251,7 +251,7 @@ fn the_top_level_is_as_laid_out() {
 }
 
 /// The commands of the vocabulary that this version has.
-const COMMANDS: [&str; 20] = [
+const COMMANDS: [&str; 21] = [
     "new",
     "probe",
     "check",
@@ -271,6 +271,7 @@ const COMMANDS: [&str; 20] = [
     "cut",
     "trail",
     "analyse",
+    "rehearse",
     "demo",
 ];
 

@@ -6,6 +6,7 @@
     reason = "a check that cannot go on says so by failing"
 )]
 
+mod agreement;
 mod analyses;
 mod corpus;
 mod cuts;
@@ -16,9 +17,12 @@ mod instruments;
 mod kills;
 mod probe;
 mod properties;
+mod ranks;
 mod readings;
 mod reference;
+mod rehearse;
 mod sample;
+mod small_study;
 
 use revisant_tests::site::{Programs, Site};
 

@@ -39,8 +39,16 @@ const EFFECT: [(&str, &str); 22] = [
 const CORRECTED: [(&str, &str); 4] =
     [("lb", "lower_bound"), ("gg", "greenhouse_geisser"), ("hf_lecoutre", "lecoutre"), ("hf_classic", "huynh_feldt")];
 
-fn at<'j>(json: &'j Json, pointer: &str) -> &'j Json {
+pub fn at<'j>(json: &'j Json, pointer: &str) -> &'j Json {
     json.pointer(pointer).unwrap_or(&Json::Null)
+}
+
+/// Every pair of visits, the later first.
+pub fn later_and_earlier(case: &Case) -> Vec<(&str, &str)> {
+    let codes: Vec<&str> = case.visits.iter().map(|(code, ..)| code.as_str()).collect();
+    (0..codes.len())
+        .flat_map(|at| codes[at + 1..].iter().map(|level| (*level, codes[at])).collect::<Vec<_>>())
+        .collect()
 }
 
 macro_rules! cases {
@@ -54,6 +62,7 @@ macro_rules! cases {
         }
     )*};
 }
+pub(crate) use cases;
 
 cases! { decomposition:
     all_equal_4x3 in "repeated_measures"

@@ -65,7 +65,8 @@ impl Case {
         let json: Json = serde_json::from_str(&read("json")).expect("a case in JSON");
         let columns = &json["columns"];
         let factor = columns["within"][0].as_str().expect("a factor").to_owned();
-        let levels = match json["config"]["levels"].as_array() {
+        let levels = ["levels", "raters"].iter().find_map(|name| json["config"][*name].as_array());
+        let levels = match levels {
             Some(levels) => levels,
             None => json["config"]["within_levels"][&factor].as_array().expect("levels"),
         };

@@ -15,6 +15,7 @@ mod new;
 mod probe;
 mod provenance;
 mod readings;
+mod rehearse;
 mod roster;
 mod sample;
 mod status;
@@ -51,6 +52,7 @@ pub fn run(context: &mut Context<'_, '_>, command: &Command) -> Done {
         Command::Cut(args) => cut::run(context, args),
         Command::Trail(args) => trail::run(context, args),
         Command::Analyse(args) => analyse::run(context, args),
+        Command::Rehearse(args) => rehearse::run(context, args),
         Command::Provenance(args) => provenance::run(context, args),
         Command::Demo(args) => demo::run(context, args),
     }

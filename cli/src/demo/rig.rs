@@ -11,8 +11,9 @@ use std::time::{Duration, Instant};
 
 use chrono::{Datelike, Days, NaiveDate, NaiveTime, TimeDelta, Weekday};
 
-use super::values::{Chance, Shown, VISITS, of_subject};
+use super::values::{Shown, VISITS, of_subject};
 use super::{ROSTER, TODAY};
+use crate::chance::Chance;
 
 /// The export folders, from the study's folder.
 pub const FOLDERS: [&str; 4] = [GRIP, PLATE, TIMER, SCALE];

@@ -4,6 +4,7 @@ pub mod analysis;
 pub mod json;
 pub mod number;
 pub mod plot;
+pub mod rehearse;
 pub mod sentence;
 pub mod table;
 pub mod text;

@@ -35,7 +35,8 @@ pub fn effect(subject: &Subject<'_>, effect: &Effect) -> String {
     format!("{}, F({}, {}) {f}, {}{how}{size}{interval}.", finding(subject, p), df(d1), df(d2), p_said(p))
 }
 
-fn finding(subject: &Subject<'_>, p: f64) -> String {
+/// `Grip strength changed over visits`, or that this was not shown.
+pub fn finding(subject: &Subject<'_>, p: f64) -> String {
     let Subject { measure, factors, confidence } = subject;
     let shown = p < 1.0 - confidence;
     match (*factors, shown) {

@@ -3,12 +3,14 @@
 //! Invariants: both forms come from one [`Analysed`], so that they cannot disagree; what was left out stands right
 //! under what was found. What is the same for every method stands here, the rest in one module a method.
 
+mod agreement;
 mod checks;
 mod names;
+mod ranks;
 mod repeated;
 
 use revisant_analysis::Interval;
-use revisant_schema::plan::{Analysis, Multiplicity, Plan};
+use revisant_schema::plan::{Analysis, Method, Multiplicity, Plan};
 use revisant_schema::records::codec::{Hash, hex};
 use revisant_schema::records::view::Standing;
 use serde_json::{Map, Value as Json, json};
@@ -97,6 +99,8 @@ impl Analysed<'_> {
     fn findings(&self) -> Box<dyn Findings + '_> {
         match &self.outcome {
             Outcome::RepeatedMeasures(repeated) => Box::new(repeated::Findings::new(self, repeated)),
+            Outcome::Ranks(found) => Box::new(ranks::Findings::new(self, found)),
+            Outcome::Agreement(found) => Box::new(agreement::Findings::new(self, found)),
         }
     }
 
@@ -184,6 +188,9 @@ impl Analysed<'_> {
 
     /// `visits`, or `visits and hand by arm`.
     pub fn over(&self) -> String {
+        if let (Some(visit), [repeats]) = (&self.data.repeats_at, self.data.within.as_slice()) {
+            return format!("{}s at {visit}", repeats.code);
+        }
         let name = |factor: &Factor| if factor.code == VISIT { "visits".to_owned() } else { factor.code.clone() };
         let names = |factors: &[Factor]| list(&factors.iter().map(name).collect::<Vec<_>>());
         match self.data.between.is_empty() {
@@ -231,6 +238,27 @@ impl Analysed<'_> {
         }
         let parts: Vec<String> = reasons.iter().map(|(why, who)| format!("{}: {why}", list(who))).collect();
         parts.join("; ")
+    }
+}
+
+/// What is to be noted about pairs of levels: once, with all pairs that it is about.
+#[derive(Default)]
+struct PairNotes(Vec<(String, Vec<String>)>);
+
+impl PairNotes {
+    fn add(&mut self, pair: String, text: String) {
+        match self.0.iter_mut().find(|(known, _)| *known == text) {
+            Some((_, pairs)) if pairs.contains(&pair) => {}
+            Some((_, pairs)) => pairs.push(pair),
+            None => self.0.push((text, vec![pair])),
+        }
+    }
+
+    fn said(self) -> impl Iterator<Item = String> {
+        self.0.into_iter().map(|(text, pairs)| match pairs.as_slice() {
+            [pair] => format!("the pair {pair}: {text}"),
+            pairs => format!("the pairs {}: {text}", list(pairs)),
+        })
     }
 }
 
@@ -301,6 +329,9 @@ impl Analysed<'_> {
         let head = format!("{used} of {} used", count(self.enrolled as u64, "subject"));
         match left_out {
             0 => format!("{head}; nobody was left out."),
+            _ if self.analysis.method == Method::Agreement => {
+                format!("{head}; {left_out} left out: {}.", self.left_out())
+            }
             _ => format!(
                 "{head}; {left_out} left out: {}. A mixed model would use {}.",
                 self.left_out(),

@@ -132,7 +132,7 @@ impl Frame<'_> {
     }
 }
 
-fn extent(values: &[f64]) -> Option<(f64, f64)> {
+pub(super) fn extent(values: &[f64]) -> Option<(f64, f64)> {
     let finite = values.iter().copied().filter(|value| value.is_finite());
     finite.fold(None, |found, value| match found {
         None => Some((value, value)),
@@ -141,13 +141,13 @@ fn extent(values: &[f64]) -> Option<(f64, f64)> {
 }
 
 /// With a little room at both ends.
-fn padded((low, high): (f64, f64)) -> (f64, f64) {
+pub(super) fn padded((low, high): (f64, f64)) -> (f64, f64) {
     let room = if high > low { (high - low) * 0.04 } else { 1.0 };
     (low - room, high + room)
 }
 
 /// A step of 1, 2 or 5 times a power of ten that makes four to eight steps of a span.
-fn nice_step(span: f64) -> f64 {
+pub(super) fn nice_step(span: f64) -> f64 {
     let rough = span / 6.0;
     let power = 10_f64.powf(rough.log10().floor());
     let factor = rough / power;
@@ -163,7 +163,7 @@ fn nice_step(span: f64) -> f64 {
     nice * power
 }
 
-fn decimals_of(step: f64) -> usize {
+pub(super) fn decimals_of(step: f64) -> usize {
     // The cast cannot go wrong: steps are finite.
     let size = step.log10().floor() as i32;
     usize::try_from((-size).clamp(0, 8)).unwrap_or(0)

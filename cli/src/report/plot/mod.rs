@@ -3,6 +3,7 @@
 //! Invariants: everything that comes from the study is escaped; nothing is told by colour alone; what was left out is
 //! said in the picture.
 
+mod differences;
 mod frame;
 mod png;
 mod profiles;
@@ -17,7 +18,9 @@ use crate::method::Outcome;
 /// The picture that belongs to a result, as an SVG document.
 pub fn svg(analysed: &Analysed<'_>) -> String {
     match &analysed.outcome {
-        Outcome::RepeatedMeasures(found) => profiles::draw(analysed, found),
+        Outcome::RepeatedMeasures(found) => profiles::draw(analysed, &found.bands()),
+        Outcome::Ranks(found) => profiles::draw(analysed, &[found.bands()]),
+        Outcome::Agreement(found) => differences::draw(analysed, found),
     }
 }
 

@@ -12,7 +12,6 @@ use super::escape;
 use super::frame::{Area, Frame, Scales};
 use super::sheet::{LEFT, RIGHT, Sheet, WIDTH, text};
 use crate::dataset::{Dataset, Factor, Row, VISIT, product};
-use crate::method::Repeated;
 use crate::report::analysis::Analysed;
 use crate::report::number::{percent, plain};
 use crate::report::text::count;
@@ -31,12 +30,12 @@ const GAP: f64 = 16.0;
 const SERIES_IN_A_FRAME: usize = 6;
 
 /// The picture as an SVG document.
-pub(super) fn draw(analysed: &Analysed<'_>, found: &Repeated) -> String {
+pub(super) fn draw(analysed: &Analysed<'_>, bands: &[Vec<Band>]) -> String {
     let who = count(analysed.used() as u64, "subject");
     let sheet = Sheet::of(analysed, format!("{} ({}): profiles of {who}", analysed.label, analysed.unit));
     let mut svg = String::new();
-    let picture = Picture::of(analysed, found);
-    let bottom = match (scales(analysed, found, &picture), picture.panels.len()) {
+    let picture = Picture::of(analysed, bands);
+    let bottom = match (scales(analysed, bands, &picture), picture.panels.len()) {
         (None, _) => {
             text(&mut svg, (WIDTH / 2.0, sheet.top + TALL / 2.0), "middle", 14, "There are no readings.");
             sheet.top + TALL + UNDER
@@ -70,7 +69,7 @@ fn axis(data: &Dataset) -> usize {
 }
 
 impl<'a> Picture<'a> {
-    fn of(analysed: &'a Analysed<'_>, found: &Repeated) -> Self {
+    fn of(analysed: &'a Analysed<'_>, bands: &[Vec<Band>]) -> Self {
         let data = &analysed.data;
         let x = axis(data);
         let cells = product(&data.within);
@@ -84,7 +83,7 @@ impl<'a> Picture<'a> {
         let factors: Vec<&Factor> =
             data.within.iter().enumerate().filter(|(at, _)| *at != x).map(|(_, factor)| factor).collect();
         let mut panels = Vec::new();
-        for (group, bands) in product(&data.between).into_iter().zip(found.bands()) {
+        for (group, bands) in product(&data.between).into_iter().zip(bands) {
             for other in &others {
                 let own: Vec<usize> =
                     cells.iter().enumerate().filter(|(_, cell)| without(cell, x) == *other).map(|(at, _)| at).collect();
@@ -239,7 +238,7 @@ fn without(cell: &[usize], x: usize) -> Vec<usize> {
 }
 
 /// Scales that hold every line and band.
-fn scales(analysed: &Analysed<'_>, found: &Repeated, picture: &Picture<'_>) -> Option<Scales> {
+fn scales(analysed: &Analysed<'_>, bands: &[Vec<Band>], picture: &Picture<'_>) -> Option<Scales> {
     let data = picture.data;
     let factor = data.within.get(axis(data))?;
     let days = factor.code == VISIT;
@@ -248,7 +247,7 @@ fn scales(analysed: &Analysed<'_>, found: &Repeated, picture: &Picture<'_>) -> O
     let drawn = data.rows.iter().filter(|row| row.some());
     let mut values: Vec<f64> =
         drawn.flat_map(|row| &row.cells).filter_map(|cell| cell.as_ref().ok()).copied().collect();
-    for band in found.bands().iter().flatten() {
+    for band in bands.iter().flatten() {
         values.extend(band.ci.map(|ci| [ci.lower, ci.upper]).into_iter().flatten());
     }
     let mut scales = Scales::of(positions, &values)?;
