@@ -204,8 +204,11 @@ JSON: [{\"trail\", \"at\", \"who\", \"program\", \"act\", \"objects\", \"before\
     #[command(after_help = "\
 Example:
   revisant analyse grip-over-visits --plot profiles.svg
+  revisant analyse grip-by-arm --checks
 
-JSON: see the README; \"subjects\", \"cells\", \"decomposition\", \"effects\", \"contrasts\", \"data_state\", …")]
+JSON: \"subjects\", \"cells\", \"decomposition\", \"effects\", \"if_unlinked\", \"contrasts\", \"data_state\", …; of several \
+factors also \"simple_effects\" and \"sums\"; with --checks \"checks\": {\"residuals\", \"subjects\", \"influence\", \
+\"missing\", \"thin_cells\"}")]
     Analyse(Analyse),
     /// Work out how many subjects the study needs, from what its plan assumes
     #[command(after_help = "\

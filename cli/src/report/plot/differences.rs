@@ -198,6 +198,6 @@ mod tests {
     #[test]
     fn ticks_lie_within() {
         assert_eq!(ticks((-2.1, 4.9), 2.0), [-2.0, 0.0, 2.0, 4.0]);
-        assert_eq!(ticks((0.2, 0.9), 1.0), []);
+        assert_eq!(ticks((0.2, 0.9), 1.0), Vec::<f64>::new());
     }
 }
