@@ -576,3 +576,21 @@ fn a_file_held_by_an_older_program_is_tried_again() {
     assert_eq!((study.open().len(), study.all().len()), (0, 1));
     assert!(study.records.verify(&mut |_, _| {}).unwrap().faults.is_empty());
 }
+
+#[test]
+fn an_export_that_breaks_off_says_nothing_about_day_0() {
+    let mut study = Study::new("", "");
+    let reader = study
+        .plan_text()
+        .replace("format = \"delimited\"\ndelimiter = \",\"\nheader = { row = 1 }", "format = \"json\"\nrows = \"/*\"");
+    study.plan(&reader);
+    study.enforce(false).unwrap();
+    let row = |day: &str| format!(r#"{{"who":"IN-01","at":"2025-{day} 09:00","visit":"first","length":"70"}}"#);
+    // Had the broken one been heard, day 0 were 28 days before the good one, whose label would then disagree.
+    study.export("broken.json", &format!("[{},", row("03-02")));
+    study.export("good.json", &format!("[{}]", row("03-30")));
+    study.collect();
+    assert_eq!(study.one(Reason::UnreadableFile).export, "exports/mat/broken.json");
+    assert_eq!(study.open().len(), 1);
+    assert_eq!(study.state("good.json"), ExportState::Filed);
+}

@@ -1,5 +1,5 @@
 //! Drafted readers, on every study of the corpus: the plan without one instrument's reader, the reader drafted from
-//! that instrument's exports, and what it then files held against what the true reader files.
+//! that instrument's exports, from two of them or from one, and what it then files held against what the true reader files.
 
 use std::collections::BTreeMap;
 use std::fs;
@@ -152,7 +152,7 @@ fn draft(study: &str, plan: &str, block: &Block, most: usize, truth: &BTreeMap<S
         Ok(drafted) => drafted,
         Err(ran) => return Outcome { toml: ran.shown(), ..Outcome::default() },
     };
-    let toml = drafted["toml"].as_str().unwrap().to_owned();
+    let toml = drafted["reader"].as_str().unwrap().to_owned();
     let made = Block::of(&toml);
     let kept: Vec<&str> = block.head.lines().filter(|line| !line.starts_with("re_export")).collect();
     let re_export: Vec<&str> = made.head.lines().filter(|line| line.starts_with("re_export")).collect();
@@ -228,6 +228,34 @@ fn drafts_from_all_exports_file_nothing_wrongly() {
 #[test]
 fn drafts_from_two_exports_file_nothing_wrongly() {
     judge_all(2);
+}
+
+#[test]
+fn drafts_from_one_export_file_nothing_wrongly() {
+    judge_all(1);
+}
+
+/// The delimiter of each delimited export of the corpus by itself, against that of the plan.
+#[test]
+fn delimiters_of_single_exports_are_found() {
+    let (mut right, mut wrong) = (0, vec![]);
+    for study in studies() {
+        let plan = last_plan(&study);
+        for block in blocks(&plan).iter().filter(|block| block.reader.contains("format = \"delimited\"")) {
+            let stated = block.reader.lines().find(|line| line.starts_with("delimiter"));
+            let expected = stated.unwrap_or("delimiter = \",\"").to_owned();
+            let site = site(&study, &plan.replace(&block.whole, ""));
+            for file in exports(&site, block) {
+                // What is no table at all has no delimiter.
+                let Ok(drafted) = probe(&site, block, std::slice::from_ref(&file)) else { continue };
+                let toml = drafted["reader"].as_str().unwrap();
+                let found = toml.lines().find(|line| line.starts_with("delimiter")).unwrap_or_default();
+                if found == expected { right += 1 } else { wrong.push(format!("{study} {file}: {found}")) }
+            }
+        }
+    }
+    println!("{right} right, {} wrong: {wrong:#?}", wrong.len());
+    assert!(right > 150 && wrong.len() * 50 <= right, "{right} right, wrong: {wrong:#?}");
 }
 
 // ---- the command ----
@@ -340,7 +368,7 @@ fn without_a_plan_what_the_plan_would_say_is_left_open() {
     site.write("march.csv", EXPORT);
     let ran = site.run(&["probe", "march.csv", "--code", "dyn", "--json"]);
     assert_eq!(ran.code, Some(3), "{}", ran.shown());
-    let toml = ran.json()["toml"].as_str().unwrap().to_owned();
+    let toml = ran.json()["reader"].as_str().unwrap().to_owned();
     assert!(toml.contains("subject = { column = \"Subject\" }") && toml.contains("measure = \"FILL IN\""), "{toml}");
     let bad = site.run(&["probe", "absent.csv", "--json"]);
     assert_eq!((bad.code, bad.error()["kind"].clone()), (Some(1), "file".into()));

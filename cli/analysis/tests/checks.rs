@@ -27,7 +27,7 @@ fn subjects(between: usize, width: usize) -> impl Strategy<Value = Vec<Subject>>
 }
 
 proptest! {
-    #![proptest_config(ProptestConfig { cases: 60, failure_persistence: None, ..ProptestConfig::default() })]
+    #![proptest_config(ProptestConfig { cases: 16, failure_persistence: None, ..ProptestConfig::default() })]
 
     /// Every updated test is that of an analysis made anew without the subject.
     #[test]

@@ -8,6 +8,7 @@ use revisant_analysis::anova::{
 };
 use revisant_analysis::contrasts::{Compared, ContrastKind, Family, Multiplicity};
 use revisant_analysis::design::{At, Design, DesignError, Factor, FactorId, OneWithin};
+use revisant_analysis::distributions::effect_size_interval;
 use revisant_analysis::{Confidence, Interval, NotAConfidence, Note, Settings, Sums};
 
 fn full(rows: &[&[f64]]) -> OneWithin {
@@ -469,4 +470,33 @@ fn simultaneous_intervals_by_hand() {
     assert!(holm.iter().zip(&bonferroni).all(|(a, b)| a.simultaneous == b.simultaneous));
     let without = [Multiplicity::None, Multiplicity::BenjaminiHochberg].map(family);
     assert!(without.iter().flatten().all(|it| it.simultaneous.is_none() && it.ci.is_some()));
+}
+
+/// Decimals whose differences are equal on paper, far from zero: what rounding them took is judged by what they are, not by
+/// what is left of them once a common part has been taken off.
+#[test]
+fn a_common_part_brings_its_rounding_along() {
+    let row = |own: i32| [1, 3, 2, 4].map(|cell| Some(f64::from(own + cell) / 10.0)).to_vec();
+    let subjects = [1_000_001, 1_000_002, 1_000_004, 1_000_007].map(|own| (Vec::<usize>::new(), row(own)));
+    let design = Design::new(vec![Factor::of(2).unwrap(), Factor::of(2).unwrap()], vec![], &subjects).unwrap();
+    let result = with(&design, &[Family::Pairwise, Family::Simple]);
+    for it in &result.contrasts {
+        assert_eq!((it.se, it.t, it.p), (Some(0.0), None, Some(0.0)), "{it:?}");
+    }
+    assert!(result.simple.iter().all(|it| it.effect.f.is_none() && it.effect.p == Some(0.0)));
+    assert_eq!(result.contrasts.len(), 6);
+}
+
+#[test]
+fn the_interval_of_a_size_goes_with_the_corrected_test() {
+    let design = full(&[&[1.0, 2.0, 2.5], &[1.0, 3.5, 9.0], &[4.0, 4.5, 5.0], &[2.0, 1.5, 4.0]]);
+    let effect = analyse(&design, &[]).effect.unwrap();
+    let test = effect.corrected.unwrap().greenhouse_geisser.unwrap();
+    assert!(test.df < 1.9, "{test:?}");
+    let n = test.df + test.error_df + 1.0;
+    let wanted = effect_size_interval(effect.f.unwrap(), test.df, test.error_df, n, Confidence::default());
+    assert_eq!(effect.partial_eta_sq_ci, wanted);
+    assert!(
+        wanted.is_some_and(|ci| ci.lower < effect.partial_eta_sq.unwrap() && effect.partial_eta_sq.unwrap() < ci.upper)
+    );
 }

@@ -49,15 +49,25 @@ pub fn run(context: &mut Context<'_, '_>, args: &Probe) -> Done {
     let draft = intake::draft(&asked)?;
     let into = args.into.as_deref().map(|file| put(context, file, &draft, &code)).transpose()?;
     if context.out.json {
-        context.out.json(&json!({
-            "code": code, "toml": draft.toml, "gaps": draft.gaps, "unsure": draft.unsure, "misfits": draft.misfits,
-            "preview": draft.preview, "into": into.as_ref().map(|file| file.display().to_string())
-        }))?;
+        context.out.json(&as_json(&draft, &code, into.as_deref()))?;
     } else {
         text(context, &draft, into.as_deref(), &code)?;
     }
     let found = !draft.gaps.is_empty() || !draft.misfits.is_empty();
     Ok(if found { Exit::Found } else { Exit::Done })
+}
+
+fn as_json(draft: &Draft, code: &str, into: Option<&Path>) -> serde_json::Value {
+    let told = &draft.told;
+    // What a person must fill in is not sure either, and comes first.
+    let unsure: Vec<String> =
+        draft.gaps.iter().chain(&draft.unsure).map(|remark| format!("{}: {}", remark.key, remark.text)).collect();
+    json!({
+        "code": code, "format": told.format, "encoding": told.encoding, "delimiter": told.delimiter,
+        "quote": told.quote, "header_row": told.header_row, "units_row": told.units_row, "decimal": told.decimal,
+        "stamp": told.stamp, "columns": told.columns, "unsure": unsure, "reader": draft.toml, "gaps": draft.gaps,
+        "misfits": draft.misfits, "preview": draft.preview, "into": into.map(|file| file.display().to_string())
+    })
 }
 
 /// What the samples are held against.

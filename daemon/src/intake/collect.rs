@@ -401,6 +401,7 @@ fn unreachable(records: &Records, plan: &Plan, found: &Found, why: &str) -> Resu
     Ok(records.set_noticed(&found.export, &seen)?)
 }
 
+/// Notes what an export says about day 0; one that turns out to be unsound, on whatever row, says nothing.
 fn gather_one(
     rules: &Rules,
     now: DateTime<Utc>,
@@ -417,6 +418,7 @@ fn gather_one(
     let mut rows = read::open(&instrument.reader, source)?;
     let mut row = Row::default();
     let none = Decided::default();
+    let mut own = Gathered::default();
     while rows.next_row(&mut row)? {
         let RowOutcome::Ready(resolved) = resolver.resolve(&row, rows.as_ref(), &none) else { continue };
         if resolved.outside.is_some() {
@@ -425,10 +427,11 @@ fn gather_one(
         for value in &resolved.values {
             if let ValueOutcome::Number(value) = value {
                 let label = resolved.label.as_deref();
-                gathered.see(&rules.plan, &resolved.subject, resolved.day, label, value.measure);
+                own.see(&rules.plan, &resolved.subject, resolved.day, label, value.measure);
             }
         }
     }
+    gathered.join(own);
     Ok(())
 }
 

@@ -70,6 +70,18 @@ impl Gathered {
         }
     }
 
+    /// Takes in what another export says.
+    pub fn join(&mut self, other: Self) {
+        if self.sessions.is_empty() {
+            self.sessions = other.sessions;
+            return;
+        }
+        for (subject, sessions) in other.sessions {
+            let own = self.sessions.entry(subject).or_default();
+            sessions.into_iter().for_each(|(session, measures)| *own.entry(session).or_default() |= measures);
+        }
+    }
+
     fn facts(&self, plan: &Plan, subject: &str) -> Vec<SessionFacts> {
         let sessions = self.sessions.get(subject).into_iter().flatten();
         sessions

@@ -62,7 +62,7 @@ pub enum Compared {
 /// III the mean of the groups' means, SE = SD √(Σ_g 1 / n_g) / groups, with type II that of all subjects, SE = SD / √n, so
 /// that t² is the *F* of two levels; SD² = Σ_g SS_g / (n − groups) (Maxwell, Delaney & Kelley 2018, *Designing Experiments
 /// and Analyzing Data*, chapters 11 to 15, contrasts with separate error terms; Boik 1981, *Psychometrika* 46:241).
-/// Between subjects, see [`Family::Groups`] and [`Compared::Effect`]: the unweighted mean of the groups at one level
+/// Groups of which nobody has what it needs are not in the mean. Between subjects, see [`Family::Groups`] and [`Compared::Effect`]: the unweighted mean of the groups at one level
 /// minus that at the other, SD² that of the scores within all groups.
 #[derive(Debug, Clone, PartialEq)]
 pub struct Comparison {
@@ -273,22 +273,23 @@ impl Levels {
         let pairs = earlier.flat_map(|against| (against + 1..levels).map(move |level| (level, against)));
         let factor = self.factor;
         pairs
-            .map(|(level, against)| match first {
-                true => Compared::EachVsFirst { factor, level, against },
-                false => Compared::Pairwise { factor, level, against },
+            .map(|(level, against)| {
+                let compared = match first {
+                    true => Compared::EachVsFirst { factor, level, against },
+                    false => Compared::Pairwise { factor, level, against },
+                };
+                self.compare(compared, (level, against), at, families)
             })
-            .map(|compared| self.compare(compared, at, families))
             .collect()
     }
 
-    fn compare(&self, compared: Compared, at: &[At], families: &mut Families<'_>) -> Comparison {
-        let (Compared::Pairwise { level, against, .. }
-        | Compared::EachVsFirst { level, against, .. }
-        | Compared::Effect { level, against, .. }) = compared
-        else {
-            let nobody = Scores::of(&[], &[], 0, 0.0);
-            return families.tests.of_scores(compared, at.to_vec(), &nobody, &[]);
-        };
+    fn compare(
+        &self,
+        compared: Compared,
+        (level, against): (usize, usize),
+        at: &[At],
+        families: &mut Families<'_>,
+    ) -> Comparison {
         let pair = self.pair(level, against);
         let differences: Vec<f64> = pair.later.iter().zip(pair.earlier.iter()).map(|(y, x)| y - x).collect();
         let scores = Scores::of(&differences, &pair.groups, self.count, pair.rounding);

@@ -51,22 +51,19 @@ fn against_first(design: &Design, factor: usize, at: Option<At>, families: &mut 
     let (values, groups): (Vec<f64>, Vec<usize>) = there.unzip();
     let noise = rounding_of(&values, design.offset());
     let scores = Scores::of(&values, &groups, levels.len(), noise);
-    let later =
-        (1..design.levels(FactorId::Between(factor))).map(|level| Compared::Effect { factor, level, against: 0 });
-    later.map(|compared| difference(compared, at, &scores, &levels, families)).collect()
+    let later = 1..design.levels(FactorId::Between(factor));
+    later.map(|level| difference((factor, level), at, &scores, &levels, families)).collect()
 }
 
+/// A level minus the first; `levels` are those of the groups.
 fn difference(
-    compared: Compared,
+    (factor, level): (usize, usize),
     at: Option<At>,
     scores: &Scores,
     levels: &[Option<usize>],
     families: &mut Families<'_>,
 ) -> Comparison {
-    let (later, earlier) = match compared {
-        Compared::Effect { level, against, .. } => (Some(level), Some(against)),
-        _ => (None, None),
-    };
+    let (compared, later, earlier) = (Compared::Effect { factor, level, against: 0 }, Some(level), Some(0));
     let size = |level: Option<usize>| levels.iter().filter(|of| **of == level).count().max(1) as f64;
     let weight = |level: &Option<usize>| match *level {
         None => 0.0,

@@ -11,6 +11,7 @@ use super::nested::{self, Nested};
 use super::numbers::{self, Marks, Settled};
 use super::place::{self, Against, Taken};
 use super::rest::{self, Keys};
+use super::told::{self, Answers, Told};
 use super::values::{self, Entry, Hints, Numeric};
 use super::when;
 use super::words;
@@ -152,6 +153,8 @@ struct Found {
     missing: (Vec<String>, Vec<String>, Vec<String>),
     grows: Option<(String, String)>,
     visit_column: Option<usize>,
+    replicate_column: Option<usize>,
+    operator_column: Option<usize>,
     /// The plan's measures that no column is taken for.
     unmatched: Vec<String>,
     /// The columns that the draft names.
@@ -183,6 +186,8 @@ impl Found {
             missing: Default::default(),
             grows: rest::grows(all, asked.samples),
             visit_column: None,
+            replicate_column: None,
+            operator_column: None,
             unmatched: vec![],
             needed: vec![],
         };
@@ -202,6 +207,41 @@ impl Found {
         used.extend(unit.as_ref().map(|it| it.column));
         let levels = values::level_columns(rows, plan, &|at| !used.contains(&at));
         used.extend(levels.iter().map(|it| it.column));
+        self.look_for_visit(asked, rows, plan, used);
+        self.settle_days(asked, rows, plan);
+        let telling: Vec<usize> = long
+            .iter()
+            .map(|(column, _)| *column)
+            .chain(levels.iter().map(|it| it.column))
+            .chain(self.visit_column)
+            .collect();
+        let expected = plan.measures.iter().map(|it| it.replicates).max().unwrap_or(1);
+        let (subject, taken_at) = (self.subject.spot.clone(), self.taken_at.spot.clone());
+        let session = move |row: &grid::GridRow| rest::session_key(row, &subject, &taken_at);
+        let keys = Keys { session: &session, columns: &telling, expected };
+        if let Some(replicate) = rest::replicate(rows, &|at| !used.contains(&at), &keys) {
+            used.extend(replicate.column);
+            self.replicate_column = replicate.column;
+            self.replicate = Some(replicate.line);
+        }
+        let mut numeric = values::numeric(rows, &|at| !used.contains(&at), self.marks.marks);
+        values::name_before_unit(&mut numeric, rows, plan);
+        let surroundings = surroundings(asked);
+        self.entries = match &long {
+            Some((column, meeting)) => long_entries(rows, plan, (*column, meeting), &numeric, unit.as_ref(), &levels),
+            None => wide_entries(rows, plan, &numeric, unit.as_ref(), &levels, &surroundings),
+        };
+        used.extend(self.entries.iter().map(|it| it.column));
+        self.unmatched = unmatched(plan, rows, long.as_ref(), &self.entries);
+        self.look_for_operator(rows, used);
+        self.needed = used.iter().filter_map(|at| all.columns.get(*at)).cloned().collect();
+        // Here all rows count: a control's rows are told by what they hold.
+        let last = rest::unaccounted(all, &|at| !used.contains(&at), &keys, self.visit.is_some());
+        self.needed.extend(last.columns);
+        (self.ignore, self.left) = (last.ignore, last.left);
+    }
+
+    fn look_for_visit(&mut self, asked: &Asked<'_>, rows: &Grid, plan: &Plan, used: &mut BTreeSet<usize>) {
         let visit = rest::visit(rows, &|at| !used.contains(&at), plan);
         if let Some(visit) = visit {
             used.extend(visit.column);
@@ -216,38 +256,14 @@ impl Found {
             };
             self.visit = rest::visit_elsewhere(rows, asked.samples, plan, &agree);
         }
-        self.settle_days(asked, rows, plan);
-        let telling: Vec<usize> = long
-            .iter()
-            .map(|(column, _)| *column)
-            .chain(levels.iter().map(|it| it.column))
-            .chain(self.visit_column)
-            .collect();
-        let expected = plan.measures.iter().map(|it| it.replicates).max().unwrap_or(1);
-        let (subject, taken_at) = (self.subject.spot.clone(), self.taken_at.spot.clone());
-        let session = move |row: &grid::GridRow| rest::session_key(row, &subject, &taken_at);
-        let keys = Keys { session: &session, columns: &telling, expected };
-        if let Some(replicate) = rest::replicate(rows, &|at| !used.contains(&at), &keys) {
-            used.extend(replicate.column);
-            self.replicate = Some(replicate.line);
-        }
-        let mut numeric = values::numeric(rows, &|at| !used.contains(&at), self.marks.marks);
-        values::name_before_unit(&mut numeric, rows, plan);
-        let surroundings = surroundings(asked);
-        self.entries = match &long {
-            Some((column, meeting)) => long_entries(rows, plan, (*column, meeting), &numeric, unit.as_ref(), &levels),
-            None => wide_entries(rows, plan, &numeric, unit.as_ref(), &levels, &surroundings),
-        };
-        used.extend(self.entries.iter().map(|it| it.column));
-        self.unmatched = unmatched(plan, rows, long.as_ref(), &self.entries);
+    }
+
+    fn look_for_operator(&mut self, rows: &Grid, used: &mut BTreeSet<usize>) {
         if let Some(operator) = rest::operator(rows, &|at| !used.contains(&at)) {
             used.extend(operator.column);
+            self.operator_column = operator.column;
             self.operator = Some(operator.line);
         }
-        self.needed = used.iter().filter_map(|at| all.columns.get(*at)).cloned().collect();
-        // Here all rows count: a control's rows are told by what they hold.
-        let last = rest::unaccounted(all, &|at| !used.contains(&at), &keys, self.visit.is_some());
-        (self.ignore, self.left) = (last.ignore, last.left);
     }
 
     /// Where the texts leave open how days are written, the visits' windows may say.
@@ -262,6 +278,29 @@ impl Found {
         }
     }
 
+    /// What was found, column by column.
+    fn tell(&self, asked: &Asked<'_>, laid: &Laid) -> Told {
+        let measure = |at: usize| {
+            let entry = self.entries.iter().find(|entry| entry.column == at)?;
+            let code = entry.measure.and_then(|ix| Some(asked.plan?.measures.get(ix)?.code.clone()));
+            Some(code.unwrap_or_else(|| "value".to_owned()))
+        };
+        let taken_for = |at: usize| match at {
+            _ if self.subject.spot.columns().contains(&at) => Some("subject".to_owned()),
+            _ if self.taken_at.spot.columns().contains(&at) => Some("taken_at".to_owned()),
+            _ if self.visit_column == Some(at) => Some("visit".to_owned()),
+            _ if self.replicate_column == Some(at) => Some("replicate".to_owned()),
+            _ if self.operator_column == Some(at) => Some("operator".to_owned()),
+            _ => measure(at),
+        };
+        let stamp = match self.taken_at.formats.as_slice() {
+            [one] => Some(one.clone()),
+            _ => None,
+        };
+        let decimal = self.marks.open.is_none().then_some(self.marks.marks.decimal);
+        told::tell(asked.samples, &laid.layout, &laid.grid, Answers { taken_for: &taken_for, decimal, stamp })
+    }
+
     fn without_plan(&mut self, rows: &Grid, used: &mut BTreeSet<usize>) {
         let numeric = values::numeric(rows, &|at| !used.contains(&at), self.marks.marks);
         self.entries = numeric.iter().filter(|it| !it.is_small).map(|it| values::unknown_entry(rows, it)).collect();
@@ -272,10 +311,7 @@ impl Found {
         if self.entries.is_empty() {
             self.entries.push(no_value("which column holds the values? None of the samples' columns holds numbers"));
         }
-        if let Some(operator) = rest::operator(rows, &|at| !used.contains(&at)) {
-            used.extend(operator.column);
-            self.operator = Some(operator.line);
-        }
+        self.look_for_operator(rows, used);
         let rest = (0..rows.columns.len()).filter(|at| !used.contains(at) && !rows.distinct(*at).is_empty());
         self.left = rest.filter_map(|at| rows.columns.get(at)).cloned().collect();
     }
@@ -510,7 +546,8 @@ impl Written {
             values: found.entries.iter().map(|it| (it.column, it.measure)).collect(),
         };
         let preview = preview::preview(asked, &toml, gaps.is_empty(), &laid.grid, &spots);
-        Draft { toml, gaps, unsure, misfits: misfits(asked, laid, &found.needed), preview }
+        let told = found.tell(asked, &laid);
+        Draft { toml, gaps, unsure, misfits: misfits(asked, laid, &found.needed), preview, told }
     }
 }
 

@@ -20,16 +20,30 @@ pub enum IntoFault {
 /// Tables that refer to instruments or do not matter to reading.
 const REFERRING: [&str; 4] = ["instrument", "analysis", "interim", "assume"];
 
+/// Where a draft's reader begins.
+const READER: &str = "[instrument.reader]\n";
+
+/// The byte after the line in which a byte stands.
+fn line_end(text: &str, at: usize) -> usize {
+    text.get(at..).and_then(|rest| rest.find('\n')).map_or(text.len(), |found| at + found + 1)
+}
+
 /// The plan's text with the instrument in it: after the last one that is there, else before the analyses, else at the
 /// end.
 pub fn insert(text: &str, toml: &str, code: &str) -> Result<String, IntoFault> {
     let document = Document::parse(text).map_err(|error| IntoFault::Syntax(one_line(error.message())))?;
     let instruments = document.get("instrument").and_then(Item::as_array_of_tables);
     let is_it = |table: &Table| table.get("code").and_then(Item::as_str) == Some(code);
-    if instruments.into_iter().flat_map(|all| all.iter()).any(is_it) {
-        return Err(IntoFault::There(code.to_owned()));
-    }
-    let at = place(text, document.as_table());
+    let there = instruments.into_iter().flat_map(|all| all.iter()).find(|table| is_it(table));
+    let (at, toml) = match there {
+        None => (place(text, document.as_table()), toml),
+        // One that only lacks its reader gets it, and keeps all else.
+        Some(table) if !table.contains_key("reader") => {
+            let reader = toml.find(READER).and_then(|from| toml.get(from..)).unwrap_or_default();
+            (line_end(text, end_of_table(table).saturating_sub(1)), reader)
+        }
+        Some(_) => return Err(IntoFault::There(code.to_owned())),
+    };
     let ending = if text.contains("\r\n") { "\r\n" } else { "\n" };
     let (before, after) = text.split_at_checked(at).unwrap_or((text, ""));
     let mut all = String::with_capacity(text.len() + toml.len() + 4);
@@ -66,17 +80,15 @@ pub fn alone(text: &str, toml: &str) -> Option<String> {
 /// The byte at which the instrument's text begins.
 fn place(text: &str, root: &Table) -> usize {
     let end_of = |name: &str| root.get(name).map(end);
-    let line_end =
-        |at: usize| text.get(at..).and_then(|rest| rest.find('\n')).map_or(text.len(), |found| at + found + 1);
     if let Some(at) = end_of("instrument").filter(|at| *at > 0) {
-        return line_end(at.saturating_sub(1));
+        return line_end(text, at.saturating_sub(1));
     }
     // Before what refers to instruments, if all else stands before that.
     let last_other =
         root.iter().filter(|(name, _)| !REFERRING.contains(name)).map(|(_, item)| end(item)).max().unwrap_or(0);
     let first_referring = REFERRING.iter().filter_map(|name| root.get(name)).filter_map(start).min();
     match first_referring {
-        Some(first) if first >= last_other && last_other > 0 => line_end(last_other.saturating_sub(1)),
+        Some(first) if first >= last_other && last_other > 0 => line_end(text, last_other.saturating_sub(1)),
         _ => text.len(),
     }
 }
@@ -138,6 +150,17 @@ mod tests {
         );
         let text = insert("[study]\r\ncode = \"A\"", "[[instrument]]\ncode = \"two\"\n", "two").unwrap();
         assert_eq!(text, "[study]\r\ncode = \"A\"\r\n\r\n[[instrument]]\r\ncode = \"two\"\r\n");
+    }
+
+    #[test]
+    fn an_instrument_without_a_reader_gets_one() {
+        let plan =
+            "[[instrument]]\ncode = \"one\"\nrest = \"0s\"   # at once\n\n# next\n[[instrument]]\ncode = \"b\"\n";
+        let text =
+            insert(plan, "[[instrument]]\ncode = \"one\"\n\n[instrument.reader]\nformat = \"json\"\n", "one").unwrap();
+        let expected = "[[instrument]]\ncode = \"one\"\nrest = \"0s\"   # at once\n\n[instrument.reader]\n\
+                        format = \"json\"\n\n# next\n[[instrument]]\ncode = \"b\"\n";
+        assert_eq!(text, expected);
     }
 
     #[test]

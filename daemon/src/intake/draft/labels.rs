@@ -100,7 +100,9 @@ fn suggestions(texts: &[(String, usize)], known: &[Known]) -> String {
         let (mine, theirs) = (words(text), [words(&it.code), words(&it.label)].concat());
         let worded =
             mine.iter().any(|word| word.chars().count() >= 3 && theirs.iter().any(|other| other.starts_with(word)));
-        worded || !numbers(text).is_empty() && numbers(text) == numbers(&it.code)
+        let initial = mine.concat();
+        let begins = !initial.is_empty() && initial.chars().all(char::is_alphabetic) && it.code.starts_with(&initial);
+        worded || begins || !numbers(text).is_empty() && numbers(text) == numbers(&it.code)
     };
     let likely = texts.iter().filter_map(|(text, _)| {
         let mut fitting = known.iter().filter(|it| shares(text, it));

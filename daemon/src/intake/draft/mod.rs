@@ -23,6 +23,7 @@ mod preview;
 mod rest;
 mod stamps;
 mod text;
+mod told;
 mod units;
 mod values;
 mod when;
@@ -33,6 +34,7 @@ use revisant_schema::plan::Plan;
 use revisant_schema::roster::Roster;
 
 pub use preview::PreviewRow;
+pub use told::{Told, ToldColumn};
 
 /// One sample export.
 #[derive(Debug, Clone)]
@@ -97,6 +99,8 @@ pub struct Draft {
     pub misfits: Vec<Misfit>,
     /// The first rows as they would be filed.
     pub preview: Vec<PreviewRow>,
+    /// What was found, for machines.
+    pub told: Told,
 }
 
 /// Why nothing can be drafted.
@@ -159,6 +163,30 @@ mod tests {
             assert_eq!(sound.is_ok(), draft.gaps.is_empty(), "{}\n{faults}", draft.toml);
             assert!(!faults.contains("This is not TOML"), "{}\n{faults}", draft.toml);
         }
+    }
+
+    #[test]
+    fn without_a_roster_whoever_fits_the_pattern_is_shown() {
+        let (plan, _) = parse(&PlanFiles { main: PLAN.to_owned(), readers: vec![] }).unwrap();
+        let samples = [Sample {
+            shown: "a.csv".to_owned(),
+            file_name: "a.csv".to_owned(),
+            folder: String::new(),
+            bytes: EXPORTS[0].as_bytes().to_vec(),
+        }];
+        let asked = Asked {
+            samples: &samples,
+            code: "dyn",
+            folder: "exports/dyn",
+            plan: Some(&plan),
+            plan_text: Some(PLAN),
+            roster: None,
+            now: "2026-12-01T12:00:00Z".parse().unwrap(),
+        };
+        let draft = draft(&asked).unwrap();
+        assert!(draft.gaps.is_empty(), "{}", draft.toml);
+        let first = &draft.preview[0];
+        assert_eq!((first.subject.as_str(), first.value.as_str(), first.held.as_str()), ("P-001", "31.5 kg", ""));
     }
 
     #[test]

@@ -9,7 +9,7 @@ use serde::Serialize;
 
 use super::grid::Grid;
 use super::into;
-use super::place::Spot;
+use super::place::{Against, Spot};
 use super::{Asked, Sample};
 use crate::intake::place::resolve::{Decided, Held, Resolved, Resolver, RowOutcome, ValueOutcome, Whereabouts};
 use crate::intake::read::{self, Row};
@@ -58,7 +58,10 @@ pub struct Spots<'a> {
 pub fn preview(asked: &Asked<'_>, toml: &str, whole: bool, grid: &Grid, spots: &Spots<'_>) -> Vec<PreviewRow> {
     let sound = asked.plan.filter(|_| whole).zip(asked.plan_text).and_then(|(_, text)| sound(text, toml, asked.code));
     match sound {
-        Some((plan, at)) => plan.instruments.get(at).map_or(vec![], |instrument| as_filed(asked, &plan, instrument)),
+        Some((plan, at)) => {
+            let everybody = everybody(asked, grid, spots);
+            plan.instruments.get(at).map_or(vec![], |instrument| as_filed(asked, &plan, instrument, &everybody))
+        }
         None => as_read(asked, grid, spots),
     }
 }
@@ -71,19 +74,24 @@ fn sound(text: &str, toml: &str, code: &str) -> Option<(Plan, usize)> {
     Some((plan, at))
 }
 
-fn as_filed(asked: &Asked<'_>, plan: &Plan, instrument: &Instrument) -> Vec<PreviewRow> {
+fn as_filed(asked: &Asked<'_>, plan: &Plan, instrument: &Instrument, everybody: &Roster) -> Vec<PreviewRow> {
+    let roster = asked.roster.filter(|roster| !roster.subjects.is_empty()).unwrap_or(everybody);
     let mut shown = vec![];
     for sample in asked.samples {
         if shown.len() >= SHOWN {
             break;
         }
-        // Without a roster, whoever fits the pattern is taken to be on it.
-        let everybody = everybody(asked, plan, instrument, sample);
-        let roster = asked.roster.filter(|roster| !roster.subjects.is_empty()).unwrap_or(&everybody);
         let _ = sample_rows(asked, plan, instrument, roster, sample, &mut shown);
     }
     shown.truncate(SHOWN);
     shown
+}
+
+/// Without a roster, whoever fits the pattern is taken to be on it.
+fn everybody(asked: &Asked<'_>, grid: &Grid, spots: &Spots<'_>) -> Roster {
+    let against = Against { plan: asked.plan, roster: None, now: asked.now };
+    let codes = grid.rows.iter().filter_map(|row| against.code(&spots.subject.text(row)));
+    Roster { subjects: codes.map(|code| (code, Enrolled::default())).collect() }
 }
 
 fn resolver<'p>(
@@ -96,24 +104,6 @@ fn resolver<'p>(
     let wanted = read::wanted(&instrument.reader);
     let whereabouts = Whereabouts { file_name: &sample.file_name, folder: &sample.folder };
     Resolver::new(plan, instrument, roster, asked.now, &wanted, whereabouts).ok()
-}
-
-/// A roster of whoever the first rows name.
-fn everybody(asked: &Asked<'_>, plan: &Plan, instrument: &Instrument, sample: &Sample) -> Roster {
-    let mut roster = Roster::default();
-    let nobody = Roster::default();
-    let Some(resolver) = resolver(asked, plan, instrument, &nobody, sample) else { return roster };
-    let Ok(mut rows) = read::open(&instrument.reader, &sample.bytes) else { return roster };
-    let mut row = Row::default();
-    while roster.subjects.len() < SHOWN && rows.next_row(&mut row).unwrap_or(false) {
-        if let RowOutcome::Held(held) = resolver.resolve(&row, rows.as_ref(), &Decided::default())
-            && let Some(code) =
-                held.wrong.strip_prefix('"').and_then(|rest| rest.strip_suffix("\" is not on the roster"))
-        {
-            roster.subjects.insert(code.to_owned(), Enrolled::default());
-        }
-    }
-    roster
 }
 
 fn sample_rows(

@@ -92,6 +92,12 @@ pub fn visit_elsewhere(
             return Some(Line::with("visit", &place, &notes));
         }
     }
+    visit_in_path(grid, samples, plan, agree)
+}
+
+/// Labels of visits in the names of files and folders.
+fn visit_in_path(grid: &Grid, samples: &[Sample], plan: &Plan, agree: &dyn Fn(&VisitOf<'_>) -> bool) -> Option<Line> {
+    let known = known_visits(plan);
     let files: Vec<&Sample> = grid.samples.iter().filter_map(|at| samples.get(*at)).collect();
     for (key, part) in [("file_name", Part::Name), ("folder", Part::Folder)] {
         let found: BTreeSet<String> = files.iter().flat_map(|it| visit_words(part.of(it), &known)).collect();
@@ -268,6 +274,8 @@ pub fn operator(grid: &Grid, free: &dyn Fn(usize) -> bool) -> Option<Drafted> {
 pub struct Unaccounted {
     /// Rules for rows that are no readings, each with its rows.
     pub ignore: Vec<(String, Mark)>,
+    /// The columns that those rules name.
+    pub columns: Vec<String>,
     /// Columns that are left alone.
     pub left: Vec<String>,
 }
@@ -278,7 +286,11 @@ pub fn unaccounted(grid: &Grid, free: &dyn Fn(usize) -> bool, keys: &Keys<'_>, h
     for at in (0..grid.columns.len()).filter(|at| free(*at)) {
         let texts = grid.distinct(at);
         let name = grid.columns.get(at).map_or("", String::as_str);
-        match judge(grid, at, name, &texts, keys, has_visit) {
+        let judged = judge(grid, at, name, &texts, keys, has_visit);
+        if matches!(judged, Judged::NoReadings(_) | Judged::Asked(_)) {
+            all.columns.push(name.to_owned());
+        }
+        match judged {
             Judged::Nothing => {}
             Judged::Left => all.left.push(name.to_owned()),
             Judged::NoReadings(found) => all.ignore.extend(found.into_iter().map(|(text, count)| {

@@ -350,12 +350,27 @@ pub fn level_columns(grid: &Grid, plan: &Plan, free: &dyn Fn(usize) -> bool) -> 
                 let name = name.rsplit('/').next().unwrap_or(name);
                 fold(name) == fold(factor) && !texts.is_empty() && texts.len() <= known.len() * 2 + 2
             });
-            if met || called {
+            if met || called || begin_alike(&texts, &known) {
                 found.push(LevelColumn { factor: factor.to_owned(), column, meeting });
             }
         }
     }
     found
+}
+
+/// Whether as many texts as there are levels begin with the same letters as those: "L" and "R" for left and right. What
+/// each of them means is still for a person to say.
+fn begin_alike(texts: &[(&str, usize)], known: &[Known]) -> bool {
+    let first = |text: &str| text.chars().find(|c| c.is_alphabetic()).map(|c| c.to_lowercase().to_string());
+    let initials = |texts: Vec<&str>| -> Vec<String> {
+        let mut all: Vec<String> = texts.into_iter().filter_map(first).collect();
+        all.sort();
+        all
+    };
+    let mine = initials(texts.iter().map(|(text, _)| *text).collect());
+    let theirs = initials(known.iter().map(|it| it.code.as_str()).collect());
+    let differ = theirs.windows(2).all(|pair| matches!(pair, [one, other] if one != other));
+    known.len() > 1 && differ && mine == theirs
 }
 
 /// The `condition` line of a value; `None` when the measures have no conditions.

@@ -123,9 +123,32 @@ pub const OPERATOR: Kind = Kind(&[
 ]);
 /// What kind of row it is, or whether it is to be used.
 pub const TYPE: Kind = Kind(&[
-    "type", "kind", "art", "typ", "category", "status", "class", "qc", "control", "mode", "purpose", "valid",
-    "validity", "quality", "excluded", "exclude", "reject", "rejected", "accepted", "ok", "error", "artifact",
-    "artefact", "flag", "flags", "state",
+    "type",
+    "kind",
+    "art",
+    "typ",
+    "category",
+    "status",
+    "class",
+    "qc",
+    "control",
+    "mode",
+    "purpose",
+    "valid",
+    "validity",
+    "quality",
+    "excluded",
+    "exclude",
+    "reject",
+    "rejected",
+    "accepted",
+    "ok",
+    "error",
+    concat!("arti", "fact"),
+    "artefact",
+    "flag",
+    "flags",
+    "state",
 ]);
 /// Free remarks.
 pub const REMARK: Kind = Kind(&[

@@ -8,7 +8,7 @@
 use revisant_schema::plan::{Header, Reader};
 
 use super::cells::{Cells, Split, literal_cells};
-use super::heading::{self, Above, Preamble, excerpt, find_columns, join_labels};
+use super::heading::{self, Above, Preamble, find_columns, join_labels, numbered_columns};
 use super::sieve::{Parts, Sieve, Taken, decode_row};
 use super::text::{Line, LineEnd, Lines, readable};
 use super::{Bytes, FileFault, LineCounts, Row, RowFault, Rows, wanted};
@@ -406,18 +406,6 @@ fn read_header(reader: &Reader, lines: &mut Lines, first: &Line, delimiter: u8) 
     let labels = join_labels(&header);
     let columns = find_columns(&wanted(reader), &labels, first.number)?;
     Ok(Table { width: Some(labels.len()), columns, header, units: None })
-}
-
-/// Without a header, columns are named by their number.
-fn numbered_columns(names: &[String]) -> Result<Vec<usize>, FileFault> {
-    let number = |name: &String| match name.trim().parse::<usize>() {
-        Ok(number) if number > 0 => Ok(number - 1),
-        _ => Err(FileFault::Layout(format!(
-            "without a header, columns are named 1, 2, …; the plan names \"{}\"",
-            excerpt(name)
-        ))),
-    };
-    names.iter().map(number).collect()
 }
 
 /// The one delimiter under which all named columns were found.

@@ -206,6 +206,18 @@ fn distance(one: &str, other: &str) -> usize {
     costs[other.len()]
 }
 
+/// Without a header, columns are named by their number, from 1.
+pub fn numbered_columns(names: &[String]) -> Result<Vec<usize>, FileFault> {
+    let number = |name: &String| match name.trim().parse::<usize>() {
+        Ok(number) if number > 0 => Ok(number - 1),
+        _ => Err(FileFault::Layout(format!(
+            "without a header, columns are named 1, 2, …; the plan names \"{}\"",
+            excerpt(name)
+        ))),
+    };
+    names.iter().map(number).collect()
+}
+
 /// The labels of a header that takes several rows: each column's texts joined by a space.
 pub fn join_labels(rows: &[Vec<String>]) -> Vec<String> {
     let width = rows.iter().map(Vec::len).max().unwrap_or_default();

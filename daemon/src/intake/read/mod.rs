@@ -7,6 +7,7 @@ pub mod cells;
 pub mod delimited;
 pub mod fixed_width;
 pub mod heading;
+pub mod ignore;
 pub mod json;
 pub mod json_lines;
 pub mod paths;

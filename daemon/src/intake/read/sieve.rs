@@ -4,11 +4,11 @@
 //! order for every format (unreadable, end of the table, blank, repeated header, its units, ignored); a rule of the
 //! plan looks at a cell only when it is known what stands in it.
 
-use regex::Regex;
-use revisant_schema::plan::{Ignore, LastLine, Reader};
+use revisant_schema::plan::{LastLine, Reader};
 
+use super::ignore::Ignored;
 use super::text::{Line, LineEnd, Lines, nul_in, readable};
-use super::{FileFault, LineCounts, Row, RowFault, wanted};
+use super::{FileFault, LineCounts, Row, RowFault};
 
 /// A row's text, taken apart.
 pub trait Parts {
@@ -39,26 +39,15 @@ pub struct Sieve<'a> {
     pub lines: Lines<'a>,
     /// The lines that were no rows.
     pub counts: LineCounts,
-    rules: Vec<ColumnRule<'a>>,
+    rules: Ignored<'a>,
     /// The row before was a repeated header, so that this one may be its row of units.
     after_header: bool,
-}
-
-/// A rule for rows to be ignored by what a column holds.
-struct ColumnRule<'a> {
-    column: usize,
-    holds: Holds<'a>,
-}
-
-enum Holds<'a> {
-    Text(&'a str),
-    Match(&'a Regex),
 }
 
 impl<'a> Sieve<'a> {
     /// Before the first of `lines`; the wanted columns stand at `columns`, by slot.
     pub fn new(reader: &'a Reader, lines: Lines<'a>, columns: &[usize]) -> Self {
-        let rules = column_rules(reader, columns);
+        let rules = Ignored::by_column(reader, columns);
         Self { reader, lines, counts: LineCounts::default(), rules, after_header: false }
     }
 
@@ -119,8 +108,7 @@ impl<'a> Sieve<'a> {
     }
 
     fn ignores(&self, text: &str, parts: &impl Parts) -> bool {
-        self.reader.ignore.iter().any(|rule| matches!(rule, Ignore::Line(line) if line.is_match(text)))
-            || self.rules.iter().any(|rule| parts.known(rule.column).is_some_and(|cell| rule.holds.is(cell)))
+        self.rules.line(text) || self.rules.cells(|column| parts.known(column))
     }
 
     /// The fault of a row whose last line is `last`, if that may have been cut.
@@ -128,32 +116,6 @@ impl<'a> Sieve<'a> {
         let unfinished = last.ending == LineEnd::Missing && self.reader.last_line == LastLine::Finished;
         unfinished.then_some(RowFault::Unfinished)
     }
-}
-
-impl Holds<'_> {
-    fn is(&self, cell: &str) -> bool {
-        match self {
-            Self::Text(text) => cell == *text,
-            Self::Match(regex) => regex.is_match(cell),
-        }
-    }
-}
-
-fn column_rules<'a>(reader: &'a Reader, columns: &[usize]) -> Vec<ColumnRule<'a>> {
-    let names = wanted(reader);
-    let mut rules = Vec::new();
-    for rule in &reader.ignore {
-        let (name, holds) = match rule {
-            Ignore::Line(_) => continue,
-            Ignore::Equals { column, text } => (column, Holds::Text(text.trim())),
-            Ignore::Matches { column, regex } => (column, Holds::Match(regex)),
-        };
-        let slot = names.iter().position(|known| known == name);
-        if let Some(&column) = slot.and_then(|slot| columns.get(slot)) {
-            rules.push(ColumnRule { column, holds });
-        }
-    }
-    rules
 }
 
 /// Adds a line's text to `raw`; says what is wrong with it if it cannot be a row's.

@@ -16,16 +16,16 @@ mod package;
 mod sheet;
 mod texts;
 
-use regex::Regex;
 use revisant_schema::plan;
-use revisant_schema::plan::{Header, Ignore, Reader};
+use revisant_schema::plan::{Header, Reader};
 
 use self::book::Book;
 pub use self::package::Limits;
 use self::package::Package;
 use self::sheet::{Sheet, SheetRow, letters};
 use self::texts::Texts;
-use super::heading::{Above, Preamble, excerpt, find_columns, fold, join_labels};
+use super::heading::{Above, Preamble, excerpt, find_columns, fold, join_labels, numbered_columns};
+use super::ignore::Ignored;
 use super::{Bytes, FileFault, LineCounts, Row, RowFault, Rows, wanted};
 
 /// The rows of a workbook's sheet.
@@ -37,7 +37,7 @@ pub struct Workbook<'a> {
     since_1904: bool,
     preamble: Preamble,
     table: Table,
-    rules: Vec<ColumnRule<'a>>,
+    rules: Ignored<'a>,
     counts: LineCounts,
     /// Rows handed out.
     given: u64,
@@ -56,17 +56,6 @@ struct Table {
     header: Vec<Vec<String>>,
     /// The row of units.
     units: Option<Vec<String>>,
-}
-
-/// A rule for rows to be ignored by what a column holds.
-struct ColumnRule<'a> {
-    column: usize,
-    holds: Holds<'a>,
-}
-
-enum Holds<'a> {
-    Text(&'a str),
-    Match(&'a Regex),
 }
 
 /// A sheet of which the next row can be looked at.
@@ -170,13 +159,13 @@ impl<'a> Workbook<'a> {
             since_1904: book.since_1904,
             preamble: Preamble::default(),
             table: Table::default(),
-            rules: vec![],
+            rules: Ignored::default(),
             counts: LineCounts::default(),
             given: 0,
             after_header: false,
         };
         opened.find_table()?;
-        opened.rules = column_rules(reader, &opened.table.columns);
+        opened.rules = Ignored::by_column(reader, &opened.table.columns);
         Ok(opened)
     }
 
@@ -279,10 +268,7 @@ impl<'a> Workbook<'a> {
             return Ok(false);
         }
         let taken = &mut self.sheet.row;
-        let by_line = |rule: &Ignore| matches!(rule, Ignore::Line(line) if line.is_match(&taken.raw));
-        if self.reader.ignore.iter().any(by_line)
-            || self.rules.iter().any(|rule| rule.holds.is(taken.text_at(rule.column)))
-        {
+        if self.rules.line(&taken.raw) || self.rules.cells(|column| Some(taken.text_at(column))) {
             self.counts.ignored += 1;
             return Ok(false);
         }
@@ -347,41 +333,6 @@ impl Rows for Workbook<'_> {
     fn lines(&self) -> u64 {
         self.counts.total() + self.given
     }
-}
-
-impl Holds<'_> {
-    fn is(&self, cell: &str) -> bool {
-        match self {
-            Self::Text(text) => cell == *text,
-            Self::Match(regex) => regex.is_match(cell),
-        }
-    }
-}
-
-fn column_rules<'a>(reader: &'a Reader, columns: &[usize]) -> Vec<ColumnRule<'a>> {
-    let names = wanted(reader);
-    let rule = |rule: &'a Ignore| {
-        let (name, holds) = match rule {
-            Ignore::Line(_) => return None,
-            Ignore::Equals { column, text } => (column, Holds::Text(text.trim())),
-            Ignore::Matches { column, regex } => (column, Holds::Match(regex)),
-        };
-        let slot = names.iter().position(|known| known == name)?;
-        columns.get(slot).map(|&column| ColumnRule { column, holds })
-    };
-    reader.ignore.iter().filter_map(rule).collect()
-}
-
-/// Without a header, columns are named by their number, column A being 1.
-fn numbered_columns(names: &[String]) -> Result<Vec<usize>, FileFault> {
-    let number = |name: &String| match name.trim().parse::<usize>() {
-        Ok(number) if number > 0 => Ok(number - 1),
-        _ => Err(FileFault::Layout(format!(
-            "without a header, columns are named 1, 2, …; the plan names \"{}\"",
-            excerpt(name)
-        ))),
-    };
-    names.iter().map(number).collect()
 }
 
 /// Whether the first cell of a row that is not empty begins so.

@@ -15,11 +15,12 @@ mod grammar;
 mod source;
 mod walk;
 
-use revisant_schema::plan::{Ignore, Reader};
+use revisant_schema::plan::Reader;
 
 use self::around::Around;
 use self::gather::{Gather, Trouble};
 use self::walk::{Path, Walk, Walked};
+use super::ignore::Ignored;
 use super::paths::Inside;
 use super::{Bytes, FileFault, LineCounts, Row, RowFault, Rows, wanted};
 
@@ -40,7 +41,7 @@ pub struct Xml<'a> {
     /// By slot.
     origins: Vec<Origin>,
     /// Rules for rows to be ignored, by slot.
-    rules: Vec<(usize, &'a Ignore)>,
+    rules: Ignored<'a>,
     /// The level of rows.
     rows: usize,
     /// By level, how many elements that enclose rows have opened.
@@ -77,7 +78,7 @@ impl<'a> Xml<'a> {
         Ok(Self {
             walk: Walk::open(reader.encoding, bytes, rows, met, true)?,
             around,
-            rules: rules(reader, &names),
+            rules: Ignored::by_slot(reader),
             names,
             origins,
             rows: level,
@@ -145,13 +146,9 @@ impl<'a> Xml<'a> {
 
     /// Whether a rule of the plan ignores the row; a text that cannot be told does not make it so.
     fn ignores(&self, row: &Row) -> bool {
-        self.rules.iter().any(|(slot, rule)| {
-            let told = self.origins.get(*slot).is_some_and(|origin| matches!(self.text(*origin), Ok(Ok(_))));
-            told && match rule {
-                Ignore::Equals { text, .. } => row.cell(*slot) == text.trim(),
-                Ignore::Matches { regex, .. } => regex.is_match(row.cell(*slot)),
-                Ignore::Line(_) => false,
-            }
+        self.rules.cells(|slot| {
+            let told = self.origins.get(slot).is_some_and(|origin| matches!(self.text(*origin), Ok(Ok(_))));
+            told.then(|| row.cell(slot))
         })
     }
 }
@@ -210,15 +207,4 @@ fn outside(column: &str, why: &str) -> FileFault {
 fn fault(name: Option<&String>, trouble: Trouble) -> RowFault {
     let name = name.map_or("", String::as_str);
     RowFault::Unreadable(format!("\"{name}\" {trouble}, so it cannot be told what it means"))
-}
-
-/// The rules for rows to be ignored, each with the slot of its column.
-fn rules<'a>(reader: &'a Reader, names: &[String]) -> Vec<(usize, &'a Ignore)> {
-    let slot = |rule: &'a Ignore| match rule {
-        Ignore::Equals { column, .. } | Ignore::Matches { column, .. } => {
-            names.iter().position(|name| name == column).map(|slot| (slot, rule))
-        }
-        Ignore::Line(_) => None,
-    };
-    reader.ignore.iter().filter_map(slot).collect()
 }

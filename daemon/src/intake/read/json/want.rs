@@ -2,10 +2,10 @@
 //!
 //! Invariant: everything is compared folded, as a table's labels are.
 
-use regex::Regex;
-use revisant_schema::plan::{Ignore, Reader};
+use revisant_schema::plan::Reader;
 
 use super::super::heading::fold;
+use super::super::ignore::Ignored;
 use super::super::paths::{Inside, Step, steps};
 use super::super::{FileFault, Row, wanted};
 
@@ -21,7 +21,7 @@ pub struct Want<'a> {
     pub outer: Node,
     /// Where each slot's text is.
     pub sources: Vec<Source>,
-    rules: Vec<Rule<'a>>,
+    rules: Ignored<'a>,
 }
 
 /// Where a slot's text is.
@@ -78,29 +78,23 @@ pub fn is_number(name: &str, number: u64) -> bool {
     plain && name.parse() == Ok(number)
 }
 
-/// A rule for rows to be ignored by what a column holds.
-struct Rule<'a> {
-    slot: usize,
-    holds: Holds<'a>,
-}
-
-enum Holds<'a> {
-    Text(&'a str),
-    Match(&'a Regex),
-}
-
 impl<'a> Want<'a> {
     /// Takes the reader's paths apart.
     pub fn new(reader: &'a Reader, path: &'a str) -> Result<Self, FileFault> {
         let folded = |step| if let Step::Name(name) = step { Step::Name(fold(&name)) } else { step };
         let steps: Vec<Step> = steps(path).into_iter().map(folded).collect();
         let names = wanted(reader);
-        let mut want =
-            Self { path, steps, row: Node::default(), outer: Node::default(), sources: vec![], rules: vec![] };
+        let mut want = Self {
+            path,
+            steps,
+            row: Node::default(),
+            outer: Node::default(),
+            sources: vec![],
+            rules: Ignored::by_slot(reader),
+        };
         for (slot, column) in names.iter().enumerate() {
             want.add(slot, column)?;
         }
-        want.rules = reader.ignore.iter().filter_map(|rule| Rule::new(rule, &names)).collect();
         Ok(want)
     }
 
@@ -139,27 +133,6 @@ impl<'a> Want<'a> {
 
     /// Whether the plan ignores a row by what it holds.
     pub fn ignores(&self, row: &Row) -> bool {
-        self.rules.iter().any(|rule| rule.holds.is(row.cell(rule.slot)))
-    }
-}
-
-impl<'a> Rule<'a> {
-    fn new(rule: &'a Ignore, names: &[String]) -> Option<Self> {
-        let (name, holds) = match rule {
-            Ignore::Line(_) => return None,
-            Ignore::Equals { column, text } => (column, Holds::Text(text.trim())),
-            Ignore::Matches { column, regex } => (column, Holds::Match(regex)),
-        };
-        let slot = names.iter().position(|known| known == name)?;
-        Some(Self { slot, holds })
-    }
-}
-
-impl Holds<'_> {
-    fn is(&self, cell: &str) -> bool {
-        match self {
-            Self::Text(text) => cell == *text,
-            Self::Match(regex) => regex.is_match(cell),
-        }
+        self.rules.cells(|slot| Some(row.cell(slot)))
     }
 }

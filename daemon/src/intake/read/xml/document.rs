@@ -132,8 +132,8 @@ impl<'a> Document<'a> {
     }
 
     /// The start tag met last.
-    pub fn tag(&self) -> Result<Tag<'_>, FileFault> {
-        Tag::parse(self.raw()).map_err(|flaw| self.place.unreadable(flaw.what))
+    pub fn tag(&self) -> Tag<'_> {
+        Tag::known(self.raw())
     }
 
     /// The text met last.

@@ -10,7 +10,6 @@ use std::fmt;
 
 use super::document::Document;
 use super::grammar::{Tag, is_blank, local};
-use crate::intake::read::FileFault;
 use crate::intake::read::paths::Inside;
 
 /// Why a wanted text is none.
@@ -156,11 +155,11 @@ impl Gather {
     }
 
     /// An element opens; `level` if paths begin at it.
-    pub fn open(&mut self, document: &Document, level: Option<usize>) -> Result<(), FileFault> {
+    pub fn open(&mut self, document: &Document, level: Option<usize>) {
         let depth = document.depth();
         let first = self.active.len();
         let mut parent = first;
-        let name = document.tag()?.name;
+        let name = document.tag().name;
         while let Some(&(above, node)) = parent.checked_sub(1).and_then(|index| self.active.get(index))
             && above + 1 == depth
         {
@@ -175,9 +174,8 @@ impl Gather {
             self.active.push((depth, self.levels[level].0));
         }
         for index in first..self.active.len() {
-            self.meet(self.active[index].1, document)?;
+            self.meet(self.active[index].1, document);
         }
-        Ok(())
     }
 
     /// Forgets what was gathered from the element of this level before.
@@ -195,19 +193,19 @@ impl Gather {
     }
 
     /// Takes what is wanted of an element's start tag.
-    fn meet(&mut self, node: usize, document: &Document) -> Result<(), FileFault> {
+    fn meet(&mut self, node: usize, document: &Document) {
         let node = &self.nodes[node];
         if let Some(cell) = node.text.and_then(|cell| self.cells.get_mut(cell))
             && cell.meet()
         {
             cell.open = Some(document.taken().len());
-            cell.nil = is_nil(&document.tag()?);
+            cell.nil = is_nil(&document.tag());
             self.listening += 1;
         }
         if node.attributes.is_empty() {
-            return Ok(());
+            return;
         }
-        for attribute in document.tag()?.attributes().flatten() {
+        for attribute in document.tag().attributes().flatten() {
             let name = local(attribute.name);
             for (_, cell) in node.attributes.iter().filter(|(known, _)| *known == name && !attribute.declares_space()) {
                 let cell = &mut self.cells[*cell];
@@ -216,7 +214,6 @@ impl Gather {
                 }
             }
         }
-        Ok(())
     }
 
     /// A part of an element's text.

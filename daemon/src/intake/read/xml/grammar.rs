@@ -46,6 +46,16 @@ impl<'t> Cursor<'t> {
         if self.eat(sought) { Ok(()) } else { Err(Flaw::new(self.at, format!("\"{sought}\" should stand here"))) }
     }
 
+    /// The last of it, which nothing may follow.
+    fn end(&mut self, sought: &str) -> Result<(), Flaw> {
+        self.need(sought)?;
+        if self.rest().is_empty() {
+            Ok(())
+        } else {
+            Err(Flaw::new(self.at, "something follows that does not belong here"))
+        }
+    }
+
     /// Passes over white space; whether there was any.
     fn blank(&mut self) -> bool {
         let rest = self.rest();
@@ -72,8 +82,8 @@ impl<'t> Cursor<'t> {
 
     fn name(&mut self) -> Result<&'t str, Flaw> {
         let at = self.at;
-        let name =
-            self.until(|character| is_blank(character) || matches!(character, '=' | '/' | '>' | '?' | '[' | '<'));
+        let name = leading_name(self.rest());
+        self.at += name.len();
         if is_name(name) {
             return Ok(name);
         }
@@ -104,6 +114,13 @@ impl<'t> Cursor<'t> {
     }
 }
 
+/// What stands before the first character that may follow a name.
+fn leading_name(text: &str) -> &str {
+    let ends = |byte: &u8| matches!(byte, b' ' | b'\t' | b'\n' | b'\r' | b'=' | b'/' | b'>' | b'?' | b'[' | b'<');
+    let length = text.as_bytes().iter().position(ends).unwrap_or(text.len());
+    text.get(..length).unwrap_or_default()
+}
+
 fn misnamed(name: &str) -> String {
     format!("\"{}\" is no name", excerpt(name))
 }
@@ -116,8 +133,10 @@ pub fn is_blank(character: char) -> bool {
 /// Whether this is a name (production 5) that has at most one prefix (Namespaces, production 7).
 fn is_name(name: &str) -> bool {
     let part = |part: &str| {
+        let plain = |byte: &u8| byte.is_ascii_alphanumeric() || matches!(byte, b'_' | b'-' | b'.');
         let mut characters = part.chars();
-        characters.next().is_some_and(starts_name) && characters.all(continues_name)
+        characters.next().is_some_and(starts_name)
+            && (part.as_bytes().iter().all(plain) || characters.all(continues_name))
     };
     match name.split_once(':') {
         Some((prefix, local)) => part(prefix) && part(local),
@@ -203,6 +222,12 @@ impl<'t> Tag<'t> {
         cursor.need("<")?;
         let name = cursor.name()?;
         Ok(Self { name, rest: cursor })
+    }
+
+    /// One that has been found sound before, again.
+    pub fn known(raw: &'t str) -> Self {
+        let name = leading_name(raw.get(1..).unwrap_or_default());
+        Self { name, rest: Cursor { text: raw, at: 1 + name.len() } }
     }
 
     /// Goes through the attributes.
@@ -353,7 +378,7 @@ impl<'t> Declaration<'t> {
         if first {
             return Err(Flaw::new(cursor.at, "the XML declaration lacks its version"));
         }
-        cursor.need("?>")?;
+        cursor.end("?>")?;
         Ok(Self { encoding })
     }
 }
@@ -400,7 +425,7 @@ pub fn check_doctype(raw: &str) -> Result<(), Flaw> {
         check_subset(&mut cursor)?;
         cursor.blank();
     }
-    cursor.need(">")
+    cursor.end(">")
 }
 
 /// The document type's own declarations, up to the bracket that ends them. Entities and attributes' defaults would be
@@ -409,21 +434,27 @@ fn check_subset(cursor: &mut Cursor) -> Result<(), Flaw> {
     loop {
         cursor.blank();
         let at = cursor.at;
-        let end = match cursor.rest() {
-            rest if rest.starts_with(']') => {
-                cursor.at += 1;
-                return Ok(());
-            }
-            rest if rest.starts_with("<!--") => "-->",
-            rest if rest.starts_with("<?") => "?>",
-            rest if rest.starts_with("<!ELEMENT") => ">",
-            _ => {
+        if cursor.eat("]") {
+            return Ok(());
+        }
+        let known = ["<!--", "<?", "<!ELEMENT"].into_iter().find(|begin| cursor.eat(begin));
+        let end = match known {
+            Some("<!--") => "-->",
+            Some("<?") => "?>",
+            Some(_) => ">",
+            None => {
                 let what = "the document type declares entities or attributes, and such documents are not read";
                 return Err(Flaw::new(at, what));
             }
         };
-        cursor.at += 2;
         cursor.pass(end).ok_or_else(|| Flaw::new(at, "a declaration that does not end"))?;
+        let written = cursor.text.get(at..cursor.at).unwrap_or_default();
+        let checked = match end {
+            "-->" => check_comment(written),
+            "?>" => check_instruction(written),
+            _ => Ok(()),
+        };
+        checked.map_err(|flaw| Flaw { at: at + flaw.at, ..flaw })?;
     }
 }
 

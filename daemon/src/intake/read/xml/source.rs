@@ -7,7 +7,7 @@
 use std::io::{self, BufRead, Read};
 
 use encoding_rs::{Decoder, DecoderResult, Encoding as Coding, REPLACEMENT, UTF_8, UTF_16BE, UTF_16LE};
-use memchr::{memchr2, memchr2_iter};
+use memchr::memchr2;
 use revisant_schema::plan::Encoding;
 
 use super::grammar::Declaration;
@@ -37,18 +37,12 @@ impl Place {
 
     /// The place behind this text.
     pub fn after(mut self, text: &str) -> Self {
-        let bytes = text.as_bytes();
-        let mut from = 0;
-        for at in memchr2_iter(b'\n', b'\r', bytes) {
-            let after_return = if at == 0 { self.after_return } else { bytes[at - 1] == b'\r' };
-            self.line += u64::from(!(bytes[at] == b'\n' && after_return));
-            self.column = 1;
-            from = at + 1;
-        }
-        let begins_character = |byte: &&u8| (**byte & 0xC0) != 0x80;
-        self.column += bytes[from..].iter().filter(begins_character).count() as u64;
-        if let Some(last) = bytes.last() {
-            self.after_return = *last == b'\r';
+        for byte in text.bytes() {
+            let ends_line = matches!(byte, b'\n' | b'\r');
+            self.line += u64::from(ends_line && !(byte == b'\n' && self.after_return));
+            let begins_character = (byte & 0xC0) != 0x80;
+            self.column = if ends_line { 1 } else { self.column + u64::from(begins_character) };
+            self.after_return = byte == b'\r';
         }
         self
     }

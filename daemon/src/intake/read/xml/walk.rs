@@ -74,8 +74,11 @@ impl Path {
     /// Remembers a name that may help to mend the path.
     fn note(&mut self, depth: usize, name: &str) {
         let tells = (self.matched == self.deepest && depth == self.deepest + 1) || (self.deepest == 0 && depth == 2);
+        if !tells || depth == 1 || self.beside.len() >= A_FEW {
+            return;
+        }
         let shown = excerpt(name);
-        if tells && depth > 1 && self.beside.len() < A_FEW && !self.beside.contains(&shown) {
+        if !self.beside.contains(&shown) {
             self.beside.push(shown);
         }
     }
@@ -168,8 +171,8 @@ impl<'a> Walk<'a> {
         let depth = self.document.depth();
         match met {
             Met::Open => {
-                let on_path = self.path.open(depth, self.document.tag()?.name);
-                self.gather.open(&self.document, on_path.then_some(depth))?;
+                let on_path = self.path.open(depth, self.document.tag().name);
+                self.gather.open(&self.document, on_path.then_some(depth));
                 Ok(if on_path { Walked::Into(depth) } else { Walked::On })
             }
             Met::Close => {
