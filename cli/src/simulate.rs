@@ -35,7 +35,8 @@ impl Simulated {
         let (n, share) = (f64::from(self.runs.max(1)), self.power());
         let centre = (share + Z * Z / (2.0 * n)) / (1.0 + Z * Z / n);
         let half = Z * (share * (1.0 - share) / n + Z * Z / (4.0 * n * n)).sqrt() / (1.0 + Z * Z / n);
-        ((centre - half).max(0.0), (centre + half).min(1.0))
+        // At none and at all the limit is the share itself, which rounding must not pass.
+        ((centre - half).clamp(0.0, share), (centre + half).clamp(share, 1.0))
     }
 }
 

@@ -25,8 +25,8 @@ impl Steps {
     /// Takes in the readings that one condition of a cell is made of.
     ///
     /// The shortest decimal that reads back as a reading is the number as exported, without zeros at its end, as long as
-    /// it was exported with 15 digits or fewer and in the measure's unit. A conversion or a correction gives numbers with
-    /// as many digits as a double has, unless it is exact, so that no usable step comes out of them.
+    /// it was exported with 15 digits or fewer and in the measure's unit. A conversion or a correction by a short decimal
+    /// gives such numbers too; where it gives numbers with as many digits as a double has, no usable step comes out.
     pub fn take_in(&mut self, summary: Summary, readings: impl Iterator<Item = f64>) {
         let mut count = 0_u32;
         for reading in readings {
@@ -95,7 +95,8 @@ mod tests {
     #[test]
     fn an_exact_conversion_keeps_a_step_and_another_has_none() {
         assert_eq!(of(Summary::Mean, &[&[31.5 / 1000.0]]).grain(), Grain::decimals(4));
-        assert_eq!(of(Summary::Mean, &[&[31.5 * 0.101_971_6]]).grain(), None, "{}", 31.5 * 0.101_971_6);
+        assert_eq!(of(Summary::Mean, &[&[31.5 * 0.101_971_6]]).grain(), Grain::decimals(7));
+        assert_eq!(of(Summary::Mean, &[&[0.5 / 7.0]]).grain(), None, "{}", 0.5 / 7.0);
         assert_eq!(of(Summary::Mean, &[]).grain(), Grain::decimals(0));
     }
 

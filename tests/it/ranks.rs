@@ -8,7 +8,7 @@ use serde_json::{Value as Json, json};
 use crate::PROGRAMS;
 use crate::reference::{at, cases, later_and_earlier};
 
-use crate::small_study::{BASELINE, WEEK_4, WEEK_8, study};
+use crate::small_study::{BASELINE, WEEK_4, WEEK_8, study, study_with};
 
 cases! { by_ranks:
     continuous_10x4 in "ranks"
@@ -178,4 +178,21 @@ fn contrasts_that_ranks_have_not_are_named() {
     let result = site.json(&["analyse", "it"]);
     assert_eq!(result["contrasts"].as_array().map(Vec::len), Some(2), "{result}");
     assert!(result["notes"].to_string().contains("compares pairs of levels only"), "{result}");
+}
+
+/// A third of a unit is no short decimal: differences that are equal as exported tie within rounding, and that is said.
+#[test]
+fn converted_numbers_tie_within_rounding() {
+    let text = visits(&[("1", ["10.1", "11.2", "12.3"]), ("2", ["10.2", "9.1", "12.4"]), ("3", ["9.7", "9.7", "9.9"])]);
+    let site = study_with(
+        "method = \"friedman\"\ncontrasts = [\"pairwise\"]",
+        1,
+        &text,
+        "unit = { code = \"N\", times = 0.3333333333333333, plus = 0 }",
+    );
+    let result = site.json(&["analyse", "it"]);
+    let pair = find(&result["contrasts"], &[("level", "week-4"), ("against", "baseline")]);
+    // 1.1 exported units up and as many down, which share their ranks, and one difference of none.
+    assert_eq!((&pair["nonzero"], &pair["positive_rank_sum"], &pair["p"]), (&json!(2), &json!(1.5), &json!(1.0)));
+    assert!(result["notes"].to_string().contains("after a conversion"), "{result}");
 }

@@ -102,10 +102,16 @@ impl super::Findings for Findings<'_> {
                 None => notes.push(self.note(note)),
             }
         }
+        if self.about.data.steps.grain().is_none() {
+            notes.push(NO_STEP.to_owned());
+        }
         notes.dedup();
         notes.into_iter().chain(pairs.said()).collect()
     }
 }
+
+const NO_STEP: &str = "the numbers are not whole multiples of one decimal step, as after a conversion, so those count as \
+                       tied that rounding alone can have parted";
 
 // ---- for machines ----
 
@@ -256,6 +262,7 @@ impl Findings<'_> {
                 "no subject has a reading at every level, so there is no test over all".to_owned()
             }
             Note::OneSubject => "only one subject is complete, so nothing tells a level from chance".to_owned(),
+            Note::OffGrain => NO_STEP.to_owned(),
             Note::OnlyPairsByRanks => {
                 "an analysis by ranks compares pairs of levels only; the other contrasts of the plan are not made"
                     .to_owned()

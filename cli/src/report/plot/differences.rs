@@ -34,8 +34,9 @@ pub(super) fn draw(analysed: &Analysed<'_>, found: &Agreeing) -> String {
     if pairs.is_empty() {
         text(&mut svg, (WIDTH / 2.0, sheet.top + PANEL / 2.0), "middle", 14, "There are no pairs of levels.");
     }
+    let scales = Scales::of(found, pairs);
     for (at, pair) in pairs.iter().enumerate() {
-        panel(&mut svg, analysed, found, pair, sheet.top + at as f64 * (PANEL + UNDER));
+        panel(&mut svg, (analysed, found), pair, scales, sheet.top + at as f64 * (PANEL + UNDER));
     }
     let mut bottom = sheet.top + pairs.len().max(1) as f64 * (PANEL + UNDER);
     for line in [Some(legend(analysed)), left_aside(analysed, found)].into_iter().flatten() {
@@ -66,12 +67,19 @@ fn difference(analysed: &Analysed<'_>, pair: &Limits) -> String {
     format!("{} − {}", label(pair.level), label(pair.against))
 }
 
-fn panel(svg: &mut String, analysed: &Analysed<'_>, found: &Agreeing, pair: &Limits, top: f64) {
+fn panel(
+    svg: &mut String,
+    (analysed, found): (&Analysed<'_>, &Agreeing),
+    pair: &Limits,
+    scales: Option<Scales>,
+    top: f64,
+) {
     let points = found.points(pair);
-    let Some(frame) = Frame::of(&points, pair, top) else {
+    let Some(scales) = scales.filter(|_| !points.is_empty()) else {
         let words = format!("{}: nobody has both.", difference(analysed, pair));
         return text(svg, (WIDTH / 2.0, top + PANEL / 2.0), "middle", 14, &words);
     };
+    let frame = Frame { top, scales };
     frame.axes(svg, &format!("{} / {}", difference(analysed, pair), analysed.unit), analysed.unit);
     frame.lines(svg, pair);
     for point in &points {
@@ -80,48 +88,59 @@ fn panel(svg: &mut String, analysed: &Analysed<'_>, found: &Agreeing, pair: &Lim
     }
 }
 
-/// The scales of a panel.
-struct Frame {
-    top: f64,
+/// The scales of all panels, so that what looks larger is larger.
+#[derive(Debug, Clone, Copy)]
+struct Scales {
     x: (f64, f64),
     y: (f64, f64),
     steps: (f64, f64),
 }
 
-impl Frame {
-    /// `None` where nobody has both readings.
-    fn of(points: &[Point], pair: &Limits, top: f64) -> Option<Self> {
-        let means: Vec<f64> = points.iter().map(|point| point.mean).collect();
+impl Scales {
+    /// `None` where nobody has both readings of any pair.
+    fn of(found: &Agreeing, pairs: &[Limits]) -> Option<Self> {
         // The line of no difference is always in the picture.
-        let mut values: Vec<f64> = points.iter().map(|point| point.difference).chain([0.0]).collect();
-        for interval in [pair.bias_ci, pair.lower_ci, pair.upper_ci].into_iter().flatten() {
-            values.extend([interval.lower, interval.upper]);
+        let (mut means, mut values) = (Vec::new(), vec![0.0]);
+        for pair in pairs {
+            for point in found.points(pair) {
+                means.push(point.mean);
+                values.push(point.difference);
+            }
+            let intervals = [pair.bias_ci, pair.lower_ci, pair.upper_ci].into_iter().flatten();
+            values.extend(intervals.flat_map(|interval| [interval.lower, interval.upper]));
+            values.extend([pair.lower, pair.upper].into_iter().flatten());
         }
-        values.extend([pair.lower, pair.upper].into_iter().flatten());
-        let (means, values) = (extent(&means)?, extent(&values)?);
-        let (x, y) = (padded(means), padded(values));
-        Some(Self { top, x, y, steps: (nice_step(x.1 - x.0), nice_step(y.1 - y.0)) })
+        let (x, y) = (padded(extent(&means)?), padded(extent(&values)?));
+        Some(Self { x, y, steps: (nice_step(x.1 - x.0), nice_step(y.1 - y.0)) })
     }
+}
 
+/// A panel.
+struct Frame {
+    top: f64,
+    scales: Scales,
+}
+
+impl Frame {
     fn at_x(&self, mean: f64) -> f64 {
-        LEFT + (mean - self.x.0) / (self.x.1 - self.x.0) * (WIDTH - LEFT - RIGHT)
+        LEFT + (mean - self.scales.x.0) / (self.scales.x.1 - self.scales.x.0) * (WIDTH - LEFT - RIGHT)
     }
 
     fn at_y(&self, difference: f64) -> f64 {
-        self.top + PANEL * (1.0 - (difference - self.y.0) / (self.y.1 - self.y.0))
+        self.top + PANEL * (1.0 - (difference - self.scales.y.0) / (self.scales.y.1 - self.scales.y.0))
     }
 
     fn axes(&self, svg: &mut String, name: &str, unit: &str) {
         let (end, base) = (WIDTH - RIGHT, self.top + PANEL);
-        for value in ticks(self.y, self.steps.1) {
+        for value in ticks(self.scales.y, self.scales.steps.1) {
             let y = self.at_y(value);
             let _ = writeln!(svg, r##"<line x1="{LEFT}" x2="{end:.1}" y1="{y:.1}" y2="{y:.1}" stroke="#ddd"/>"##);
-            text(svg, (LEFT - 8.0, y + 4.0), "end", 11, &fixed(value, decimals_of(self.steps.1)));
+            text(svg, (LEFT - 8.0, y + 4.0), "end", 11, &fixed(value, decimals_of(self.scales.steps.1)));
         }
-        for value in ticks(self.x, self.steps.0) {
+        for value in ticks(self.scales.x, self.scales.steps.0) {
             let (x, low) = (self.at_x(value), base + 5.0);
             let _ = writeln!(svg, r##"<line x1="{x:.1}" x2="{x:.1}" y1="{base:.1}" y2="{low:.1}" stroke="#111"/>"##);
-            text(svg, (x, base + 19.0), "middle", 11, &fixed(value, decimals_of(self.steps.0)));
+            text(svg, (x, base + 19.0), "middle", 11, &fixed(value, decimals_of(self.scales.steps.0)));
         }
         let _ = writeln!(svg, r##"<line x1="{LEFT}" x2="{end:.1}" y1="{base:.1}" y2="{base:.1}" stroke="#111"/>"##);
         let (middle, name) = (self.top + PANEL / 2.0, escape(name));
@@ -198,6 +217,6 @@ mod tests {
     #[test]
     fn ticks_lie_within() {
         assert_eq!(ticks((-2.1, 4.9), 2.0), [-2.0, 0.0, 2.0, 4.0]);
-        assert_eq!(ticks((0.2, 0.9), 1.0), Vec::<f64>::new());
+        assert!(ticks((0.2, 0.9), 1.0).is_empty());
     }
 }
