@@ -204,8 +204,11 @@ JSON: [{\"trail\", \"at\", \"who\", \"program\", \"act\", \"objects\", \"before\
     #[command(after_help = "\
 Example:
   revisant analyse grip-over-visits --plot profiles.svg
+  revisant analyse grip-by-arm --checks
 
-JSON: see the README; \"subjects\", \"cells\", \"decomposition\", \"effects\", \"contrasts\", \"data_state\", …")]
+JSON: \"subjects\", \"cells\", \"decomposition\", \"effects\", \"if_unlinked\", \"contrasts\", \"data_state\", …; of several \
+factors also \"simple_effects\" and \"sums\"; with --checks \"checks\": {\"residuals\", \"subjects\", \"influence\", \
+\"missing\", \"thin_cells\"}")]
     Analyse(Analyse),
     /// Work out how many subjects the study needs, from what its plan assumes
     #[command(after_help = "\
@@ -793,7 +796,8 @@ pub struct Analyse {
     /// Show what the result rests on: residuals, influence of each subject, missing visits, thin cells
     #[arg(long)]
     pub checks: bool,
-    /// Draw every subject's profile, and the means, into this file: SVG, or PNG if its name ends in .png
+    /// Draw every subject's profile, and the means (of agreement: differences against means), into this file: SVG, or
+    /// PNG if its name ends in .png
     #[arg(long, value_name = "FILE")]
     pub plot: Option<PathBuf>,
 }

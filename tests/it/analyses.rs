@@ -101,10 +101,10 @@ visits = ["baseline"]
 /// Thirteen subjects: of GR-12 nobody wrote the sex down, and GR-13 came once.
 fn roster() -> String {
     let line = |at: usize| {
-        let arm = if at % 2 == 0 { "stretch" } else { "band" };
+        let arm = if at.is_multiple_of(2) { "stretch" } else { "band" };
         let sex = match at {
             12 => "",
-            at if at % 3 == 0 => "M",
+            at if at.is_multiple_of(3) => "M",
             _ => "F",
         };
         format!("GR-{at:02},2025-01-06,,{arm},{sex}\n")
@@ -122,7 +122,7 @@ fn rows(subjects: std::ops::RangeInclusive<usize>) -> String {
                 continue;
             }
             let chance = |salt: usize| ((at * 37 + visit * 53 + salt * 71 + at * visit * 17) % 23) as f64 / 10.0;
-            let gain = if at % 2 == 0 { 0.2 } else { 1.5 } * visit as f64;
+            let gain = if at.is_multiple_of(2) { 0.2 } else { 1.5 } * visit as f64;
             let left = 24.0 + (at * 7 % 11) as f64 + gain + chance(1);
             let right = if at == 5 && visit == 2 { String::new() } else { format!("{:.1}", left + 1.5 + chance(2)) };
             rows.push_str(&format!("GR-{at:02},{day},{left:.1},{right}\n"));
