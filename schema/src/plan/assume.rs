@@ -89,7 +89,7 @@ fn numbers(check: &mut Check<'_>, node: &Node, path: &str, lengths: &[usize]) ->
 fn right_length(check: &mut Check<'_>, spot: &Spot, path: &str, length: usize, lengths: &[usize]) {
     if !lengths.contains(&length) && !lengths.contains(&0) && length > 0 {
         let counts: Vec<String> = lengths.iter().map(usize::to_string).collect();
-        let wrong = format!("The list has {length} items, but the visits are {}.", counts.join(" or "));
+        let wrong = format!("The list has {length} items, but the analyses have {} visits.", counts.join(" or "));
         check.error(spot, path, wrong, "one number for each visit");
     }
 }
