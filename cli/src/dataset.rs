@@ -716,6 +716,9 @@ impl Builder<'_> {
 
     /// The mean of the conditions that make a cell up, all of which must be there.
     fn cell(&mut self, subject: &str, visit: VisitIx, came: &Came, parts: &[Part]) -> Result<f64, Empty> {
+        if let [one] = parts {
+            return self.one_condition(subject, visit, came, one);
+        }
         let numbers = parts.iter().map(|part| self.one_condition(subject, visit, came, part));
         Ok(mean(&numbers.collect::<Result<Vec<f64>, Empty>>()?))
     }

@@ -90,6 +90,13 @@ method = "repeated-measures"
 within = ["hand", "visit"]
 
 [[analysis]]
+code = "one-factor"
+measure = "grip"
+method = "repeated-measures"
+average = ["hand"]
+contrasts = ["pairwise", "polynomial", "simple"]
+
+[[analysis]]
 code = "one-visit"
 measure = "grip"
 method = "repeated-measures"
@@ -148,7 +155,7 @@ fn fits(text: &str) {
 #[test]
 fn what_several_factors_give_is_said_within_eighty_columns() {
     let site = study();
-    for analysis in ["both", "simple", "groups", "hand-first", "one-visit"] {
+    for analysis in ["both", "simple", "groups", "hand-first", "one-factor", "one-visit"] {
         let ran = site.ok(&["analyse", analysis, "--checks"]);
         fits(&ran.stdout);
         site.check_snapshot(&format!("analyses/{analysis}"), &ran);
@@ -201,6 +208,13 @@ fn differences_between_groups_are_always_given() {
 }
 
 #[test]
+fn what_one_factor_cannot_have_is_said() {
+    let result = study().json(&["analyse", "one-factor"]);
+    assert!(result["notes"].to_string().contains("Simple effects need a second factor"), "{}", result["notes"]);
+    assert_eq!(result["effects"][0]["error"], "residual");
+}
+
+#[test]
 fn a_sealed_allocation_lets_no_result_by_arm_out() {
     // An allocation is sealed unless the plan opens it, and the roster then has no arms.
     let roster: String = roster()
@@ -234,7 +248,7 @@ fn what_hardly_allows_an_analysis_says_so() {
             site.drop_export("exports/dyn/all.csv", rows(1..=subjects));
             site.collect();
         }
-        for analysis in ["both", "simple", "groups", "hand-first", "one-visit"] {
+        for analysis in ["both", "simple", "groups", "hand-first", "one-factor", "one-visit"] {
             let ran = site.ok(&["analyse", analysis, "--checks", "--plot", "p.svg"]);
             fits(&ran.stdout);
             let result = site.json(&["analyse", analysis, "--checks"]);

@@ -6,7 +6,7 @@
 use revisant_analysis::anova::{Cell, Corrected, CorrectedTest, Effect, Epsilon, Line, Mauchly, Term, TermEffect};
 use revisant_analysis::contrasts::{Compared, Comparison, SimpleEffect};
 use revisant_analysis::design::FactorId;
-use revisant_schema::plan::Sums;
+use revisant_schema::plan::{ContrastKind, Sums};
 use serde_json::{Map, Value as Json, json};
 
 use super::names::Names;
@@ -132,6 +132,9 @@ impl super::Findings for Findings<'_> {
             if !notes.contains(&note) {
                 notes.push(note);
             }
+        }
+        if self.about.analysis.contrasts.contains(&ContrastKind::Simple) && result.simple.is_empty() {
+            notes.push("simple effects need a second factor of more than one level, and complete readings".to_owned());
         }
         if !self.about.data.between.is_empty() {
             notes.push(match self.about.analysis.sums {
