@@ -796,7 +796,8 @@ pub struct Analyse {
     /// Show what the result rests on: residuals, influence of each subject, missing visits, thin cells
     #[arg(long)]
     pub checks: bool,
-    /// Draw every subject's profile, and the means, into this file: SVG, or PNG if its name ends in .png
+    /// Draw every subject's profile, and the means (of agreement: differences against means), into this file: SVG, or
+    /// PNG if its name ends in .png
     #[arg(long, value_name = "FILE")]
     pub plot: Option<PathBuf>,
 }

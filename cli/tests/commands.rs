@@ -292,9 +292,9 @@ fn a_cut_stays_as_it_was() {
 #[test]
 fn what_is_not_there_yet_is_said_in_one_sentence() {
     let study = analysed();
-    let ran = study.run(&["analyse", "ranks", "--json"]);
+    let ran = study.run(&["analyse", "model", "--json"]);
     assert_eq!((ran.exit, ran.error()["kind"].clone()), (Exit::Usage, json!("not-yet")), "{ran:?}");
-    assert!(ran.error()["message"].as_str().unwrap().contains("friedman"));
+    assert!(ran.error()["message"].as_str().unwrap().contains("mixed model"));
     assert!(study.run(&["analyse", "grip"]).err.contains("grip-over-visits"));
 }
 
@@ -321,6 +321,7 @@ fn nothing_is_wider_than_the_terminal() {
     for args in [
         &["readings"][..],
         &["analyse", "grip-over-visits"],
+        &["analyse", "ranks", "--checks"],
         &["completeness", "--on", "2025-04-01"],
         &["due", "--on", "2025-02-01"],
         &["status"],

@@ -179,6 +179,16 @@ fn readings_that_allow_little_are_said_so() {
         assert!(!svg.contains("NaN") && !svg.contains("inf"), "{svg}");
     }
     for analysis in [OVER_REPLICATES, OVER_INSTRUMENTS] {
-        study(analysis, 2, "").ok(&["analyse", "it", "--plot", "agreement.svg"]);
+        study(analysis, 2, "").ok(&["analyse", "it", "--checks", "--plot", "agreement.svg"]);
     }
+}
+
+/// The residuals are those of the two-way analysis: with two levels half of each difference less the mean difference.
+#[test]
+fn what_an_analysis_of_agreement_rests_on_is_shown() {
+    let result = study(OVER_REPLICATES, 2, &watch_alone()).json(&["analyse", "it", "--checks"]);
+    let residuals = result["checks"]["residuals"].as_array().unwrap();
+    assert_eq!(residuals.len(), 10, "{result}");
+    let largest = residuals.iter().filter_map(|it| it["residual"].as_f64()).fold(0.0, f64::max);
+    assert!((largest - 0.15).abs() < 1e-9, "{largest}");
 }

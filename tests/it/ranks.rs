@@ -152,6 +152,7 @@ fn means_over_replicates_tie_where_their_decimals_do() {
     // 0.9 / 3 twice, 3.7 / 3 twice, 6.9 / 3 twice.
     assert_eq!((&pair["n"], &pair["nonzero"]), (&json!(3), &json!(0)), "{pair}");
     assert_eq!((&pair["p"], &pair["positive_rank_sum"]), (&Json::Null, &json!(0.0)), "{pair}");
+    assert!(!result["notes"].to_string().contains("after a conversion"), "the step is known: {result}");
     // By hand: ranks 2 2 2, 1.5 1.5 3, 1.5 1.5 3; sums 5 5 8; chi2 = 12 × 6 / (36 − (24 + 6 + 6) / 2) = 4.
     let effect = find(&result["effects"], &[("source", "visit")]);
     assert!((effect["chi2"].as_f64().unwrap() - 4.0).abs() < 1e-12, "{effect}");
@@ -195,4 +196,21 @@ fn converted_numbers_tie_within_rounding() {
     // 1.1 exported units up and as many down, which share their ranks, and one difference of none.
     assert_eq!((&pair["nonzero"], &pair["positive_rank_sum"], &pair["p"]), (&json!(2), &json!(1.5), &json!(1.0)));
     assert!(result["notes"].to_string().contains("after a conversion"), "{result}");
+}
+
+#[test]
+fn what_a_rank_analysis_rests_on_is_shown() {
+    let all = [("1", ["5.0", "6.0", "7.0"]), ("2", ["5.0", "6.5", "7.5"]), ("3", ["7.0", "6.0", "5.0"])];
+    let result = study(PAIRS, 1, &visits(&all)).json(&["analyse", "it", "--checks"]);
+    let influence = &result["checks"]["influence"][0];
+    // Two subjects of one mind of two: chi2 = n (k − 1) = 4. With the third one the rank sums are 5, 6 and 7.
+    let without = find(&influence["without"], &[("subject", "RK-3")]);
+    assert!((without["chi2"].as_f64().unwrap() - 4.0).abs() < 1e-12, "{influence}");
+    assert!((influence["chi2"].as_f64().unwrap() - 2.0 / 3.0).abs() < 1e-12, "{influence}");
+    // Two opposite minds leave no difference.
+    let without = find(&influence["without"], &[("subject", "RK-1")]);
+    assert_eq!(without["chi2"], 0.0, "{influence}");
+    assert_eq!(result["checks"]["residuals"], json!([]), "{result}");
+    let few = study(PAIRS, 1, &visits(&all[..1])).ok(&["analyse", "it", "--checks"]);
+    assert!(few.stdout.lines().all(|line| line.chars().count() <= 80), "{}", few.shown());
 }

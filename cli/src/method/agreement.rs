@@ -8,7 +8,7 @@ use revisant_analysis::anova::{Cell, repeated_measures};
 use revisant_analysis::design::OneWithin;
 use revisant_schema::plan::Analysis;
 
-use super::{confidence, one_within};
+use super::{Repeated, confidence, one_within};
 use crate::dataset::Dataset;
 use crate::error::Failure;
 
@@ -23,15 +23,18 @@ pub struct Agreeing {
     pub result: Agreement,
     /// Of the complete subjects, by level.
     pub cells: Vec<Cell>,
+    /// The two-way analysis of variance that the intraclass correlations rest on, with its checks, where they are wanted.
+    pub two_way: Option<Repeated>,
 }
 
 impl Agreeing {
-    pub(super) fn of(analysis: &Analysis, data: &Dataset) -> Result<Self, Failure> {
+    pub(super) fn of(analysis: &Analysis, data: &Dataset, wanted: bool) -> Result<Self, Failure> {
         let design = one_within(data)?;
         let confidence = confidence(analysis)?;
         let result = agreement(&design, confidence);
         let cells = repeated_measures(&design, &Settings { confidence, ..Settings::default() }).cells;
-        Ok(Self { subjects: data.subjects(), result, cells, design })
+        let two_way = wanted.then(|| Repeated::of(analysis, data, true)).transpose()?;
+        Ok(Self { subjects: data.subjects(), result, cells, two_way, design })
     }
 
     /// The points of the plot of differences against means of a pair.

@@ -11,7 +11,7 @@ use revisant_analysis::{Confidence, contrasts};
 use revisant_schema::plan::{Analysis, Method, Multiplicity};
 
 pub use agreement::Agreeing;
-pub use ranks::Ranks;
+pub use ranks::{RankChecks, Ranks};
 pub use repeated::Repeated;
 
 use crate::dataset::{Dataset, Row};
@@ -36,8 +36,8 @@ impl Outcome {
     pub fn of(analysis: &Analysis, data: &Dataset, checks: bool) -> Result<Self, Failure> {
         match analysis.method {
             Method::RepeatedMeasures => Ok(Self::RepeatedMeasures(Box::new(Repeated::of(analysis, data, checks)?))),
-            Method::Friedman => Ok(Self::Ranks(Box::new(Ranks::of(analysis, data)?))),
-            Method::Agreement => Ok(Self::Agreement(Box::new(Agreeing::of(analysis, data)?))),
+            Method::Friedman => Ok(Self::Ranks(Box::new(Ranks::of(analysis, data, checks)?))),
+            Method::Agreement => Ok(Self::Agreement(Box::new(Agreeing::of(analysis, data, checks)?))),
             Method::MixedModel => Err(not_offered(analysis)),
         }
     }

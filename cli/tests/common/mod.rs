@@ -100,6 +100,12 @@ method = "friedman"
 average = ["hand"]
 
 [[analysis]]
+code = "model"
+measure = "grip"
+method = "mixed-model"
+average = ["hand"]
+
+[[analysis]]
 code = "by-sex"
 measure = "grip"
 method = "repeated-measures"

@@ -9,7 +9,7 @@ use revisant_analysis::{Interval, Note};
 use revisant_schema::plan::AgreeOver;
 use serde_json::{Map, Value as Json, json};
 
-use super::{Analysed, PairNotes, interval};
+use super::{Analysed, PairNotes, interval, repeated};
 use crate::dataset::Factor;
 use crate::method::Agreeing;
 use crate::report::number::{self, df, fixed, fixed_or_dash, p_or_dash, percent, plain, share};
@@ -58,7 +58,7 @@ impl super::Findings for Findings<'_> {
             AgreeOver::Replicates => "replicates",
             AgreeOver::Instruments => "instruments",
         };
-        vec![
+        let mut fields = vec![
             ("agree_over", json!(over)),
             ("cells", Json::Array(self.cells_json())),
             ("icc", result.icc.iter().map(icc_json).collect()),
@@ -75,7 +75,10 @@ impl super::Findings for Findings<'_> {
             ),
             ("smallest_detectable_change", json!(result.smallest_detectable_change)),
             ("limits", result.limits.iter().map(|pair| self.limits_json(pair)).collect()),
-        ]
+        ];
+        let two_way = self.found.two_way.as_ref();
+        fields.extend(two_way.and_then(|found| repeated::Findings::new(self.about, found).checks_json()));
+        fields
     }
 
     fn tables(&self, width: usize) -> Vec<String> {
@@ -110,8 +113,9 @@ impl super::Findings for Findings<'_> {
         more.into_iter().collect()
     }
 
-    fn checks(&self, _: usize) -> Vec<String> {
-        vec![]
+    fn checks(&self, width: usize) -> Vec<String> {
+        let two_way = self.found.two_way.as_ref();
+        two_way.map_or_else(Vec::new, |found| repeated::Findings::new(self.about, found).checks(width))
     }
 
     fn notes(&self) -> Vec<String> {

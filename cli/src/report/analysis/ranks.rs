@@ -7,9 +7,9 @@ use revisant_analysis::contrasts::ContrastKind;
 use revisant_analysis::ranks::{Friedman, SignedRank};
 use serde_json::{Map, Value as Json, json};
 
-use super::{Analysed, PairNotes, interval};
+use super::{Analysed, PairNotes, interval, repeated};
 use crate::dataset::Factor;
-use crate::method::Ranks;
+use crate::method::{RankChecks, Ranks};
 use crate::report::number::{self, df, fixed_or_dash, p_or_dash, p_said, share};
 use crate::report::sentence;
 use crate::report::table::{Left, Right, Table};
@@ -61,11 +61,13 @@ impl super::Findings for Findings<'_> {
 
     fn fields(&self) -> Vec<(&'static str, Json)> {
         let result = &self.found.result;
-        vec![
+        let mut fields = vec![
             ("cells", Json::Array(self.cells_json())),
             ("effects", result.effect.iter().map(|effect| self.effect_json(effect)).collect()),
             ("contrasts", result.contrasts.iter().map(|pair| self.pair_json(pair)).collect()),
-        ]
+        ];
+        fields.extend(self.found.checks.as_ref().and_then(|checks| self.checks_json(checks)));
+        fields
     }
 
     fn tables(&self, width: usize) -> Vec<String> {
@@ -89,8 +91,11 @@ impl super::Findings for Findings<'_> {
         vec![]
     }
 
-    fn checks(&self, _: usize) -> Vec<String> {
-        vec![]
+    fn checks(&self, width: usize) -> Vec<String> {
+        let Some(checks) = &self.found.checks else { return vec![] };
+        let mut parts = repeated::Findings::new(self.about, &checks.design).checks(width);
+        parts.extend(self.influence(checks).map(|text| wrap(&text, width, "")));
+        parts
     }
 
     fn notes(&self) -> Vec<String> {
@@ -130,6 +135,21 @@ impl Findings<'_> {
             Json::Object(fields)
         };
         self.found.cells.iter().enumerate().map(cell).collect()
+    }
+
+    /// As those of an analysis of variance, without residuals, and the influence on χ² instead of F.
+    fn checks_json(&self, checks: &RankChecks) -> Option<(&'static str, Json)> {
+        let (name, mut json) = repeated::Findings::new(self.about, &checks.design).checks_json()?;
+        let one = |(row, effect): &(usize, Friedman)| json!({ "subject": self.subject(*row), "chi2": effect.chi2, "p": effect.p });
+        let without: Vec<Json> = checks.without.iter().map(one).collect();
+        let chi2 = self.found.result.effect.as_ref().and_then(|effect| effect.chi2);
+        let influence = json!([{ "source": self.code(), "chi2": chi2, "without": without }]);
+        json.as_object_mut()?.insert("influence".to_owned(), influence);
+        Some((name, json))
+    }
+
+    fn subject(&self, row: usize) -> &str {
+        self.about.data.rows.get(row).map_or("", |row| row.subject.as_str())
     }
 
     fn effect_json(&self, effect: &Friedman) -> Json {
@@ -239,6 +259,22 @@ impl Findings<'_> {
             ]);
         }
         table
+    }
+
+    /// How far the test hangs on one subject.
+    fn influence(&self, checks: &RankChecks) -> Option<String> {
+        let all: Vec<(&str, f64)> =
+            checks.without.iter().filter_map(|(row, effect)| Some((self.subject(*row), effect.chi2?))).collect();
+        let least = all.iter().min_by(|(_, one), (_, other)| one.total_cmp(other))?;
+        let most = all.iter().max_by(|(_, one), (_, other)| one.total_cmp(other))?;
+        Some(format!(
+            "An analysis by ranks has no residuals. Without one subject χ² would lie between {} (without {}) and {} \
+             (without {}).",
+            number::fixed(least.1, 2),
+            least.0,
+            number::fixed(most.1, 2),
+            most.0
+        ))
     }
 
     /// What the columns of the pairs are, where there is something in them.

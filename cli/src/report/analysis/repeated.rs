@@ -90,8 +90,7 @@ impl super::Findings for Findings<'_> {
             fields.push(("simple_effects", result.simple.iter().map(|it| self.simple_json(it)).collect()));
             fields.push(("sums", json!(self.sums())));
         }
-        let checks = self.found.checks.as_ref().map(|found| self.checks_of(found).json());
-        fields.extend(checks.map(|checks| ("checks", checks)));
+        fields.extend(self.checks_json());
         fields
     }
 
@@ -548,6 +547,11 @@ impl Findings<'_> {
             number::p_said(p),
             number::fixed(ratio, if ratio < 10.0 { 2 } else { 0 })
         ))
+    }
+
+    /// What it rests on, for machines, where that is wanted.
+    pub fn checks_json(&self) -> Option<(&'static str, Json)> {
+        self.found.checks.as_ref().map(|found| ("checks", self.checks_of(found).json()))
     }
 
     fn checks_of<'f>(&'f self, found: &'f revisant_analysis::checks::Checks) -> checks::Checked<'f> {
