@@ -820,7 +820,7 @@ pub struct Rehearse {
     /// The error rate; default: what the analysis's confidence leaves, or 0.05
     #[arg(long, value_name = "SHARE", requires = "size")]
     pub alpha: Option<f64>,
-    /// The analysis of the plan whose visits count; default: all that [assume] speaks of
+    /// The analysis of the plan whose visits count; default: all that the assumptions list
     #[arg(long, value_name = "CODE", requires = "size")]
     pub analysis: Option<String>,
     /// How many studies are simulated; default: 4000, or fewer of very large ones

@@ -28,7 +28,7 @@ pub struct Ranks {
 }
 
 /// The most complete subjects who are left out one by one.
-pub const MOST_LEFT_OUT: usize = 1000;
+const MOST_LEFT_OUT: usize = 1000;
 
 /// What an analysis by ranks rests on: it has no residuals.
 #[derive(Debug, Clone, PartialEq)]
@@ -36,7 +36,7 @@ pub struct RankChecks {
     /// The analysis of variance of the same design, with its pattern of missing readings and thin cells.
     pub design: Repeated,
     /// For each complete subject, by its place among the rows of the data set: the test without it. Of more than
-    /// [`MOST_LEFT_OUT`] subjects none is left out in turn: the work grows with the square of their number, and no one of
+    /// a thousand subjects none is left out in turn: the work grows with the square of their number, and no one of
     /// so many moves the test.
     pub without: Vec<(usize, Friedman)>,
 }
