@@ -118,8 +118,7 @@ impl Frame<'_> {
             let words = if days { format!("{label} · {}", plain(*position)) } else { label.clone() };
             let half = words.chars().count() as f64 * 3.2;
             // A panel's outer labels stay within it: the next panel's begin right there.
-            let (low, high) =
-                if roomy { (4.0, super::sheet::WIDTH - 4.0) } else { (left - 4.0, right + 4.0) };
+            let (low, high) = if roomy { (4.0, super::sheet::WIDTH - 4.0) } else { (left - 4.0, right + 4.0) };
             let x = if high - low > 2.0 * half { x.clamp(low + half, high - half) } else { x };
             // Labels that would run into one another go one row down; one that fits nowhere is left to its tick.
             if let Some(row) = ends.iter().position(|end| x - half > *end) {
