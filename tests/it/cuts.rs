@@ -32,17 +32,28 @@ fn an_export_cut_at_any_byte_gives_no_row_that_the_whole_does_not_have() {
     assert!(cuts > 10_000, "only {cuts} cuts were tried");
 }
 
-#[test]
-fn spoilt_exports_are_read_to_an_end() {
-    let mut chance = Chance::new(20_261_201);
+/// Reads exports spoilt in so many ways each. What comes of it does not matter; that each is read to an end, that every
+/// line is counted and that nothing panics does.
+fn read_spoilt(seed: u64, ways: usize) {
+    let mut chance = Chance::new(seed);
     for study in studies() {
         for (instrument, samples) in study.smallest(EXPORTS) {
             for sample in samples {
-                for _ in 0..150 {
-                    // What comes of it does not matter; that it ends, counts every line and does not panic does.
+                for _ in 0..ways {
                     let _ = read_through(instrument, &spoil(&sample.bytes, &mut chance));
                 }
             }
         }
     }
+}
+
+#[test]
+fn spoilt_exports_are_read_to_an_end() {
+    read_spoilt(20_261_201, 150);
+}
+
+#[test]
+#[ignore = "takes minutes"]
+fn spoilt_exports_are_read_to_an_end_for_minutes() {
+    read_spoilt(7, 20_000);
 }

@@ -207,7 +207,7 @@ impl fmt::Display for Note {
             }
             Self::PowerOptimistic => write!(
                 f,
-                "the assumed covariance is not spherical, so the formula promises more power than a corrected test has with few subjects; simulate before relying on it"
+                "the assumed covariance is not spherical, so the formula mostly promises more power than a corrected test has; simulate before relying on it"
             ),
         }
     }

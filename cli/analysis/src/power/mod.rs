@@ -139,8 +139,8 @@ pub struct Power {
 /// its estimate; Cohen 1988, *Statistical Power Analysis for the Behavioral Sciences*, chapter 8.) Exact where ε = 1, and
 /// for effects between subjects. With ε < 1 the formula is **optimistic** for the Greenhouse-Geisser corrected test in
 /// small samples, since the estimate of ε varies and lies below it: with 12 subjects, 5 visits and a correlation of
-/// 0.7^lag, 0.801 by formula and 0.730 by simulation. [`Note::PowerOptimistic`] then stands in the result; simulate before
-/// relying on it.
+/// 0.7^lag, 0.801 by formula and 0.730 by simulation. It is so in samples of any size where means change along the
+/// contrast that varies most. [`Note::PowerOptimistic`] then stands in the result; simulate before relying on it.
 ///
 /// # Errors
 /// [`PowerError::OneVisit`], [`OneGroup`](PowerError::OneGroup), [`SizeCount`](PowerError::SizeCount) or
