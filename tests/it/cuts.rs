@@ -55,5 +55,5 @@ fn spoilt_exports_are_read_to_an_end() {
 #[test]
 #[ignore = "takes minutes"]
 fn spoilt_exports_are_read_to_an_end_for_minutes() {
-    read_spoilt(7, 20_000);
+    read_spoilt(7, 4_000);
 }
