@@ -75,8 +75,8 @@ fn begun(args: &New) -> Result<Begun, Failure> {
     let (mut begun, wrong) = Begun::from_options(args);
     let terminal = std::io::stdin().is_terminal() && std::io::stderr().is_terminal();
     if !wrong.is_empty() {
-        let what = if wrong.len() == 1 { "an option is" } else { "some options are" };
-        let failure = Failure::usage(format!("{what} not as they should be; nothing was written"));
+        let what = if wrong.len() == 1 { "an option cannot be taken" } else { "some options cannot be taken" };
+        let failure = Failure::usage(format!("{what}; nothing was written"));
         return Err(failure.then("`revisant new --help` has an example").with_faults(wrong.join("\n"), json!(wrong)));
     }
     if terminal {

@@ -3,7 +3,7 @@
 //! Invariant: of a draft without gaps, what is shown comes from the very steps that file a reading; of one with gaps,
 //! what is not known yet is shown as `?`.
 
-use revisant_schema::plan::{Instrument, Plan, PlanFiles, parse};
+use revisant_schema::plan::{Instrument, Plan, PlanFiles, Stamp, parse};
 use revisant_schema::roster::{Enrolled, Roster};
 use serde::Serialize;
 
@@ -123,7 +123,7 @@ fn sample_rows(
         match resolver.resolve(&row, rows.as_ref(), &Decided::default()) {
             RowOutcome::NoValue => {}
             RowOutcome::Held(held) => shown.push(held_row(place, &held, &row)),
-            RowOutcome::Ready(resolved) => shown.extend(values_of(plan, &place, &resolved)),
+            RowOutcome::Ready(resolved) => shown.extend(values_of(plan, instrument, &place, &resolved)),
         }
     }
     Some(())
@@ -134,12 +134,23 @@ fn held_row(place: String, held: &Held, row: &Row) -> PreviewRow {
     PreviewRow { place, value: super::lines::clip(&row.raw), held, ..PreviewRow::default() }
 }
 
-fn values_of(plan: &Plan, place: &str, resolved: &Resolved) -> Vec<PreviewRow> {
+/// The moment as written; a workbook's number of the day says nothing to people, so that as the moment it stands for.
+fn taken(plan: &Plan, instrument: &Instrument, resolved: &Resolved) -> String {
+    match (&instrument.reader.stamp, resolved.moment) {
+        (Stamp::Serial, Some(moment)) => {
+            moment.with_timezone(&plan.study.time_zone).format("%Y-%m-%d %H:%M").to_string()
+        }
+        (Stamp::Serial, None) => resolved.day.to_string(),
+        _ => resolved.written.clone(),
+    }
+}
+
+fn values_of(plan: &Plan, instrument: &Instrument, place: &str, resolved: &Resolved) -> Vec<PreviewRow> {
     let base = PreviewRow {
         place: place.to_owned(),
         subject: resolved.subject.clone(),
         visit: resolved.label.clone().unwrap_or_default(),
-        taken_at: resolved.written.clone(),
+        taken_at: taken(plan, instrument, resolved),
         replicate: resolved.replicate.map(|number| number.to_string()).unwrap_or_default(),
         ..PreviewRow::default()
     };
